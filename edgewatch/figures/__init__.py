@@ -1,0 +1,1 @@
+"""Figures: detections over time -> contact begin and end, window and bar figures."""

@@ -1,0 +1,1 @@
+"""Where pictures come from: camera, clip, pipe, stream, rehearsal."""

@@ -1,0 +1,57 @@
+"""One frame, and what a source says of itself."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Frame:
+    """One picture with its time.
+
+    ``picture``: uint8 (height, width), mono. ``index``: counts every frame the source delivered, from 0.
+    ``t_s``: time of the exposure on the source's own clock (s): ``index / fps`` for clips, pipes and rehearsals, the
+    monotonic clock for live sources. ``skipped``: frames that were delivered since the last one handed on and that
+    nobody looked at.
+    """
+
+    picture: NDArray[np.uint8]
+    index: int
+    t_s: float
+    skipped: int = 0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SourceInfo:
+    """What was opened. ``fps``: rate the source claims, NaN if it does not say; ``live``: newest frames win;
+    ``deviations``: settings the device took differently, one sentence each.
+    """
+
+    uri: str
+    width_px: int
+    height_px: int
+    fps: float
+    live: bool
+    deviations: tuple[str, ...] = ()
+
+
+class Source(Protocol):
+    """A place where pictures come from. One thread reads it; ``close`` may be called from any thread, twice too."""
+
+    @property
+    def info(self) -> SourceInfo:
+        """What was opened."""
+
+    def read(self, timeout_s: float) -> Frame | None:
+        """Return the next frame, or ``None`` at the end of a clip.
+
+        Raises ``StalledError`` if none came within ``timeout_s`` (the caller may go on reading), ``DeviceError`` if
+        the source is lost and must be opened anew.
+        """
+
+    def close(self) -> None:
+        """Let go of the device or file."""

@@ -1,0 +1,1 @@
+"""Figures and bands -> verdicts."""

@@ -1,0 +1,1 @@
+"""The station as a state machine: pictures, orders, ticks and failures in, effects out."""

@@ -1,0 +1,1 @@
+"""A simulated wheel, stream and camera with exact ground truth."""

@@ -1,0 +1,1 @@
+"""The process stop: serial control line, byte-frame boards, Modbus RTU coil."""

@@ -1,0 +1,432 @@
+"""Settings: a dict (from TOML) -> frozen values. Core: the file is read elsewhere.
+
+Every key is declared once, with its default, what is allowed, and a line of help; the reader, the error texts, the
+commented sample and its test all use that declaration. All errors are reported together; each names file, key, value
+and what is allowed.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+import difflib
+import math
+import re
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from typing import Any, TypeVar
+
+from edgewatch.errors import SettingsError
+from edgewatch.sight.optics import Optics
+
+_TOPIC_LEVEL = re.compile(r"[^\s/+#$\x00-\x1f][^/+#\x00-\x1f]{0,63}")
+GRADE_NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._+-]{0,39}")
+"""A grade is also a file name and part of messages: letters, digits, dot, plus, minus, underline; 40 at most."""
+
+Check = Callable[[Any], Any]
+S = TypeVar("S")
+
+
+class _WrongValueError(Exception):
+    """Carries what is allowed."""
+
+
+def _declare(default: Any, check: Check, says: str) -> Any:
+    """One key: its default, its check (returns the value to keep or raises), one line of help."""
+    return field(default=default, metadata={"check": check, "help": says})
+
+
+def _is_number(value: Any) -> bool:
+    return isinstance(value, (int, float)) and not isinstance(value, bool)
+
+
+def _number(low: float, high: float, *, or_none: bool = False) -> Check:
+    def check(value: Any) -> float | None:
+        if not (_is_number(value) and math.isfinite(value) and low <= value <= high):
+            raise _WrongValueError(f"a number from {low:g} to {high:g}")
+        return float(value)
+
+    return check
+
+
+def _whole(low: int, high: int) -> Check:
+    def check(value: Any) -> int:
+        if not (isinstance(value, int) and not isinstance(value, bool) and low <= value <= high):
+            raise _WrongValueError(f"a whole number from {low} to {high}")
+        return value
+
+    return check
+
+
+def _flag() -> Check:
+    def check(value: Any) -> bool:
+        if not isinstance(value, bool):
+            raise _WrongValueError("true or false")
+        return value
+
+    return check
+
+
+def _choice(*names: str) -> Check:
+    def check(value: Any) -> str:
+        if not (isinstance(value, str) and value in names):
+            raise _WrongValueError("one of " + ", ".join(f'"{name}"' for name in names))
+        return value
+
+    return check
+
+
+def _text(longest: int = 1024) -> Check:
+    def check(value: Any) -> str:
+        if not (isinstance(value, str) and len(value) <= longest and value.isprintable()):
+            raise _WrongValueError(f"text of at most {longest} printable characters")
+        return value
+
+    return check
+
+
+def _matching(pattern: re.Pattern[str], allowed: str, *, empty: bool = False) -> Check:
+    def check(value: Any) -> str:
+        if not (isinstance(value, str) and ((empty and not value) or pattern.fullmatch(value))):
+            raise _WrongValueError(allowed)
+        return value
+
+    return check
+
+
+def _topic_level() -> Check:
+    return _matching(_TOPIC_LEVEL, "one topic level: 1 to 64 characters without /, +, # and control characters")
+
+
+def _hex_bytes() -> Check:
+    def check(value: Any) -> bytes:
+        try:
+            frame = bytes.fromhex(value) if isinstance(value, str) else None
+        except ValueError:
+            frame = None
+        if frame is None or len(frame) > 256:
+            raise _WrongValueError('bytes in hexadecimal such as "A0 01 01 A2", 256 at most')
+        return frame
+
+    return check
+
+
+def _numbers(count: int, low: float, high: float, *, whole: bool = False) -> Check:
+    def check(value: Any) -> tuple[float, ...]:
+        good = isinstance(value, (list, tuple)) and len(value) in (0, count)
+        if good:
+            good = all(_is_number(part) and math.isfinite(part) and low <= part <= high for part in value)
+        if good and whole:
+            good = all(float(part).is_integer() for part in value)
+        if not good:
+            kind = "whole numbers" if whole else "numbers"
+            raise _WrongValueError(f"a list of {count} {kind} from {low:g} to {high:g}, or an empty list")
+        return tuple(int(part) if whole else float(part) for part in value)
+
+    return check
+
+
+def _names(pattern: re.Pattern[str], allowed: str) -> Check:
+    def check(value: Any) -> tuple[str, ...]:
+        if not (isinstance(value, (list, tuple)) and all(isinstance(v, str) and pattern.fullmatch(v) for v in value)):
+            raise _WrongValueError(allowed)
+        return tuple(value)
+
+    return check
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class StationSettings:
+    """Who this station is; the four make its topics."""
+
+    root: str = _declare("edgewatch", _topic_level(), "first topic level")
+    site: str = _declare("site", _topic_level(), "works or mill")
+    line: str = _declare("line", _topic_level(), "line within the site")
+    name: str = _declare("station", _topic_level(), "station on the line")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SourceSettings:
+    """Where pictures come from."""
+
+    uri: str = _declare(
+        "",
+        _text(),
+        "camera:/dev/video0, clip:PATH, pipe:- or pipe:FIFO, stream:URL, rehearsal:",
+    )
+    width_px: int = _declare(640, _whole(16, 16384), "picture width delivered by the source (px)")
+    height_px: int = _declare(400, _whole(16, 16384), "picture height delivered by the source (px)")
+    pixel_format: str = _declare(
+        "gray8", _choice("gray8", "yuv420p"), "layout of raw frames on a pipe (yuv420p: luminance is used)"
+    )
+    region_px: tuple[int, ...] = _declare(
+        (), _numbers(4, 0, 16384, whole=True), "region of interest x, y, width, height in source pixels; [] is all"
+    )
+    binning: int = _declare(1, _whole(1, 8), "average this many pixels each way into one")
+    stall_s: float = _declare(2.0, _number(0.05, 600), "a live source silent for longer is stalled (s)")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CameraSettings:
+    """What is asked of a V4L2 camera; read back and reported where it took something else."""
+
+    fourcc: str = _declare(
+        "GREY", _matching(re.compile(r"[ -~]{4}"), "a V4L2 pixel format of four characters"), "V4L2 pixel format"
+    )
+    gain: float = _declare(0.0, _number(-1, 1e6), "manual gain in the driver's own unit; -1 leaves it alone")
+    exposure_unit_ms: float = _declare(
+        0.1, _number(1e-6, 1000), "one step of the driver's absolute exposure control (ms); V4L2's is 0.1"
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class OpticsSettings:
+    """Scale, contact point, stream axis and camera timing, in pixels of the source."""
+
+    mm_per_px: float = _declare(1.0, _number(1e-3, 100), "scale in the plane of the stream (mm per px)")
+    contact_px: tuple[float, ...] = _declare((0.0, 0.0), _numbers(2, -65536, 65536), "contact point x, y (px)")
+    direction_deg: float = _declare(0.0, _number(-360, 360), "stream axis: 0 along +x, positive towards +y (down)")
+    exposure_ms: float = _declare(2.5, _number(1e-3, 1000), "exposure (ms)")
+    fps: float = _declare(200.0, _number(0.1, 100_000), "frames a second")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class WheelSettings:
+    """The grinding wheel."""
+
+    surface_speed_m_s: float = _declare(
+        0.0, _number(0, 200), "surface speed of the wheel (m/s); 0: not known, sparks tell it"
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class FigureSettings:
+    """How figures are formed over time."""
+
+    window_s: float = _declare(0.25, _number(0.02, 10), "shortest time for which figures are published (s)")
+    begin_s: float = _declare(0.05, _number(0.001, 5), "sparks for this long begin a contact (s)")
+    gap_s: float = _declare(0.15, _number(0.01, 10), "no sparks for this long end a contact (s)")
+    least_streaks: float = _declare(
+        2.0, _number(0.01, 1000), "streaks a frame, on average over begin_s or gap_s, that count as sparks"
+    )
+    longest_s: float = _declare(120.0, _number(1, 3600), "a contact longer than this is ended and said (s)")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class JudgeSettings:
+    """What is expected and at which risks."""
+
+    bands: str = _declare("bands", _text(), "folder of band files, relative to this file")
+    expect: str = _declare(
+        "", _matching(GRADE_NAME, "a grade name, or empty: judge nothing", empty=True), "grade on the line at start"
+    )
+    false_alarm: float = _declare(
+        0.001, _number(1e-6, 0.2), "highest probability that a bar inside its band is called nonconforming"
+    )
+    miss: float = _declare(
+        0.01, _number(1e-6, 0.2), "highest probability that a bar of another taught grade is called conforming"
+    )
+    least_streaks: int = _declare(
+        50, _whole(1, 1_000_000), "a contact with fewer streaks than this is inconclusive: too few streaks"
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class JournalSettings:
+    """The journal and outbox: one SQLite file."""
+
+    file: str = _declare("edgewatch.sqlite", _text(), "journal file, relative to this file")
+    most_mb: float = _declare(512.0, _number(1, 1e6), "size at which the oldest delivered records give way (MB)")
+    thin_windows_mb: float = _declare(
+        128.0, _number(0.5, 1e6), "unsent messages above this size (MB): window messages are thinned, and counted"
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class EvidenceSettings:
+    """Pictures kept of nonconforming bars."""
+
+    folder: str = _declare("evidence", _text(), "folder, relative to this file; empty keeps none")
+    most_mb: float = _declare(200.0, _number(0.1, 1e6), "size at which the oldest pictures give way (MB)")
+    pictures: int = _declare(3, _whole(1, 50), "pictures a nonconforming bar")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class MqttSettings:
+    """The broker."""
+
+    enabled: bool = _declare(False, _flag(), "publish over MQTT")
+    host: str = _declare("localhost", _text(255), "broker's host name or address")
+    port: int = _declare(1883, _whole(1, 65535), "broker's port; 1883 is plain, 8883 is TLS")
+    version: str = _declare("5", _choice("5", "3.1.1"), "MQTT version")
+    client_id: str = _declare("", _text(128), "client identifier; empty makes one from the station's name")
+    user: str = _declare("", _text(256), "user name; empty: none")
+    password_file: str = _declare("", _text(), "file whose first line is the password; none but its owner may read it")
+    tls: bool = _declare(False, _flag(), "TLS; the broker's certificate is verified")
+    ca_file: str = _declare("", _text(), "certificate authority file (PEM); empty: the system's")
+    cert_file: str = _declare("", _text(), "the station's own certificate (PEM); empty: none")
+    key_file: str = _declare("", _text(), "its key (PEM); none but its owner may read it")
+    keepalive_s: int = _declare(20, _whole(2, 65535), "keep alive (s)")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class OrderSettings:
+    """Orders over MQTT."""
+
+    enabled: bool = _declare(False, _flag(), "take orders over MQTT")
+    most_bytes: int = _declare(4096, _whole(64, 1_000_000), "a larger order is refused (bytes)")
+    most_per_minute: int = _declare(60, _whole(1, 100_000), "more orders a minute than this are refused")
+    oldest_s: float = _declare(60.0, _number(1, 86400), "an order sent longer ago than this is refused (s)")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RelaySettings:
+    """The process stop: never a safety function."""
+
+    kind: str = _declare("none", _choice("none", "line", "frames"), "none, a serial control line, a byte-frame board")
+    port: str = _declare("", _text(), "serial port or pyserial URL")
+    baud: int = _declare(9600, _whole(50, 4_000_000), "bits a second, for byte frames")
+    control_line: str = _declare("rts", _choice("rts", "dtr"), "which control line drives the relay")
+    energise_to: str = _declare(
+        "run", _choice("run", "stop"), "run: a dead board or a cut wire stops the line (fail-safe); stop: the opposite"
+    )
+    on_frame: bytes = _declare(b"", _hex_bytes(), "bytes that energise a byte-frame board's relay")
+    off_frame: bytes = _declare(b"", _hex_bytes(), "bytes that release it")
+    on_answer: bytes = _declare(b"", _hex_bytes(), "answer expected to on_frame; empty: none")
+    off_answer: bytes = _declare(b"", _hex_bytes(), "answer expected to off_frame; empty: none")
+    answer_s: float = _declare(0.5, _number(0.01, 10), "longest wait for the answer (s)")
+    latch: bool = _declare(True, _flag(), "stay stopped until released by an order or by hand")
+    blind_stop_s: float = _declare(
+        0.0, _number(0, 86400), "stop the line when the station has been unable to see for this long (s); 0: never"
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RehearsalSettings:
+    """The simulated line behind the source ``rehearsal:``."""
+
+    seed: int = _declare(1, _whole(0, 2**32 - 1), "seed of everything random")
+    bars: int = _declare(12, _whole(1, 1_000_000), "bars on the line")
+    foreign: int = _declare(2, _whole(0, 1_000_000), "of these, bars of another grade")
+    contact_s: float = _declare(1.2, _number(0.1, 600), "contact time (s)")
+    pause_s: float = _declare(0.5, _number(0.05, 600), "pause between bars (s)")
+    grade: str = _declare("C45", _matching(GRADE_NAME, "a grade name"), "grade that the line expects")
+    foreign_grades: tuple[str, ...] = _declare(
+        ("C15", "C80"), _names(GRADE_NAME, "a list of grade names"), "grades that the foreign bars are of, in turn"
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Settings:
+    """The whole configuration of one station."""
+
+    station: StationSettings = StationSettings()
+    source: SourceSettings = SourceSettings()
+    camera: CameraSettings = CameraSettings()
+    optics: OpticsSettings = OpticsSettings()
+    wheel: WheelSettings = WheelSettings()
+    figures: FigureSettings = FigureSettings()
+    judge: JudgeSettings = JudgeSettings()
+    journal: JournalSettings = JournalSettings()
+    evidence: EvidenceSettings = EvidenceSettings()
+    mqtt: MqttSettings = MqttSettings()
+    orders: OrderSettings = OrderSettings()
+    relay: RelaySettings = RelaySettings()
+    rehearsal: RehearsalSettings = RehearsalSettings()
+
+    def sight_optics(self) -> Optics:
+        """Optics of the pictures that the sight gets: after region of interest and binning.
+
+        Raises ``SettingsError`` when the parts do not fit together.
+        """
+        source, optics = self.source, self.optics
+        try:
+            whole = Optics(
+                width_px=source.width_px,
+                height_px=source.height_px,
+                mm_per_px=optics.mm_per_px,
+                contact_px=(optics.contact_px[0], optics.contact_px[1]) if optics.contact_px else (0.0, 0.0),
+                direction_deg=optics.direction_deg,
+                exposure_ms=optics.exposure_ms,
+                fps=optics.fps,
+            )
+            if source.region_px:
+                x, y, width, height = source.region_px
+                if x + width > source.width_px or y + height > source.height_px:
+                    raise ValueError(
+                        f"source.region_px = {list(source.region_px)}: reaches beyond the picture of "
+                        f"{source.width_px} x {source.height_px} px"
+                    )
+                whole = whole.cropped(x, y, width, height)
+            return whole.binned(source.binning) if source.binning > 1 else whole
+        except ValueError as error:
+            raise SettingsError(str(error)) from error
+
+
+def sections() -> dict[str, type[Any]]:
+    """Name -> settings class of every section, in the order of the sample file."""
+    return {part.name: type(part.default) for part in dataclasses.fields(Settings)}
+
+
+def _near(name: str, names: list[str]) -> str:
+    close = difflib.get_close_matches(name, names, n=1)
+    return f'; did you mean "{close[0]}"?' if close else f"; known are {', '.join(names)}"
+
+
+def _read_section(kind: type[S], data: Mapping[str, Any], where: str, problems: list[str]) -> S:
+    declared = {part.name: part for part in dataclasses.fields(kind)}  # type: ignore[arg-type]
+    kept: dict[str, Any] = {}
+    for key, value in data.items():
+        if key not in declared:
+            problems.append(f"{where}.{key} = {value!r}: no such key{_near(str(key), list(declared))}")
+            continue
+        try:
+            kept[key] = declared[key].metadata["check"](value)
+        except _WrongValueError as error:
+            problems.append(f"{where}.{key} = {value!r}: allowed is {error}")
+    return kind(**kept)
+
+
+def read_settings(data: Mapping[str, Any], *, file: str) -> Settings:
+    """Check ``data`` (a parsed TOML document) and return frozen settings; ``file`` is only named in errors.
+
+    Raises ``SettingsError`` with every problem found: unknown sections and keys, wrong types, values out of range,
+    and settings that contradict each other.
+    """
+    problems: list[str] = []
+    known = sections()
+    parts: dict[str, Any] = {}
+    for name, content in data.items():
+        if name not in known:
+            problems.append(f"{file}: [{name}]: no such section{_near(str(name), list(known))}")
+        elif not isinstance(content, Mapping):
+            problems.append(f"{file}: {name} = {content!r}: allowed is a section [{name}] with keys")
+        else:
+            parts[name] = _read_section(known[name], content, f"{file}: {name}", problems)
+    settings = Settings(**parts)
+    problems += _contradictions(settings, file)
+    if problems:
+        raise SettingsError(*problems)
+    return settings
+
+
+def _contradictions(settings: Settings, file: str) -> list[str]:
+    """Settings that are each allowed and do not fit together."""
+    found: list[str] = []
+    relay, mqtt, figures = settings.relay, settings.mqtt, settings.figures
+    if relay.kind != "none" and not relay.port:
+        found.append(f"{file}: relay.port is empty: with relay.kind = {relay.kind!r} a port or pyserial URL is needed")
+    if relay.kind == "frames" and not (relay.on_frame and relay.off_frame):
+        found.append(f'{file}: relay.on_frame, relay.off_frame: both are needed with relay.kind = "frames"')
+    if (mqtt.cert_file == "") != (mqtt.key_file == ""):
+        found.append(f"{file}: mqtt.cert_file, mqtt.key_file: give both or neither")
+    if mqtt.password_file and not mqtt.user:
+        found.append(f'{file}: mqtt.user = "": needed with mqtt.password_file')
+    if settings.orders.enabled and not mqtt.enabled:
+        found.append(f"{file}: orders.enabled = true: allowed only with mqtt.enabled = true")
+    if figures.longest_s < figures.window_s:
+        found.append(f"{file}: figures.longest_s = {figures.longest_s:g}: at least figures.window_s")
+    try:
+        settings.sight_optics()
+    except SettingsError as error:
+        found.append(f"{file}: {error}")
+    return found

@@ -1,0 +1,4 @@
+"""Seeing: one picture -> streaks and bursts. Core: arrays in, values out.
+
+The seam: ``Sight(optics).look(picture) -> Detections``.
+"""

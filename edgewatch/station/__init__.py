@@ -1,0 +1,1 @@
+"""Wiring: one supervised thread a port, clock, watchdog, stop."""

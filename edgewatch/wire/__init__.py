@@ -1,0 +1,1 @@
+"""Messages, topics, schemas, relay frames: values <-> bytes."""
