@@ -1,0 +1,182 @@
+"""Clips: a video file that FFmpeg reads, or a folder of pictures in name order. No frame is ever skipped.
+
+Time is ``index / optics.fps``, not the file's own rate: high-speed recordings are stored at any playback rate.
+"""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import cv2
+import numpy as np
+from numpy.typing import NDArray
+
+from edgewatch.errors import DeviceError
+from edgewatch.frames.luminance import one_line, open_luminance
+from edgewatch.frames.mono import make_mono
+from edgewatch.frames.quiet import hush
+from edgewatch.frames.values import Frame, Source, SourceInfo
+from edgewatch.settings import Settings
+from edgewatch.sight.optics import MAX_SIDE_PX
+
+PICTURE_SUFFIXES = frozenset({".png", ".pgm", ".ppm", ".pnm", ".bmp", ".jpg", ".jpeg", ".tif", ".tiff", ".webp"})
+"""Files of a folder that count as pictures; others (notes, thumbnails' databases) are passed over."""
+
+MOST_PICTURE_BYTES = 512 * 1024 * 1024
+"""A single picture file larger than this is not read into memory: 16384 x 16384 px of 16 bits."""
+
+_SLACK_FRAMES = 2
+"""A container's own count may be off by rounding of its duration; only more missing frames than that are said."""
+
+
+def open_clip(rest: str, settings: Settings, live: bool = False) -> Source:
+    """Open the file or folder ``rest``; ``live`` is of no account: a clip waits for its reader.
+
+    Raises ``DeviceError`` if there is no such clip, or it is empty, damaged, or not a video.
+    """
+    path = Path(rest)
+    fps = settings.optics.fps
+    try:
+        if path.is_dir():
+            return PictureFolder(path, fps=fps)
+        if not path.exists():
+            raise DeviceError(f"clip {path}: no such file or folder")
+        if path.stat().st_size == 0 and path.is_file():
+            raise DeviceError(f"clip {path}: the file is empty")
+        with path.open("rb"):  # says "permission denied" where FFmpeg would only say that it is not a video
+            pass
+    except (OSError, ValueError) as error:
+        raise DeviceError(f"clip {rest}: cannot be read: {getattr(error, 'strerror', None) or error}") from error
+    return VideoFile(path, fps=fps)
+
+
+class VideoFile:
+    """A video file read by FFmpeg through OpenCV. See ``Source``."""
+
+    def __init__(self, path: Path, *, fps: float) -> None:
+        """Open ``path`` and decode its first frame. Raises ``DeviceError``."""
+        hush()
+        self._path, self._fps = path, fps
+        self._index = 0
+        self._last_s = 0.0
+        try:
+            self._decoder = open_luminance(str(path))
+            first = self._decoder.read()
+        except (cv2.error, ValueError) as error:
+            raise DeviceError(f"clip {path}: cannot be decoded: {one_line(error)}") from error
+        if first is None:
+            self._decoder.close()
+            raise DeviceError(f"clip {path}: not a video that FFmpeg can read, or empty or damaged")
+        self._first: NDArray[np.uint8] | None = first
+        height, width = first.shape
+        rate = self._decoder.rate
+        self.info = SourceInfo(uri=f"clip:{path}", width_px=width, height_px=height, fps=rate, live=False)
+
+    def read(self, timeout_s: float = 0.0) -> Frame | None:
+        """Return the next frame, ``None`` after the last; ``timeout_s`` is of no account.
+
+        Raises ``DeviceError`` where the file ends before the length it states, or the picture size changes.
+        """
+        picture, self._first = self._first, None
+        if picture is None:
+            picture = self._decode()
+        if picture is None:
+            self._check_complete()
+            return None
+        check_size(f"clip {self._path}: picture {self._index}", picture, self.info)
+        frame = Frame(picture=picture, index=self._index, t_s=self._index / self._fps)
+        self._index += 1
+        return frame
+
+    def close(self) -> None:
+        """Let go of the file."""
+        self._decoder.close()
+
+    def _decode(self) -> NDArray[np.uint8] | None:
+        try:
+            picture = self._decoder.read()
+        except (cv2.error, ValueError) as error:
+            raise DeviceError(f"clip {self._path}: picture {self._index}: {one_line(error)}") from error
+        if picture is not None:
+            self._last_s = self._decoder.position_s
+        return picture
+
+    def _check_complete(self) -> None:
+        """Raise where both the number of frames and the time reached fall short of what the container states.
+
+        Either alone is no proof: with a varying rate the number is only duration times a guessed rate, and the time
+        reached says nothing where the number was exact.
+        """
+        count, rate = self._decoder.count, self._decoder.rate
+        if not (count > 0 and rate > 0):
+            return
+        short = self._index < count - _SLACK_FRAMES
+        early = self._last_s < (count - 1 - _SLACK_FRAMES) / rate
+        if short and early:
+            raise DeviceError(
+                f"clip {self._path}: ends after {self._index} of {count:.0f} pictures: truncated or damaged"
+            )
+
+
+class PictureFolder:
+    """Pictures of a folder in the order of their names. See ``Source``."""
+
+    def __init__(self, path: Path, *, fps: float) -> None:
+        """List the folder and read its first picture. Raises ``DeviceError``."""
+        hush()
+        self._fps = fps
+        self._files = sorted(
+            (file for file in path.iterdir() if file.suffix.lower() in PICTURE_SUFFIXES and file.is_file()),
+            key=lambda file: file.name,
+        )
+        if not self._files:
+            raise DeviceError(f"clip {path}: the folder holds no pictures ({', '.join(sorted(PICTURE_SUFFIXES))})")
+        self._index = 0
+        height, width = read_picture(self._files[0]).shape
+        self.info = SourceInfo(uri=f"clip:{path}", width_px=width, height_px=height, fps=float("nan"), live=False)
+
+    def read(self, timeout_s: float = 0.0) -> Frame | None:
+        """Return the next picture, ``None`` after the last; ``timeout_s`` is of no account.
+
+        Raises ``DeviceError`` naming the file that cannot be decoded or has another size.
+        """
+        if self._index >= len(self._files):
+            return None
+        file = self._files[self._index]
+        picture = read_picture(file)
+        check_size(f"clip: picture {file}", picture, self.info)
+        frame = Frame(picture=picture, index=self._index, t_s=self._index / self._fps)
+        self._index += 1
+        return frame
+
+    def close(self) -> None:
+        """Nothing is held open between pictures."""
+        self._index = len(self._files)
+
+
+def read_picture(file: Path) -> NDArray[np.uint8]:
+    """Read one picture file as 8-bit mono. Raises ``DeviceError`` naming it."""
+    hush()
+    try:
+        if file.stat().st_size > MOST_PICTURE_BYTES:
+            raise DeviceError(f"picture {file}: larger than {MOST_PICTURE_BYTES} bytes")
+        content = np.frombuffer(file.read_bytes(), dtype=np.uint8)
+        decoded = cv2.imdecode(content, cv2.IMREAD_UNCHANGED) if content.size else None
+        if decoded is None:
+            raise DeviceError(f"picture {file}: empty, damaged, or not a picture")
+        if max(decoded.shape[:2]) > MAX_SIDE_PX:
+            raise DeviceError(f"picture {file}: larger than {MAX_SIDE_PX} px a side")
+        return make_mono(decoded)
+    except OSError as error:
+        raise DeviceError(f"picture {file}: cannot be read: {error.strerror or error}") from error
+    except (cv2.error, ValueError) as error:
+        raise DeviceError(f"picture {file}: cannot be decoded: {one_line(error)}") from error
+
+
+def check_size(what: str, picture: NDArray[np.uint8], info: SourceInfo) -> None:
+    """Raise ``DeviceError`` if ``picture`` is not of the size that the source began with."""
+    height, width = picture.shape
+    if (width, height) != (info.width_px, info.height_px):
+        raise DeviceError(
+            f"{what} is {width} x {height} px, the first was {info.width_px} x {info.height_px}: one size is needed"
+        )
