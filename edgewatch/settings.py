@@ -9,8 +9,8 @@ from __future__ import annotations
 
 import dataclasses
 import difflib
-import math
 import re
+import reprlib
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from typing import Any, TypeVar
@@ -22,8 +22,28 @@ _TOPIC_LEVEL = re.compile(r"[^\s/+#$\x00-\x1f][^/+#\x00-\x1f]{0,63}")
 GRADE_NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._+-]{0,39}")
 """A grade is also a file name and part of messages: letters, digits, dot, plus, minus, underline; 40 at most."""
 
+MIN_SIDE_PX = 16
+"""Shortest side of a picture that the sight works on (px)."""
+
+_SECRET = re.compile(r"pass|secret|token|key|pin", re.IGNORECASE)
+"""A key that is not known and looks like these may hold a secret: its value is not repeated in an error."""
+
 Check = Callable[[Any], Any]
 S = TypeVar("S")
+
+
+class _Shorten(reprlib.Repr):
+    """``repr`` for errors: short, on one line, and safe. TOML has whole numbers of any length and tables of any depth,
+    and the usual ``repr`` raises on both.
+    """
+
+    def repr_int(self, x: int, level: int) -> str:
+        return repr(x) if x.bit_length() <= 256 else f"(a whole number of {x.bit_length()} bits)"
+
+
+_shorten = _Shorten()
+_shorten.maxstring = _shorten.maxother = 60
+_shorten.maxlevel = 3
 
 
 class _WrongValueError(Exception):
@@ -35,14 +55,25 @@ def _declare(default: Any, check: Check, says: str) -> Any:
     return field(default=default, metadata={"check": check, "help": says})
 
 
-def _is_number(value: Any) -> bool:
-    return isinstance(value, (int, float)) and not isinstance(value, bool)
+def _show(value: Any) -> str:
+    """Return the value as an error repeats it."""
+    return _shorten.repr(value)
 
 
-def _number(low: float, high: float, *, or_none: bool = False) -> Check:
-    def check(value: Any) -> float | None:
-        if not (_is_number(value) and math.isfinite(value) and low <= value <= high):
-            raise _WrongValueError(f"a number from {low:g} to {high:g}")
+def _name(key: object) -> str:
+    """Return a key that is not ours as an error repeats it: bare where TOML would have it bare, else quoted."""
+    return key if isinstance(key, str) and re.fullmatch(r"[A-Za-z0-9_-]{1,60}", key) else _show(key)
+
+
+def _is_between(value: Any, low: float, high: float) -> bool:
+    """Whether it is a number (true and false are none, NaN is outside) from ``low`` to ``high``."""
+    return isinstance(value, (int, float)) and not isinstance(value, bool) and low <= value <= high
+
+
+def _number(low: float, high: float) -> Check:
+    def check(value: Any) -> float:
+        if not _is_between(value, low, high):
+            raise _WrongValueError(f"a number from {low:.12g} to {high:.12g}")
         return float(value)
 
     return check
@@ -75,10 +106,10 @@ def _choice(*names: str) -> Check:
     return check
 
 
-def _text(longest: int = 1024) -> Check:
+def _text(longest: int = 1024, *, least: int = 0) -> Check:
     def check(value: Any) -> str:
-        if not (isinstance(value, str) and len(value) <= longest and value.isprintable()):
-            raise _WrongValueError(f"text of at most {longest} printable characters")
+        if not (isinstance(value, str) and least <= len(value) <= longest and value.isprintable()):
+            raise _WrongValueError(f"text of {least} to {longest} printable characters")
         return value
 
     return check
@@ -86,9 +117,10 @@ def _text(longest: int = 1024) -> Check:
 
 def _matching(pattern: re.Pattern[str], allowed: str, *, empty: bool = False) -> Check:
     def check(value: Any) -> str:
-        if not (isinstance(value, str) and ((empty and not value) or pattern.fullmatch(value))):
+        good = isinstance(value, str) and value.isprintable() and (pattern.fullmatch(value) or (empty and not value))
+        if not good:
             raise _WrongValueError(allowed)
-        return value
+        return str(value)
 
     return check
 
@@ -114,12 +146,12 @@ def _numbers(count: int, low: float, high: float, *, whole: bool = False) -> Che
     def check(value: Any) -> tuple[float, ...]:
         good = isinstance(value, (list, tuple)) and len(value) in (0, count)
         if good:
-            good = all(_is_number(part) and math.isfinite(part) and low <= part <= high for part in value)
+            good = all(_is_between(part, low, high) for part in value)
         if good and whole:
             good = all(float(part).is_integer() for part in value)
         if not good:
             kind = "whole numbers" if whole else "numbers"
-            raise _WrongValueError(f"a list of {count} {kind} from {low:g} to {high:g}, or an empty list")
+            raise _WrongValueError(f"a list of {count} {kind} from {low:.12g} to {high:.12g}, or an empty list")
         return tuple(int(part) if whole else float(part) for part in value)
 
     return check
@@ -215,7 +247,7 @@ class FigureSettings:
 class JudgeSettings:
     """What is expected and at which risks."""
 
-    bands: str = _declare("bands", _text(), "folder of band files, relative to this file")
+    bands: str = _declare("bands", _text(least=1), "folder of band files, relative to this file")
     expect: str = _declare(
         "", _matching(GRADE_NAME, "a grade name, or empty: judge nothing", empty=True), "grade on the line at start"
     )
@@ -234,7 +266,7 @@ class JudgeSettings:
 class JournalSettings:
     """The journal and outbox: one SQLite file."""
 
-    file: str = _declare("edgewatch.sqlite", _text(), "journal file, relative to this file")
+    file: str = _declare("edgewatch.sqlite", _text(least=1), "journal file, relative to this file")
     most_mb: float = _declare(512.0, _number(1, 1e6), "size at which the oldest delivered records give way (MB)")
     thin_windows_mb: float = _declare(
         128.0, _number(0.5, 1e6), "unsent messages above this size (MB): window messages are thinned, and counted"
@@ -349,17 +381,23 @@ class Settings:
                 exposure_ms=optics.exposure_ms,
                 fps=optics.fps,
             )
-            if source.region_px:
-                x, y, width, height = source.region_px
-                if x + width > source.width_px or y + height > source.height_px:
-                    raise ValueError(
-                        f"source.region_px = {list(source.region_px)}: reaches beyond the picture of "
-                        f"{source.width_px} x {source.height_px} px"
-                    )
-                whole = whole.cropped(x, y, width, height)
-            return whole.binned(source.binning) if source.binning > 1 else whole
         except ValueError as error:
-            raise SettingsError(str(error)) from error
+            raise SettingsError(f"optics.{error}") from error
+        x, y, width, height = source.region_px or (0, 0, source.width_px, source.height_px)
+        if x + width > source.width_px or y + height > source.height_px:
+            raise SettingsError(
+                f"source.region_px = {list(source.region_px)}: reaches beyond the picture of "
+                f"{source.width_px} x {source.height_px} px"
+            )
+        if min(width, height) // source.binning < MIN_SIDE_PX:
+            raise SettingsError(
+                f"source.region_px = {list(source.region_px)}, source.binning = {source.binning}: leave a picture of "
+                f"{width // source.binning} x {height // source.binning} px; at least {MIN_SIDE_PX} px each way"
+            )
+        try:
+            return whole.cropped(x, y, width, height).binned(source.binning)
+        except ValueError as error:
+            raise SettingsError(f"source.region_px = {list(source.region_px)}: {error}") from error
 
 
 def sections() -> dict[str, type[Any]]:
@@ -367,22 +405,35 @@ def sections() -> dict[str, type[Any]]:
     return {part.name: type(part.default) for part in dataclasses.fields(Settings)}
 
 
+def allowed(section: str, key: str) -> str:
+    """Return what the key may hold, in the words that the error about a wrong value has."""
+    declared = {part.name: part for part in dataclasses.fields(sections()[section])}
+    try:
+        declared[key].metadata["check"](object())
+    except _WrongValueError as error:
+        return str(error)
+    raise ValueError(f"{section}.{key} takes anything")
+
+
 def _near(name: str, names: list[str]) -> str:
     close = difflib.get_close_matches(name, names, n=1)
     return f'; did you mean "{close[0]}"?' if close else f"; known are {', '.join(names)}"
 
 
-def _read_section(kind: type[S], data: Mapping[str, Any], where: str, problems: list[str]) -> S:
+def _read_section(name: str, kind: type[S], data: Mapping[str, Any], file: str, refused: dict[str, str]) -> S:
+    """Return the section with what could be kept; add the rest to ``refused``: key -> problem."""
     declared = {part.name: part for part in dataclasses.fields(kind)}  # type: ignore[arg-type]
     kept: dict[str, Any] = {}
     for key, value in data.items():
+        where = f"{name}.{_name(key)}"
         if key not in declared:
-            problems.append(f"{where}.{key} = {value!r}: no such key{_near(str(key), list(declared))}")
+            shown = "(not repeated)" if _SECRET.search(where) else _show(value)
+            refused[where] = f"{file}: {where} = {shown}: no such key{_near(_name(key), list(declared))}"
             continue
         try:
             kept[key] = declared[key].metadata["check"](value)
         except _WrongValueError as error:
-            problems.append(f"{where}.{key} = {value!r}: allowed is {error}")
+            refused[where] = f"{file}: {where} = {_show(value)}: allowed is {error}"
     return kind(**kept)
 
 
@@ -392,41 +443,110 @@ def read_settings(data: Mapping[str, Any], *, file: str) -> Settings:
     Raises ``SettingsError`` with every problem found: unknown sections and keys, wrong types, values out of range,
     and settings that contradict each other.
     """
-    problems: list[str] = []
+    refused: dict[str, str] = {}
     known = sections()
     parts: dict[str, Any] = {}
     for name, content in data.items():
+        shown = _name(name)
         if name not in known:
-            problems.append(f"{file}: [{name}]: no such section{_near(str(name), list(known))}")
+            refused[shown] = f"{file}: [{shown}]: no such section{_near(shown, list(known))}"
         elif not isinstance(content, Mapping):
-            problems.append(f"{file}: {name} = {content!r}: allowed is a section [{name}] with keys")
+            refused[shown] = f"{file}: {name} = {_show(content)}: allowed is a section [{name}] with keys"
         else:
-            parts[name] = _read_section(known[name], content, f"{file}: {name}", problems)
+            parts[name] = _read_section(name, known[name], content, file, refused)
     settings = Settings(**parts)
-    problems += _contradictions(settings, file)
+    # A rule about a key whose value was refused would speak of the default instead: it has to wait for the next try.
+    problems = [
+        f"{file}: {text}"
+        for keys, text in _contradictions(settings)
+        if not any(key in refused or key.split(".")[0] in refused for key in keys.split())
+    ]
+    problems = [*refused.values(), *problems]
     if problems:
         raise SettingsError(*problems)
     return settings
 
 
-def _contradictions(settings: Settings, file: str) -> list[str]:
-    """Settings that are each allowed and do not fit together."""
-    found: list[str] = []
-    relay, mqtt, figures = settings.relay, settings.mqtt, settings.figures
-    if relay.kind != "none" and not relay.port:
-        found.append(f"{file}: relay.port is empty: with relay.kind = {relay.kind!r} a port or pyserial URL is needed")
-    if relay.kind == "frames" and not (relay.on_frame and relay.off_frame):
-        found.append(f'{file}: relay.on_frame, relay.off_frame: both are needed with relay.kind = "frames"')
-    if (mqtt.cert_file == "") != (mqtt.key_file == ""):
-        found.append(f"{file}: mqtt.cert_file, mqtt.key_file: give both or neither")
-    if mqtt.password_file and not mqtt.user:
-        found.append(f'{file}: mqtt.user = "": needed with mqtt.password_file')
-    if settings.orders.enabled and not mqtt.enabled:
-        found.append(f"{file}: orders.enabled = true: allowed only with mqtt.enabled = true")
-    if figures.longest_s < figures.window_s:
-        found.append(f"{file}: figures.longest_s = {figures.longest_s:g}: at least figures.window_s")
+_PICTURE_KEYS = (
+    "source.width_px source.height_px source.region_px source.binning "
+    "optics.mm_per_px optics.contact_px optics.direction_deg optics.exposure_ms optics.fps"
+)
+
+
+def _contradictions(settings: Settings) -> list[tuple[str, str]]:
+    """Settings that are each allowed and do not fit together: the keys concerned, and what is wrong."""
+    relay, mqtt, rehearsal = settings.relay, settings.mqtt, settings.rehearsal
+    figures = settings.figures
+    rules: tuple[tuple[str, object, str], ...] = (
+        (
+            "relay.kind relay.port",
+            relay.kind == "none" or relay.port,
+            f'relay.port = "": with relay.kind = "{relay.kind}" a serial port or pyserial URL is needed',
+        ),
+        (
+            "relay.kind relay.on_frame relay.off_frame",
+            relay.kind != "frames" or (relay.on_frame and relay.off_frame),
+            'relay.on_frame, relay.off_frame: both are needed with relay.kind = "frames"',
+        ),
+        (
+            "relay.kind relay.on_frame relay.off_frame",
+            relay.kind != "frames" or relay.on_frame != relay.off_frame or not relay.on_frame,
+            "relay.on_frame, relay.off_frame: the same bytes cannot do both",
+        ),
+        (
+            "relay.kind relay.blind_stop_s",
+            relay.blind_stop_s == 0 or relay.kind != "none",
+            f'relay.blind_stop_s = {relay.blind_stop_s:g}: stops nothing with relay.kind = "none"',
+        ),
+        (
+            "mqtt.enabled mqtt.host",
+            not mqtt.enabled or mqtt.host,
+            'mqtt.host = "": needed with mqtt.enabled = true',
+        ),
+        (
+            "mqtt.cert_file mqtt.key_file",
+            bool(mqtt.cert_file) == bool(mqtt.key_file),
+            "mqtt.cert_file, mqtt.key_file: give both or neither",
+        ),
+        (
+            "mqtt.tls mqtt.ca_file mqtt.cert_file",
+            mqtt.tls or not (mqtt.ca_file or mqtt.cert_file),
+            "mqtt.tls = false: certificates are given and the connection would be plain; set true or remove them",
+        ),
+        (
+            "mqtt.user mqtt.password_file",
+            mqtt.user or not mqtt.password_file,
+            'mqtt.user = "": needed with mqtt.password_file',
+        ),
+        (
+            "orders.enabled mqtt.enabled",
+            mqtt.enabled or not settings.orders.enabled,
+            "orders.enabled = true: only with mqtt.enabled = true",
+        ),
+        (
+            "figures.longest_s figures.window_s",
+            figures.longest_s >= figures.window_s,
+            f"figures.longest_s = {figures.longest_s:g}: at least figures.window_s = {figures.window_s:g}",
+        ),
+        (
+            "rehearsal.foreign rehearsal.bars",
+            rehearsal.foreign <= rehearsal.bars,
+            f"rehearsal.foreign = {rehearsal.foreign}: at most rehearsal.bars = {rehearsal.bars}",
+        ),
+        (
+            "rehearsal.foreign rehearsal.foreign_grades",
+            not rehearsal.foreign or rehearsal.foreign_grades,
+            "rehearsal.foreign_grades = []: at least one grade while rehearsal.foreign is not 0",
+        ),
+        (
+            "rehearsal.grade rehearsal.foreign_grades",
+            rehearsal.grade not in rehearsal.foreign_grades,
+            f"rehearsal.foreign_grades = {list(rehearsal.foreign_grades)}: holds the expected grade itself",
+        ),
+    )
+    found = [(keys, text) for keys, holds, text in rules if not holds]
     try:
         settings.sight_optics()
     except SettingsError as error:
-        found.append(f"{file}: {error}")
+        found.append((_PICTURE_KEYS, str(error)))
     return found
