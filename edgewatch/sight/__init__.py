@@ -2,3 +2,7 @@
 
 The seam: ``Sight(optics).look(picture) -> Detections``.
 """
+
+from edgewatch.sight.sight import Sight, SightTuning
+
+__all__ = ["Sight", "SightTuning"]

@@ -6,6 +6,7 @@ Same fields and dtypes with 0 or 1000 streaks: a dark picture gives empty arrays
 from __future__ import annotations
 
 import enum
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -65,6 +66,10 @@ class Detections:
     ``bursts``: float32 (M, 2), x y in px, each listed only in the picture where it first shows.
     ``burst_arms``: int16 (M,), arms seen. ``burst_flags``: uint8 (M,).
     ``light``: state of the picture.
+
+    For the burst-rate: ``rate_bursts``, bursts of this picture that count for the rate, and ``rate_exposure_px``, the
+    track (px) during which such a burst would have been counted. Sums over pictures give the rate without bias from
+    the time between exposures; left out, they are all bursts and all track.
     """
 
     streaks: NDArray[np.float32]
@@ -74,3 +79,13 @@ class Detections:
     burst_arms: NDArray[np.int16]
     burst_flags: NDArray[np.uint8]
     light: Light
+    rate_bursts: int = -1
+    rate_exposure_px: float = math.nan
+
+    def __post_init__(self) -> None:
+        """Fill in what was left out."""
+        if self.rate_bursts < 0:
+            object.__setattr__(self, "rate_bursts", int(self.bursts.shape[0]))
+        if math.isnan(self.rate_exposure_px):
+            runs = self.streaks[:, 2:] - self.streaks[:, :2]
+            object.__setattr__(self, "rate_exposure_px", float(np.hypot(runs[:, 0], runs[:, 1]).sum(dtype=np.float64)))

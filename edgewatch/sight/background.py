@@ -1,0 +1,110 @@
+"""Background and noise: what the picture would be without sparks.
+
+Two parts. A *pattern* follows each pixel slowly by sigma-delta steps of one grey level, which converge to the
+pixel's median over time (McFarlane & Schofield, Machine Vision and Applications 8, 1995): machine parts, hot pixels,
+the wheel's glow. A *drift* is what the picture at hand adds smoothly over space (haze, lamp flicker): the
+difference from the pattern, averaged in cells and opened morphologically (Serra 1982), so that nothing as thin as
+a streak survives in it. A single picture has no pattern: its background is drift alone.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import cv2
+import numpy as np
+from numpy.typing import NDArray
+
+_cv: Any = cv2  # its own type hints differ between versions and forbid scalars that it takes
+
+CELL_PX = 8
+"""Side of the cells in which the drift is averaged (px): several streak widths."""
+
+OPENING_CELLS = 5
+"""Side of the opening in cells: bundles of streaks narrower than 40 px do not enter the drift."""
+
+LEARN_PICTURES = 8
+"""Pictures over which the pattern is first taken as the lowest value seen: sparks move on, machine parts stay."""
+
+PATTERN_RATE_HZ = 25.0
+"""Grey levels per second that the pattern may follow: a lamp warming up, not a spark stream."""
+
+LEAST_NOISE_DN = 0.6
+"""Quantisation, 1/sqrt(12), and what compression hides: noise is never taken to be lower (DN)."""
+
+NOISE_STRIDE = (3, 5)
+"""Rows and columns between the pixels that noise is estimated from; coprime with compression blocks of 8 and 16."""
+
+
+class Background:
+    """Follows background and noise; ``excess(picture)`` is the picture less its background (DN, clipped at 0)."""
+
+    def __init__(self, *, period_s: float) -> None:
+        """``period_s``: time between pictures (s)."""
+        self._every = max(1, round(1.0 / (PATTERN_RATE_HZ * period_s)))
+        self.reset()
+
+    def reset(self) -> None:
+        """Forget everything seen."""
+        self._first: NDArray[np.uint8] | None = None
+        self._lowest: NDArray[np.uint8] | None = None
+        self._pattern: NDArray[np.uint8] | None = None
+        self._pattern_cells: NDArray[np.float32] | None = None
+        self._seen = 0
+        self.level_dn = 0.0
+        self.noise_dn = LEAST_NOISE_DN
+
+    def excess(self, picture: NDArray[np.uint8]) -> NDArray[np.uint8]:
+        """Picture less its background (DN, clipped at 0), uint8 (H, W); learns from the picture."""
+        height, width = picture.shape
+        small = (max(2, width // CELL_PX), max(2, height // CELL_PX))
+        cells = _cv.resize(picture, small, interpolation=_cv.INTER_AREA).astype(np.float32)
+        if self._pattern_cells is not None:
+            cells -= self._pattern_cells
+        drift = _open(cells)
+        whole = _cv.resize(np.rint(drift * 64.0).astype(np.int16), (width, height), interpolation=_cv.INTER_LINEAR)
+        ground = _cv.convertScaleAbs(whole, alpha=1.0 / 64.0) if self._pattern is None else None
+        if ground is None:
+            assert self._pattern is not None
+            ground = _cv.add(self._pattern, _cv.convertScaleAbs(_cv.max(whole, 0), alpha=1.0 / 64.0))
+            ground = _cv.subtract(ground, _cv.convertScaleAbs(_cv.min(whole, 0), alpha=1.0 / 64.0))
+        self._measure_noise(picture, ground)
+        self._learn(picture, ground, small)
+        return np.asarray(_cv.subtract(picture, ground))
+
+    def _measure_noise(self, picture: NDArray[np.uint8], ground: NDArray[np.uint8]) -> None:
+        rows, columns = NOISE_STRIDE
+        here = ground[::rows, ::columns]
+        left = picture[::rows, ::columns].astype(np.float32) - here
+        self.level_dn = float(here.mean())
+        # Median absolute deviation finds the scale, clipping the sparks away; the clipped deviation then refines it
+        # below one grey level, which a median of integers cannot do (0.9871: a Gaussian clipped at 3 deviations).
+        centre = float(np.median(left))
+        scale = max(LEAST_NOISE_DN, 1.4826 * float(np.median(np.abs(left - centre))))
+        quiet = left[np.abs(left - centre) <= 3.0 * scale]
+        deviation = float(quiet.std()) / 0.9871 if quiet.size else LEAST_NOISE_DN
+        self.noise_dn = max(LEAST_NOISE_DN, deviation)
+
+    def _learn(self, picture: NDArray[np.uint8], ground: NDArray[np.uint8], small: tuple[int, int]) -> None:
+        self._seen += 1
+        if self._first is None or self._lowest is None:
+            self._first, self._lowest = ground, picture.copy()
+            return
+        if self._seen <= LEARN_PICTURES:
+            self._lowest = _cv.min(self._lowest, picture)
+            if self._seen < LEARN_PICTURES // 2:
+                return
+            self._pattern = _cv.max(self._first, self._lowest)
+        elif self._seen % self._every == 0:
+            up = _cv.min(_cv.compare(picture, self._pattern, _cv.CMP_GT), 1)
+            down = _cv.min(_cv.compare(picture, self._pattern, _cv.CMP_LT), 1)
+            self._pattern = _cv.subtract(_cv.add(self._pattern, up), down)
+        else:
+            return
+        self._pattern_cells = _cv.resize(self._pattern, small, interpolation=_cv.INTER_AREA).astype(np.float32)
+
+
+def _open(cells: NDArray[np.float32]) -> NDArray[np.float32]:
+    kernel = np.ones((OPENING_CELLS, OPENING_CELLS), np.uint8)
+    opened = _cv.morphologyEx(cells, _cv.MORPH_OPEN, kernel, borderType=_cv.BORDER_REPLICATE)
+    return np.asarray(_cv.blur(opened, (OPENING_CELLS, OPENING_CELLS)))
