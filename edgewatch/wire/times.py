@@ -5,12 +5,13 @@ from __future__ import annotations
 import calendar
 import math
 import re
-import time
+from datetime import datetime, timedelta, timezone
 
 _RFC3339 = re.compile(
     r"([0-9]{4})-([0-9]{2})-([0-9]{2})[Tt]([0-9]{2}):([0-9]{2}):([0-9]{2})(\.[0-9]{1,12})?"
     r"(?:[Zz]|([+-])([0-9]{2}):([0-9]{2}))"
 )
+_EPOCH = datetime(1970, 1, 1, tzinfo=timezone.utc)
 _FIRST_S, _LAST_S = -62135596800.0, 253402300799.0
 """Years 0001 to 9999, what the format and the calendar share."""
 
@@ -24,8 +25,8 @@ def write_time(utc_s: float) -> str:
         raise ValueError(f"utc_s = {utc_s!r}: a time within the years 1 to 9999 is needed")
     whole_ms = min(math.floor(utc_s * 1000 + 0.5), int(_LAST_S) * 1000 + 999)
     seconds, ms = divmod(whole_ms, 1000)
-    t = time.gmtime(seconds)
-    return f"{t.tm_year:04d}-{t.tm_mon:02d}-{t.tm_mday:02d}T{t.tm_hour:02d}:{t.tm_min:02d}:{t.tm_sec:02d}.{ms:03d}Z"
+    t = _EPOCH + timedelta(seconds=seconds)
+    return f"{t.year:04d}-{t.month:02d}-{t.day:02d}T{t.hour:02d}:{t.minute:02d}:{t.second:02d}.{ms:03d}Z"
 
 
 def read_time(text: str) -> float:
