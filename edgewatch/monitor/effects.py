@@ -89,10 +89,10 @@ class SaveBand:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class BarDone:
+class Told:
     """One bar has been judged; for whoever runs the monitor (a line on stdout, a score)."""
 
     line: Mapping[str, Any] = field(default_factory=dict)
 
 
-Effect = Record | Remember | Publish | Reply | SetRelay | KeepPicture | SendView | SaveBand | BarDone
+Effect = Record | Remember | Publish | Reply | SetRelay | KeepPicture | SendView | SaveBand | Told

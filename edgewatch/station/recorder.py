@@ -6,15 +6,16 @@ oldest windows are given up first, then the oldest batches, and both are counted
 
 from __future__ import annotations
 
+import random
 import threading
 from collections import deque
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from typing import Any, Protocol
 
+from edgewatch.backoff import Backoff
 from edgewatch.errors import DeviceError
 from edgewatch.record.journal import Entry
-from edgewatch.station.supervise import BackOff
 from edgewatch.wire.messages import Stamp
 
 MOST_WAITING = 20_000
@@ -51,13 +52,13 @@ class Recorder:
         on_state: Callable[[DeviceError | None, int], None],
         on_written: Callable[[], None] = lambda: None,
         most_waiting: int = MOST_WAITING,
-        back_off: BackOff | None = None,
+        backoff: Backoff | None = None,
     ) -> None:
         self._journal = journal
         self._on_state = on_state
         self._on_written = on_written
         self._most_waiting = most_waiting
-        self._back_off = back_off or BackOff(first_s=0.2, longest_s=10.0)
+        self._backoff = backoff or Backoff(random.random, first_s=0.2, most_s=10.0)
         self._waiting: deque[Batch] = deque()
         self._entries = 0
         self._shed = 0
@@ -112,7 +113,7 @@ class Recorder:
                 self._failed(error)
                 if stop.is_set():
                     return
-                stop.wait(self._back_off.wait_s())
+                stop.wait(self._backoff.next_s())
                 continue
             finally:
                 with self._change:
@@ -130,7 +131,7 @@ class Recorder:
             recovered, self._failing = self._failing, False
             self._change.notify_all()
         if recovered:
-            self._back_off.reset()
+            self._backoff.reset()
             self._on_state(None, self._shed)
         self._on_written()
 

@@ -7,32 +7,12 @@ import threading
 import time
 from collections.abc import Callable
 
+from edgewatch.backoff import Backoff
+
 FIRST_WAIT_S = 0.5
 LONGEST_WAIT_S = 60.0
 STEADY_S = 300.0
 """A part that ran this long is steady again: its next failure begins with the first wait."""
-
-
-class BackOff:
-    """Waits that double from ``first_s`` to ``longest_s``, each drawn between half and whole so that many stations
-    do not knock at once ("equal jitter").
-    """
-
-    def __init__(
-        self, *, first_s: float = FIRST_WAIT_S, longest_s: float = LONGEST_WAIT_S, rng: random.Random | None = None
-    ) -> None:
-        self._first_s, self._longest_s = first_s, longest_s
-        self._next_s = first_s
-        self._rng = rng or random.Random()
-
-    def wait_s(self) -> float:
-        """Return how long to wait now; the next one is longer."""
-        now_s, self._next_s = self._next_s, min(2.0 * self._next_s, self._longest_s)
-        return now_s * (0.5 + 0.5 * self._rng.random())
-
-    def reset(self) -> None:
-        """Begin with the first wait again."""
-        self._next_s = self._first_s
 
 
 class Part:
@@ -48,12 +28,12 @@ class Part:
         work: Callable[[threading.Event], None],
         *,
         on_fault: Callable[[str, BaseException], None],
-        back_off: BackOff | None = None,
+        backoff: Backoff | None = None,
     ) -> None:
         self.name = name
         self._work = work
         self._on_fault = on_fault
-        self._back_off = back_off or BackOff()
+        self._backoff = backoff or Backoff(random.random, first_s=FIRST_WAIT_S, most_s=LONGEST_WAIT_S)
         self._stop = threading.Event()
         self._thread = threading.Thread(target=self._run, name=name, daemon=True)
 
@@ -81,6 +61,6 @@ class Part:
                 return
             except Exception as error:  # noqa: BLE001 - whatever kills one part must not stay unseen nor kill others
                 if time.monotonic() - begun > STEADY_S:
-                    self._back_off.reset()
+                    self._backoff.reset()
                 self._on_fault(self.name, error)
-            self._stop.wait(self._back_off.wait_s())
+            self._stop.wait(self._backoff.next_s())

@@ -5,10 +5,11 @@ from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
+from edgewatch.backoff import Backoff
 from edgewatch.errors import DeviceError
 from edgewatch.record.journal import Entry, Journal
 from edgewatch.station.recorder import Batch, Recorder
-from edgewatch.station.supervise import BackOff, Part
+from edgewatch.station.supervise import Part
 from edgewatch.wire.messages import Stamp
 
 STAMP = Stamp(boot="b", monotonic_s=1.0, utc_s=1.79e9, synced=True)
@@ -75,7 +76,7 @@ def test_failure_is_said_once_and_nothing_is_lost() -> None:
     recorder = Recorder(
         journal,
         on_state=lambda error, shed: said.append(str(error)),
-        back_off=BackOff(first_s=0.001, longest_s=0.002),
+        backoff=Backoff(lambda: 0.5, first_s=0.001, most_s=0.002),
     )
     part = running(recorder)
     for number in range(20):

@@ -1,9 +1,9 @@
-"""A part that dies is started again; the waits grow and stay bounded."""
+"""A part that dies is started again."""
 
-import random
 import threading
 
-from edgewatch.station.supervise import BackOff, Part
+from edgewatch.backoff import Backoff
+from edgewatch.station.supervise import Part
 
 
 def test_a_dying_part_is_started_again_and_said() -> None:
@@ -23,7 +23,7 @@ def test_a_dying_part_is_started_again_and_said() -> None:
         "reader",
         work,
         on_fault=lambda name, error: faults.append(f"{name}: {error}"),
-        back_off=BackOff(first_s=0.001, longest_s=0.001),
+        backoff=Backoff(lambda: 0.5, first_s=0.001, most_s=0.001),
     )
     part.start()
     assert steady.wait(5.0)
@@ -39,12 +39,3 @@ def test_a_part_that_returns_has_ended() -> None:
     part.start()
     assert part.stop(5.0)
     assert not faults
-
-
-def test_waits_double_within_jitter_and_stay_bounded() -> None:
-    """Each wait lies between half and whole of 0.5, 1, 2 … 60 s; a reset begins anew."""
-    back_off = BackOff(rng=random.Random(5))
-    for whole in (0.5, 1, 2, 4, 8, 16, 32, 60, 60, 60):
-        assert whole / 2 <= back_off.wait_s() <= whole
-    back_off.reset()
-    assert back_off.wait_s() <= 0.5
