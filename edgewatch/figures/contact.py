@@ -1,0 +1,112 @@
+"""When a bar touches the wheel: begin and end of contacts, from the number of streaks in each frame."""
+
+from __future__ import annotations
+
+import math
+from collections import deque
+from dataclasses import dataclass
+
+from edgewatch.settings import FigureSettings
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Begin:
+    """A contact has begun at ``t_s``, the first frame with sparks; it is known only ``begin_s`` later."""
+
+    t_s: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class End:
+    """A contact has ended: ``t_s`` is the last frame with sparks. ``reason``: ``gap``, ``longest`` or ``closed``."""
+
+    begin_s: float
+    t_s: float
+    reason: str
+
+
+class ContactFinder:
+    """Finds contacts; one call a frame, in order of time.
+
+    The mean number of streaks over ``begin_s`` begins a contact and over ``gap_s`` ends it, so that a frame or two
+    without streaks, skipped frames or single stray streaks do neither. Times come from the frames, not from counting
+    them. Raises ``ValueError`` on a time that is not finite or on a negative count.
+    """
+
+    def __init__(self, settings: FigureSettings, fps: float) -> None:
+        if not (math.isfinite(fps) and fps > 0.0):
+            raise ValueError(f"fps = {fps!r}: a positive number is needed")
+        self._settings = settings
+        self._period_s = 1.0 / fps
+        self._recent: deque[tuple[float, int]] = deque()
+        self._begin_s: float | None = None
+        self._last_spark_s = math.nan
+        self._last_s = -math.inf
+
+    @property
+    def in_contact(self) -> bool:
+        """Whether a bar touches the wheel, as far as is known."""
+        return self._begin_s is not None
+
+    @property
+    def begin_s(self) -> float:
+        """Begin of the contact under way (s), NaN without one."""
+        return math.nan if self._begin_s is None else self._begin_s
+
+    def is_spark(self, streaks: int) -> bool:
+        """Whether one frame by itself shows sparks."""
+        return streaks >= max(1.0, self._settings.least_streaks)
+
+    def update(self, t_s: float, streaks: int) -> Begin | End | None:
+        """Take one frame's time (s) and number of streaks; say whether a contact has begun or ended."""
+        if not math.isfinite(t_s) or streaks < 0:
+            raise ValueError(f"t_s = {t_s!r}, streaks = {streaks!r}: a finite time and a count are needed")
+        if t_s <= self._last_s:  # a source that starts again from 0: what was before does not count
+            self._recent.clear()
+        self._last_s = t_s
+        self._recent.append((t_s, streaks))
+        return self._look_for_begin(t_s) if self._begin_s is None else self._look_for_end(t_s, streaks)
+
+    def _mean_over(self, span_s: float, t_s: float) -> float:
+        """Mean streaks a frame over the last ``span_s``; older frames are let go of."""
+        recent = self._recent
+        while recent and recent[0][0] < t_s - span_s + 0.5 * self._period_s:
+            recent.popleft()
+        return sum(count for _, count in recent) / len(recent)
+
+    def _look_for_begin(self, t_s: float) -> Begin | None:
+        span = max(self._settings.begin_s, self._period_s)
+        mean = self._mean_over(span, t_s)
+        sparks = [at for at, count in self._recent if count > 0]
+        # as many frames as begin_s holds at the nominal rate, or as were delivered in that time when frames are skipped
+        covered = t_s - self._recent[0][0] + 1.5 * self._period_s >= span or len(self._recent) * self._period_s >= span
+        if mean < self._settings.least_streaks or not covered or 2 * len(sparks) <= len(self._recent):
+            return None
+        self._begin_s = next((at for at, count in self._recent if self.is_spark(count)), sparks[0])
+        self._last_spark_s = t_s
+        return Begin(t_s=self._begin_s)
+
+    def _look_for_end(self, t_s: float, streaks: int) -> End | None:
+        assert self._begin_s is not None
+        if self.is_spark(streaks):
+            steady = self._recent[-2][1] > 0 if len(self._recent) > 1 else True
+            if steady or t_s - self._last_spark_s < self._settings.begin_s:
+                self._last_spark_s = t_s
+        if t_s - self._begin_s > self._settings.longest_s:
+            return self._end("longest")
+        span = max(self._settings.gap_s, self._period_s)
+        mean = self._mean_over(span, t_s)
+        silent = t_s - self._last_spark_s >= span - 0.5 * self._period_s
+        return self._end("gap") if mean < self._settings.least_streaks and silent else None
+
+    def _end(self, reason: str) -> End:
+        assert self._begin_s is not None
+        end = End(begin_s=self._begin_s, t_s=self._last_spark_s, reason=reason)
+        self._begin_s = None
+        self._last_spark_s = math.nan
+        self._recent.clear()
+        return end
+
+    def close(self, t_s: float) -> End | None:
+        """The source has ended at ``t_s``: end the contact under way, if there is one."""
+        return None if self._begin_s is None else self._end("closed")

@@ -1,0 +1,104 @@
+"""How well a bar's figures agree with a taught grade, scatter from bar to bar included."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.special import ndtr
+
+from edgewatch.judge.bands import Band
+from edgewatch.judge.counts import NORMAL_NODES, NORMAL_WEIGHTS, at_least, at_most, log_mass
+
+LEAST_SCATTER = 0.02
+"""Scatter from bar to bar is never taken as less (2 %): no line repeats itself better."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Evidence:
+    """What a bar has shown: counts, and reach from settled windows (NaN without) with the track it comes from."""
+
+    bursts: int
+    exposure_m: float
+    reach_mm: float = math.nan
+    reach_track_m: float = 0.0
+
+
+def predictive_scatter(scatter: float | None, band: Band) -> float:
+    """Scatter of the next bar about the taught centre, the uncertainty of the centre included."""
+    known = scatter if scatter is not None and math.isfinite(scatter) else 0.0
+    return max(known, LEAST_SCATTER) * math.sqrt(1.0 + 1.0 / max(band.bars_used, 5))
+
+
+def means(band: Band, exposure_m: float) -> np.ndarray:
+    """Expected bursts at the quadrature nodes of the scatter."""
+    return np.asarray(
+        band.rate_center_per_m * exposure_m * np.exp(predictive_scatter(band.rate_scatter, band) * NORMAL_NODES)
+    )
+
+
+def rate_tails(band: Band, evidence: Evidence) -> tuple[float, float]:
+    """P(at most) and P(at least) so many bursts from a bar of this grade."""
+    mean = means(band, evidence.exposure_m)
+    low = float(NORMAL_WEIGHTS @ at_most(evidence.bursts, mean, band.rate_dispersion))
+    high = float(NORMAL_WEIGHTS @ at_least(evidence.bursts, mean, band.rate_dispersion))
+    return low, high
+
+
+def _reach_spread(band: Band, evidence: Evidence) -> float:
+    noise = band.reach_noise_mm2_m
+    sampling = 0.0
+    if noise is not None and math.isfinite(noise) and evidence.reach_track_m > 0.0 and band.reach_center_mm:
+        sampling = noise / evidence.reach_track_m / band.reach_center_mm**2
+    return math.sqrt(predictive_scatter(band.reach_scatter, band) ** 2 + sampling)
+
+
+def reach_score(band: Band, evidence: Evidence) -> float:
+    """Deviation of the bar's reach from the grade's, in standard deviations; NaN where there is none to compare."""
+    if not (band.has_reach and band.reach_center_mm and evidence.reach_mm > 0.0):
+        return math.nan
+    return math.log(evidence.reach_mm / band.reach_center_mm) / _reach_spread(band, evidence)
+
+
+def log_likelihood(band: Band, evidence: Evidence, *, use_reach: bool) -> float:
+    """Log likelihood of the evidence under the grade."""
+    terms = log_mass(evidence.bursts, means(band, evidence.exposure_m), band.rate_dispersion)
+    peak = float(terms.max())
+    total = peak + math.log(float(NORMAL_WEIGHTS @ np.exp(terms - peak)))
+    if use_reach:
+        total += -0.5 * reach_score(band, evidence) ** 2 - math.log(_reach_spread(band, evidence))
+    return total
+
+
+def nearest(bands: Sequence[Band], evidence: Evidence) -> tuple[tuple[str, float], ...]:
+    """Taught grades with their weights (posterior of equal priors), the likeliest first; empty without track."""
+    if not bands or not evidence.exposure_m > 0.0:
+        return ()
+    use_reach = evidence.reach_mm > 0.0 and all(band.has_reach and band.reach_center_mm for band in bands)
+    logs = np.array([log_likelihood(band, evidence, use_reach=use_reach) for band in bands])
+    weights = np.exp(logs - logs.max())
+    weights /= weights.sum()
+    order = np.argsort(-weights, kind="stable")
+    return tuple((bands[at].grade, float(weights[at])) for at in order)
+
+
+def excluded(other: Band, expected: Band, evidence: Evidence, *, miss: float) -> bool:
+    """Whether a bar of grade ``other`` would look so much like ``expected`` with probability at most ``miss``.
+
+    Tails of the other grade's predictive distribution on the side of the expected grade; with reach in both bands the
+    risk is split over the two figures.
+    """
+    both = other.has_reach and expected.has_reach and evidence.reach_mm > 0.0
+    risk = 0.5 * miss if both else miss
+    low, high = rate_tails(other, evidence)
+    tail = high if expected.rate_center_per_m > other.rate_center_per_m else low
+    if tail <= risk:
+        return True
+    if not both:
+        return False
+    score = reach_score(other, evidence)
+    assert expected.reach_center_mm is not None and other.reach_center_mm is not None
+    side = 1.0 if expected.reach_center_mm > other.reach_center_mm else -1.0
+    return float(ndtr(-side * score)) <= risk
