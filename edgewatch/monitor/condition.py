@@ -48,14 +48,14 @@ CAUSES = MappingProxyType(
         "wrong_exposure": Cause(OUT_OF_SPECIFICATION, True, "the camera does not use the configured exposure"),
         "no_contact": Cause(OUT_OF_SPECIFICATION, True, "the line reports a bar at the wheel and no sparks are seen"),
         # What the bands and figures say.
-        "unknown_grade": Cause(OUT_OF_SPECIFICATION, True, "no band is taught for the expected grade"),
-        "band_misfit": Cause(OUT_OF_SPECIFICATION, True, "the band was taught with other optics or camera settings"),
+        "unknown_grade": Cause(OUT_OF_SPECIFICATION, False, "no band is taught for the expected grade"),
+        "band_misfit": Cause(OUT_OF_SPECIFICATION, False, "the band was taught with other optics or camera settings"),
         "band_unreadable": Cause(MAINTENANCE, False, "a band file cannot be used"),
         "wheel_speed": Cause(
             OUT_OF_SPECIFICATION, False, "spark speed does not fit the wheel's surface speed: optics, exposure or wheel"
         ),
         "drift": Cause(MAINTENANCE, False, "conforming bars shift slowly together: wheel wear or soiling"),
-        "teaching": Cause(FUNCTION_CHECK, True, "reference bars are being taken; they are not judged"),
+        "teaching": Cause(FUNCTION_CHECK, False, "reference bars are being taken; they are not judged"),
         # What the ports say.
         "broker_lost": Cause(MAINTENANCE, False, "the broker is away; messages wait in the journal"),
         "broker_refuses": Cause(MAINTENANCE, False, "the broker refuses this station: user, password or rights"),

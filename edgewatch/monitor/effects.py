@@ -20,11 +20,14 @@ class Record:
     """Write this to the journal together with the message that carries it, in one transaction with its neighbours.
 
     ``kind`` names the record and its message (``window``, ``bar``, ``alert``, ``condition``, ``expected``, ``order``);
-    ``payload`` is the message without ``seq``, which the journal assigns.
+    ``payload`` is the message's body; the journal adds ``seq`` and time. ``reply_topic`` and ``correlation``: where
+    else the answer to an order goes.
     """
 
     kind: str
     payload: Mapping[str, Any]
+    reply_topic: str = ""
+    correlation: bytes = b""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -43,20 +46,14 @@ class Publish:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class Reply:
-    """Answer an order on the topic it asked for."""
-
-    topic: str
-    correlation: bytes
-    payload: Mapping[str, Any]
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
 class SetRelay:
     """Wanted level of the process stop: ``stop`` true stops the line."""
 
     stop: bool
     reason: str
+    latched: bool = False
+    bar: int | None = None
+    who: str = ""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -77,7 +74,8 @@ class SendView:
     picture: NDArray[np.uint8]
     detections: Detections
     captions: tuple[str, ...]
-    at: str
+    frame: int
+    request: str
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -95,4 +93,4 @@ class Told:
     line: Mapping[str, Any] = field(default_factory=dict)
 
 
-Effect = Record | Remember | Publish | Reply | SetRelay | KeepPicture | SendView | SaveBand | Told
+Effect = Record | Remember | Publish | SetRelay | KeepPicture | SendView | SaveBand | Told

@@ -48,7 +48,7 @@ class Clock:
         if self._libc is None or not hasattr(self._libc, "adjtimex"):
             return False
         state = self._libc.adjtimex(ctypes.create_string_buffer(_TIMEX_BYTES))
-        return 0 <= state != _TIME_ERROR
+        return bool(0 <= state != _TIME_ERROR)
 
     def now(self) -> Stamp:
         """A stamp of this moment."""
