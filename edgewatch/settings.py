@@ -314,10 +314,20 @@ class OrderSettings:
 class RelaySettings:
     """The process stop: never a safety function."""
 
-    kind: str = _declare("none", _choice("none", "line", "frames"), "none, a serial control line, a byte-frame board")
+    kind: str = _declare(
+        "none",
+        _choice("none", "line", "frames", "modbus"),
+        "none, a serial control line, a byte-frame board, or a coil over Modbus RTU",
+    )
     port: str = _declare("", _text(), "serial port or pyserial URL")
-    baud: int = _declare(9600, _whole(50, 4_000_000), "bits a second, for byte frames")
+    baud: int = _declare(9600, _whole(50, 4_000_000), "bits a second, for byte frames and Modbus")
+    parity: str = _declare("none", _choice("none", "even", "odd"), "parity, for byte frames and Modbus")
     control_line: str = _declare("rts", _choice("rts", "dtr"), "which control line drives the relay")
+    sense_line: str = _declare(
+        "none",
+        _choice("none", "cts", "dsr", "dcd"),
+        "input line that a spare contact of the relay closes while it is energised: read back; none: not wired",
+    )
     energise_to: str = _declare(
         "run", _choice("run", "stop"), "run: a dead board or a cut wire stops the line (fail-safe); stop: the opposite"
     )
@@ -326,6 +336,8 @@ class RelaySettings:
     on_answer: bytes = _declare(b"", _hex_bytes(), "answer expected to on_frame; empty: none")
     off_answer: bytes = _declare(b"", _hex_bytes(), "answer expected to off_frame; empty: none")
     answer_s: float = _declare(0.5, _number(0.01, 10), "longest wait for the answer (s)")
+    unit: int = _declare(1, _whole(1, 247), "Modbus unit of the relay board")
+    coil: int = _declare(0, _whole(0, 65535), "address of the coil, counted from 0 (the board's relay 1 is mostly 0)")
     latch: bool = _declare(True, _flag(), "stay stopped until released by an order or by hand")
     blind_stop_s: float = _declare(
         0.0, _number(0, 86400), "stop the line when the station has been unable to see for this long (s); 0: never"
