@@ -1,0 +1,79 @@
+"""Band files: ``FOLDER/GRADE.toml``, read all at once, written atomically."""
+
+from __future__ import annotations
+
+import os
+import sys
+from collections.abc import Callable
+from pathlib import Path
+
+from edgewatch.errors import DeviceError, SettingsError
+from edgewatch.judge.bands import Band, band_toml, read_band
+
+if sys.version_info >= (3, 11):
+    import tomllib
+else:  # pragma: no cover - the same parser under its older name
+    import tomli as tomllib
+
+MOST_BYTES = 4_000_000
+"""A band holds its reference bars; a file larger than this is none (thousands of bars fit)."""
+
+
+def load_band(path: Path) -> Band:
+    """Read one band file. Raises ``SettingsError`` naming file, key, value and what is allowed."""
+    try:
+        if path.stat().st_size > MOST_BYTES:
+            raise SettingsError(f"{path}: larger than {MOST_BYTES} bytes: not a band file")
+        data = tomllib.loads(path.read_text(encoding="utf-8"))
+    except OSError as error:
+        raise SettingsError(f"{path}: cannot be read: {error.strerror or error}") from error
+    except UnicodeDecodeError as error:
+        raise SettingsError(f"{path}: not UTF-8 text: {error.reason} at byte {error.start}") from error
+    except (tomllib.TOMLDecodeError, RecursionError, ValueError) as error:
+        raise SettingsError(f"{path}: not TOML: {error}") from error
+    band = read_band(data, file=str(path))
+    if band.grade != path.stem:
+        raise SettingsError(f"{path}: grade = {band.grade!r}: the file of this grade is named {band.grade}.toml")
+    return band
+
+
+def load_bands(folder: Path, *, on_problem: Callable[[str], None] | None = None) -> dict[str, Band]:
+    """Read every band file of ``folder`` in name order; a folder that is not there holds none.
+
+    A file that cannot be used raises ``SettingsError`` with every problem found, or, with ``on_problem``, is told and
+    left out: a running station goes on with the bands that are good.
+    """
+    bands: dict[str, Band] = {}
+    problems: list[str] = []
+    for path in sorted(folder.glob("*.toml")) if folder.is_dir() else []:
+        band = _tried(path, problems)
+        if band is not None:
+            bands[band.grade] = band
+    if problems and on_problem is None:
+        raise SettingsError(*problems)
+    for problem in problems:
+        assert on_problem is not None
+        on_problem(problem)
+    return bands
+
+
+def _tried(path: Path, problems: list[str]) -> Band | None:
+    try:
+        return load_band(path)
+    except SettingsError as error:
+        problems.extend(error.problems)
+        return None
+
+
+def save_band(path: Path, band: Band) -> None:
+    """Write a band so that the file is always whole: the old one or the new one. Raises ``DeviceError``."""
+    spare = path.with_name(f".{path.name}.new")
+    try:
+        path.parent.mkdir(parents=True, exist_ok=True)
+        with spare.open("w", encoding="utf-8") as file:
+            file.write(band_toml(band))
+            file.flush()
+            os.fsync(file.fileno())
+        spare.replace(path)
+    except OSError as error:
+        raise DeviceError(f"{path}: cannot be written: {error.strerror or error}") from error
