@@ -7,7 +7,9 @@ carbon); the order of the metals by reach and by bursts follows the classical wo
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+
+import numpy as np
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -60,6 +62,22 @@ class Steel:
                 raise ValueError(f"{name} = {value!r}: allowed is {low:g} to {high:g}")
         if self.arms_high < self.arms_low:
             raise ValueError(f"arms_high = {self.arms_high}: at least arms_low = {self.arms_low}")
+
+    def varied(self, rng: np.random.Generator) -> Steel:
+        """Return a steel whose sparks look otherwise at the same hazard: arms, brightness along the streak, sizes."""
+        low = int(rng.integers(3, 5))
+        return replace(
+            self,
+            arms_low=low,
+            arms_high=low + int(rng.integers(0, 5)),
+            fork_share=float(np.clip(self.fork_share + rng.uniform(-0.3, 0.3), 0.0, 1.0)),
+            goes_on_share=float(np.clip(self.goes_on_share + rng.uniform(-0.2, 0.2), 0.0, 0.8)),
+            arm_speed_m_s=self.arm_speed_m_s * float(np.exp(rng.normal(0.0, 0.25))),
+            arm_life_ms=self.arm_life_ms * float(np.exp(rng.normal(0.0, 0.2))),
+            radius_um=self.radius_um * float(np.exp(rng.normal(0.0, 0.08))),
+            launch_k=self.launch_k + float(rng.normal(0.0, 60.0)),
+            oxidisable_share=self.oxidisable_share * float(np.exp(rng.normal(0.0, 0.08))),
+        )
 
 
 STEELS: dict[str, Steel] = {
