@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from edgewatch.judge.bands import Band
 from edgewatch.sight.detections import Detections
 
 
@@ -51,9 +52,6 @@ class SetRelay:
 
     stop: bool
     reason: str
-    latched: bool = False
-    bar: int | None = None
-    who: str = ""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -82,8 +80,7 @@ class SendView:
 class SaveBand:
     """Write a band that was taught by order; the older file of the same grade is kept beside it."""
 
-    grade: str
-    toml: str
+    band: Band
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -29,6 +29,7 @@ from edgewatch.sight.sight import Sight
 from edgewatch.wire import messages
 from edgewatch.wire.messages import Stamp
 from edgewatch.wire.orders import Order, Refusal, answer
+from edgewatch.wire.relayframes import is_energised
 
 SUMMARY_S = 5.0
 """A summary at least this often while nothing else brings one (s)."""
@@ -72,6 +73,7 @@ class Monitor:
         self._trial: Trial | None = None
         self._bar_causes: dict[str, None] = {}
         self._condemned = False
+        self._released_by = ""
         self._view_wanted: Order | None = None
         self._blind_since_s = math.nan
         self._summary_s = -math.inf
@@ -159,6 +161,22 @@ class Monitor:
             effects += self._cause_alert(cause, active=causes[cause])
         effects.append(self._condition_record())
         return effects + self._blind_stop(stamp)
+
+    def relay_report(
+        self, *, stop: bool, reason: str, read_back: bool | None, error: str, stamp: Stamp
+    ) -> list[Effect]:
+        """What became of a wanted level: it is in force (``error`` empty), or the relay cannot be reached."""
+        effects = self.complain({"relay_lost": bool(error)}, stamp, detail=error)
+        body = messages.relay(
+            wanted="stop" if stop else "run",
+            energised=is_energised(stop, self._settings.relay.energise_to),
+            read_back="unknown" if read_back is None else "stop" if read_back else "run",
+            reason=error or reason,
+            latched=self._stop is StopState.LATCHED,
+            bar=self._bar if self._condemned and stop else None,
+            who=self._released_by if not stop else "",
+        )
+        return [*effects, Record(kind="relay", payload=body)]
 
     def end(self, stamp: Stamp) -> list[Effect]:
         """The source has ended or the station stops: the contact under way is closed."""
@@ -323,11 +341,12 @@ class Monitor:
     def _release(self, order: Order) -> list[Effect]:
         if self._stop is StopState.RUN:
             return [self._answered(order, reason="the line was not stopped")]
-        return [self._answered(order), *self._move_stop(StopEvent.RELEASE, f"released by {order.who}", who=order.who)]
+        self._released_by = order.who
+        return [self._answered(order), *self._move_stop(StopEvent.RELEASE, f"released by {order.who}")]
 
     # ------------------------------------------------------------------ the process stop
 
-    def _move_stop(self, event: StopEvent, reason: str, *, who: str = "") -> list[Effect]:
+    def _move_stop(self, event: StopEvent, reason: str) -> list[Effect]:
         state = after(self._stop, event)
         if state is self._stop:
             return []
@@ -335,19 +354,13 @@ class Monitor:
         self._stop_reason = reason if state is not StopState.RUN else ""
         if self._settings.relay.kind == "none":
             return [Remember(values={"stop": self._stop_value()})]
-        return [self._relay_effect(reason=reason, who=who), Remember(values={"stop": self._stop_value()})]
+        return [self._relay_effect(reason), Remember(values={"stop": self._stop_value()})]
 
     def _stop_value(self) -> dict[str, str]:
         return {"state": self._stop.value, "reason": self._stop_reason}
 
-    def _relay_effect(self, *, reason: str = "", who: str = "") -> SetRelay:
-        return SetRelay(
-            stop=self._stop is not StopState.RUN,
-            reason=reason or self._stop_reason or "start",
-            latched=self._stop is StopState.LATCHED,
-            bar=self._bar if self._condemned else None,
-            who=who,
-        )
+    def _relay_effect(self, reason: str = "") -> SetRelay:
+        return SetRelay(stop=self._stop is not StopState.RUN, reason=reason or self._stop_reason or "start")
 
     def _blind_stop(self, stamp: Stamp) -> list[Effect]:
         """Stop the line when the station has been unable to see for too long; let go when it sees again."""
