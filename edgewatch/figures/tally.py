@@ -25,10 +25,12 @@ TRUNCATED_SHARE = 0.02
 """Reach is marked when more than this share of the track leaves the picture."""
 AXIS_BINS = 512
 """Bins along the axis: about a pixel each in the pictures this is made for; positions between are interpolated."""
-BLOCK_S = 0.05
-"""One block of time (s): short against a contact, a few frames at the slowest useful rate."""
-LIFE_S = 0.2
-"""Particles glow for up to about this long (s, common practice): figures further apart are independent."""
+BLOCK_S = 0.025
+"""One block of time (s): short against the shortest window, a few frames at usual rates."""
+MOST_BLOCKS = 512
+"""With more blocks, neighbours are joined: memory and cost of a long contact stay bounded."""
+LIFE_S = 0.15
+"""Hardly a particle glows longer than this (s): figures further apart are independent."""
 SPEED_BINS = 24
 """Bins along the axis for the speed profile."""
 LENGTH_STEP = 0.03
@@ -76,6 +78,7 @@ class Tally:
         self._sums = _Sums()
         self._begin_s = math.nan
         self._end_s = math.nan
+        self._block_s = BLOCK_S
         self._blocks: dict[int, NDArray[np.float64]] = {}
         self._lengths: NDArray[np.int64] = np.zeros((SPEED_BINS, LENGTH_BINS), dtype=np.int64)
         self._waiting: list[Detections] = []
@@ -101,7 +104,7 @@ class Tally:
         """Add one frame taken at ``t_s`` (s); ``skipped`` frames before it were not looked at."""
         if not math.isfinite(t_s) or skipped < 0:
             raise ValueError(f"t_s = {t_s!r}, skipped = {skipped!r}: a finite time and a count are needed")
-        block = math.floor(t_s / BLOCK_S + 1e-9)
+        block = math.floor(t_s / self._block_s + 1e-9)
         if self._waiting and block != self._waiting_block:
             self._work_up()
         self._waiting_block = block
@@ -123,12 +126,26 @@ class Tally:
         other._work_up()
         for name in _Sums.__slots__:
             setattr(self._sums, name, getattr(self._sums, name) + getattr(other._sums, name))
+        while self._block_s < other._block_s:
+            self._join_blocks()
+        times = round(self._block_s / other._block_s)
         for block, profile in other._blocks.items():
-            kept = self._blocks.get(block)
-            self._blocks[block] = profile.copy() if kept is None else kept + profile
+            kept = self._blocks.get(block // times)
+            self._blocks[block // times] = profile.copy() if kept is None else kept + profile
+        while len(self._blocks) > MOST_BLOCKS:
+            self._join_blocks()
         self._lengths += other._lengths
         self._begin_s = float(np.fmin(self._begin_s, other._begin_s))
         self._end_s = float(np.fmax(self._end_s, other._end_s))
+
+    def _join_blocks(self) -> None:
+        """Make blocks twice as long."""
+        joined: dict[int, NDArray[np.float64]] = {}
+        for block, profile in self._blocks.items():
+            kept = joined.get(block // 2)
+            joined[block // 2] = profile if kept is None else kept + profile
+        self._blocks = joined
+        self._block_s *= 2.0
 
     def _work_up(self) -> None:
         """Turn the waiting frames into sums and the profile of their block."""
@@ -137,7 +154,10 @@ class Tally:
         waiting, self._waiting = self._waiting, []
         profile = self._blocks.get(self._waiting_block)
         if profile is None:
-            profile = self._blocks[self._waiting_block] = np.zeros(AXIS_BINS)
+            if len(self._blocks) >= MOST_BLOCKS:
+                self._join_blocks()
+                self._waiting_block //= 2
+            profile = self._blocks.setdefault(self._waiting_block, np.zeros(AXIS_BINS))
         streaks = np.concatenate([one.streaks for one in waiting]).astype(np.float64)
         flags = np.concatenate([one.streak_flags for one in waiting])
         gains = [float(getattr(one, "track_gain", 1.0)) for one in waiting]
@@ -260,7 +280,7 @@ class Tally:
         wide = max(4, AXIS_BINS // 32)
         window = total[max(0, at - wide) : at + wide + 1]
         density = float(window.sum()) / (len(window) * self._step_mm)
-        lags = min(round(LIFE_S / BLOCK_S), max(0, len(influence) - 1) // 2)
+        lags = min(round(LIFE_S / self._block_s), max(0, len(influence) - 1) // 3)
         variance = float(influence @ influence)
         for lag in range(1, lags + 1):
             variance += 2.0 * (1.0 - lag / (lags + 1.0)) * float(influence[lag:] @ influence[:-lag])

@@ -11,7 +11,7 @@ from scipy.special import ndtr, ndtri
 
 from edgewatch.judge.bands import Band
 from edgewatch.judge.counts import NORMAL_WEIGHTS, at_least, at_most
-from edgewatch.judge.likeness import predictive_scatter, means
+from edgewatch.judge.likeness import means, predictive_scatter
 
 OWN_SHARE = 0.95
 """A pair is told apart if at least this share of the expected grade's own bars stays free of the other's likeness."""

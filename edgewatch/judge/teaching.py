@@ -27,6 +27,8 @@ ENOUGH_BARS = 20
 """With fewer bars the band is wider than need be, and that is said."""
 OUTLIER_LEVEL = 0.01
 """Probability of naming an outlying bar among good ones."""
+TYPICAL_LIFE_S = 0.1
+"""Most particles glow for less than this (s): neighbouring windows share them for as long."""
 CUT_BARS_SHARE = 0.1
 """With more of the bars cut off than this, the band holds no reach."""
 
@@ -93,7 +95,20 @@ def _reach_of(windows: Sequence[Figures]) -> tuple[float, float, float, int]:
     if not used:
         return math.nan, 0.0, 0.0, 0
     reach = sum(one.track_m * one.reach_mm for one in used) / track
-    return reach, track, sum(one.track_m * (one.reach_mm - reach) ** 2 for one in used), len(used) - 1
+    misfit = sum(one.track_m * (one.reach_mm - reach) ** 2 for one in used)
+    window_s = sum(one.end_s - one.begin_s for one in used) / len(used)
+    return reach, track, misfit * _long_run(window_s), len(used) - 1
+
+
+def _long_run(window_s: float) -> float:
+    """Factor from the variance of single windows to that of sums of many: neighbours share particles.
+
+    A particle of life L that flies across the border of two windows of length W (a share L / W of them) leaves parts
+    u and 1 - u of its track on either side, E[u (1 - u)] = 1/6: correlation (L / 6 W) / (1 - L / 3 W). A sum of many
+    windows has 1 + 2 times it.
+    """
+    share = min(1.0, TYPICAL_LIFE_S / max(window_s, 1e-6))
+    return 1.0 + 2.0 * (share / 6.0) / (1.0 - share / 3.0)
 
 
 def teach(
@@ -188,7 +203,8 @@ def log_rates(bars: Sequence[ReferenceBar], dispersion: float) -> tuple[NDArray[
     bursts = np.array([bar.bursts for bar in bars], dtype=np.float64)
     exposure = np.array([bar.exposure_m for bar in bars])
     pooled = max(float(bursts.sum()), 0.5) / float(exposure.sum())
-    return np.log((bursts + 0.5) / exposure), dispersion / (pooled * exposure)
+    # one more than expected: with few bursts the logarithm scatters unlike a normal, and too much must not be removed
+    return np.log((bursts + 0.5) / exposure), dispersion / (pooled * exposure + 1.0)
 
 
 def log_reaches(bars: Sequence[ReferenceBar]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
