@@ -19,8 +19,8 @@ Array = NDArray[Any]
 
 BURST_LEAST_K = 1450.0
 """Below this a particle does not burst: solid, its reaction died down. Above it the hazard is constant."""
-ARM_STOP_MS = 0.9
-"""Time constant with which air stops a fragment of about 5 micrometre radius (Stokes at film temperature)."""
+ARM_STOP_MS = 1.2
+"""Time constant with which air stops a fragment of about 6 micrometre radius (Stokes at film temperature)."""
 ARM_STOP_SPREAD = 0.3
 ARM_SPEED_SPREAD = 0.25
 """Deviations of the logarithm, from arm to arm."""

@@ -100,6 +100,12 @@ class Scene:
         picture = self._sensor.expose(ground, *self._gather(light))
         return picture, Truth(t_s=t0, **streaks, **burst_part)
 
+    def skip(self, frames: int) -> None:
+        """Let ``frames`` pictures pass unseen: the stream goes on, nothing is drawn. Cheap."""
+        if frames < 0:
+            raise ValueError(f"frames = {frames!r}: at least 0")
+        self._index += frames
+
     def _snr(self, electrons_per_px: Array) -> Array:
         """Height of a line above the ground in noise deviations, as the finished picture has it."""
         camera = self.camera
@@ -218,19 +224,19 @@ class Scene:
         open_ = self._in_rows(y, birth[owner] + age, t0, t1) if self._row_s else np.ones(len(x), bool)
         light.append((x[open_], y[open_], (e_s * dwell[owner])[open_]))
         snr = self._snr(e_s / np.maximum(np.hypot(vx, vy)[owner] * fade, 1.0))
-        drew = np.add.reduceat(np.where(open_ & (snr >= VISIBLE_SNR), dwell[owner], 0.0), starts)
+        drawn = open_ & (snr >= VISIBLE_SNR)
+        drew = np.add.reduceat(np.where(drawn, dwell[owner], 0.0), starts)
+        height = np.maximum.reduceat(np.where(drawn, snr, 0.0), starts)
         # bursts are numbered in rising order, so the arm's burst is found by search
         row = np.searchsorted(known["burst_id"], arms["burst"][alive])
-        order = np.lexsort((-drew, row))
-        rows, where = np.unique(row[order], return_index=True)
-        third = np.minimum(where + 2, len(order) - 1)
-        third_drew = np.where(row[order][third] == rows, drew[order][third], 0.0)
+        rows, third_drew = _third(row, drew)
+        _, third_height = _third(row, height)
         bx, by = known["x"][rows] + shift[0], known["y"][rows] + shift[1]
         longest = np.zeros(len(rows))
         np.maximum.at(longest, np.searchsorted(rows, row), drew)
         inside = (bx > -0.5) & (bx < optics.width_px - 0.5) & (by > -0.5) & (by < optics.height_px - 0.5)
         listed = inside & (longest > 0.0)
-        rows, third_drew = rows[listed], third_drew[listed]
+        rows, third_drew, third_height = rows[listed], third_drew[listed], third_height[listed]
         first = ~known["shown"][rows].astype(bool)
         known["shown"][rows] = True
         row_delay = by[listed] * self._row_s
@@ -238,6 +244,7 @@ class Scene:
             "bursts": np.stack([bx[listed], by[listed]], axis=1).astype(np.float32),
             "arms": known["arms"][rows].astype(np.int16),
             "drew_ms": (1e3 * third_drew).astype(np.float32),
+            "burst_snr": third_height.astype(np.float32),
             "late": known["t_s"][rows] < t0 + row_delay,
             "first": first,
             "burst_id": known["burst_id"][rows].astype(np.int64),
@@ -280,6 +287,14 @@ class Scene:
             return None, slice(0, 0)
         part = field[low - first : high - first, PAD_PX : PAD_PX + width]
         return part, slice(low - PAD_PX, high - PAD_PX)
+
+
+def _third(group: Array, values: Array) -> tuple[Array, Array]:
+    """Groups that occur, rising, and the third largest value of each (0 where there are fewer)."""
+    order = np.lexsort((-values, group))
+    groups, where = np.unique(group[order], return_index=True)
+    third = np.minimum(where + 2, len(order) - 1)
+    return groups, np.where(group[order][third] == groups, values[order][third], 0.0)
 
 
 class Stream(Scene):

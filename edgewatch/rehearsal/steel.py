@@ -31,8 +31,8 @@ class Steel:
     arms_low: int = 3
     arms_high: int = 7
     goes_on_share: float = 0.25
-    arm_speed_m_s: float = 22.0
-    arm_life_ms: float = 1.5
+    arm_speed_m_s: float = 20.0
+    arm_life_ms: float = 1.4
     radius_um: float = 45.0
     radius_spread: float = 0.16
     launch_k: float = 1400.0

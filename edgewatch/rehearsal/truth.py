@@ -25,10 +25,9 @@ class Truth:
 
     ``bursts``: float32 (M, 2), every burst inside the picture some of whose arms were drawn in this exposure; ``arms``:
     int16, thrown; ``drew_ms``: float32, time for which at least three of its arms were drawn (above one noise
-    deviation) in this exposure; ``late``: went off before this exposure began; ``first``: first exposure that shows
-    it; ``burst_id``: int64, one for each physical burst; ``burst_t_s``: time it went off; ``fork``; ``burst_flight``.
-    ``struck``: number of bursts inside the picture's bounds that went off since the last exposure's end or in this
-    exposure, seen or not.
+    deviation) in this exposure; ``burst_snr``: float32, greatest height reached by at least three arms; ``late``: went
+    off before this exposure began; ``first``: first exposure that shows it; ``burst_id``: int64, one for each physical
+    burst; ``burst_t_s``: time it went off; ``fork``; ``burst_flight``: the particle that burst.
     """
 
     t_s: float
@@ -42,6 +41,7 @@ class Truth:
     bursts: NDArray[np.float32]
     arms: NDArray[np.int16]
     drew_ms: NDArray[np.float32]
+    burst_snr: NDArray[np.float32]
     late: NDArray[np.bool_]
     first: NDArray[np.bool_]
     burst_id: NDArray[np.int64]
@@ -69,6 +69,7 @@ def no_bursts() -> dict[str, Any]:
         "bursts": np.zeros((0, 2), np.float32),
         "arms": np.zeros(0, np.int16),
         "drew_ms": np.zeros(0, np.float32),
+        "burst_snr": np.zeros(0, np.float32),
         "late": np.zeros(0, bool),
         "first": np.zeros(0, bool),
         "burst_id": np.zeros(0, np.int64),
