@@ -24,7 +24,7 @@ LIST
 
 missing=$(missing_packages)
 if [ -n "$missing" ]; then
-    may_install || give_up "the tests need these Debian packages: $missing(as root: apt-get install $missing)"
+    may_install || give_up "the tests need these Debian packages: ${missing% } (as root: apt-get install ${missing% })"
     # shellcheck disable=SC2086 # a list of names
     install_debian $missing || give_up "Debian packages that the tests need could not be installed: $missing"
     case " $missing" in
