@@ -50,7 +50,7 @@ class EvidenceStore:
     def keep(self, bar: int, name: str, picture: bytes) -> Path:
         """Keep a JPEG or PNG of ``bar`` under ``name``, replacing one of the same name, and return its path.
 
-        Raises ``ValueError`` (not such a picture or name), ``DeviceError`` (disk full, read-only): nothing is kept then.
+        Raises ``ValueError`` (not such a picture or name) and ``DeviceError`` (disk full); nothing is kept then.
         """
         ending = next((ending for magic, ending in _ENDINGS.items() if picture.startswith(magic)), None)
         if ending is None:

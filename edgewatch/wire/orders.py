@@ -9,7 +9,7 @@ from __future__ import annotations
 import json
 import math
 import re
-from collections import deque
+from collections import OrderedDict, deque
 from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field, replace
 from typing import Any
@@ -273,7 +273,7 @@ class OrderGate:
         self._oldest_s = oldest_s
         self._passed: deque[float] = deque()
         self._refused: deque[float] = deque()
-        self._seen: dict[str, float] = {str(name): monotonic_s for name in seen}
+        self._seen: OrderedDict[str, float] = OrderedDict((str(name), monotonic_s) for name in seen)
 
     def remembered(self) -> tuple[str, ...]:
         """Return the identifiers that must not pass again, oldest first: keep them over a restart."""
@@ -324,4 +324,4 @@ class OrderGate:
             first = next(iter(self._seen))
             if monotonic_s - self._seen[first] <= 2 * self._oldest_s:
                 break
-            del self._seen[first]
+            self._seen.popitem(last=False)
