@@ -121,7 +121,7 @@ def test_one_flipped_bit_is_no_echo(unit: int, coil: int, bit: int) -> None:
 @pytest.mark.parametrize(("unit", "coil"), [(0, 0), (248, 0), (-1, 0), (1, -1), (1, 0x10000)])
 def test_addresses_out_of_range_are_refused(unit: int, coil: int) -> None:
     """A broadcast, a reserved unit and a coil beyond 16 bits are refused."""
-    with pytest.raises(ValueError, match="unit|coil"):
+    with pytest.raises(ValueError, match=r"unit|coil"):
         write_coil(unit, coil, True)
 
 
