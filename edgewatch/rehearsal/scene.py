@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from edgewatch.rehearsal import flight
 from edgewatch.rehearsal.camera import CameraModel
-from edgewatch.rehearsal.sensor import Sensor
+from edgewatch.rehearsal.sensor import LineHeight, Sensor
 from edgewatch.rehearsal.steel import Steel
 from edgewatch.rehearsal.swarm import Conditions, Spray, Swarm
 from edgewatch.rehearsal.truth import Truth, no_bursts, no_streaks
@@ -59,8 +59,7 @@ class Scene:
         self._index = 0
         self._glow = self._draw_glow()
         self._row_s = self.camera.row_us * 1e-6
-        self._ground = self.camera.dark_dn + self.camera.haze_dn
-        self._ground_noise = float(self.camera.noise_dn(np.array(self._ground)))
+        self._height = LineHeight(self.camera)
 
     def _draw_glow(self) -> tuple[slice, slice, Array] | None:
         """Glow of wheel and bar round the contact point: (rows, columns, mean DN)."""
@@ -106,17 +105,6 @@ class Scene:
             raise ValueError(f"frames = {frames!r}: at least 0")
         self._index += frames
 
-    def _snr(self, electrons_per_px: Array) -> Array:
-        """Height of a line above the ground in noise deviations, as the finished picture has it."""
-        camera = self.camera
-        high = electrons_per_px * (camera.gain_dn_per_e * self._sensor.line_peak)
-        if camera.gamma == 1.0:
-            return np.asarray(np.minimum(high, 255.0 - self._ground) / self._ground_noise)
-        low = float(camera.output_dn(np.array(self._ground)))
-        slope = float(camera.output_dn(np.array(self._ground + 0.5)) - camera.output_dn(np.array(self._ground - 0.5)))
-        noise = math.sqrt(max(self._ground_noise**2 - 1.0 / 12.0, 0.0) * slope**2 + 1.0 / 12.0)
-        return np.asarray((camera.output_dn(self._ground + high) - low) / noise)
-
     def _in_rows(self, y: Array, t_s: Array, t0: float, t1: float) -> Array:
         """Whether a rolling shutter's row at ``y`` is open at ``t_s``."""
         delay = np.clip(y, 0, self.optics.height_px - 1) * self._row_s
@@ -139,7 +127,7 @@ class Scene:
         length = np.hypot(xm - xa, ym - ya) + np.hypot(xb - xm, yb - ym)
         speed = length / duration  # px/s
         peak = np.max([swarm.look_up("log_e_s", *where) for where in ends], axis=0)
-        dim = self._snr(np.exp(peak) / np.maximum(speed, 1e-3)) < 0.3
+        dim = self._height(np.exp(peak) / np.maximum(speed, 1e-3)) < 0.3
         number = np.where(dim, 1, np.ceil(length / SAMPLE_PX)).astype(np.int64)
         number = np.maximum(number, 1)
         starts = np.cumsum(number) - number
@@ -153,7 +141,7 @@ class Scene:
         e_s = np.exp(swarm.look_up("log_e_s", base, part))
         open_ = self._in_rows(y, t, t0, t1) if self._row_s else np.ones(len(t), bool)
         inside = (x > -0.5) & (x < optics.width_px - 0.5) & (y > -0.5) & (y < optics.height_px - 0.5) & open_
-        snr = self._snr(e_s / np.maximum(speed, 1e-3)[owner])
+        snr = self._height(e_s / np.maximum(speed, 1e-3)[owner])
         draw = open_ & ~dim[owner]
         light.append((x[draw], y[draw], (e_s * dwell[owner])[draw]))
         metre = (length / number)[owner] * (optics.mm_per_px * 1e-3)
@@ -173,7 +161,7 @@ class Scene:
         typical = np.median(heights, axis=1) / np.maximum(speed[listed], 1e-3)
         return {
             "streaks": lines,
-            "streak_snr": self._snr(typical).astype(np.float32),
+            "streak_snr": self._height(typical).astype(np.float32),
             "flight": pieces["flight"][alive[listed]],
             "speed_m_s": (speed[listed] * optics.mm_per_px * 1e-3).astype(np.float32),
             "track_m": float(metre[inside].sum()),
@@ -223,7 +211,7 @@ class Scene:
         e_s = np.exp(arms["log_e_s"][alive])[owner] * (1.0 - age / life[owner])
         open_ = self._in_rows(y, birth[owner] + age, t0, t1) if self._row_s else np.ones(len(x), bool)
         light.append((x[open_], y[open_], (e_s * dwell[owner])[open_]))
-        snr = self._snr(e_s / np.maximum(np.hypot(vx, vy)[owner] * fade, 1.0))
+        snr = self._height(e_s / np.maximum(np.hypot(vx, vy)[owner] * fade, 1.0))
         drawn = open_ & (snr >= VISIBLE_SNR)
         drew = np.add.reduceat(np.where(drawn, dwell[owner], 0.0), starts)
         height = np.maximum.reduceat(np.where(drawn, snr, 0.0), starts)

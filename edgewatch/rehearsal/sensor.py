@@ -13,7 +13,7 @@ import cv2
 import numpy as np
 from numpy.typing import NDArray
 
-from edgewatch.rehearsal.camera import CameraModel
+from edgewatch.rehearsal.camera import FULL_SCALE_DN, CameraModel
 
 Array = NDArray[Any]
 
@@ -44,6 +44,40 @@ def _disc_kernel(core: Array, radius_px: float) -> Array:
     return np.asarray(cv2.sepFilter2D(disc, cv2.CV_64F, core, core, borderType=cv2.BORDER_CONSTANT))
 
 
+def line_peak(camera: CameraModel) -> float:
+    """Height of a long line of one electron per px of its length (electrons a pixel)."""
+    profile = _gaussian(camera.psf_sigma_px)
+    if camera.defocus_px > 0.0:
+        profile = _disc_kernel(profile, camera.defocus_px).sum(axis=0)
+    wing = float(np.convolve(profile, _gaussian(camera.psf_wing_px)).max())
+    peak = (1.0 - camera.psf_wing_share) * float(profile.max()) + camera.psf_wing_share * wing
+    return (1.0 - camera.bloom) * peak
+
+
+class LineHeight:
+    """Height of drawn lines above typical ground, in noise deviations of the ground, as the finished picture has it.
+
+    Gamma and quantisation are included, compression is not.
+    """
+
+    def __init__(self, camera: CameraModel) -> None:
+        self._camera = camera
+        self._dn_per_electron = camera.gain_dn_per_e * line_peak(camera)
+        ground = camera.dark_dn + camera.haze_dn
+        slope = float(camera.output_dn(np.array(ground + 0.5)) - camera.output_dn(np.array(ground - 0.5)))
+        analog = max(float(camera.noise_dn(np.array(ground))) ** 2 - 1.0 / 12.0, 0.0)
+        self._noise = math.sqrt(analog * slope**2 + 1.0 / 12.0)
+        self._ground = ground
+        self._low = float(camera.output_dn(np.array(ground)))
+
+    def __call__(self, electrons_per_px: Array) -> Array:
+        """Height for lines of so many electrons per px of length, any shape."""
+        level = electrons_per_px * self._dn_per_electron + self._ground
+        if self._camera.gamma == 1.0:
+            return np.asarray((np.minimum(level, FULL_SCALE_DN) - self._low) / self._noise)
+        return np.asarray((self._camera.output_dn(level) - self._low) / self._noise)
+
+
 class Sensor:
     """One camera at work; everything random comes from ``rng``. Not thread safe: work arrays are shared."""
 
@@ -54,7 +88,6 @@ class Sensor:
         core = _gaussian(camera.psf_sigma_px)
         self._core = core.astype(np.float32)
         self._disc = _disc_kernel(core, camera.defocus_px).astype(np.float32) if camera.defocus_px > 0.0 else None
-        self.line_peak = self._line_peak()
         shape = (height_px, width_px)
         self._lamp = self._draw_lamp(shape)
         self._clear = self._draw_dirt(shape)
@@ -65,14 +98,6 @@ class Sensor:
         self._mean = np.zeros(shape, np.float32)
         self._noise = np.zeros(shape, np.float32)
         self._lit: Array = np.zeros((0, 0), np.float32)
-
-    def _line_peak(self) -> float:
-        """Height of a long line of one electron per px of its length (electrons a pixel)."""
-        camera = self.camera
-        profile = self._core if self._disc is None else self._disc.sum(axis=0)
-        wing = float(np.convolve(profile, _gaussian(camera.psf_wing_px)).max())
-        peak = (1.0 - camera.psf_wing_share) * float(profile.max()) + camera.psf_wing_share * wing
-        return (1.0 - camera.bloom) * peak
 
     def _draw_lamp(self, shape: tuple[int, int]) -> Array:
         """Lamp light on haze and wall: smooth unevenness."""

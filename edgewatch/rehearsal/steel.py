@@ -95,6 +95,38 @@ STEELS: dict[str, Steel] = {
 }
 """Grades by name, invented for rehearsals."""
 
+WORKSHOP: dict[str, Steel] = {
+    steel.name: steel
+    for steel in (
+        Steel(name="wrought iron", hazard_per_m=0.06, fork_share=1.0, radius_um=43.0),
+        Steel(name="machine steel", hazard_per_m=0.2, fork_share=0.9, radius_um=47.0),
+        Steel(name="carbon tool steel", hazard_per_m=3.5, fork_share=0.1, goes_on_share=0.5),
+        Steel(name="grey cast iron", hazard_per_m=1.6, radius_um=27.0, goes_on_share=0.5, stream=0.4),
+        Steel(name="white cast iron", hazard_per_m=0.25, radius_um=23.0, goes_on_share=0.5, stream=0.2),
+        Steel(name="malleable iron", hazard_per_m=1.6, radius_um=31.0, goes_on_share=0.5, stream=0.7),
+        Steel(
+            name="high-speed steel",
+            hazard_per_m=0.02,
+            fork_share=1.0,
+            oxidisable_share=0.17,
+            radius_um=46.0,
+            stream=0.4,
+        ),
+        Steel(name="manganese steel", hazard_per_m=1.6, oxidisable_share=0.18, radius_um=40.0, stream=0.9),
+        Steel(
+            name="stainless 410", hazard_per_m=0.6, fork_share=0.9, oxidisable_share=0.16, radius_um=43.5, stream=0.7
+        ),
+        Steel(name="die steel", hazard_per_m=1.6, oxidisable_share=0.16, radius_um=36.0, stream=0.4),
+        Steel(name="nitriding steel", hazard_per_m=0.6, fork_share=0.9, oxidisable_share=0.18, radius_um=43.5),
+        Steel(name="copper", hazard_per_m=0.0, oxidisable_share=0.0, launch_k=700.0),
+        Steel(name="aluminium", hazard_per_m=0.0, oxidisable_share=0.0, launch_k=650.0),
+    )
+}
+"""Metals of the classical workshop table, as far as the model covers them (iron and steel, and two that do not spark).
+Bursts and stream follow the table's words; particle sizes (brittle irons crumble) and burnable shares (chromium and
+tungsten close the shell early) are set so that the flight gives the table's order of lengths. Copper and aluminium soften
+and conduct: their chips leave below red heat and their oxide stops the burning at once."""
+
 
 def find_steel(name: str) -> Steel:
     """Return the steel called ``name``; ``ValueError`` says which there are."""

@@ -26,15 +26,15 @@ GLOW_E_S = 6.5e7
 GLOW_REFERENCE_M = 50e-6
 FRAGMENT_K = 2300.0
 """Fragments burn hotter than their parent: fresh iron, short diffusion way."""
-_BATCH_SPARKS = 400.0
-_BATCH_LONGEST_S = 0.1
+BATCH_SPARKS = 400.0
+BATCH_S = 0.1
 """Sparks a batch: numpy's cost a call is spread over many, and the tables stay small."""
 _MOST_GENERATIONS = 12
 
 
 DRAUGHT_SPARKS_PER_S = 4000.0
 """The stream hands its momentum to the air, which moves along at a speed that goes with the square root of the momentum
-flux: half a gram of metal a second at 26 m/s in a jet of five centimetres gives some 2 m/s. So more grinding force
+flux: a gram of metal a second at 26 m/s in a jet of six centimetres gives some 3 m/s. So more grinding force
 lengthens the stream although neither particle size nor launch speed changes (common practice knows the effect)."""
 
 
@@ -55,7 +55,7 @@ class Spray:
     stray_sd_deg: float = 30.0
     width_mm: float = 3.0
     launch_sd_k: float = 80.0
-    draught_m_s: float = 2.0
+    draught_m_s: float = 3.0
 
     def __post_init__(self) -> None:
         """Check ranges once."""
@@ -141,8 +141,11 @@ class Swarm:
         light: float,
         band: heat.Band,
         rng: np.random.Generator,
+        batch_sparks: float = BATCH_SPARKS,
+        batch_s: float = BATCH_S,
     ) -> None:
         self.optics = optics
+        self._batch_sparks, self._batch_s = batch_sparks, batch_s
         self.spray = spray
         self.light = light
         self.band = band
@@ -174,7 +177,7 @@ class Swarm:
             if begin >= t_s:  # a gap before the next stretch
                 self._launched_s = t_s
                 return
-            end = min(now.end_s, begin + min(_BATCH_LONGEST_S, _BATCH_SPARKS / max(now.sparks_per_s, 1.0)))
+            end = min(now.end_s, begin + min(self._batch_s, self._batch_sparks / max(now.sparks_per_s, 1.0)))
             if now.steel is not None and now.sparks_per_s > 0.0:
                 self._forget(keep_from_s)
                 self._launch(now, now.steel, begin, end)
@@ -331,6 +334,14 @@ class Swarm:
         if len(self.bursts):
             # a burst's arms live some milliseconds; keep the burst well beyond
             self.bursts.keep(self.bursts["t_s"] > before_s - 0.05)
+
+    def tables(self) -> Iterator[tuple[Array, dict[str, Array]]]:
+        """Whole tables, a group of pieces with equal numbers of steps at a time: (pieces, name -> (pieces, K + 1))."""
+        lasts = self.pieces["last"]
+        for last in np.unique(lasts):
+            group = np.flatnonzero(lasts == last)
+            rows = self.pieces["offset"][group][:, None] + np.arange(int(last) + 2)
+            yield group, {name: values[rows] for name, values in self._tables.items()}
 
     def look_up(self, name: str, base: Array, part: Array) -> Array:
         """Value of a table (x, y in px; log_e_s; exposed_m) at table rows ``base`` and ``part`` of a step beyond."""
