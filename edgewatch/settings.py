@@ -551,8 +551,8 @@ def _contradictions(settings: Settings) -> list[tuple[str, str]]:
             "rehearsal.foreign_grades = []: at least one grade while rehearsal.foreign is not 0",
         ),
         (
-            "rehearsal.grade rehearsal.foreign_grades",
-            rehearsal.grade not in rehearsal.foreign_grades,
+            "rehearsal.grade rehearsal.foreign rehearsal.foreign_grades",
+            not rehearsal.foreign or rehearsal.grade not in rehearsal.foreign_grades,
             f"rehearsal.foreign_grades = {list(rehearsal.foreign_grades)}: holds the expected grade itself",
         ),
     )
