@@ -113,7 +113,13 @@ class Tally:
         sums.frames_seen += 1
         sums.frames_skipped += skipped
         sums.streaks += len(detections.streaks)
-        sums.bursts += len(detections.bursts)
+        sums.bursts += detections.rate_bursts
+        if math.isfinite(detections.rate_exposure_px) and detections.rate_exposure_px > 0.0:
+            sums.exposure_mm += detections.rate_exposure_px * self.optics.mm_per_px
+        elif len(detections.streaks):  # refused: the finite streaks alone
+            runs = detections.streaks[np.isfinite(detections.streaks).all(axis=1)]
+            length = np.hypot(runs[:, 2] - runs[:, 0], runs[:, 3] - runs[:, 1])
+            sums.exposure_mm += float(length.sum()) * self.optics.mm_per_px
         self._begin_s = t_s if math.isnan(self._begin_s) else min(self._begin_s, t_s)
         end = t_s + self.optics.period_s
         self._end_s = end if math.isnan(self._end_s) else max(self._end_s, end)
@@ -160,14 +166,12 @@ class Tally:
             profile = self._blocks.setdefault(self._waiting_block, np.zeros(AXIS_BINS))
         streaks = np.concatenate([one.streaks for one in waiting]).astype(np.float64)
         flags = np.concatenate([one.streak_flags for one in waiting])
-        gains = [float(getattr(one, "track_gain", 1.0)) for one in waiting]
-        gain = np.repeat(gains, [len(one.streaks) for one in waiting])
         good = np.isfinite(streaks).all(axis=1)
         if not good.all():
             bad = int(good.size - good.sum())
             self._sums.refused += bad
             self._sums.streaks -= bad
-            streaks, flags, gain = streaks[good], flags[good], gain[good]
+            streaks, flags = streaks[good], flags[good]
         if not len(streaks):
             return
         ends = self.optics.along_mm(streaks.reshape(-1, 2, 2))
@@ -175,7 +179,6 @@ class Tally:
         near, far = ends.min(axis=1), ends.max(axis=1)
         profile += self._spread(near, far, length)
         self._sums.track_mm += float(length.sum())
-        self._sums.exposure_mm += float((length * gain).sum())
         self._sums.cut_streaks += int(np.count_nonzero(flags & StreakFlag.CUT_END))
         self._note_lengths(near, far, length, flags)
 

@@ -1,0 +1,120 @@
+"""``edgewatch measure CLIP…``: figures of a recording."""
+
+from __future__ import annotations
+
+import argparse
+import json
+import math
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any, TextIO
+
+import numpy as np
+
+from edgewatch.commands.measuring import Measurement, figures_body, measure_clip
+from edgewatch.commands.options import add_optics, add_station, load_settings
+from edgewatch.errors import DeviceError
+from edgewatch.figures.meter import BarDone
+from edgewatch.sight.detections import Detections
+
+EXAMPLE = "edgewatch measure bar.mkv --mm-per-px 0.8 --contact 20,200 --direction 0 --exposure-ms 2.5 --fps 200 --json"
+
+
+def declare(parser: argparse.ArgumentParser) -> None:
+    """Options of ``measure``."""
+    parser.add_argument("clips", nargs="+", metavar="CLIP", help="video file or folder of pictures")
+    add_station(parser)
+    add_optics(parser)
+    parser.add_argument("--json", action="store_true", help="one JSON object a clip")
+    parser.add_argument(
+        "--detections", metavar="OUT.jsonl", help="write streaks and bursts of every frame, one JSON line a frame"
+    )
+
+
+def run(args: argparse.Namespace) -> int:
+    """Run ``measure``."""
+    settings, _ = load_settings(args)
+    out = _open(args.detections) if args.detections else None
+    try:
+        for clip in args.clips:
+            watcher = (lambda index, t_s, seen: _write(out, index, t_s, seen)) if out else None
+            found = measure_clip(clip, settings, watcher=watcher)
+            _print(found, as_json=args.json, named=len(args.clips) > 1)
+    except OSError as error:
+        raise DeviceError(f"{args.detections}: cannot be written: {error.strerror or error}") from error
+    finally:
+        if out is not None:
+            out.close()
+    return 0
+
+
+def _open(name: str) -> TextIO:
+    try:
+        return Path(name).open("w", encoding="utf-8")
+    except OSError as error:
+        raise DeviceError(f"{name}: cannot be written: {error.strerror or error}") from error
+
+
+def _write(out: TextIO, index: int, t_s: float, seen: Detections) -> None:
+    """One line of the contract: streaks and the bursts that first show in this frame."""
+    bursts = [
+        [round(float(x), 2), round(float(y), 2), int(arms)]
+        for (x, y), arms in zip(seen.bursts.tolist(), seen.burst_arms.tolist(), strict=True)
+    ]
+    streaks = [[round(float(part), 2) for part in streak] for streak in seen.streaks.tolist()]
+    line = {"frame": index, "t": round(t_s, 9), "streaks": streaks, "bursts": bursts}
+    out.write(json.dumps(line, allow_nan=False, separators=(",", ":")) + "\n")
+
+
+def measurement_body(found: Measurement) -> dict[str, Any]:
+    """The JSON object of one clip."""
+    times = found.processing_s * 1000.0
+    body = {"clip": found.clip, "frames": found.frames, "seconds": found.seconds}
+    body |= _without(figures_body(found.whole), ("begin_s", "end_s", "frames_seen"))
+    body["contacts"] = [_contact_body(contact) for contact in found.contacts]
+    body["processing_ms"] = {
+        "median": float(np.median(times)) if times.size else None,
+        "p95": float(np.percentile(times, 95)) if times.size else None,
+    }
+    return body
+
+
+def _contact_body(contact: BarDone) -> dict[str, Any]:
+    body = figures_body(contact.bar)
+    frames = body.pop("frames_seen")
+    seconds = contact.bar.end_s - contact.bar.begin_s
+    return body | {"begin_s": contact.begin_s, "end_s": contact.end_s, "frames": frames, "seconds": seconds}
+
+
+def _without(body: dict[str, Any], names: Sequence[str]) -> dict[str, Any]:
+    return {name: value for name, value in body.items() if name not in names}
+
+
+def _print(found: Measurement, *, as_json: bool, named: bool) -> None:
+    body = measurement_body(found)
+    if as_json:
+        print(json.dumps(body, allow_nan=False), flush=True)
+        return
+    if named:
+        print(found.clip)
+    times = body["processing_ms"]
+    print(f"{found.frames} frames, {found.seconds:.2f} s, {len(found.contacts)} contacts")
+    print(_line("whole", body))
+    for number, contact in enumerate(body["contacts"], 1):
+        print(_line(f"contact {number}: {contact['begin_s']:.2f} to {contact['end_s']:.2f} s", contact))
+    if times["median"] is not None:
+        print(f"processing {times['median']:.2f} ms a frame (median), {times['p95']:.2f} ms (95 %)", flush=True)
+
+
+def _line(what: str, body: dict[str, Any]) -> str:
+    def number(name: str, form: str) -> str:
+        value = body[name]
+        return "-" if value is None or (isinstance(value, float) and math.isnan(value)) else format(value, form)
+
+    return (
+        f"{what}: {body['streaks']} streaks, {body['bursts']} bursts, track {number('track_m', '.2f')} m, "
+        f"burst-rate {number('burst_rate_per_m', '.3f')} /m "
+        f"({number('burst_rate_low_per_m', '.3f')} to {number('burst_rate_high_per_m', '.3f')}), "
+        f"reach {number('reach_mm', '.0f')} mm{' (cut off)' if body['reach_truncated'] else ''}, "
+        f"{number('streaks_per_frame', '.1f')} streaks a frame, spark speed {number('spark_speed_m_s', '.1f')} m/s"
+    )
