@@ -21,7 +21,7 @@ from paho.mqtt.enums import CallbackAPIVersion
 from edgewatch.commands.options import add_bands, add_station, load_settings
 from edgewatch.commands.shipped import find_calib
 from edgewatch.commands.watch import bar_text, run_until_stopped
-from edgewatch.errors import SettingsError
+from edgewatch.errors import DeviceError, SettingsError
 from edgewatch.frames.rehearsal import RehearsalSource
 from edgewatch.link.private_broker import PrivateBroker, find_mosquitto
 from edgewatch.settings import Settings
@@ -49,7 +49,12 @@ def declare(parser: argparse.ArgumentParser) -> None:
 def run(args: argparse.Namespace) -> int:
     """Run ``rehearse``: 0 when every foreign bar was caught and no good one condemned, else 1."""
     settings, folder = _settings(args)
-    folder.mkdir(parents=True, exist_ok=True)
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise DeviceError(
+            f"{folder.absolute()}: cannot be made: {error.strerror or error}; --folder names another"
+        ) from error
     with contextlib.ExitStack() as stack:
         listener = None
         if settings.mqtt.enabled and not args.no_broker:
