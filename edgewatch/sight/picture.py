@@ -1,4 +1,4 @@
-"""Reduce a picture before it is looked at: region of interest, binning. ``Optics.cropped`` and ``Optics.binned`` follow."""
+"""Reduce a picture before it is looked at: region of interest, binning; ``Optics.cropped`` and ``binned`` follow."""
 
 from __future__ import annotations
 
