@@ -13,10 +13,11 @@ from dataclasses import dataclass
 from edgewatch.judge.bands import Band
 from edgewatch.judge.likeness import LEAST_SCATTER, Evidence
 
-EWMA_WEIGHT = 0.1
-EWMA_LIMIT = 2.814
-"""Weight and limit (in the chart's own deviations): in control, 500 values from alert to alert (Lucas & Saccucci,
-Technometrics 32, 1990); a shift of one deviation is seen after 10.3."""
+EWMA_WEIGHT = 0.05
+EWMA_LIMIT = 3.6
+"""Weight and limit (in the chart's own deviations). Wear takes hundreds of bars, so the average may be long; the limit
+keeps false calls for maintenance rare (none in 4000 bars with ``bench_judge drift``), and with the
+uncertainty of the centre still lies at about one bar-to-bar deviation, where the band's edge is at three or more."""
 LARGEST_RECENTRE = 2.0
 """Master bars may move the centre by this many bar-to-bar deviations; beyond, the station must be taught again."""
 LEAST_MASTERS = 3

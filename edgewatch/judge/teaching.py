@@ -25,8 +25,8 @@ LEAST_BARS = 5
 """Fewer reference bars are refused: the tolerance factor is then above 6 scatters."""
 ENOUGH_BARS = 20
 """With fewer bars the band is wider than need be, and that is said."""
-OUTLIER_LEVEL = 0.01
-"""Probability of naming an outlying bar among good ones."""
+OUTLIER_LEVEL = 0.05
+"""Probability of naming any bar among good ones: to look at a named bar costs little, a wrong one costs the band."""
 TYPICAL_LIFE_S = 0.1
 """Most particles glow for less than this (s): neighbouring windows share them for as long."""
 CUT_BARS_SHARE = 0.1
