@@ -26,6 +26,9 @@ LONGEST_S = 0.2
 
 SHELL_POWER = 4
 """How suddenly the oxide shell closes: share of the surface open = 1 - (burnt / burnable)^4."""
+LEAST_K, MOST_K = 200.0, 3500.0
+"""Temperatures that are integrated: from deep frost to well above the boiling of iron (3134 K). Only dust of a
+micrometre, for which the step is too long, ever meets these ends."""
 _PLATEAU = 0.44
 """Newton's regime: drag coefficient of a sphere above a Reynolds number of about 1000."""
 
@@ -55,7 +58,7 @@ class Launch:
             ("radius_m", 1e-7, 1e-2, (count,)),
             ("position_m", -1e3, 1e3, (count, 3)),
             ("velocity_m_s", -500.0, 500.0, (count, 3)),
-            ("temperature_k", 200.0, 3500.0, (count,)),
+            ("temperature_k", LEAST_K, MOST_K, (count,)),
             ("oxidised", 0.0, 1.0, (count,)),
         ):
             values = getattr(self, name)
@@ -124,7 +127,8 @@ def fly(
     speed, against = _speed(velocity), _speed(velocity - wind)
     for step in range(steps):
         # drag and heat at mid-step, foreseen with the last step's rates: second order with one evaluation a step
-        middle_k, middle_burnt = kelvin + 0.5 * warmed, burnt + 0.5 * burning
+        middle_k = np.clip(kelvin + 0.5 * warmed, LEAST_K, MOST_K)
+        middle_burnt = burnt + 0.5 * burning
         film_k = 0.5 * (middle_k + air_k)
         density, viscosity, conductivity = heat.film_properties(film_k)
         reynolds = np.maximum(density * against * np.exp(-0.5 * step_s * rate) * diameter / viscosity, 1e-9)
@@ -143,7 +147,7 @@ def fly(
             )  # fmt: skip
             burning = np.minimum(burning, np.maximum(steel.oxidisable_share - burnt, 0.0))
             burnt = burnt + burning
-            kelvin_next = np.maximum(settle_k + (kelvin - settle_k) * keep, 200.0)
+            kelvin_next = np.clip(settle_k + (kelvin - settle_k) * keep, LEAST_K, MOST_K)
             warmed = kelvin_next - kelvin
             kelvin = kelvin_next
         kept.append((position, velocity, kelvin, burnt, path))

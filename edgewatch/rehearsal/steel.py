@@ -98,7 +98,7 @@ STEELS: dict[str, Steel] = {
 WORKSHOP: dict[str, Steel] = {
     steel.name: steel
     for steel in (
-        Steel(name="wrought iron", hazard_per_m=0.06, fork_share=1.0, radius_um=43.0),
+        Steel(name="wrought iron", hazard_per_m=0.06, fork_share=1.0, radius_um=44.5),
         Steel(name="machine steel", hazard_per_m=0.2, fork_share=0.9, radius_um=47.0),
         Steel(name="carbon tool steel", hazard_per_m=3.5, fork_share=0.1, goes_on_share=0.5),
         Steel(name="grey cast iron", hazard_per_m=1.6, radius_um=27.0, goes_on_share=0.5, stream=0.4),
@@ -124,8 +124,8 @@ WORKSHOP: dict[str, Steel] = {
 }
 """Metals of the classical workshop table, as far as the model covers them (iron and steel, and two that do not spark).
 Bursts and stream follow the table's words; particle sizes (brittle irons crumble) and burnable shares (chromium and
-tungsten close the shell early) are set so that the flight gives the table's order of lengths. Copper and aluminium soften
-and conduct: their chips leave below red heat and their oxide stops the burning at once."""
+tungsten close the shell early) are set so that the flight gives the table's order of lengths. Copper and aluminium
+soften and conduct: their chips leave below red heat and their oxide stops the burning at once."""
 
 
 def find_steel(name: str) -> Steel:
