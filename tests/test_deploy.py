@@ -63,10 +63,11 @@ def client(name: str, port: int, *words: str) -> subprocess.CompletedProcess[str
 
 
 def loopback_config(folder: Path, port: int) -> str:
-    """The shipped configuration with another port and folder, for a broker beside the machine's own."""
+    """The shipped configuration with another port, after what Debian's mosquitto.conf has said with another folder."""
     text = (DEPLOY / "mosquitto-loopback.conf").read_text(encoding="utf-8")
     assert re.findall(r"^listener (.*)$", text, re.MULTILINE) == ["1883 127.0.0.1"]
-    text = text.replace("listener 1883", f"listener {port}").replace("/var/lib/mosquitto/", f"{folder}/")
+    debian = f"persistence true\npersistence_location {folder}/\nlog_dest file {folder}/log\n"
+    text = debian + text.replace("listener 1883", f"listener {port}")
     return f"{text}\nuser root\n" if os.geteuid() == 0 else text
 
 
