@@ -13,6 +13,8 @@ number that no record has reached; the new journal begins there).
 from __future__ import annotations
 
 import contextlib
+import copy
+import dataclasses
 import json
 import sqlite3
 import threading
@@ -40,7 +42,11 @@ CHECK_WHOLE_BYTES = 64_000_000
 """Up to this size the whole file is checked when opened (0.1 s on a desk computer, about 3 s from an SD card); a larger
 one is checked as it is read: each record carries its own check sum."""
 THIN_RUN = 2000
-"""Windows looked at in one thinning step; every second of them gives way, so a transaction stays short."""
+"""Windows looked at in one thinning step, so that a transaction stays short."""
+THIN_REPORT = 1000
+"""So many windows that gave way, at least, make one ``thinned`` record (and what is left makes the last one)."""
+MOST_STRIDE = 2**20
+"""At four windows a second, one in three days."""
 PRUNE_RUN = 256
 """Records that give way in one step."""
 RESERVE = 10_000
@@ -53,7 +59,7 @@ CREATE TABLE boot(id INTEGER PRIMARY KEY, name TEXT NOT NULL UNIQUE);
 CREATE TABLE record(
   seq INTEGER PRIMARY KEY, kind TEXT NOT NULL, boot INTEGER NOT NULL, monotonic_s REAL NOT NULL, utc_s REAL NOT NULL,
   synced INTEGER NOT NULL, crc INTEGER NOT NULL, payload BLOB NOT NULL);
-CREATE TABLE outbox(seq INTEGER PRIMARY KEY, kind TEXT NOT NULL, bytes INTEGER NOT NULL);
+CREATE TABLE outbox(seq INTEGER PRIMARY KEY, kind TEXT NOT NULL, bytes INTEGER NOT NULL, place INTEGER NOT NULL);
 CREATE TABLE route(seq INTEGER PRIMARY KEY, topic TEXT NOT NULL, correlation BLOB NOT NULL);
 CREATE TABLE state(key TEXT PRIMARY KEY, value TEXT NOT NULL) WITHOUT ROWID;
 CREATE TABLE latest(kind TEXT PRIMARY KEY, seq INTEGER NOT NULL, crc INTEGER NOT NULL, payload BLOB NOT NULL)
@@ -115,34 +121,62 @@ class JournalStatus:
     next_seq: int
 
 
-class _DamagedError(Exception):
+@dataclass(slots=True, kw_only=True)
+class _Thinning:
+    """How window messages are thinned: one in ``stride`` is sent; ``swept_to``: the sweep that brings older ones to the
+    present stride has come to this ``seq`` (``None``: none is under way). ``count``, ``first``, ``last``: what gave way
+    and is not recorded as ``thinned`` yet; ``total``: all that ever did.
+    """
+
+    stride: int = 1
+    swept_to: int | None = None
+    count: int = 0
+    first: int = 0
+    last: int = 0
+    total: int = 0
+
+    def __post_init__(self) -> None:
+        numbers = (self.stride, self.swept_to or 0, self.count, self.first, self.last, self.total)
+        if not (all(isinstance(number, int) for number in numbers) and 1 <= self.stride <= MOST_STRIDE):
+            raise ValueError("the state of thinning is not one")
+
+    def gave_way(self, seq: int) -> None:
+        """Count one window."""
+        self.first = min(self.first, seq) if self.count else seq
+        self.last = max(self.last, seq)
+        self.count += 1
+        self.total += 1
+
+
+class DamagedError(Exception):
     """The file can be opened and read, and what it holds is not right."""
 
 
-def _translated(error: sqlite3.Error, path: Path) -> Exception:
-    """Return what a SQLite error means: ``DeviceError`` for the world's failures, ``_DamagedError`` for the file's."""
+def translated(error: sqlite3.Error, path: Path) -> Exception:
+    """Return what a SQLite error means: ``DeviceError`` for the world's failures, ``DamagedError`` for the file's."""
     text = str(error)
     if isinstance(error, sqlite3.OperationalError) and not text.startswith(("no such", "Could not decode", "near ")):
         remedy = "free some space" if "full" in text else "see that it is there, writable and not in use"
         return DeviceError(f"journal {path}: {text}; {remedy}")
     if isinstance(error, (sqlite3.ProgrammingError, sqlite3.InterfaceError)):
         return DeviceError(f"journal {path}: {text}")
-    return _DamagedError(text)
+    return DamagedError(text)
 
 
 def checksum(seq: int, payload: bytes) -> int:
     """CRC-32 of a record: its number and its payload, so that neither an altered nor a misplaced one passes."""
-    return zlib.crc32(payload, seq & 0xFFFFFFFF)
+    return zlib.crc32(payload, zlib.crc32(seq.to_bytes(8, "big", signed=True)))
 
 
 class Journal:
     """One journal file, used by any number of threads of one process.
 
     ``most_mb``: size at which the oldest delivered records give way (records whose message is still unsent never do);
-    ``thin_windows_mb``: unsent window messages above this size are thinned: from the oldest on every second one leaves
-    the outbox (its record stays), and when the sweep has come to the newest it begins again at the oldest. Each step
-    is recorded and published as ``thinned``. ``on_set_aside(path, reason)`` is told of a damaged file that was set
-    aside whole, from the thread that found it.
+    ``thin_windows_mb``: when the unsent window messages exceed this size, only every second one is sent, old and new
+    alike; when they exceed it again, every fourth, and so on, so the whole outage is covered evenly. The others leave
+    the outbox, their records stay. Once a quarter of the size is left, all are sent again. What gave way is counted,
+    recorded and published as ``thinned``. ``on_set_aside(path, reason)`` is told of a damaged file that was set aside
+    whole, from the thread that found it.
 
     All methods raise ``DeviceError`` when the file cannot be used (locked, disk full, read-only): nothing of that call
     was then recorded, and the same call may be made again.
@@ -167,7 +201,9 @@ class Journal:
         self._closed = False
         self._inode = 0
         self._prune_after = 0
-        self._unsent = self._unsent_bytes = self._window_bytes = self._thinned = 0
+        self._unsent = self._unsent_bytes = self._window_bytes = 0
+        self._place = 0
+        self._thinning = _Thinning()
         try:
             path.parent.mkdir(parents=True, exist_ok=True)
         except OSError as error:
@@ -243,11 +279,11 @@ class Journal:
         with self._lock:
             try:
                 return self._tried(job)
-            except _DamagedError as error:
+            except DamagedError as error:
                 self._set_aside(str(error))
                 try:
                     return self._tried(job)
-                except _DamagedError as again:
+                except DamagedError as again:
                     raise DeviceError(f"journal {self.path}: a new file is damaged too: {again}") from again
 
     def _tried(self, job: Callable[[sqlite3.Connection], T]) -> T:
@@ -256,8 +292,8 @@ class Journal:
             return job(db)
         except sqlite3.Error as error:
             self._roll_back(db)
-            raise _translated(error, self.path) from error
-        except (OSError, _DamagedError):
+            raise translated(error, self.path) from error
+        except BaseException:
             self._roll_back(db)
             raise
 
@@ -266,7 +302,7 @@ class Journal:
             if db.in_transaction:
                 db.execute("ROLLBACK")
             self._count(db)
-        except (sqlite3.Error, _DamagedError):
+        except (sqlite3.Error, DamagedError):
             self._drop()  # opened anew by the next call
 
     def _whole(self) -> sqlite3.Connection:
@@ -280,15 +316,17 @@ class Journal:
             self._drop()  # the file was deleted or replaced under us
         try:
             return self._opened()
-        except _DamagedError as error:
+        except DamagedError as error:
             self._set_aside(str(error))
             try:
                 return self._opened()
-            except _DamagedError as again:
+            except DamagedError as again:
                 raise DeviceError(f"journal {self.path}: a new file is damaged too: {again}") from again
 
     def _opened(self) -> sqlite3.Connection:
         try:
+            if self.path.exists() and not _is_sqlite(self.path):
+                raise DamagedError("it does not begin as a SQLite file")
             self._db = db = sqlite3.connect(self.path, timeout=BUSY_S, isolation_level=None, check_same_thread=False)
             check_ours(db, self.path)
             db.execute("PRAGMA journal_mode = WAL")
@@ -305,11 +343,11 @@ class Journal:
                 self._ceiling.raise_to(newest + RESERVE)
         except sqlite3.Error as error:
             self._drop()
-            raise _translated(error, self.path) from error
+            raise translated(error, self.path) from error
         except OSError as error:
             self._drop()
             raise DeviceError(f"journal {self.path}: {error.strerror or error}") from error
-        except (DeviceError, _DamagedError):
+        except (DeviceError, DamagedError):
             self._drop()
             raise
         return db
@@ -356,6 +394,8 @@ class Journal:
     def _append(
         self, db: sqlite3.Connection, entries: Sequence[Entry], stamp: Stamp, state: Mapping[str, Any]
     ) -> tuple[int, ...]:
+        before = copy.copy(self._thinning)
+
         def job() -> tuple[int, ...]:
             newest = _newest(db)
             first = (self._ceiling.top if newest is None else newest) + 1
@@ -365,9 +405,11 @@ class Journal:
             self._keep(db, state)
             last = first + len(entries) - 1
             if entries:
-                if self._window_bytes > self._thin_bytes:
-                    last += self._thin(db, last + 1, stamp)
+                self._thin(db)
+                last += self._report_thinned(db, last + 1, stamp)
                 self._prune(db)
+            if self._thinning != before:
+                self._keep(db, {"thinning": dataclasses.asdict(self._thinning)})
             if last > self._ceiling.top:
                 self._ceiling.raise_to(last + RESERVE)
             return seqs
@@ -381,15 +423,20 @@ class Journal:
             "INSERT INTO record VALUES (?, ?, ?, ?, ?, ?, ?, ?)",
             (seq, entry.kind, self._boot(db, stamp.boot), stamp.monotonic_s, stamp.utc_s, stamp.synced, check, payload),
         )
-        db.execute("INSERT INTO outbox VALUES (?, ?, ?)", (seq, entry.kind, len(payload)))
+        if entry.kind == "window":
+            self._place += 1
+            if self._place % self._thinning.stride:
+                self._thinning.gave_way(seq)
+                return
+            self._window_bytes += len(payload)
+        place = self._place if entry.kind == "window" else 0
+        db.execute("INSERT INTO outbox VALUES (?, ?, ?, ?)", (seq, entry.kind, len(payload), place))
         if entry.reply_topic:
             db.execute("INSERT INTO route VALUES (?, ?, ?)", (seq, entry.reply_topic, entry.correlation))
         if entry.kind in STATES:
             db.execute("INSERT OR REPLACE INTO latest VALUES (?, ?, ?, ?)", (entry.kind, seq, check, payload))
         self._unsent += 1
         self._unsent_bytes += len(payload)
-        if entry.kind == "window":
-            self._window_bytes += len(payload)
 
     def _boot(self, db: sqlite3.Connection, name: str) -> int:
         row = db.execute("SELECT id FROM boot WHERE name = ?", (name,)).fetchone()
@@ -405,26 +452,37 @@ class Journal:
                 text = json.dumps(messages.plain(value), ensure_ascii=True, allow_nan=False)
                 db.execute("INSERT OR REPLACE INTO state VALUES (?, ?)", (key, text))
 
-    def _thin(self, db: sqlite3.Connection, seq: int, stamp: Stamp) -> int:
-        """Take every second window of the next run out of the outbox and record it under ``seq``.
+    def _thin(self, db: sqlite3.Connection) -> None:
+        """Widen or end the thinning where it is time, and take one run of the sweep over older windows."""
+        now = self._thinning
+        if now.stride > 1 and self._window_bytes < self._thin_bytes / 4:
+            now.stride, now.swept_to = 1, None
+        elif now.swept_to is None and self._window_bytes > self._thin_bytes and now.stride < MOST_STRIDE:
+            now.stride, now.swept_to = now.stride * 2, 0
+        if now.swept_to is None:
+            return
+        run = db.execute(
+            "SELECT seq, bytes, place FROM outbox WHERE kind = 'window' AND seq > ? ORDER BY seq LIMIT ?",
+            (now.swept_to, THIN_RUN),
+        ).fetchall()
+        now.swept_to = run[-1][0] if len(run) == THIN_RUN else None  # the end: newer ones were thinned as they came
+        gone = [(seq, size) for seq, size, place in run if place % now.stride]
+        db.executemany("DELETE FROM outbox WHERE seq = ?", ((seq,) for seq, _ in gone))
+        for seq, size in gone:
+            now.gave_way(seq)
+            self._unsent -= 1
+            self._unsent_bytes -= size
+            self._window_bytes -= size
 
-        Returns the number of records written (0 when there was nothing to thin).
-        """
-        query = "SELECT seq, bytes FROM outbox WHERE kind = 'window' AND seq > ? ORDER BY seq LIMIT ?"
-        run = db.execute(query, (int(_state(db, "thinned_to", 0)), THIN_RUN)).fetchall()
-        if len(run) < THIN_RUN:  # the sweep has come to the newest: begin again at the oldest
-            run = db.execute(query, (0, THIN_RUN)).fetchall()
-        gone = run[1::2]
-        if not gone:
+    def _report_thinned(self, db: sqlite3.Connection, seq: int, stamp: Stamp) -> int:
+        """Record under ``seq`` what gave way since the last such record, and return how many records that made."""
+        now = self._thinning
+        if not now.count or (now.count < THIN_REPORT and now.stride > 1):
             return 0
-        db.executemany("DELETE FROM outbox WHERE seq = ?", ((number,) for number, _ in gone))
-        freed = sum(size for _, size in gone)
-        self._unsent -= len(gone)
-        self._unsent_bytes -= freed
-        self._window_bytes -= freed
-        self._thinned += len(gone)
-        self._keep(db, {"thinned_to": run[-1][0], "thinned_total": self._thinned})
-        body = messages.thinned(count=len(gone), first_seq=gone[0][0], last_seq=gone[-1][0], total=self._thinned)
+        body = messages.thinned(
+            count=now.count, first_seq=now.first, last_seq=now.last, keep_every=now.stride, total=now.total
+        )
+        now.count = now.first = now.last = 0
         self._insert(db, seq, Entry(kind="thinned", body=body), stamp)
         return 1
 
@@ -466,20 +524,20 @@ class Journal:
         """Count the outbox anew (after opening and after a transaction that failed)."""
         try:
             row = db.execute(
-                "SELECT count(*), coalesce(sum(bytes), 0),"
+                "SELECT count(*), coalesce(sum(bytes), 0), coalesce(max(place), 0),"
                 " coalesce(sum(CASE kind WHEN 'window' THEN bytes ELSE 0 END), 0) FROM outbox"
             ).fetchone()
-            self._unsent, self._unsent_bytes, self._window_bytes = (int(part) for part in row)
-            self._thinned = int(_state(db, "thinned_total", 0))
+            self._unsent, self._unsent_bytes, self._place, self._window_bytes = (int(part) for part in row)
+            self._thinning = _Thinning(**_state(db, "thinning", {}))
         except (TypeError, ValueError) as error:
-            raise _DamagedError(f"the outbox cannot be counted: {error}") from error
+            raise DamagedError(f"the outbox cannot be counted: {error}") from error
 
     def _status(self, db: sqlite3.Connection) -> JournalStatus:
         newest = _newest(db)
         return JournalStatus(
             unsent=self._unsent,
             unsent_bytes=self._unsent_bytes,
-            windows_thinned=self._thinned,
+            windows_thinned=self._thinning.total,
             used_bytes=self._pages_used(db) * int(db.execute("PRAGMA page_size").fetchone()[0]),
             next_seq=(self._ceiling.top if newest is None else newest) + 1,
         )
@@ -495,36 +553,49 @@ def _begin_file(db: sqlite3.Connection) -> None:
     db.execute(f"PRAGMA user_version = {SCHEMA_VERSION}")
 
 
+def _head(path: Path) -> bytes:
+    with path.open("rb") as file:
+        return file.read(100)
+
+
+def _is_sqlite(path: Path) -> bool:
+    """Whether the file is empty or begins as section 1.3 of SQLite's file format has it.
+
+    SQLite itself takes a file shorter than its header for an empty one, and would write over it.
+    """
+    head = _head(path)
+    return not head or head.startswith(b"SQLite format 3\0")
+
+
 def _has_our_header(path: Path) -> bool:
-    """Whether the first bytes are a SQLite header (section 1.3 of its file format) with our application id."""
+    """Whether the header is SQLite's with our application id."""
     try:
-        with path.open("rb") as file:
-            head = file.read(100)
+        head = _head(path)
     except OSError:
         return False
-    return head[:16] == b"SQLite format 3\0" and head[68:72] == APPLICATION_ID.to_bytes(4, "big")
+    return head.startswith(b"SQLite format 3\0") and head[68:72] == APPLICATION_ID.to_bytes(4, "big")
 
 
 def check_ours(db: sqlite3.Connection, path: Path) -> None:
-    """Raise ``DeviceError`` for a journal of a newer version, ``_DamagedError`` for any other foreign content."""
+    """Raise ``DeviceError`` for a journal of a newer version, ``DamagedError`` for any other foreign content."""
     tables = {row[0] for row in db.execute("SELECT name FROM sqlite_master WHERE type = 'table'")}
     if not tables:
         return
     if int(db.execute("PRAGMA application_id").fetchone()[0]) != APPLICATION_ID:
-        raise _DamagedError("its application id is not ours")
+        raise DamagedError("its application id is not ours")
     version = int(db.execute("PRAGMA user_version").fetchone()[0])
     if version > SCHEMA_VERSION:
         raise DeviceError(f"journal {path}: was written by a newer version (format {version})")
     missing = {"boot", "record", "outbox", "route", "state", "latest", "finding"} - tables
     if missing or version != SCHEMA_VERSION:
-        raise _DamagedError(f"format {version}, tables missing: {', '.join(sorted(missing)) or 'none'}")
+        raise DamagedError(f"format {version}, tables missing: {', '.join(sorted(missing)) or 'none'}")
 
 
 def check_whole(db: sqlite3.Connection) -> None:
-    """Check the whole file: SQLite's own structures. Raises ``_DamagedError``."""
+    """Check the whole file: SQLite's own structures. Raises ``DamagedError``."""
     found = db.execute("PRAGMA quick_check(1)").fetchone()[0]
     if found != "ok":
-        raise _DamagedError(str(found))
+        raise DamagedError(str(found))
 
 
 def _newest(db: sqlite3.Connection) -> int | None:
@@ -534,7 +605,7 @@ def _newest(db: sqlite3.Connection) -> int | None:
 
 def _checked(seq: int, check: Any, payload: Any) -> bytes:
     if not isinstance(payload, bytes) or checksum(seq, payload) != check:
-        raise _DamagedError(f"record {seq} does not match its check sum")
+        raise DamagedError(f"record {seq} does not match its check sum")
     return payload
 
 
@@ -547,7 +618,7 @@ def _pending(db: sqlite3.Connection, limit: int, after: int) -> list[Outgoing]:
     ):
         whole = _checked(seq, check, payload)
         if kind not in KINDS:
-            raise _DamagedError(f"record {seq} is of an unknown kind")
+            raise DamagedError(f"record {seq} is of an unknown kind")
         found.append(
             Outgoing(seq=seq, kind=kind, payload=whole, reply_topic=topic or "", correlation=correlation or b"")
         )
@@ -566,7 +637,7 @@ def _state(db: sqlite3.Connection, key: str, default: Any) -> Any:
     try:
         return json.loads(row[0])
     except (ValueError, TypeError, RecursionError) as error:
-        raise _DamagedError(f"state {key!r} cannot be read: {error}") from error
+        raise DamagedError(f"state {key!r} cannot be read: {error}") from error
 
 
 def read_rows(
@@ -576,7 +647,7 @@ def read_rows(
     until_utc_s: float | None = None,
     last: int | None = None,
 ) -> Iterator[Row]:
-    """Yield records in the order of ``seq``. Raises ``sqlite3.Error`` and ``_DamagedError``."""
+    """Yield records in the order of ``seq``. Raises ``sqlite3.Error`` and ``DamagedError``."""
     wanted = [
         ("record.kind = ?", kind),
         ("record.utc_s >= ?", since_utc_s),
@@ -599,5 +670,5 @@ def read_rows(
             stamp = Stamp(boot=str(boot), monotonic_s=float(monotonic_s), utc_s=float(utc_s), synced=bool(synced))
             content = json.loads(_checked(seq, check, payload))
         except (TypeError, ValueError, RecursionError) as error:
-            raise _DamagedError(f"record {seq} cannot be read: {error}") from error
+            raise DamagedError(f"record {seq} cannot be read: {error}") from error
         yield Row(seq=seq, kind=str(name), stamp=stamp, payload=content, unsent=bool(unsent))

@@ -180,9 +180,17 @@ def relay(
     }
 
 
-def thinned(*, count: int, first_seq: int, last_seq: int, total: int) -> Body:
-    """Window messages taken out of the outbox: every second one from ``first_seq`` to ``last_seq``."""
-    return {"count": count, "first_seq": first_seq, "last_seq": last_seq, "total": total}
+def thinned(*, count: int, first_seq: int, last_seq: int, keep_every: int, total: int) -> Body:
+    """Window messages that gave way: ``count`` between ``first_seq`` and ``last_seq`` since the last such message, so
+    that one window in ``keep_every`` is sent (1: all again); ``total`` since the journal began.
+    """
+    return {
+        "count": count,
+        "first_seq": first_seq,
+        "last_seq": last_seq,
+        "keep_every": keep_every,
+        "total": total,
+    }
 
 
 def summary(

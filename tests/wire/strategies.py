@@ -127,6 +127,7 @@ bodies: dict[str, st.SearchStrategy[Body]] = {
         count=st.integers(1, 1000),
         first_seq=st.integers(1, 2**40),
         last_seq=st.integers(1, 2**40),
+        keep_every=st.integers(1, 2**20),
         total=st.integers(1, 2**40),
     ),
     "order": st.builds(
