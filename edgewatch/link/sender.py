@@ -7,8 +7,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Protocol
 
-from edgewatch.record.journal import Outgoing
 from edgewatch.wire.kinds import KINDS
+from edgewatch.wire.outgoing import Outgoing
 
 AHEAD = 200
 """Messages read ahead from the outbox (about 200 kB): a read costs about 1 ms."""

@@ -30,6 +30,7 @@ from edgewatch.record.ceiling import Ceiling
 from edgewatch.wire import messages
 from edgewatch.wire.kinds import KINDS, STATES
 from edgewatch.wire.messages import Stamp
+from edgewatch.wire.outgoing import Outgoing
 
 T = TypeVar("T")
 
@@ -84,17 +85,6 @@ class Entry:
     def __post_init__(self) -> None:
         if self.kind not in KINDS or not KINDS[self.kind].journalled:
             raise ValueError(f"kind = {self.kind!r}: is not journalled")
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Outgoing:
-    """One message waiting in the outbox; ``payload`` is what goes on the wire."""
-
-    seq: int
-    kind: str
-    payload: bytes
-    reply_topic: str = ""
-    correlation: bytes = b""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
