@@ -12,11 +12,12 @@ from pathlib import Path
 from typing import Any
 
 from edgewatch.commands.measuring import Measurement, check_number_options, measure_clip
-from edgewatch.commands.options import add_bands, add_optics, add_station, load_settings, read_toml
-from edgewatch.errors import DeviceError, SettingsError
-from edgewatch.judge.bands import Band, ReferenceBar, band_toml, read_band
+from edgewatch.commands.options import add_bands, add_optics, add_station, load_settings
+from edgewatch.errors import SettingsError
+from edgewatch.judge.bands import Band, ReferenceBar
 from edgewatch.judge.teaching import CONFIDENCE, CONTENT, find_outliers, reference_bar, remarks, teach
 from edgewatch.judge.verification import Verification, verify
+from edgewatch.record.bandfiles import load_band, save_band
 from edgewatch.settings import GRADE_NAME, Settings
 from edgewatch.sight.optics import Optics
 
@@ -65,7 +66,7 @@ def run(args: argparse.Namespace) -> int:
         wheel_speed_m_s=settings.wheel.surface_speed_m_s or math.nan,
         taught=datetime.datetime.now(datetime.timezone.utc).isoformat(timespec="seconds").replace("+00:00", "Z"),
     )
-    write_text(out, band_toml(band))
+    save_band(out, band)
     if args.report:
         from edgewatch.commands.report import write_report
 
@@ -98,11 +99,6 @@ def _numbers(text: str) -> list[int]:
         raise SettingsError(
             f"--leave-out {text}: numbers of bars separated by commas are needed, such as 3,17"
         ) from None
-
-
-def load_band(path: Path) -> Band:
-    """Read and check a band file. Raises ``SettingsError``."""
-    return read_band(read_toml(path), file=str(path))
 
 
 def _kept_bars(name: str | None) -> tuple[list[ReferenceBar], Band | None]:
@@ -147,17 +143,6 @@ def _numbered(kept: Sequence[ReferenceBar], measured: Sequence[Measurement]) -> 
             number += 1
             bars.append(reference_bar(number, Path(one.clip).name, contact.bar, contact.windows))
     return bars
-
-
-def write_text(path: Path, text: str) -> None:
-    """Write a file whole or not at all. Raises ``DeviceError``."""
-    part = path.with_name(path.name + ".part")
-    try:
-        path.parent.mkdir(parents=True, exist_ok=True)
-        part.write_text(text, encoding="utf-8")
-        part.replace(path)
-    except OSError as error:
-        raise DeviceError(f"{path}: cannot be written: {error.strerror or error}") from error
 
 
 def band_summary(band: Band) -> dict[str, Any]:
@@ -225,6 +210,7 @@ def _verify(args: argparse.Namespace, settings: Settings, path: Path) -> int:
         print(json.dumps(_verification_body(found, str(path)), allow_nan=False))
     else:
         print(f"{band.grade}: {found.bars} master bars; {found.sentence}")
+        print(f"burst-rate over the taught one: {found.ratio_low:.2f} to {found.ratio_high:.2f} (95 %, counts alone)")
     return 0 if found.holds else 1
 
 
@@ -240,5 +226,7 @@ def _verification_body(found: Verification, file: str) -> dict[str, Any]:
         "rate_limit": known(found.rate_limit),
         "reach_shift": known(found.reach_shift),
         "reach_limit": known(found.reach_limit),
+        "ratio_low": known(found.ratio_low),
+        "ratio_high": known(found.ratio_high),
         "sentence": found.sentence,
     }

@@ -11,6 +11,7 @@ from scipy.special import ndtr, ndtri
 
 from edgewatch.judge.bands import Band
 from edgewatch.judge.counts import NORMAL_WEIGHTS, at_least, at_most
+from edgewatch.judge.evidence import RateEvidence
 from edgewatch.judge.likeness import means, predictive_scatter
 
 OWN_SHARE = 0.95
@@ -21,10 +22,13 @@ LONGEST_TRACK_M = 1e6
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Pair:
-    """``expected`` on the line, ``actual`` touches the wheel. ``told_apart``: at some contact time the station calls
-    at most ``miss`` of the actual grade's bars conforming while ``OWN_SHARE`` of its own can be; ``track_m`` and
-    ``seconds`` say from when on (infinite if never). ``limit_share``: share of own bars that can be told from the
-    other grade with unlimited track.
+    """``expected`` on the line, ``actual`` touches the wheel.
+
+    ``told_apart``: at some contact time the station calls at most ``miss`` of the actual grade's bars conforming while
+    ``OWN_SHARE`` of its own can be; ``track_m`` and ``seconds`` say from when on (infinite if never). ``by``: the figure
+    that does it. ``alert_track_m``, ``alert_seconds``: about how long until a typical bar of the actual grade is
+    condemned by its hazard (infinite if that lies in the expected band). ``limit_share``: share of own bars that can be
+    told from the other grade with unlimited track.
     """
 
     expected: str
@@ -33,6 +37,8 @@ class Pair:
     by: str
     track_m: float
     seconds: float
+    alert_track_m: float
+    alert_seconds: float
     limit_share: float
 
 
@@ -99,7 +105,7 @@ def told_apart(expected: Band, other: Band, miss: float) -> bool:
     return compare(expected, other, miss=miss, track_m_s=1.0).told_apart
 
 
-def compare(expected: Band, other: Band, *, miss: float, track_m_s: float) -> Pair:
+def compare(expected: Band, other: Band, *, miss: float, track_m_s: float, false_alarm: float = 0.001) -> Pair:
     """One pair. ``track_m_s``: metres of track that a second of contact shows (``ValueError`` unless positive)."""
     if not track_m_s > 0.0:
         raise ValueError(f"track_m_s = {track_m_s!r}: a positive number is needed")
@@ -122,6 +128,7 @@ def compare(expected: Band, other: Band, *, miss: float, track_m_s: float) -> Pa
             middle = 0.5 * (low + high)
             low, high = (low, middle) if share(math.exp(middle)) >= OWN_SHARE else (middle, high)
         track = math.exp(high)
+    alert = RateEvidence(expected).track_to_alert_m(other.rate_center_per_m, false_alarm)
     return Pair(
         expected=expected.grade,
         actual=other.grade,
@@ -129,14 +136,16 @@ def compare(expected: Band, other: Band, *, miss: float, track_m_s: float) -> Pa
         by=by,
         track_m=track,
         seconds=track / track_m_s,
+        alert_track_m=alert,
+        alert_seconds=alert / track_m_s,
         limit_share=limit,
     )
 
 
-def contrast(bands: Sequence[Band], *, miss: float, track_m_s: float) -> tuple[Pair, ...]:
+def contrast(bands: Sequence[Band], *, miss: float, track_m_s: float, false_alarm: float = 0.001) -> tuple[Pair, ...]:
     """Every ordered pair of taught grades."""
     return tuple(
-        compare(expected, other, miss=miss, track_m_s=track_m_s)
+        compare(expected, other, miss=miss, track_m_s=track_m_s, false_alarm=false_alarm)
         for expected in bands
         for other in bands
         if other is not expected

@@ -73,6 +73,14 @@ class RateEvidence:
         )
         return below, above
 
+    def track_to_alert_m(self, rate_per_m: float, false_alarm: float) -> float:
+        """About the mean track until this hazard is condemned (m; infinite inside the band): threshold over growth."""
+        growths = (
+            (-math.log(false_alarm) - part.log_weight, part.gain * rate_per_m - part.cost)
+            for part in self._below + self._above
+        )
+        return min((nats / growth for nats, growth in growths if growth > 0.0), default=math.inf)
+
 
 class ReachEvidence:
     """Log evidence that reach is above, and below, the band, from windows whose noise the teaching has measured.

@@ -6,6 +6,7 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
+from edgewatch.figures.limits import rate_ratio_limits
 from edgewatch.judge.bands import Band, ReferenceBar
 from edgewatch.judge.drift import LEAST_MASTERS, residuals
 from edgewatch.judge.likeness import Evidence
@@ -18,7 +19,8 @@ control chart (Shewhart)."""
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Verification:
     """Mean deviations of the masters from the taught centres, in bar-to-bar deviations, and what is allowed; NaN where
-    there is nothing to compare.
+    there is nothing to compare. ``ratio_low``, ``ratio_high``: 95 % limits of the masters' pooled burst-rate over
+    that of the teaching, by counts alone.
     """
 
     bars: int
@@ -27,6 +29,8 @@ class Verification:
     rate_limit: float
     reach_shift: float
     reach_limit: float
+    ratio_low: float
+    ratio_high: float
     sentence: str
 
 
@@ -51,6 +55,7 @@ def verify(band: Band, masters: Sequence[ReferenceBar]) -> Verification:
 
     rate, rate_limit = mean_and_limit(rates)
     reach, reach_limit = mean_and_limit(reaches)
+    ratio = _pooled_ratio(band, masters)
     if len(rates) < LEAST_MASTERS:
         return Verification(
             bars=len(rates),
@@ -59,6 +64,8 @@ def verify(band: Band, masters: Sequence[ReferenceBar]) -> Verification:
             rate_limit=rate_limit,
             reach_shift=reach,
             reach_limit=reach_limit,
+            ratio_low=ratio[0],
+            ratio_high=ratio[1],
             sentence=f"at least {LEAST_MASTERS} are needed to tell anything",
         )
     off = [
@@ -73,5 +80,15 @@ def verify(band: Band, masters: Sequence[ReferenceBar]) -> Verification:
         rate_limit=rate_limit,
         reach_shift=reach,
         reach_limit=reach_limit,
+        ratio_low=ratio[0],
+        ratio_high=ratio[1],
         sentence="; ".join(off) if off else "they agree with the band",
     )
+
+
+def _pooled_ratio(band: Band, masters: Sequence[ReferenceBar]) -> tuple[float, float]:
+    used = [bar for bar in band.bars if not bar.left_out]
+    exposure, taught = sum(bar.exposure_m for bar in masters), sum(bar.exposure_m for bar in used)
+    if not (exposure > 0.0 and taught > 0.0):
+        return math.nan, math.nan
+    return rate_ratio_limits(sum(bar.bursts for bar in masters), exposure, sum(bar.bursts for bar in used), taught)

@@ -24,6 +24,7 @@ from edgewatch.figures.values import Figures
 from edgewatch.judge.bands import Band, ReferenceBar
 from edgewatch.judge.drift import DriftWatch
 from edgewatch.judge.evidence import RateEvidence, ReachEvidence
+from edgewatch.judge.sequential import least_mean_track_m
 from edgewatch.judge.teaching import find_outliers, teach
 from edgewatch.judge.trial import Trial
 from edgewatch.sight.detections import Detections, Light, PictureFlag
@@ -208,16 +209,6 @@ def false_alarm_points(bars: int, contacts: Sequence[float] = (1.0, 10.0, 100.0)
     return rows
 
 
-def wald_bound_m(ratio: float, edge_per_m: float) -> float:
-    """Least mean track of any test of the edge against ``ratio`` times it with these two risks (Wald 1947).
-
-    E T >= [(1 - b) ln((1 - b) / a) + b ln(b / (1 - a))] / information per metre, a = false alarm, b = miss.
-    """
-    a, b = FALSE_ALARM, MISS
-    nats = (1.0 - b) * math.log((1.0 - b) / a) + b * math.log(b / (1.0 - a))
-    return nats / (edge_per_m * (ratio * math.log(ratio) - ratio + 1.0))
-
-
 def tracks_to_alert(ratio: float, *, bars: int, reach: bool, seed: int = 12) -> float:
     """Mean track to the alert of bars whose hazard is ``ratio`` times the nearest edge, over Wald's bound.
 
@@ -226,7 +217,7 @@ def tracks_to_alert(ratio: float, *, bars: int, reach: bool, seed: int = 12) -> 
     rng = np.random.default_rng(seed)
     band = the_band(reach=reach)
     edge = band.burst_rate_high_per_m if ratio > 1.0 else band.burst_rate_low_per_m
-    bound = wald_bound_m(ratio, edge)
+    bound = least_mean_track_m(edge, ratio * edge, false_alarm=FALSE_ALARM, miss=MISS)
     step = bound / 20.0
     total, left = 0.0, bars
     while left:
