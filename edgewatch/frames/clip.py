@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from edgewatch.errors import DeviceError
 from edgewatch.frames.luminance import one_line, open_luminance
 from edgewatch.frames.mono import make_mono
-from edgewatch.frames.quiet import hush
+from edgewatch.frames.quiet import hush, is_damage, overhear
 from edgewatch.frames.values import Frame, Source, SourceInfo
 from edgewatch.settings import Settings
 from edgewatch.sight.optics import MAX_SIDE_PX
@@ -161,9 +161,14 @@ def read_picture(file: Path) -> NDArray[np.uint8]:
         if file.stat().st_size > MOST_PICTURE_BYTES:
             raise DeviceError(f"picture {file}: larger than {MOST_PICTURE_BYTES} bytes")
         content = np.frombuffer(file.read_bytes(), dtype=np.uint8)
-        decoded = cv2.imdecode(content, cv2.IMREAD_UNCHANGED) if content.size else None
-        if decoded is None:
-            raise DeviceError(f"picture {file}: empty, damaged, or not a picture")
+        with overhear() as heard:
+            decoded = cv2.imdecode(content, cv2.IMREAD_UNCHANGED) if content.size else None
+        damage = [line for line in heard if is_damage(line)]
+        if content[:2].tobytes() == b"\xff\xd8" and not _is_whole_jpeg(content.tobytes()):
+            damage.append("JPEG without its end")
+        if decoded is None or damage:
+            why = f" ({damage[0]})" if damage else ""
+            raise DeviceError(f"picture {file}: empty, damaged, or not a picture{why}")
         if max(decoded.shape[:2]) > MAX_SIDE_PX:
             raise DeviceError(f"picture {file}: larger than {MAX_SIDE_PX} px a side")
         return make_mono(decoded)
@@ -171,6 +176,11 @@ def read_picture(file: Path) -> NDArray[np.uint8]:
         raise DeviceError(f"picture {file}: cannot be read: {error.strerror or error}") from error
     except (cv2.error, ValueError) as error:
         raise DeviceError(f"picture {file}: cannot be decoded: {one_line(error)}") from error
+
+
+def _is_whole_jpeg(content: bytes) -> bool:
+    """Whether an end marker follows the last scan (ITU-T T.81, B.1.1.3); OpenCV 4 fills a missing rest with grey."""
+    return content.rfind(b"\xff\xd9") > content.rfind(b"\xff\xda") >= 0
 
 
 def check_size(what: str, picture: NDArray[np.uint8], info: SourceInfo) -> None:

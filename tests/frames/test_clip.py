@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import os
 import subprocess
 import sys
 from pathlib import Path
@@ -15,6 +16,7 @@ from hypothesis import strategies as st
 from numpy.typing import NDArray
 
 from edgewatch.errors import DeviceError
+from edgewatch.frames.quiet import is_damage, overhear
 from edgewatch.frames.registry import open_source
 from edgewatch.frames.values import Frame
 from edgewatch.settings import OpticsSettings, Settings
@@ -93,18 +95,34 @@ def test_folder_of_pictures_in_name_order(tmp_path: Path) -> None:
     assert worst(read_all(f"clip:{folder}"), pictures) == 0
 
 
-def test_damaged_picture_is_named(tmp_path: Path) -> None:
-    """A picture cut short, an empty one, and one of another size each give an error with the file's name."""
-    for damage in ("cut", "empty", "size"):
-        folder = write_pictures(tmp_path / damage, noise_pictures(3))
-        victim = folder / "000001.png"
-        if damage == "size":
-            cv2.imwrite(str(victim), noise_pictures(1, height=32)[0])
-        else:
-            victim.write_bytes(victim.read_bytes()[:40] if damage == "cut" else b"")
-        with pytest.raises(DeviceError, match=r"000001\.png") as caught:
-            read_all(str(folder))
-        assert "\n" not in str(caught.value)
+@pytest.mark.parametrize("damage", ["cut", "empty", "size", "flipped", "cut jpeg"])
+def test_damaged_picture_is_named(tmp_path: Path, damage: str) -> None:
+    """A picture cut short, empty, altered, or of another size gives an error of one line with the file's name."""
+    folder = write_pictures(tmp_path / "clip", noise_pictures(3))
+    victim = folder / "000001.png"
+    content = bytearray(victim.read_bytes())
+    if damage == "size":
+        cv2.imwrite(str(victim), noise_pictures(1, height=32)[0])
+    elif damage == "cut jpeg":
+        victim = victim.rename(folder / "000001.jpg")
+        whole = cv2.imencode(".jpg", noise_pictures(1)[0])[1].tobytes()
+        victim.write_bytes(whole[: len(whole) // 2])
+    else:
+        content[3000] ^= 0x40
+        victim.write_bytes({"cut": content[:40], "empty": b"", "flipped": content}[damage])
+    with pytest.raises(DeviceError, match=r"00000[01]\.(png|jpg)") as caught:
+        read_all(str(folder))
+    assert victim.name in str(caught.value)
+    assert "\n" not in str(caught.value)
+
+
+def test_stderr_of_others_is_passed_on(capfd: pytest.CaptureFixture[str]) -> None:
+    """What is overheard from libraries is kept back, what others write at the same time is not lost."""
+    with overhear() as heard:
+        os.write(2, b"libpng error: IDAT: CRC error\nbroker is away\n")
+        os.write(2, b"libpng warning: iCCP: known incorrect sRGB profile\n")
+    assert [is_damage(line) for line in heard] == [True, False]
+    assert capfd.readouterr().err == "broker is away\n"
 
 
 @pytest.mark.parametrize("name", ["cut.mkv", "cut.avi"])
@@ -163,7 +181,7 @@ def test_libraries_write_nothing_to_stderr(tmp_path: Path) -> None:
     clip = write_clip(tmp_path / "cut.mkv", noise_pictures(20), options=("-c:v", "libx264", "-qp", "0"))
     clip.write_bytes(clip.read_bytes()[: clip.stat().st_size // 2])
     folder = write_pictures(tmp_path / "pictures", noise_pictures(2))
-    for name, suffix in (("000000.png", ".png"), ("1.jpg", ".jpg"), ("2.tif", ".tif")):
+    for name, suffix in (("0.png", ".png"), ("1.jpg", ".jpg"), ("2.tif", ".tif")):
         whole = cv2.imencode(suffix, noise_pictures(1)[0])[1].tobytes()
         (tmp_path / name).mkdir()
         (tmp_path / name / name).write_bytes(whole[: len(whole) * 2 // 3])
@@ -175,7 +193,7 @@ def test_libraries_write_nothing_to_stderr(tmp_path: Path) -> None:
         "        while source.read(1) is not None: pass\n"
         "    except DeviceError as error: print(error)\n"
     )
-    paths = [clip, folder, tmp_path / "000000.png", tmp_path / "1.jpg", tmp_path / "2.tif"]
+    paths = [clip, folder, tmp_path / "0.png", tmp_path / "1.jpg", tmp_path / "2.tif"]
     done = subprocess.run([sys.executable, "-c", program, *map(str, paths)], capture_output=True, text=True, check=True)
     assert done.stderr == ""
     assert "truncated or damaged" in done.stdout
