@@ -10,6 +10,7 @@ install_edgewatch ''
 PATH=$PATH:/usr/sbin:/sbin # Debian keeps mosquitto there, and an ordinary user's PATH does not
 export PATH
 if ! command -v mosquitto >/dev/null 2>&1; then
-    say "no mosquitto on this machine: this rehearsal keeps its journal and sends no messages (Debian, as root: apt-get install mosquitto)"
+    say "no mosquitto on this machine: this rehearsal keeps its journal and sends no messages" \
+        "(Debian, as root: apt-get install mosquitto)"
 fi
 exec "$venv/bin/edgewatch" rehearse "$@"

@@ -29,7 +29,8 @@ install_debian() ( # NAME...: from Debian, starting no service; fails when one c
         printf '#!/bin/sh\nexit 101\n' >"$policy"
         chmod 755 "$policy"
     fi
-    apt-get -qq -o DPkg::Lock::Timeout=120 update >&2 || say "the package lists could not be renewed; trying with the old ones"
+    apt-get -qq -o DPkg::Lock::Timeout=120 update >&2 ||
+        say "the package lists could not be renewed; trying with the old ones"
     apt-get -qq -y -o DPkg::Lock::Timeout=120 install --no-install-recommends "$@" >&2
 )
 
@@ -51,7 +52,8 @@ make_venv() { # a usable .venv, made anew when the Python that it was made from 
         may_install && install_debian python3 python3-venv
         python=$(find_python 'import venv, ensurepip') || {
             if find_python 'pass' >/dev/null; then
-                give_up "Python is here and its venv module is not; install it (Debian, as root: apt-get install python3-venv)"
+                give_up "Python is here and its venv module is not;" \
+                    "install it (Debian, as root: apt-get install python3-venv)"
             fi
             give_up "Python 3.10 or newer is needed (Debian 12 and later, as root: apt-get install python3 python3-venv)"
         }
@@ -62,7 +64,8 @@ make_venv() { # a usable .venv, made anew when the Python that it was made from 
 
 fingerprint() { # of everything that an installation is made from but the sources, which it refers to
     printf '%s ' "$top"
-    (cd "$top" && find pyproject.toml edgewatch/__init__.py deploy/station.toml calib -type f -exec cksum {} + | LC_ALL=C sort) | cksum
+    (cd "$top" && find pyproject.toml edgewatch/__init__.py deploy/station.toml calib -type f -exec cksum {} + |
+        LC_ALL=C sort) | cksum
 }
 
 install_edgewatch() { # EXTRAS: '' or '[test,desk]'; nothing to do when nothing has changed since the last time
