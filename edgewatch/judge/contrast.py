@@ -25,8 +25,8 @@ class Pair:
     """``expected`` on the line, ``actual`` touches the wheel.
 
     ``told_apart``: at some contact time the station calls at most ``miss`` of the actual grade's bars conforming while
-    ``OWN_SHARE`` of its own can be; ``track_m`` and ``seconds`` say from when on (infinite if never). ``by``: the figure
-    that does it. ``alert_track_m``, ``alert_seconds``: about how long until a typical bar of the actual grade is
+    ``OWN_SHARE`` of its own can be; ``track_m`` and ``seconds`` say from when on (infinite if never). ``by``: the
+    figure that does it. ``alert_track_m``, ``alert_seconds``: about how long until a typical bar of the actual grade is
     condemned by its hazard (infinite if that lies in the expected band). ``limit_share``: share of own bars that can be
     told from the other grade with unlimited track.
     """
