@@ -189,6 +189,12 @@ class Monitor:
         """Forget the pictures seen: after a fault in the seeing, or when the camera came back."""
         self._sight.reset()
 
+    @property
+    def status(self) -> str:
+        """One line for the service manager."""
+        counts = ", ".join(f"{number} {verdict}" for verdict, number in self._counts.items())
+        return f"{self._complaints.condition}; {self._expectation.grade or 'nothing'} expected; {counts}"
+
     def replace_bands(self, bands: Mapping[str, Band]) -> None:
         """Use these bands from the next contact on."""
         self._bands = dict(bands)

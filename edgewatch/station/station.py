@@ -238,6 +238,7 @@ class Station:
             if now_s - tick_s >= TICK_S:
                 tick_s = now_s
                 self._tick()
+                self._watchdog.progress(self.monitor.status)
             frame = self._next_frame(now_s - last_frame_s)
             if frame is None:
                 if self._ended:
@@ -291,7 +292,7 @@ class Station:
             self._part_fault("judging", error)
             return
         self._carry_out(effects, stamp)
-        self._watchdog.progress()
+        self._watchdog.progress(self.monitor.status)
 
     def _tick(self) -> None:
         stamp = self._clock.now()
