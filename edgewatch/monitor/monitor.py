@@ -13,11 +13,11 @@ from collections.abc import Mapping, Sequence
 from edgewatch.figures.contact import Begin
 from edgewatch.figures.meter import BarDone, BarMeter, WindowDone
 from edgewatch.judge.bands import Band
-from edgewatch.judge.causes import BLIND
+from edgewatch.judge.causes import BLIND, CAUSES, FAILURE
 from edgewatch.judge.trial import NONCONFORMING, Judgement, Trial
 from edgewatch.monitor.alerts import Alert, AlertList
 from edgewatch.monitor.blindness import FLAG_CAUSES, Blindness
-from edgewatch.monitor.condition import CAUSES, FAILURE, Complaints
+from edgewatch.monitor.condition import Complaints
 from edgewatch.monitor.effects import Effect, KeepPicture, Publish, Record, Remember, SendView, SetRelay, Told
 from edgewatch.monitor.exhibits import Exhibits
 from edgewatch.monitor.memory import Expectation, Memory, keep_alerts, keep_expectation
@@ -96,7 +96,7 @@ class Monitor:
         effects.append(Record(kind="expected", payload=self._expected_body()))
         effects.append(self._remember_expected())
         grade = self._expectation.grade
-        self._complaints.set("unknown_grade", bool(grade) and grade not in self._bands)
+        self._complaints.set("no_band", bool(grade) and grade not in self._bands)
         effects.append(self._condition_record())
         if self._settings.relay.kind != "none":
             effects.append(self._relay_effect())
@@ -333,7 +333,7 @@ class Monitor:
             self._remember_expected(),
             Remember(values={"counts": dict(self._counts)}),
         ]
-        effects += self.complain({"unknown_grade": not known}, stamp)
+        effects += self.complain({"no_band": not known}, stamp)
         return effects + self._summary(stamp, always=True)
 
     def _acknowledge(self, order: Order) -> list[Effect]:
@@ -386,7 +386,7 @@ class Monitor:
     def _cause_alert(self, cause: str, *, active: bool) -> list[Effect]:
         """Failures and whatever blinds the station, and drift, are alerts; the rest shows in the condition alone."""
         what = CAUSES[cause]
-        if not (what.blinds or what.condition == FAILURE or cause == "drift"):
+        if not (what.blinds or what.condition == FAILURE or cause.startswith("drift")):
             return []
         if not active:
             return self._told_alerts(self._alerts.go(cause))

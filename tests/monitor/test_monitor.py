@@ -133,7 +133,7 @@ def test_unknown_grade_judges_nothing_and_says_so() -> None:
     begun = station.begin(stamp(0.0))
     condition = records(begun, "condition")[0]
     assert condition["condition"] == "out_of_specification"
-    assert [cause["cause"] for cause in condition["causes"]] == ["unknown_grade"]
+    assert [cause["cause"] for cause in condition["causes"]] == ["no_band"]
     bar = records(run(station), "bar")[0]
     assert (bar["verdict"], "no_band" in bar["causes"]) == ("inconclusive", True)
 
