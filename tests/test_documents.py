@@ -13,6 +13,7 @@ import pytest
 
 from edgewatch.commands.cli import COMMANDS, main
 from edgewatch.commands.options import read_toml
+from edgewatch.judge.causes import CAUSES
 from edgewatch.settings import allowed, read_settings, sections
 from edgewatch.wire.kinds import KINDS
 from edgewatch.wire.orders import ORDERS
@@ -81,6 +82,16 @@ def test_the_mqtt_guide_lists_the_orders() -> None:
     assert set(rows) == set(ORDERS)
     for name, (needed, may) in ORDERS.items():
         assert set(re.findall(r"`([a-z_]+)`", rows[name])) - {"all"} == set(needed) | set(may), name
+
+
+def test_the_guide_to_causes_lists_them_all() -> None:
+    """Each cause with its own sentence, the condition it makes, whether it blinds, and something to do about it."""
+    rows = table(text_of(TOP / "deploy/guides/causes.md"), "| cause |")
+    assert [row[0].strip("`") for row in rows] == list(CAUSES)
+    for (_, meaning, condition, remedy), cause in zip(rows, CAUSES.values(), strict=True):
+        assert meaning == cause.sentence
+        assert condition == (f"`{cause.condition}`" if cause.condition else "–") + (", blind" if cause.blinds else "")
+        assert remedy
 
 
 @pytest.mark.parametrize("key", [f"{section}.{part.name}" for section, part in KEYS])
