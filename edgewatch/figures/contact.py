@@ -42,6 +42,7 @@ class ContactFinder:
         self._begin_s: float | None = None
         self._last_spark_s = math.nan
         self._last_s = -math.inf
+        self._watching_s = math.nan
 
     @property
     def in_contact(self) -> bool:
@@ -63,6 +64,8 @@ class ContactFinder:
             raise ValueError(f"t_s = {t_s!r}, streaks = {streaks!r}: a finite time and a count are needed")
         if t_s <= self._last_s:  # a source that starts again from 0: what was before does not count
             self._recent.clear()
+        if not self._recent:
+            self._watching_s = t_s
         self._last_s = t_s
         self._recent.append((t_s, streaks))
         return self._look_for_begin(t_s) if self._begin_s is None else self._look_for_end(t_s, streaks)
@@ -78,8 +81,7 @@ class ContactFinder:
         span = max(self._settings.begin_s, self._period_s)
         mean = self._mean_over(span, t_s)
         sparks = [at for at, count in self._recent if count > 0]
-        # as many frames as begin_s holds at the nominal rate, or as were delivered in that time when frames are skipped
-        covered = t_s - self._recent[0][0] + 1.5 * self._period_s >= span or len(self._recent) * self._period_s >= span
+        covered = t_s - self._watching_s + 1.01 * self._period_s >= span  # frames may be skipped: time counts
         if mean < self._settings.least_streaks or not covered or 2 * len(sparks) <= len(self._recent):
             return None
         self._begin_s = next((at for at, count in self._recent if self.is_spark(count)), sparks[0])

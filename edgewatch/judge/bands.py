@@ -31,7 +31,7 @@ class ReferenceBar:
     ``number`` counts from 1. ``rate_misfit`` is Pearson's sum over the bar's windows of (bursts - expected)^2 over
     expected, with ``rate_freedom`` degrees of freedom; ``reach_misfit`` (mm^2 m) the sum over windows of track times
     squared deviation of reach from the bar's, with ``reach_freedom``. ``reach_mm`` comes from the settled windows,
-    which hold ``reach_track_m`` of track; it is NaN when it was not measured or cut off.
+    which hold ``reach_track_m`` of track and last ``window_s``; it is NaN when it was not measured or cut off.
     """
 
     number: int
@@ -51,6 +51,7 @@ class ReferenceBar:
     rate_freedom: int = 0
     reach_misfit: float = 0.0
     reach_freedom: int = 0
+    window_s: float = 0.25
     left_out: bool = False
 
 
@@ -61,7 +62,7 @@ class Band:
     ``rate_center_per_m``, ``rate_scatter``: median over bars of the true hazard, and the standard deviation of its
     logarithm from bar to bar with the sampling noise taken out. ``rate_dispersion``: variance over mean of burst
     counts within a bar (1: Poisson). ``reach_center_mm``, ``reach_scatter``: the same for reach.
-    ``reach_noise_mm2_m``: variance of a window's reach times its track. Reach fields are ``None`` when the streams
+    ``reach_noise_mm2_m``: variance of reach times track, for sums of many windows. Reach fields are ``None`` when the streams
     taught were cut off by the picture's edge. Optics, exposure and frame rate are those of the teaching; NaN is not
     known. ``taught``: date (RFC 3339). ``bars`` include those left out.
     """

@@ -54,6 +54,7 @@ def reference_bar(number: int, clip: str, bar: Figures, windows: Sequence[Figure
         raise ValueError(f"bar {number} of {clip}: no track")
     rate_misfit, rate_freedom = _rate_misfit(windows)
     reach, reach_track, reach_misfit, reach_freedom = _reach_of(windows)
+    steady = settled(windows)
     if bar.cut_share > TRUNCATED_SHARE:
         reach = math.nan
     return ReferenceBar(
@@ -74,6 +75,7 @@ def reference_bar(number: int, clip: str, bar: Figures, windows: Sequence[Figure
         rate_freedom=rate_freedom,
         reach_misfit=reach_misfit,
         reach_freedom=reach_freedom,
+        window_s=sum(one.end_s - one.begin_s for one in steady) / len(steady) if steady else 0.25,
     )
 
 
@@ -95,9 +97,7 @@ def _reach_of(windows: Sequence[Figures]) -> tuple[float, float, float, int]:
     if not used:
         return math.nan, 0.0, 0.0, 0
     reach = sum(one.track_m * one.reach_mm for one in used) / track
-    misfit = sum(one.track_m * (one.reach_mm - reach) ** 2 for one in used)
-    window_s = sum(one.end_s - one.begin_s for one in used) / len(used)
-    return reach, track, misfit * _long_run(window_s), len(used) - 1
+    return reach, track, sum(one.track_m * (one.reach_mm - reach) ** 2 for one in used), len(used) - 1
 
 
 def _long_run(window_s: float) -> float:
@@ -156,7 +156,7 @@ def teach(
         reach_high_mm=reach.high if reach else None,
         reach_center_mm=reach.center if reach else None,
         reach_scatter=reach.scatter if reach else None,
-        reach_noise_mm2_m=pooled_reach_noise(used) if reach else None,
+        reach_noise_mm2_m=_long_run_noise(used) if reach else None,
         content=content,
         confidence=confidence,
         bars_used=len(used),
@@ -196,6 +196,11 @@ def pooled_reach_noise(bars: Sequence[ReferenceBar]) -> float:
     bars = [bar for bar in bars if math.isfinite(bar.reach_mm)]
     freedom = sum(bar.reach_freedom for bar in bars)
     return sum(bar.reach_misfit for bar in bars) / freedom if freedom else math.nan
+
+
+def _long_run_noise(bars: Sequence[ReferenceBar]) -> float:
+    """The same for sums of many windows, which the trial adds up."""
+    return pooled_reach_noise(bars) * _long_run(sum(bar.window_s for bar in bars) / len(bars))
 
 
 def log_rates(bars: Sequence[ReferenceBar], dispersion: float) -> tuple[NDArray[np.float64], NDArray[np.float64]]:

@@ -247,7 +247,7 @@ def stream(rng: np.random.Generator, seconds: float, *, sparks_per_s: float = 40
     """
     frames = round(seconds * OPTICS.fps)
     count = rng.poisson(sparks_per_s * (seconds + 0.3))
-    born = rng.uniform(-0.3, seconds, count)
+    born = np.sort(rng.uniform(-0.3, seconds, count))
     life = 0.06 * rng.gamma(4.0, 0.25, count)
     speed = 20.0 * rng.normal(1.0, 0.06, count)
     drag = 8.0 * np.exp(rng.normal(0.0, 0.3, count))
@@ -256,7 +256,8 @@ def stream(rng: np.random.Generator, seconds: float, *, sparks_per_s: float = 40
     found = []
     for frame in range(frames):
         begin = frame / OPTICS.fps
-        alive = (born < begin + OPTICS.exposure_s) & (born + life > begin)
+        first, last = np.searchsorted(born, [begin - 0.3, begin + OPTICS.exposure_s])
+        alive = first + np.flatnonzero(born[first:last] + life[first:last] > begin)
         ages = (np.clip(begin + part - born[alive], 0.0, life[alive]) for part in (0.0, OPTICS.exposure_s))
         near, far = (
             1000.0 * speed[alive] / drag[alive] * -np.expm1(-drag[alive] * age) / OPTICS.mm_per_px for age in ages
