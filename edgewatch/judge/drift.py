@@ -7,8 +7,9 @@ residuals of conforming bars on them. Nothing adapts by itself: only master bars
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 from edgewatch.judge.bands import Band
 from edgewatch.judge.likeness import LEAST_SCATTER, Evidence
@@ -150,6 +151,29 @@ class DriftWatch:
             reach_limit=self._reach.limit,
             causes=tuple(causes),
         )
+
+    def kept(self) -> dict[str, float | int]:
+        """What must be kept over a restart, as JSON values."""
+        return {
+            "rate": self._rate.value,
+            "rate_bars": self._rate.count,
+            "reach": self._reach.value,
+            "reach_bars": self._reach.count,
+            "rate_offset": self._offset[0],
+            "reach_offset": self._offset[1],
+        }
+
+    def restore(self, kept: Mapping[str, Any]) -> None:
+        """Go on from what was kept; a value that is not a finite number counts as not kept."""
+
+        def number(key: str) -> float:
+            value = kept.get(key, 0.0)
+            real = isinstance(value, (int, float)) and not isinstance(value, bool)
+            return float(value) if real and math.isfinite(value) else 0.0
+
+        self._rate.value, self._rate.count = number("rate"), max(0, int(number("rate_bars")))
+        self._reach.value, self._reach.count = number("reach"), max(0, int(number("reach_bars")))
+        self._offset = (number("rate_offset"), number("reach_offset"))
 
     def update(self, evidence: Evidence) -> DriftState:
         """Take one conforming bar."""

@@ -44,9 +44,10 @@ class Memory:
     next_alert: int = 1
     alerts: tuple[Alert, ...] = ()
     orders: tuple[str, ...] = ()
+    drift: Mapping[str, Any] = field(default_factory=dict)
 
 
-KEYS = ("bar", "expected", "counts", "stop", "alerts", "orders")
+KEYS = ("bar", "expected", "counts", "stop", "alerts", "orders", "drift")
 """Keys under which the values lie in the journal."""
 
 
@@ -54,7 +55,7 @@ def read_memory(kept: Mapping[str, Any]) -> Memory:
     """Make sense of what was kept; what is not understood counts as not kept."""
     stop, reason = _stop(kept.get("stop"))
     next_alert, alerts = _alerts(kept.get("alerts"))
-    bar = kept.get("bar")
+    bar, drift = kept.get("bar"), kept.get("drift")
     return Memory(
         bar=bar if isinstance(bar, int) and bar >= 0 else 0,
         expectation=_expectation(kept.get("expected")),
@@ -64,6 +65,7 @@ def read_memory(kept: Mapping[str, Any]) -> Memory:
         next_alert=next_alert,
         alerts=alerts,
         orders=tuple(str(one) for one in _list(kept.get("orders"))),
+        drift=drift if isinstance(drift, Mapping) else {},
     )
 
 

@@ -13,15 +13,21 @@ from collections.abc import Mapping, Sequence
 from edgewatch.figures.contact import Begin
 from edgewatch.figures.meter import BarDone, BarMeter, WindowDone
 from edgewatch.judge.bands import Band
-from edgewatch.judge.causes import BLIND, CAUSES, FAILURE
-from edgewatch.judge.trial import NONCONFORMING, Judgement, Trial
+from edgewatch.judge.causes import CAUSES, FAILURE
+from edgewatch.judge.drift import LEAST_MASTERS, DriftWatch
+from edgewatch.judge.teaching import LEAST_BARS
+from edgewatch.judge.trial import CONFORMING, NONCONFORMING
+from edgewatch.judge.verification import bar_evidence, verify
 from edgewatch.monitor.alerts import Alert, AlertList
+from edgewatch.monitor.bar import BarAtWheel, band_body, bar_line
 from edgewatch.monitor.blindness import FLAG_CAUSES, Blindness
 from edgewatch.monitor.condition import Complaints
-from edgewatch.monitor.effects import Effect, KeepPicture, Publish, Record, Remember, SendView, SetRelay, Told
-from edgewatch.monitor.exhibits import Exhibits
+from edgewatch.monitor.effects import Effect, Publish, Record, Remember, SaveBand, SendView, SetRelay, Told
+from edgewatch.monitor.feed import Feed
+from edgewatch.monitor.lessons import Lesson
 from edgewatch.monitor.memory import Expectation, Memory, keep_alerts, keep_expectation
 from edgewatch.monitor.stop import StopEvent, StopState, after
+from edgewatch.monitor.wheel import WheelWatch
 from edgewatch.settings import Settings
 from edgewatch.sight.detections import Detections
 from edgewatch.sight.frame import Frame
@@ -35,15 +41,15 @@ SUMMARY_S = 5.0
 """A summary at least this often while nothing else brings one (s)."""
 SUMMARY_APART_S = 1.0
 """Summaries during a contact are at least this far apart (s)."""
-DROPPING_SHARE = 0.2
-"""More than this share of a contact's frames skipped: the bar is not judged as if all had been seen."""
+FEED_CAUSES = ("frozen", "dropping", "wrong_size", "wrong_rate", "stalled")
+DRIFT_CAUSES = ("drift_rate", "drift_reach")
 
 
 class Monitor:
     """One station as a state machine.
 
     ``bands``: every taught band by grade. ``memory``: what a former run remembered. ``named``: the grade that was
-    named on the command line, which goes before what was remembered.
+    named on the command line, which goes before what was remembered. ``live``: the source does not wait for us.
     """
 
     def __init__(
@@ -53,6 +59,7 @@ class Monitor:
         bands: Mapping[str, Band],
         memory: Memory | None = None,
         named: str | None = None,
+        live: bool = False,
     ) -> None:
         self._settings = settings
         self._optics = settings.sight_optics()
@@ -62,17 +69,25 @@ class Monitor:
         self._meter = BarMeter(settings.figures, self._optics)
         self._blindness = Blindness()
         self._complaints = Complaints()
-        self._exhibits = Exhibits(settings.evidence.pictures)
+        self._feed = Feed(
+            width_px=self._optics.width_px,
+            height_px=self._optics.height_px,
+            fps=self._optics.fps,
+            live=live,
+            stall_s=settings.source.stall_s,
+        )
         self._alerts = AlertList(next_number=memory.next_alert, open_alerts=memory.alerts)
-        self._bar = memory.bar
+        self._number = memory.bar
         self._counts = dict(memory.counts)
         self._stop, self._stop_reason = memory.stop, memory.stop_reason
         self._expectation = self._first_expectation(memory.expectation, named)
         if self._expectation is not memory.expectation:
             self._counts = dict.fromkeys(messages.VERDICTS, 0)
-        self._trial: Trial | None = None
-        self._bar_causes: dict[str, None] = {}
-        self._condemned = False
+        self._bar: BarAtWheel | None = None
+        self._wheel = WheelWatch(self._told_speed())
+        self._drift = dict(memory.drift)
+        self._watch: DriftWatch | None = self._drift_watch()
+        self._lesson: Lesson | None = None
         self._released_by = ""
         self._view_wanted: Order | None = None
         self._blind_since_s = math.nan
@@ -95,8 +110,7 @@ class Monitor:
             self._expectation = dataclasses.replace(self._expectation, since_utc_s=stamp.utc_s)
         effects.append(Record(kind="expected", payload=self._expected_body()))
         effects.append(self._remember_expected())
-        grade = self._expectation.grade
-        self._complaints.set("no_band", bool(grade) and grade not in self._bands)
+        self._complaints.set("no_band", self._lacks_band())
         effects.append(self._condition_record())
         if self._settings.relay.kind != "none":
             effects.append(self._relay_effect())
@@ -105,24 +119,25 @@ class Monitor:
 
     def see(self, frame: Frame, stamp: Stamp) -> list[Effect]:
         """Judge one frame."""
-        effects: list[Effect] = []
         self._frames_seen += 1
         self._frames_skipped += frame.skipped
         self._last_t_s = frame.t_s
         right_size = frame.picture.shape == (self._optics.height_px, self._optics.width_px)
-        effects += self.complain({"wrong_size": not right_size}, stamp, detail=f"{frame.picture.shape[::-1]} px")
-        if not right_size:
+        detections = self._sight.look(frame.picture) if right_size else None
+        streaks = 0 if detections is None else len(detections.streaks)
+        feed = self._feed.update(frame, now_s=stamp.monotonic_s, streaks=streaks)
+        effects = self.complain({cause: cause in feed for cause in FEED_CAUSES}, stamp)
+        if detections is None:
             return effects
-        detections = self._sight.look(frame.picture)
-        causes = self._blindness.update(detections.light, len(detections.streaks), frame.t_s)
+        causes = self._blindness.update(detections.light, streaks, frame.t_s)
         effects += self.complain({cause: cause in causes for cause in FLAG_CAUSES.values()}, stamp)
         for event in self._meter.update(detections, t_s=frame.t_s, skipped=frame.skipped):
             effects += self._on_event(event, stamp)
-        if self._meter.in_contact:
-            self._bar_causes.update(dict.fromkeys(self._complaints.blinding))
-            self._exhibits.offer(frame.picture, detections, frame.t_s)
+        if self._bar is not None:
+            self._bar.note(self._complaints.blinding)
+            self._bar.exhibits.offer(frame.picture, detections, frame.t_s)
         if self._view_wanted is not None:
-            effects.append(self._view(frame, detections))
+            effects.append(self._view(self._view_wanted, frame, detections))
             self._view_wanted = None
         return effects
 
@@ -141,13 +156,21 @@ class Monitor:
             self._view_wanted = found
             effects.append(self._answered(found))
         else:
-            effects.append(self._answered(found, accepted=False, reason="this station does not teach by order"))
+            effects += self._begin_lesson(found, stamp)
         return effects
 
     def tick(self, stamp: Stamp, *, unsent: int = 0, thinned: int = 0) -> list[Effect]:
         """Time passes, a few times a second at least, also while no picture comes."""
         self._unsent, self._thinned = unsent, thinned
-        effects = self.complain({"clock_not_synced": not stamp.synced, "windows_thinned": thinned > 0}, stamp)
+        silent = self._feed.silent(stamp.monotonic_s)
+        effects = self.complain(
+            {
+                "clock_not_synced": not stamp.synced,
+                "windows_thinned": thinned > 0,
+                "stalled": "stalled" in silent,
+            },
+            stamp,
+        )
         effects += self._blind_stop(stamp)
         return effects + self._summary(stamp)
 
@@ -173,7 +196,7 @@ class Monitor:
             read_back="unknown" if read_back is None else "stop" if read_back else "run",
             reason=error or reason,
             latched=self._stop is StopState.LATCHED,
-            bar=self._bar if self._condemned and stop else None,
+            bar=self._bar.number if stop and self._bar is not None and self._bar.condemned else None,
             who=self._released_by if not stop else "",
         )
         return [*effects, Record(kind="relay", payload=body)]
@@ -204,106 +227,137 @@ class Monitor:
     def _on_event(self, event: Begin | WindowDone | BarDone, stamp: Stamp) -> list[Effect]:
         if isinstance(event, Begin):
             return self._on_begin()
+        assert self._bar is not None
         if isinstance(event, WindowDone):
-            return self._on_window(event, stamp)
-        return self._on_bar(event, stamp)
+            return self._on_window(self._bar, event, stamp)
+        return self._on_bar(self._bar, event, stamp)
 
     def _on_begin(self) -> list[Effect]:
-        self._bar += 1
-        self._bar_causes = {}
-        self._condemned = False
-        self._exhibits.clear()
-        band = self._bands.get(self._expectation.grade)
-        self._trial = Trial(
-            band,
-            [other for grade, other in self._bands.items() if grade != self._expectation.grade],
-            false_alarm=self._settings.judge.false_alarm,
-            miss=self._settings.judge.miss,
-            least_streaks=self._settings.judge.least_streaks,
-            misfit=band.misfit(self._optics) if band else (),
+        self._number += 1
+        self._bar = BarAtWheel(
+            self._number,
+            self._expectation,
+            self._bands,
+            settings=self._settings,
+            optics=self._optics,
+            factor=self._wheel.factor,
         )
         return self._move_stop(StopEvent.CONTACT, "")
 
-    def _on_window(self, event: WindowDone, stamp: Stamp) -> list[Effect]:
-        assert self._trial is not None
-        self._bar_causes.update(dict.fromkeys(self._complaints.blinding))
-        window = event.window
-        effects: list[Effect] = [
-            Record(kind="window", payload=messages.window(values=window, bar=self._bar)),
-            Remember(values={"bar": self._bar}),
-        ]
+    def _on_window(self, bar: BarAtWheel, event: WindowDone, stamp: Stamp) -> list[Effect]:
+        bar.note(self._complaints.blinding)
+        self._wheel.update(event.window)
         self._rolling = messages.figures(event.bar)
-        standing = self._trial.look(window, tuple(BLIND.intersection(self._bar_causes)))
-        if standing.nonconforming and not self._condemned:
-            effects += self._condemn(f"after {standing.decided_after_s:.2f} s of contact")
+        effects: list[Effect] = [
+            Record(kind="window", payload=messages.window(values=event.window, bar=bar.number)),
+            Remember(values={"bar": bar.number}),
+        ]
+        if self._lesson is None:
+            standing = bar.look(event.window)
+            if standing.nonconforming and not bar.condemned:
+                effects += self._condemn(bar, f"after {standing.decided_after_s:.2f} s of contact")
         return effects + self._summary(stamp)
 
-    def _condemn(self, when: str) -> list[Effect]:
-        """The bar under trial is nonconforming: say so now and stop the line."""
-        self._condemned = True
-        text = f"bar {self._bar} does not conform to {self._expectation.grade}, {when}"
-        effects = self._move_stop(
-            StopEvent.CONDEMN_LATCHING if self._settings.relay.latch else StopEvent.CONDEMN, f"bar {self._bar}"
-        )
-        return effects + self._told_alerts(self._alerts.raise_("nonconforming_bar", text, latched=True, bar=self._bar))
+    def _condemn(self, bar: BarAtWheel, when: str) -> list[Effect]:
+        """The bar at the wheel is nonconforming: say so now and stop the line."""
+        bar.condemned = True
+        text = f"bar {bar.number} does not conform to {bar.expectation.grade}, {when}"
+        latch = self._settings.relay.latch
+        effects = self._move_stop(StopEvent.CONDEMN_LATCHING if latch else StopEvent.CONDEMN, f"bar {bar.number}")
+        raised = self._alerts.raise_("nonconforming_bar", text, latched=True, bar=bar.number)
+        return effects + self._told_alerts(raised)
 
-    def _on_bar(self, event: BarDone, stamp: Stamp) -> list[Effect]:
-        assert self._trial is not None
-        causes = list(self._bar_causes)
-        if not self._expectation.grade:
-            causes.append("no_expected")
-        if event.bar.frames_skipped > DROPPING_SHARE * (event.bar.frames_seen + event.bar.frames_skipped):
-            causes.append("dropping")
-        judgement = self._trial.close(event.bar, tuple(dict.fromkeys(causes)))
-        self._trial = None
+    def _on_bar(self, bar: BarAtWheel, event: BarDone, stamp: Stamp) -> list[Effect]:
+        self._bar = None
+        if self._lesson is not None:
+            bar.note(["teaching"])
+        judgement = bar.close(event)
         effects: list[Effect] = []
-        if judgement.verdict == NONCONFORMING and not self._condemned:
-            effects += self._condemn("when the contact ended")
+        if judgement.verdict == NONCONFORMING and not bar.condemned:
+            effects += self._condemn(bar, "when the contact ended")
         self._counts[judgement.verdict] += 1
         self._rolling = messages.figures(event.bar)
-        names: list[str] = []
-        if judgement.verdict == NONCONFORMING:
-            for effect in self._pictures(event, judgement):
-                names.append(effect.name)
-                effects.append(effect)
-        band = self._bands.get(self._expectation.grade)
-        body = messages.bar(
-            bar=self._bar,
-            expected=self._expectation.grade,
-            verdict=judgement.verdict,
-            values=event.bar,
-            decided_after_s=judgement.decided_after_s,
-            causes=judgement.causes,
-            nearest=judgement.nearest,
-            heat=self._expectation.heat,
-            order_number=self._expectation.order_number,
-            band=band_body(band) if band else None,
-            pictures=names,
-            extra={"figure": judgement.figure, "log_evidence": judgement.log_evidence, "ended_by": event.reason},
-        )
+        pictures = bar.pictures(event, judgement) if self._settings.evidence.folder else []
+        body = bar.body(event, judgement, [picture.name for picture in pictures])
+        effects += pictures
         effects.append(Record(kind="bar", payload=body))
-        effects.append(Remember(values={"bar": self._bar, "counts": dict(self._counts)}))
+        effects.append(Remember(values={"bar": bar.number, "counts": dict(self._counts)}))
         effects.append(Told(line=bar_line(body)))
-        if self._condemned:  # the bar has left the wheel; its alert stays until somebody has seen it
-            effects += self._told_alerts(self._alerts.go("nonconforming_bar", bar=self._bar))
+        if bar.condemned:  # the bar has left the wheel; its alert stays until somebody has seen it
+            effects += self._told_alerts(self._alerts.go("nonconforming_bar", bar=bar.number))
+        effects += self.complain({"wheel_speed": not self._wheel.fits}, stamp)
+        if judgement.verdict == CONFORMING:
+            effects += self._follow_drift(bar, stamp)
+        if self._lesson is not None:
+            effects += self._take_lesson(self._lesson, event, stamp)
         return effects + self._summary(stamp, always=True)
 
-    def _pictures(self, event: BarDone, judgement: Judgement) -> list[KeepPicture]:
-        if not self._settings.evidence.folder:
+    # ------------------------------------------------------------------ drift and lessons
+
+    def _drift_watch(self) -> DriftWatch | None:
+        """The chart of the grade in force, going on from what was kept."""
+        band = self._bands.get(self._expectation.grade)
+        if band is None:
+            return None
+        watch = DriftWatch(band)
+        kept = self._drift.get(band.grade)
+        if isinstance(kept, Mapping) and kept.get("taught") == band.taught:  # another teaching begins another chart
+            watch.restore(kept)
+        return watch
+
+    def _keep_drift(self) -> list[Effect]:
+        grade, watch = self._expectation.grade, self._watch
+        if watch is None or grade not in self._bands:
             return []
-        captions = captions_of(
-            self._bar, self._expectation.grade, event, judgement, self._bands.get(self._expectation.grade)
-        )
-        return [
-            KeepPicture(
-                bar=self._bar,
-                name=f"bar-{self._bar:06d}-{number}.jpg",
-                picture=exhibit.picture,
-                detections=exhibit.detections,
-                captions=(*captions, f"{exhibit.t_s - event.begin_s:.3f} s after contact began"),
-            )
-            for number, exhibit in enumerate(self._exhibits.kept, start=1)
-        ]
+        self._drift[grade] = {**watch.kept(), "taught": self._bands[grade].taught}
+        return [Remember(values={"drift": dict(self._drift)})]
+
+    def _follow_drift(self, bar: BarAtWheel, stamp: Stamp) -> list[Effect]:
+        if self._watch is None or bar.expectation.grade != self._expectation.grade:
+            return []
+        state = self._watch.update(bar.evidence())
+        return self._keep_drift() + self.complain({cause: cause in state.causes for cause in DRIFT_CAUSES}, stamp)
+
+    def _begin_lesson(self, order: Order, stamp: Stamp) -> list[Effect]:
+        if order.verify and order.grade not in self._bands:
+            return [self._answered(order, accepted=False, reason=f"no band is taught for {order.grade}")]
+        least = LEAST_MASTERS if order.verify else LEAST_BARS
+        if order.bars < least:
+            return [self._answered(order, accepted=False, reason=f"at least {least} bars are needed")]
+        self._lesson = Lesson(order)
+        return [self._answered(order), *self.complain({"teaching": True}, stamp, detail=order.grade)]
+
+    def _take_lesson(self, lesson: Lesson, event: BarDone, stamp: Stamp) -> list[Effect]:
+        lesson.take(event)
+        if not lesson.complete:
+            return []
+        self._lesson = None
+        grade = lesson.order.grade
+        effects: list[Effect] = []
+        if lesson.order.verify:
+            found = verify(self._bands[grade], lesson.bars)
+            accepted, sentence = found.holds, found.sentence
+            masters = [bar_evidence(bar) for bar in lesson.bars]
+            if grade == self._expectation.grade and self._watch is not None and self._watch.recentre(masters):
+                effects += self._keep_drift()
+                effects += self.complain(dict.fromkeys(DRIFT_CAUSES, False), stamp)
+        else:
+            taught = lesson.finish(self._optics, wheel_speed_m_s=self._wheel.told_m_s, utc_s=stamp.utc_s)
+            accepted, sentence = taught.band is not None, taught.sentence
+            if taught.band is not None:
+                self._bands[grade] = taught.band
+                self._watch = self._drift_watch()
+                effects.append(SaveBand(band=taught.band))
+                effects += self.complain({"no_band": self._lacks_band()}, stamp)
+        effects.append(self._answered(lesson.order, accepted=accepted, reason=sentence))
+        return effects + self.complain({"teaching": False}, stamp)
+
+    def _lacks_band(self) -> bool:
+        return bool(self._expectation.grade) and self._expectation.grade not in self._bands
+
+    def _told_speed(self) -> float:
+        told = self._expectation.wheel_surface_speed_m_s
+        return told if math.isfinite(told) else self._settings.wheel.surface_speed_m_s or math.nan
 
     # ------------------------------------------------------------------ orders
 
@@ -326,14 +380,16 @@ class Monitor:
             configured=self._settings.judge.expect,
         )
         self._counts = dict.fromkeys(messages.VERDICTS, 0)
-        known = not order.grade or order.grade in self._bands
+        self._wheel.told_m_s = self._told_speed()
+        self._watch = self._drift_watch()
+        known = not self._lacks_band()
         effects: list[Effect] = [
             self._answered(order, reason="" if known else f"no band is taught for {order.grade}: bars are not judged"),
             Record(kind="expected", payload=self._expected_body()),
             self._remember_expected(),
             Remember(values={"counts": dict(self._counts)}),
         ]
-        effects += self.complain({"no_band": not known}, stamp)
+        effects += self.complain({"no_band": not known, **dict.fromkeys(DRIFT_CAUSES, False)}, stamp)
         return effects + self._summary(stamp, always=True)
 
     def _acknowledge(self, order: Order) -> list[Effect]:
@@ -434,7 +490,7 @@ class Monitor:
         return Remember(values={"expected": keep_expectation(self._expectation)})
 
     def _summary(self, stamp: Stamp, *, always: bool = False) -> list[Effect]:
-        apart = SUMMARY_APART_S if self._meter.in_contact else SUMMARY_S
+        apart = SUMMARY_APART_S if self._bar is not None else SUMMARY_S
         if not always and stamp.monotonic_s - self._summary_s < apart:
             return []
         self._summary_s = stamp.monotonic_s
@@ -457,15 +513,14 @@ class Monitor:
         body["figures"] = self._rolling
         return [Publish(kind="summary", payload=body)]
 
-    def _view(self, frame: Frame, detections: Detections) -> SendView:
-        assert self._view_wanted is not None
-        bar = f"bar {self._bar}" if self._meter.in_contact else "no bar at the wheel"
+    def _view(self, order: Order, frame: Frame, detections: Detections) -> SendView:
+        bar = "no bar at the wheel" if self._bar is None else f"bar {self._bar.number}"
         return SendView(
             picture=frame.picture.copy(),
             detections=detections,
             captions=(f"{bar}, expected {self._expectation.grade or 'nothing'}", self._complaints.condition),
             frame=frame.index,
-            request=self._view_wanted.id,
+            request=order.id,
         )
 
     def _first_expectation(self, kept: Expectation | None, named: str | None) -> Expectation:
@@ -479,52 +534,3 @@ class Monitor:
 def alert_name(alert: Alert) -> str:
     """Name that the alert has in messages, and that an ``acknowledge`` order gives back."""
     return f"{alert.reason}-{alert.number}"
-
-
-def band_body(band: Band) -> messages.Body:
-    """The limits of a band for a message."""
-    return messages.band(
-        grade=band.grade,
-        burst_rate_low_per_m=band.burst_rate_low_per_m,
-        burst_rate_high_per_m=band.burst_rate_high_per_m,
-        reach_low_mm=math.nan if band.reach_low_mm is None else band.reach_low_mm,
-        reach_high_mm=math.nan if band.reach_high_mm is None else band.reach_high_mm,
-    )
-
-
-def bar_line(body: messages.Body) -> messages.Body:
-    """The line that ``watch --json`` prints for a bar: the contract's keys first, and nothing that it does not hold."""
-    keys = (
-        "bar",
-        "begin_s",
-        "end_s",
-        "expected",
-        "verdict",
-        "decided_after_s",
-        "burst_rate_per_m",
-        "burst_rate_low_per_m",
-        "burst_rate_high_per_m",
-        "reach_mm",
-        "reach_truncated",
-        "bursts",
-        "streaks",
-        "track_m",
-        "nearest",
-        "causes",
-    )
-    return {key: body[key] for key in keys}
-
-
-def captions_of(bar: int, grade: str, event: BarDone, judgement: Judgement, band: Band | None) -> tuple[str, ...]:
-    """Lines below an evidence picture: the figures and the band they are held against."""
-    f = event.bar
-    lines = [f"bar {bar}: {judgement.verdict}, expected {grade}; decided after {judgement.decided_after_s:.2f} s"]
-    rate = f"burst-rate {f.burst_rate_per_m:.3g} /m ({f.burst_rate_low_per_m:.3g} to {f.burst_rate_high_per_m:.3g})"
-    reach = f"reach {f.reach_mm:.0f} mm{' (cut off)' if f.reach_truncated else ''}"
-    if band is None:
-        return (*lines, f"{rate}, {reach}; no band")
-    lines.append(f"{rate}; band {band.burst_rate_low_per_m:.3g} to {band.burst_rate_high_per_m:.3g}")
-    if band.reach_low_mm is not None and band.reach_high_mm is not None:
-        lines.append(f"{reach}; band {band.reach_low_mm:.0f} to {band.reach_high_mm:.0f}")
-    nearest = ", ".join(f"{name} {weight:.2f}" for name, weight in judgement.nearest[:4])
-    return (*lines, f"nearest: {nearest or 'none'}")

@@ -59,6 +59,10 @@ BACKLOG_S = 2.0
 """The outbox is counted this often (s)."""
 FLUSH_S = 10.0
 """Longest wait for the journal and the pictures at the end (s)."""
+NOTICE_APART_S = 60.0
+"""A part that fails again and again is told of this often (s)."""
+STEADY_S = 600.0
+"""After so long without a fault the station is good again (s)."""
 MOST_FAULTS = 20
 """So many faults of the seeing in a row, and the station ends and is started anew from outside."""
 
@@ -107,6 +111,7 @@ class Station:
         self._clock = Clock()
         self._frames = self._skipped = self._faults = self._faults_in_a_row = 0
         self._parts: list[Part] = []
+        self._fault_s: dict[str, float] = {}
         self._link: Link | None = None
         self._relay: RelayKeeper | None = None
         self._waits_for_us = False
@@ -151,7 +156,7 @@ class Station:
             on_set_aside=self._set_aside,
         )
         memory = read_memory({key: self._journal.state(key) for key in KEYS})
-        self.monitor = Monitor(settings, bands=bands, memory=memory, named=named)
+        self.monitor = Monitor(settings, bands=bands, memory=memory, named=named, live=self._source.info.live)
         self._gate = OrderGate(
             most_per_minute=settings.orders.most_per_minute,
             oldest_s=settings.orders.oldest_s,
@@ -239,7 +244,7 @@ class Station:
                 tick_s = now_s
                 self._tick()
                 self._watchdog.progress(self.monitor.status)
-            frame = self._next_frame(now_s - last_frame_s)
+            frame = self._next_frame()
             if frame is None:
                 if self._ended:
                     return
@@ -252,14 +257,12 @@ class Station:
 
     _ended = False
 
-    def _next_frame(self, silent_s: float) -> Frame | None:
+    def _next_frame(self) -> Frame | None:
         """Read a frame; ``None`` if none is there now, or, with ``_ended``, at the end."""
         try:
             frame = self._source.read(READ_S)
-        except StalledError as error:
-            if silent_s >= self._settings.source.stall_s:
-                self._complain({"stalled": True}, f"silent for {silent_s:.1f} s: {error}")
-            return None
+        except StalledError:
+            return None  # the monitor's ticks tell when that has lasted too long
         except DeviceError as error:
             if self._waits_for_us:
                 raise
@@ -269,7 +272,7 @@ class Station:
         if frame is None:
             self._ended = True
             return None
-        self._complain({"stalled": False, "camera_lost": False})
+        self._complain({"camera_lost": False})
         return frame
 
     def _see(self, frame: Frame) -> None:
@@ -297,6 +300,9 @@ class Station:
     def _tick(self) -> None:
         stamp = self._clock.now()
         unsent, thinned = self._backlog
+        if self._fault_s and stamp.monotonic_s - max(self._fault_s.values()) >= STEADY_S:
+            self._fault_s.clear()
+            self._complain({"part_restarted": False})
         self._carry_out(self.monitor.tick(stamp, unsent=unsent, thinned=thinned), stamp)
 
     def _take_inbox(self) -> None:
@@ -397,8 +403,12 @@ class Station:
         self._tell({"journal_damaged": True}, f"{path.name}: {reason}")
 
     def _part_fault(self, name: str, error: BaseException) -> None:
-        self._tell({"part_restarted": True}, f"{name}: {type(error).__name__}: {error}"[:300])
-        self._on_notice(f"{name} failed and is started again: {type(error).__name__}: {error}")
+        what = " ".join(f"{name}: {type(error).__name__}: {error}".split())[:300]
+        self._tell({"part_restarted": True}, what)
+        now_s = time.monotonic()
+        if now_s - self._fault_s.get(name, float("-inf")) >= NOTICE_APART_S:
+            self._on_notice(f"{what}; it goes on")
+        self._fault_s[name] = now_s
 
     # ------------------------------------------------------------------ the end
 

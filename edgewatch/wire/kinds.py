@@ -31,7 +31,7 @@ KINDS: dict[str, Kind] = {
     "presence": _kind("presence", 1, "online or offline, version, since; also the will", retained=True),
     "condition": _kind("condition", 1, "condition and causes", retained=True, journalled=True),
     "expected": _kind("expected", 1, "grade, heat, order number in force, who set it", retained=True, journalled=True),
-    "window": _kind("window", 0, "figures of one window", journalled=True),
+    "window": _kind("window", 0, "figures of one window (at QoS 1 when sent late, after an outage)", journalled=True),
     "summary": _kind(
         "summary", 1, "rolling figures, bands, counts of bars by verdict since the order began", retained=True
     ),

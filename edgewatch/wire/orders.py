@@ -34,7 +34,8 @@ class Order:
 
     ``sent_utc_s``: when the sender says it sent it (s since 1970 UTC); ``who``: the person or program it names;
     ``grade``, ``heat``, ``order_number``, ``wheel_surface_speed_m_s`` (NaN: not said): of ``expect``; ``grade`` and
-    ``bars``: of ``teach``; ``alert``: of ``acknowledge``; ``reply_topic``, ``correlation``: MQTT 5 response topic.
+    ``bars``, ``verify``: of ``teach``; ``alert``: of ``acknowledge``;
+    ``reply_topic``, ``correlation``: MQTT 5 response topic.
     ``request``: what was asked for, as the sender wrote it, for the record.
     """
 
@@ -48,6 +49,7 @@ class Order:
     wheel_surface_speed_m_s: float = math.nan
     alert: str = ""
     bars: int = 0
+    verify: bool = False
     reason: str = ""
     request: Mapping[str, Any] = field(default_factory=dict, hash=False)
     reply_topic: str = ""
@@ -137,6 +139,12 @@ def _bars(value: Any) -> int:
     return int(value)
 
 
+def _flag(value: Any) -> bool:
+    if not isinstance(value, bool):
+        raise _MalformedError("true or false")
+    return value
+
+
 Check = Callable[[Any], Any]
 _COMMON: dict[str, Check] = {"id": _id, "sent": _time, "who": _filled}
 ORDERS: dict[str, tuple[dict[str, Check], dict[str, Check]]] = {
@@ -147,7 +155,7 @@ ORDERS: dict[str, tuple[dict[str, Check], dict[str, Check]]] = {
     "acknowledge": ({"alert": _filled}, {}),
     "release": ({}, {"reason": _line}),
     "view": ({}, {}),
-    "teach": ({"grade": _grade, "bars": _bars}, {}),
+    "teach": ({"grade": _grade, "bars": _bars}, {"verify": _flag}),
 }
 """Order -> what it must hold and what it may hold, on top of ``id``, ``sent``, ``who`` and the optional ``schema``."""
 

@@ -226,10 +226,10 @@ def test_blind_for_too_long_stops_the_line_until_it_sees_again() -> None:
     """With blind_stop_s, and without latch."""
     station = monitor(relay={"blind_stop_s": 3.0, "latch": False})
     station.begin(stamp(0.0))
-    station.complain({"stalled": True}, stamp(1.0))
+    station.complain({"camera_lost": True}, stamp(1.0))
     assert not [e for e in station.tick(stamp(3.9)) if isinstance(e, SetRelay)]
     assert [e.stop for e in station.tick(stamp(4.1)) if isinstance(e, SetRelay)] == [True]
-    seen = station.complain({"stalled": False}, stamp(5.0))
+    seen = station.complain({"camera_lost": False}, stamp(5.0))
     assert [e.stop for e in seen if isinstance(e, SetRelay)] == [False]
 
 

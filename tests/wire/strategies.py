@@ -172,6 +172,7 @@ _values: dict[str, st.SearchStrategy[Any]] = {
     "order_number": _lines,
     "wheel_surface_speed_m_s": st.floats(-1, 201) | st.sampled_from([0, 200, 35, True]),
     "alert": _lines,
+    "verify": st.booleans() | st.sampled_from([0, 1, None, "true"]),
     "bars": st.integers(-1, 1001) | st.sampled_from([3.0, 2.5, True]),
     "reason": _lines,
 }
@@ -181,7 +182,7 @@ _order_keys = {
     "acknowledge": ([*_keys, "alert"], []),
     "release": (_keys, ["reason"]),
     "view": (_keys, []),
-    "teach": ([*_keys, "grade", "bars"], []),
+    "teach": ([*_keys, "grade", "bars"], ["verify"]),
 }
 
 
