@@ -62,9 +62,9 @@ class Band:
     ``rate_center_per_m``, ``rate_scatter``: median over bars of the true hazard, and the standard deviation of its
     logarithm from bar to bar with the sampling noise taken out. ``rate_dispersion``: variance over mean of burst
     counts within a bar (1: Poisson). ``reach_center_mm``, ``reach_scatter``: the same for reach.
-    ``reach_noise_mm2_m``: variance of reach times track, for sums of many windows. Reach fields are ``None`` when the streams
-    taught were cut off by the picture's edge. Optics, exposure and frame rate are those of the teaching; NaN is not
-    known. ``taught``: date (RFC 3339). ``bars`` include those left out.
+    ``reach_noise_mm2_m``: variance of reach times track, for sums of many windows. Reach fields are ``None`` when the
+    streams taught were cut off by the picture's edge. Optics, exposure and frame rate are those of the teaching; NaN is
+    not known. ``taught``: date (RFC 3339). ``bars`` include those left out.
     """
 
     grade: str

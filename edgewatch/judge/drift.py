@@ -12,7 +12,7 @@ from dataclasses import dataclass
 from typing import Any
 
 from edgewatch.judge.bands import Band
-from edgewatch.judge.likeness import LEAST_SCATTER, Evidence
+from edgewatch.judge.likeness import LEAST_SCATTER, Evidence, reach_at_taught_speed
 
 EWMA_WEIGHT = 0.05
 EWMA_LIMIT = 3.6
@@ -116,7 +116,7 @@ def residuals(band: Band, evidence: Evidence) -> tuple[float, float]:
     if band.has_reach and band.reach_center_mm and evidence.reach_mm > 0.0:
         noise = (band.reach_noise_mm2_m or 0.0) / max(evidence.reach_track_m, 1e-9) / band.reach_center_mm**2
         spread = math.sqrt(max(band.reach_scatter or 0.0, LEAST_SCATTER) ** 2 + noise)
-        reach = math.log(evidence.reach_mm / band.reach_center_mm) / spread
+        reach = math.log(reach_at_taught_speed(band, evidence) / band.reach_center_mm) / spread
     return rate, reach
 
 

@@ -9,21 +9,47 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.special import ndtr
 
+from edgewatch.figures.wear import HIGH_M_S, LOW_M_S, reach_at_speed
 from edgewatch.judge.bands import Band
 from edgewatch.judge.counts import NORMAL_NODES, NORMAL_WEIGHTS, at_least, at_most, log_mass
 
 LEAST_SCATTER = 0.02
 """Scatter from bar to bar is never taken as less (2 %): no line repeats itself better."""
 
+LARGEST_FACTOR = 1.4
+"""Wear compensation stays within this: a wheel worn to two thirds asks for 1.27."""
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Evidence:
-    """What a bar has shown: counts, and reach from settled windows (NaN without) with the track it comes from."""
+    """What a bar has shown: counts, and reach as seen in settled windows (NaN without) with the track it comes from.
+
+    ``spark_m_s``: speed near the wheel, ``wheel_m_s``: surface speed as configured or ordered; NaN where not known.
+    """
 
     bursts: int
     exposure_m: float
     reach_mm: float = math.nan
     reach_track_m: float = 0.0
+    spark_m_s: float = math.nan
+    wheel_m_s: float = math.nan
+
+
+def wear_factor(band: Band, *, spark_m_s: float, wheel_m_s: float) -> float:
+    """What a reach must be multiplied by to hold at the wheel speed at which the band was taught; 1 if not known.
+
+    The sparks' own speed goes first: a configured surface speed stays behind when the wheel wears. Speeds that no
+    grinding wheel has are not believed, and the factor is kept within what a wheel's whole life can ask for.
+    """
+    for taught, now in ((band.spark_speed_m_s, spark_m_s), (band.wheel_speed_m_s, wheel_m_s)):
+        if LOW_M_S <= taught <= HIGH_M_S and LOW_M_S <= now <= HIGH_M_S:
+            return min(max(reach_at_speed(1.0, now, taught), 1.0 / LARGEST_FACTOR), LARGEST_FACTOR)
+    return 1.0
+
+
+def reach_at_taught_speed(band: Band, evidence: Evidence) -> float:
+    """The bar's reach as it would be at the speed of the teaching (mm; NaN without)."""
+    return evidence.reach_mm * wear_factor(band, spark_m_s=evidence.spark_m_s, wheel_m_s=evidence.wheel_m_s)
 
 
 def predictive_scatter(scatter: float | None, band: Band) -> float:
@@ -59,7 +85,7 @@ def reach_score(band: Band, evidence: Evidence) -> float:
     """Deviation of the bar's reach from the grade's, in standard deviations; NaN where there is none to compare."""
     if not (band.has_reach and band.reach_center_mm and evidence.reach_mm > 0.0):
         return math.nan
-    return math.log(evidence.reach_mm / band.reach_center_mm) / _reach_spread(band, evidence)
+    return math.log(reach_at_taught_speed(band, evidence) / band.reach_center_mm) / _reach_spread(band, evidence)
 
 
 def log_likelihood(band: Band, evidence: Evidence, *, use_reach: bool) -> float:

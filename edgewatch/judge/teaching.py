@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from edgewatch.errors import SettingsError
 from edgewatch.figures.tally import TRUNCATED_SHARE
 from edgewatch.figures.values import Figures
+from edgewatch.figures.wear import HIGH_M_S, LOW_M_S, reach_at_speed
 from edgewatch.judge.bands import Band, ReferenceBar
 from edgewatch.judge.tolerance import esd_outliers, half_width
 from edgewatch.sight.optics import Optics
@@ -144,7 +145,6 @@ def teach(
     dispersion = pooled_dispersion(used)
     rate = _rate_interval(used, dispersion, content, confidence)
     reach = _reach_interval(used, content, confidence)
-    speeds = [bar.spark_speed_m_s for bar in used if math.isfinite(bar.spark_speed_m_s)]
     return Band(
         grade=grade,
         burst_rate_low_per_m=rate.low,
@@ -170,7 +170,7 @@ def teach(
         exposure_ms=optics.exposure_ms,
         fps=optics.fps,
         wheel_speed_m_s=wheel_speed_m_s,
-        spark_speed_m_s=float(np.median(speeds)) if speeds else math.nan,
+        spark_speed_m_s=_typical_speed(used),
         streaks_per_frame=sum(bar.streaks for bar in used) / max(1, sum(bar.frames for bar in used)),
         taught=taught,
         bars=bars,
@@ -212,9 +212,24 @@ def log_rates(bars: Sequence[ReferenceBar], dispersion: float) -> tuple[NDArray[
     return np.log((bursts + 0.5) / exposure), dispersion / (pooled * exposure + 1.0)
 
 
-def log_reaches(bars: Sequence[ReferenceBar]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Logarithm of each bar's reach (NaN where cut) and the sampling variance of it."""
-    reach = np.array([bar.reach_mm for bar in bars])
+def _typical_speed(bars: Sequence[ReferenceBar]) -> float:
+    """Median spark speed near the wheel (m/s), NaN if not known: the speed at which the band's reach holds."""
+    speeds = [bar.spark_speed_m_s for bar in bars if LOW_M_S <= bar.spark_speed_m_s <= HIGH_M_S]
+    return float(np.median(speeds)) if speeds else math.nan
+
+
+def log_reaches(
+    bars: Sequence[ReferenceBar], speed_m_s: float = math.nan
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Logarithm of each bar's reach at ``speed_m_s`` (NaN where cut) and the sampling variance of it."""
+    reach = np.array(
+        [
+            reach_at_speed(bar.reach_mm, bar.spark_speed_m_s, speed_m_s)
+            if math.isfinite(speed_m_s) and LOW_M_S <= bar.spark_speed_m_s <= HIGH_M_S
+            else bar.reach_mm
+            for bar in bars
+        ]
+    )
     track = np.array([bar.reach_track_m for bar in bars])
     noise = pooled_reach_noise(bars)
     variance = (noise if math.isfinite(noise) else 0.0) / np.maximum(track, 1e-9) / reach**2
@@ -242,7 +257,8 @@ def _reach_interval(used: Sequence[ReferenceBar], content: float, confidence: fl
     kept = [bar for bar in used if math.isfinite(bar.reach_mm) and bar.reach_mm > 0.0]
     if len(kept) < LEAST_BARS or len(used) - len(kept) > CUT_BARS_SHARE * len(used):
         return None
-    values, noise = log_reaches(kept)
+    speed = _typical_speed(used)
+    values, noise = log_reaches(kept, speed)
     return _interval(values, noise, content, confidence)
 
 

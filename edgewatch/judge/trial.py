@@ -12,7 +12,7 @@ from edgewatch.judge.causes import BLIND
 from edgewatch.judge.contrast import told_apart
 from edgewatch.judge.counts import at_least, at_most
 from edgewatch.judge.evidence import RateEvidence, ReachEvidence, log_sum
-from edgewatch.judge.likeness import Evidence, excluded, nearest
+from edgewatch.judge.likeness import Evidence, excluded, nearest, reach_at_taught_speed, wear_factor
 
 CONFORMING = "conforming"
 NONCONFORMING = "nonconforming"
@@ -42,7 +42,7 @@ class Judgement:
     """Verdict of one bar. ``decided_after_s``: seconds of contact until a nonconforming bar was condemned, else the
     whole contact. ``causes``: why it is inconclusive, or what was noticed besides. ``figure``: by which figure it was
     condemned (``burst_rate``, ``reach`` or empty). ``nearest``: taught grades with weights. ``bursts``, ``exposure_m``,
-    ``reach_mm``: the evidence used. ``refused``: windows whose figures could not be used.
+    ``reach_mm``: the evidence used, reach at the taught wheel speed. ``refused``: windows whose figures were no use.
     """
 
     verdict: str
@@ -79,8 +79,11 @@ class Trial:
 
     ``false_alarm``: highest probability that a bar inside its band is ever called nonconforming. ``miss``: highest
     probability that a bar of another taught grade, one that can be told apart, is called conforming.
-    ``misfit``: causes why the band does not fit the station (``Band.misfit``). ``reach_factor``: gives what a window's
-    reach must be multiplied by to hold at the taught wheel speed. Raises ``ValueError`` on risks out of range.
+    ``misfit``: causes why the band does not fit the station (``Band.misfit``). ``wheel_m_s``: surface speed as
+    configured or ordered, for wear compensation where the sparks do not tell their speed; NaN or 0: not known.
+    ``reach_factor``: instead of that, what a window's reach must be multiplied by to hold at the taught speed, from
+    whoever follows the wheel over many bars.
+    Raises ``ValueError`` on risks out of range.
     """
 
     def __init__(
@@ -92,6 +95,7 @@ class Trial:
         miss: float = 0.01,
         least_streaks: int = 50,
         misfit: Sequence[str] = (),
+        wheel_m_s: float = math.nan,
         reach_factor: Callable[[Figures], float] | None = None,
     ) -> None:
         for name, risk in (("false_alarm", false_alarm), ("miss", miss)):
@@ -102,6 +106,7 @@ class Trial:
         self._miss = miss
         self._least_streaks = least_streaks
         self._misfit = tuple(misfit)
+        self._wheel_m_s = wheel_m_s
         self._reach_factor = reach_factor
         self._threshold = -math.log(false_alarm)
         self._rate = RateEvidence(band) if band and not misfit else None
@@ -110,6 +115,8 @@ class Trial:
         self._exposure_m = 0.0
         self._reach_sum = 0.0
         self._reach_track_m = 0.0
+        self._speed_sum = 0.0
+        self._speed_track_m = 0.0
         self._looks = 0
         self._last: Figures | None = None
         self._begin_s = math.nan
@@ -134,12 +141,14 @@ class Trial:
 
     def _log_evidence(self) -> tuple[float, str]:
         """Log of the whole evidence against the band, and the figure that carries most of it."""
-        if self._rate is None or self._reach is None:
+        if self._rate is None or self._reach is None or self._band is None:
             return -math.inf, ""
         rate = log_sum(list(self._rate.sides(self._bursts, self._exposure_m)))
-        reach = log_sum(list(self._reach.sides(self._reach_sum, self._reach_track_m)))
         if not self._reach.usable:
             return rate, RATE
+        wheel_m_s = math.nan if self._reach_factor else self._wheel_m_s
+        factor = wear_factor(self._band, spark_m_s=self._spark_m_s(), wheel_m_s=wheel_m_s)
+        reach = log_sum(list(self._reach.sides(self._reach_sum * factor, self._reach_track_m)))
         return log_sum([rate, reach]), RATE if rate >= reach else REACH
 
     def look(self, window: Figures, causes: Sequence[str] = ()) -> Standing:
@@ -178,15 +187,27 @@ class Trial:
         if before is None or self._looks <= 2 or not before.reach_mm > 0.0 or before.reach_truncated:
             return
         factor = self._reach_factor(before) if self._reach_factor else 1.0
-        if math.isfinite(factor) and factor > 0.0:
-            self._reach_sum += before.track_m * before.reach_mm * factor
-            self._reach_track_m += before.track_m
+        if not (math.isfinite(factor) and factor > 0.0):
+            return
+        self._reach_sum += before.track_m * before.reach_mm * factor
+        self._reach_track_m += before.track_m
+        if self._reach_factor is None and before.spark_speed_m_s > 0.0 and math.isfinite(before.spark_speed_m_s):
+            self._speed_sum += before.track_m * before.spark_speed_m_s
+            self._speed_track_m += before.track_m
+
+    def _spark_m_s(self) -> float:
+        return self._speed_sum / self._speed_track_m if self._speed_track_m > 0.0 else math.nan
 
     def evidence(self) -> Evidence:
         """What the bar has shown so far."""
         reach = self._reach_sum / self._reach_track_m if self._reach_track_m > 0.0 else math.nan
         return Evidence(
-            bursts=self._bursts, exposure_m=self._exposure_m, reach_mm=reach, reach_track_m=self._reach_track_m
+            bursts=self._bursts,
+            exposure_m=self._exposure_m,
+            reach_mm=reach,
+            reach_track_m=self._reach_track_m,
+            spark_m_s=self._spark_m_s(),
+            wheel_m_s=math.nan if self._reach_factor else self._wheel_m_s,
         )
 
     def nearest(self) -> tuple[tuple[str, float], ...]:
@@ -211,7 +232,7 @@ class Trial:
             threshold=self._threshold,
             bursts=evidence.bursts,
             exposure_m=evidence.exposure_m,
-            reach_mm=evidence.reach_mm,
+            reach_mm=reach_at_taught_speed(self._band, evidence) if self._band else evidence.reach_mm,
             refused=self._refused,
         )
 

@@ -37,7 +37,11 @@ class Verification:
 def bar_evidence(bar: ReferenceBar) -> Evidence:
     """A reference bar as evidence."""
     return Evidence(
-        bursts=bar.bursts, exposure_m=bar.exposure_m, reach_mm=bar.reach_mm, reach_track_m=bar.reach_track_m
+        bursts=bar.bursts,
+        exposure_m=bar.exposure_m,
+        reach_mm=bar.reach_mm,
+        reach_track_m=bar.reach_track_m,
+        spark_m_s=bar.spark_speed_m_s,
     )
 
 
