@@ -1,0 +1,7 @@
+"""``python -m edgewatch``."""
+
+import sys
+
+from edgewatch.commands.cli import main
+
+sys.exit(main())
