@@ -10,14 +10,14 @@ from __future__ import annotations
 import math
 
 REACH_EXPONENT = 0.58
-"""Reach goes with this power of the wheel's surface speed. From simulated flights of the steels of the rehearsal (0.1 to
-3 bursts per metre, particles of 40 to 50 micrometre, 18 to 45 m/s, half to twice the usual light): 0.54 to 0.63."""
+"""Reach goes with this power of the wheel's surface speed. From simulated flights of the steels of the rehearsal (0.1
+to 3 bursts per metre, particles of 40 to 50 micrometre, 18 to 45 m/s, half to twice the usual light): 0.54 to 0.63."""
 REACH_EXPONENT_SPREAD = 0.05
 """Largest deviation found of a bar steel's own exponent from ``REACH_EXPONENT``: two percent of reach over a wheel's
 whole life (a third of its diameter)."""
 SPEED_RATIO_LOW, SPEED_RATIO_HIGH = 0.75, 1.03
-"""Spark speed near the wheel over surface speed that is believed: sparks leave a little below the surface speed and lose
-some percent until they are measured; a few percent above one are the error of speed, scale and exposure."""
+"""Spark speed near the wheel over surface speed that is believed: sparks leave a little below the surface speed and
+lose some percent until they are measured; a few percent above one are the error of speed, scale and exposure."""
 LOW_M_S, HIGH_M_S = 1.0, 200.0
 """Surface speeds of grinding wheels, with room on both sides."""
 
