@@ -30,6 +30,7 @@ MOST_INCOMING_BYTES = 1_000_000
 """Told to an MQTT 5 broker: it then never hands us more, whatever somebody publishes."""
 HEADER_BYTES = 16
 """Of a PUBLISH besides topic, properties and payload, at most."""
+KEEP_ALIVE_TIMEOUT = 0x8D
 FAILURE = 0x80
 """MQTT 5 section 2.4: reason codes from here on mean failure."""
 
@@ -62,7 +63,7 @@ class Connection:
         client_id: str,
         password: str | None,
         tls: ssl.SSLContext | None,
-        will: tuple[str, bytes],
+        will: tuple[str, bytes] | None,
         on_message: OnMessage,
         on_answer: Callable[[int], Any],
     ) -> None:
@@ -92,7 +93,8 @@ class Connection:
             client.username_pw_set(settings.user, password)
         if tls is not None:
             client.tls_set_context(tls)
-        client.will_set(will[0], will[1], qos=1, retain=True)
+        if will is not None:
+            client.will_set(will[0], will[1], qos=1, retain=True)
         client.on_connect = self._connected
         client.on_disconnect = self._disconnected
         client.on_message = self._arrived
@@ -113,7 +115,8 @@ class Connection:
     def _disconnected(self, client: Any, data: Any, flags: Any, code: Any, properties: Any) -> None:
         if self._over is not None:
             return
-        if getattr(flags, "is_disconnect_packet_from_server", False) and code.value >= FAILURE:
+        said = bool(getattr(flags, "is_disconnect_packet_from_server", False)) and code.value >= FAILURE
+        if said or code.value == KEEP_ALIVE_TIMEOUT:  # the latter is paho's own finding: no answer to its PINGREQ
             self._over = from_reason_code(code.value, str(code))
         else:
             self._over = LinkState(state="offline", reason="closed", detail="the connection was closed")
