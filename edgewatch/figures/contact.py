@@ -25,12 +25,19 @@ class End:
     reason: str
 
 
+TAIL_SHARE = 0.15
+"""Sparks fly on for a few tenths of a second after the bar has left the wheel: fewer streaks than this share of the
+contact's mean are such a tail, not grinding. Simulated tails begin below a tenth of it."""
+TAIL_S = 0.5
+"""What counts as a tail decays with this time (s) once the contact has ended, so that a weaker bar is soon seen."""
+
+
 class ContactFinder:
     """Finds contacts; one call a frame, in order of time.
 
     The mean number of streaks over ``begin_s`` begins a contact and over ``gap_s`` ends it, so that a frame or two
-    without streaks, skipped frames or single stray streaks do neither. Times come from the frames, not from counting
-    them. Raises ``ValueError`` on a time that is not finite or on a negative count.
+    without streaks, skipped frames or single stray streaks do neither; nor does the tail of sparks still in
+    flight. Times come from the frames, not from counting them. Raises ``ValueError`` on a time that is not finite or on a negative count.
     """
 
     def __init__(self, settings: FigureSettings, fps: float) -> None:
@@ -43,6 +50,9 @@ class ContactFinder:
         self._last_spark_s = math.nan
         self._last_s = -math.inf
         self._watching_s = math.nan
+        self._level = 0.0  # mean streaks a frame of the contact under way, or of the last one
+        self._frames = 0
+        self._ended_s = -math.inf
 
     @property
     def in_contact(self) -> bool:
@@ -55,8 +65,15 @@ class ContactFinder:
         return math.nan if self._begin_s is None else self._begin_s
 
     def is_spark(self, streaks: int) -> bool:
-        """Whether one frame by itself shows sparks."""
-        return streaks >= max(1.0, self._settings.least_streaks)
+        """Whether one frame by itself shows sparks, and not just the tail of a contact."""
+        return streaks >= max(1.0, self._least())
+
+    def _least(self) -> float:
+        """Streaks a frame that count as sparks now."""
+        tail = TAIL_SHARE * self._level
+        if self._begin_s is None:
+            tail *= math.exp(-max(0.0, self._last_s - self._ended_s) / TAIL_S)
+        return max(self._settings.least_streaks, tail)
 
     def update(self, t_s: float, streaks: int) -> Begin | End | None:
         """Take one frame's time (s) and number of streaks; say whether a contact has begun or ended."""
@@ -64,6 +81,7 @@ class ContactFinder:
             raise ValueError(f"t_s = {t_s!r}, streaks = {streaks!r}: a finite time and a count are needed")
         if t_s <= self._last_s:  # a source that starts again from 0: what was before does not count
             self._recent.clear()
+            self._ended_s = -math.inf
         if not self._recent:
             self._watching_s = t_s
         self._last_s = t_s
@@ -82,15 +100,18 @@ class ContactFinder:
         mean = self._mean_over(span, t_s)
         sparks = [at for at, count in self._recent if count > 0]
         covered = t_s - self._watching_s + 1.01 * self._period_s >= span  # frames may be skipped: time counts
-        if mean < self._settings.least_streaks or not covered or 2 * len(sparks) <= len(self._recent):
+        if mean < self._least() or not covered or 2 * len(sparks) <= len(self._recent):
             return None
         self._begin_s = next((at for at, count in self._recent if self.is_spark(count)), sparks[0])
+        self._level, self._frames = mean, len(self._recent)
         self._last_spark_s = t_s
         return Begin(t_s=self._begin_s)
 
     def _look_for_end(self, t_s: float, streaks: int) -> End | None:
         assert self._begin_s is not None
         if self.is_spark(streaks):
+            self._frames += 1
+            self._level += (streaks - self._level) / self._frames
             steady = self._recent[-2][1] > 0 if len(self._recent) > 1 else True
             if steady or t_s - self._last_spark_s < self._settings.begin_s:
                 self._last_spark_s = t_s
@@ -99,12 +120,13 @@ class ContactFinder:
         span = max(self._settings.gap_s, self._period_s)
         mean = self._mean_over(span, t_s)
         silent = t_s - self._last_spark_s >= span - 0.5 * self._period_s
-        return self._end("gap") if mean < self._settings.least_streaks and silent else None
+        return self._end("gap") if mean < self._least() and silent else None
 
     def _end(self, reason: str) -> End:
         assert self._begin_s is not None
         end = End(begin_s=self._begin_s, t_s=self._last_spark_s, reason=reason)
         self._begin_s = None
+        self._ended_s = end.t_s
         self._last_spark_s = math.nan
         self._recent.clear()
         return end

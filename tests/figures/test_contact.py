@@ -102,3 +102,22 @@ def test_refuses_nonsense() -> None:
             finder.update(t_s, count)
     with pytest.raises(ValueError, match="fps"):
         ContactFinder(FigureSettings(), 0.0)
+
+
+def test_the_tail_of_sparks_in_flight_is_no_contact() -> None:
+    """After 60 streaks a frame a handful fly on for half a second: the contact has ended, and no new one begins."""
+    finder = ContactFinder(FigureSettings(), 200.0)
+    counts = [60] * 200 + [max(0, round(6 - index / 20)) for index in range(200)]
+    found = [finder.update(index / 200, count) for index, count in enumerate(counts)]
+    said = [one for one in found if one is not None]
+    assert [type(one) for one in said] == [Begin, End]
+    assert said[1].t_s == pytest.approx(199 / 200)
+
+
+def test_a_weaker_bar_after_a_strong_one_is_found() -> None:
+    """Five streaks a frame after sixty: a bar of its own once the tail could have gone."""
+    finder = ContactFinder(FigureSettings(), 200.0)
+    counts = [60] * 200 + [0] * 200 + [5] * 200
+    said = [one for index, count in enumerate(counts) if (one := finder.update(index / 200, count)) is not None]
+    assert [type(one) for one in said] == [Begin, End, Begin]
+    assert said[2].t_s == pytest.approx(2.0)
