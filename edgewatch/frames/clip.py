@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from edgewatch.errors import DeviceError
+from edgewatch.frames.container import missing_bytes
 from edgewatch.frames.luminance import one_line, open_luminance
 from edgewatch.frames.mono import make_mono
 from edgewatch.frames.quiet import hush, is_damage, overhear
@@ -24,9 +25,6 @@ PICTURE_SUFFIXES = frozenset({".png", ".pgm", ".ppm", ".pnm", ".bmp", ".jpg", ".
 
 MOST_PICTURE_BYTES = 512 * 1024 * 1024
 """A single picture file larger than this is not read into memory: 16384 x 16384 px of 16 bits."""
-
-_SLACK_FRAMES = 2
-"""A container's own count may be off by rounding of its duration; only more missing frames than that are said."""
 
 
 def open_clip(rest: str, settings: Settings, live: bool = False) -> Source:
@@ -58,7 +56,6 @@ class VideoFile:
         hush()
         self._path, self._fps = path, fps
         self._index = 0
-        self._last_s = 0.0
         try:
             self._decoder = open_luminance(str(path))
             first = self._decoder.read()
@@ -75,7 +72,7 @@ class VideoFile:
     def read(self, timeout_s: float = 0.0) -> Frame | None:
         """Return the next frame, ``None`` after the last; ``timeout_s`` is of no account.
 
-        Raises ``DeviceError`` where the file ends before the length it states, or the picture size changes.
+        Raises ``DeviceError`` after the last frame of a file that lost its end, or where the picture size changes.
         """
         picture, self._first = self._first, None
         if picture is None:
@@ -94,27 +91,18 @@ class VideoFile:
 
     def _decode(self) -> NDArray[np.uint8] | None:
         try:
-            picture = self._decoder.read()
+            return self._decoder.read()
         except (cv2.error, ValueError) as error:
             raise DeviceError(f"clip {self._path}: picture {self._index}: {one_line(error)}") from error
-        if picture is not None:
-            self._last_s = self._decoder.position_s
-        return picture
 
     def _check_complete(self) -> None:
-        """Raise where both the number of frames and the time reached fall short of what the container states.
-
-        Either alone is no proof: with a varying rate the number is only duration times a guessed rate, and the time
-        reached says nothing where the number was exact.
-        """
-        count, rate = self._decoder.count, self._decoder.rate
-        if not (count > 0 and rate > 0):
-            return
-        short = self._index < count - _SLACK_FRAMES
-        early = self._last_s < (count - 1 - _SLACK_FRAMES) / rate
-        if short and early:
+        try:
+            missing = missing_bytes(self._path)
+        except OSError as error:
+            raise DeviceError(f"clip {self._path}: cannot be read: {error.strerror or error}") from error
+        if missing:
             raise DeviceError(
-                f"clip {self._path}: ends after {self._index} of {count:.0f} pictures: truncated or damaged"
+                f"clip {self._path}: truncated or damaged: {missing} bytes are missing after picture {self._index - 1}"
             )
 
 

@@ -32,7 +32,7 @@ _LOOK_FRAMES = 64
 
 
 class Decoder:
-    """One open video. ``rate``: frames a second it claims (NaN if none); ``count``: frames it claims (0 if none)."""
+    """One open video. ``rate``: frames a second it claims, NaN if it claims none."""
 
     def __init__(self, capture: cv2.VideoCapture, spread: NDArray[np.uint8] | None = None) -> None:
         """Take over an open capture; ``spread`` is a table that luminance goes through."""
@@ -40,8 +40,6 @@ class Decoder:
         self._spread = spread
         rate = float(capture.get(cv2.CAP_PROP_FPS))
         self.rate = rate if 0 < rate < 1e6 else float("nan")
-        count = float(capture.get(cv2.CAP_PROP_FRAME_COUNT))
-        self.count = count if 0 < count < 1e12 else 0.0
 
     def read(self) -> NDArray[np.uint8] | None:
         """Return the next picture, ``None`` if there is none. Raises ``cv2.error``, ``ValueError``."""
@@ -52,11 +50,6 @@ class Decoder:
         if self._spread is not None:
             return np.asarray(cv2.LUT(mono, self._spread), dtype=np.uint8)
         return mono
-
-    @property
-    def position_s(self) -> float:
-        """Time stamp of the picture last read (s)."""
-        return float(self._capture.get(cv2.CAP_PROP_POS_MSEC)) / 1000.0
 
     def close(self) -> None:
         """Let go of the file or connection."""
