@@ -37,7 +37,9 @@ class ContactFinder:
 
     The mean number of streaks over ``begin_s`` begins a contact and over ``gap_s`` ends it, so that a frame or two
     without streaks, skipped frames or single stray streaks do neither; nor does the tail of sparks still in
-    flight. Times come from the frames, not from counting them. Raises ``ValueError`` on a time that is not finite or on a negative count.
+    flight. Times come from the frames, not from counting them.
+
+    Raises ``ValueError`` on a time that is not finite or on a negative count.
     """
 
     def __init__(self, settings: FigureSettings, fps: float) -> None:
