@@ -27,18 +27,22 @@ class Newest:
     Frames wait in a short queue. When it is full, all that wait are shed and counted in ``Frame.skipped`` of the next:
     so the judging is never further behind than the queue, is at once up to date after a hiccup, and under lasting
     overload sees runs of consecutive frames with gaps between, which keeps glowing bursts from being counted twice.
+
+    ``lasting``: the source comes back by itself when it is lost (``Reopening``), so its ``DeviceError`` are handed on
+    and it is read on; opening it anew, which may take seconds, then holds nobody up.
     """
 
-    def __init__(self, source: Source, *, depth: int = DEPTH) -> None:
+    def __init__(self, source: Source, *, depth: int = DEPTH, lasting: bool = False) -> None:
         """Take over ``source`` and start reading it. Raises ``ValueError`` if ``depth`` < 1."""
         if depth < 1:
             raise ValueError(f"depth = {depth}: at least 1")
-        self._source, self._depth = source, depth
+        self._source, self._depth, self._lasting = source, depth, lasting
         self._changed = threading.Condition()
         self._waiting: collections.deque[Frame] = collections.deque()
         self._shed = 0
         self._ended = False
         self._failure: Exception | None = None
+        self._passing: DeviceError | None = None
         self._closing = False
         self._thread = threading.Thread(target=self._run, name="frames", daemon=True)
         self._thread.start()
@@ -52,11 +56,14 @@ class Newest:
         """Return the oldest waiting frame, ``None`` at the end of the source or after ``close``.
 
         Raises ``StalledError`` if none came within ``timeout_s``, ``DeviceError`` (once all waiting frames are handed
-        on) when the source is lost or its reader died.
+        on) when the source is lost or its reader died. Unless the source is lasting, it is then at its end.
         """
         give_up_s = time.monotonic() + timeout_s
         with self._changed:
             while not self._waiting:
+                passing, self._passing = self._passing, None
+                if passing is not None and not self._closing:
+                    raise passing
                 if self._failure is not None:
                     raise self._lost(self._failure) from self._failure
                 if self._ended or self._closing:
@@ -89,6 +96,13 @@ class Newest:
                     frame = self._source.read(_POLL_S)
                 except StalledError:
                     continue  # how long is too long is for the caller to say
+                except DeviceError as error:
+                    if not self._lasting:
+                        raise
+                    with self._changed:
+                        self._passing = error
+                        self._changed.notify_all()
+                    continue
                 if frame is None:
                     break
                 self._queue(frame)

@@ -33,8 +33,7 @@ def open_lasting(
     """
 
     def opener() -> Source:
-        source = open_source(uri, settings, live=live)
-        return Newest(source) if source.info.live else source
+        return open_source(uri, settings, live=live)
 
     first: Source | SourceInfo
     try:
@@ -51,7 +50,7 @@ def open_lasting(
         )
     if not isinstance(first, SourceInfo) and not first.info.live:
         return first
-    return Reopening(opener, first, clock=clock, chance=chance)
+    return Newest(Reopening(opener, first, clock=clock, chance=chance), lasting=True)
 
 
 class Reopening:

@@ -129,6 +129,26 @@ def test_loss_is_told_after_the_last_frame(feed: Feed) -> None:
     newest.close()
 
 
+def test_lasting_source_is_read_on_after_a_loss(feed: Feed) -> None:
+    """A source that comes back by itself: each loss is raised once, after the frames before it, and reading goes on."""
+    newest = Newest(feed, lasting=True)
+    feed.give(1)
+    feed.items.put(DeviceError("camera: unplugged"))
+    feed.settle()
+    assert newest.read(5.0) is not None
+    with pytest.raises(DeviceError, match="unplugged"):
+        newest.read(5.0)
+    with pytest.raises(StalledError):
+        newest.read(0.01)
+    feed.give(1)
+    frame = newest.read(5.0)
+    assert frame is not None and frame.index == 1
+    feed.items.put(RuntimeError("driver bug"))
+    with pytest.raises(DeviceError, match="reader died"):
+        newest.read(5.0)
+    newest.close()
+
+
 def test_death_of_the_reader_is_a_device_error(feed: Feed) -> None:
     """A bug in a driver does not leave the judging waiting for a thread that is no more."""
     newest = Newest(feed)

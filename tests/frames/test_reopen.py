@@ -146,7 +146,8 @@ def test_end_is_an_end_and_close_ends_the_wait() -> None:
 
 
 def test_patient_station_waits_for_its_fifo(tmp_path: Path) -> None:
-    """A real FIFO that is made only later: lost at first, then served; without patience it is an error at once."""
+    """A real FIFO that is made only later: lost at first, then served, and served again by the next writer; opening
+    never holds the caller up. Without patience its absence is an error at once."""
     fifo = tmp_path / "frames"
     station = dataclasses.replace(Settings(), source=SourceSettings(width_px=96, height_px=64))
     with pytest.raises(DeviceError, match="cannot be opened"):
@@ -154,20 +155,26 @@ def test_patient_station_waits_for_its_fifo(tmp_path: Path) -> None:
     source = open_lasting(f"pipe:{fifo}", station, clock=time.monotonic, chance=lambda: 0.0, patient=True)
     assert (source.info.width_px, source.info.live) == (96, True)
     with pytest.raises(DeviceError, match="cannot be opened"):
-        source.read(0.0)
+        source.read(5.0)
     os.mkfifo(fifo)
-    writer = threading.Thread(target=lambda: fifo.write_bytes(noise_pictures(1).tobytes()))
-    writer.start()
-    frame = None
-    for _ in range(10):
-        try:
-            frame = source.read(1.0)
-            break
-        except StalledError:
-            continue
-    writer.join()
+    pictures = noise_pictures(2)
+    for index, picture in enumerate(pictures):
+        writer = threading.Thread(target=lambda shown=picture: fifo.write_bytes(shown.tobytes()))
+        writer.start()
+        frame, lost = None, ""
+        end_s = time.monotonic() + 20.0
+        while frame is None and time.monotonic() < end_s:
+            try:
+                frame = source.read(0.1)
+            except StalledError:
+                continue
+            except DeviceError as error:
+                lost = str(error)
+        writer.join()
+        assert frame is not None and np.array_equal(frame.picture, picture)
+        assert frame.index == index
+        assert ("its writer has gone" in lost) == (index == 1)
     source.close()
-    assert frame is not None and np.array_equal(frame.picture, noise_pictures(1)[0])
 
 
 def test_clip_is_neither_hurried_nor_reopened(tmp_path: Path) -> None:
