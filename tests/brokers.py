@@ -17,6 +17,7 @@ from pathlib import Path
 from typing import Any
 
 MOSQUITTO = shutil.which("mosquitto") or "/usr/sbin/mosquitto"
+MARK = "tests/reader"
 WAIT_S = 20.0
 """Longest wait for something that takes milliseconds on an idle machine."""
 
@@ -149,6 +150,8 @@ class Reader:
 
     def __init__(self, broker: Broker, topic: str = "#", *options: str, session: str = "") -> None:
         self.seen: list[Seen] = []
+        self._marks = 0
+        self._marked: set[str] = set()
         keep = ["-c", "-i", session, "-x", "4294967295"] if session else []
         self._process = subprocess.Popen(
             [
@@ -168,6 +171,9 @@ class Reader:
         assert self._process.stdout is not None
         for line in self._process.stdout:
             part = json.loads(line)
+            if part["topic"].startswith(MARK):
+                self._marked.add(part["topic"])
+                continue
             self.seen.append(
                 Seen(
                     topic=part["topic"],
@@ -179,15 +185,15 @@ class Reader:
             )
 
     def ready(self, broker: Broker) -> Reader:
-        """Wait until the subscription stands: a message of our own comes through."""
-        mark = f"reader/{id(self)}"
+        """Wait until the subscription stands: a message of our own comes through. Again after the broker was away."""
+        self._marks += 1
+        mark = f"{MARK}/{self._marks}"
 
         def through() -> bool:
             broker.publish(mark, "{}")
-            return any(message.topic == mark for message in self.seen)
+            return mark in self._marked
 
         wait_until(through, "the reader's subscription")
-        self.seen = [message for message in self.seen if message.topic != mark]
         return self
 
     def stop(self) -> None:

@@ -44,6 +44,17 @@ def read_password(settings: MqttSettings, folder: Path) -> str | None:
         raise SettingsError(f"mqtt.password_file = {str(path)!r}: {error.strerror or error}") from error
 
 
+class _Socket(ssl.SSLSocket):
+    """Closes itself when the handshake fails; paho would leave that to the garbage collector."""
+
+    def do_handshake(self, block: bool = False) -> None:
+        try:
+            super().do_handshake(block)
+        except OSError:
+            self.close()
+            raise
+
+
 def make_tls(settings: MqttSettings, folder: Path) -> ssl.SSLContext | None:
     """Return a context that verifies the broker's certificate and host name; ``None`` without TLS.
 
@@ -57,6 +68,7 @@ def make_tls(settings: MqttSettings, folder: Path) -> ssl.SSLContext | None:
         raise SettingsError(
             f"mqtt.ca_file = {settings.ca_file!r}: no certificates in PEM can be read from it: {error}"
         ) from error
+    context.sslsocket_class = _Socket
     context.minimum_version = ssl.TLSVersion.TLSv1_2
     if settings.cert_file:
         key = folder / settings.key_file

@@ -35,6 +35,9 @@ class Outbox(Protocol):
     def latest(self, kind: str) -> tuple[int, bytes] | None:
         """Newest record of a state kind."""
 
+    def newest(self) -> int:
+        """The highest ``seq`` recorded, 0 when there is none."""
+
 
 @dataclass(frozen=True, slots=True)
 class _Sent:
@@ -49,6 +52,9 @@ class Sender:
     QoS 1: delivered when acknowledged. QoS 0: bytes stay in order on one connection and a broker works them off in
     that order, so a window is proven delivered when anything sent after it was answered: a later PUBACK, or the
     answer to a *barrier* (a request that changes nothing). What is not proven when a connection ends is sent again.
+
+    *Late* windows, those that could not be sent when they were recorded, go at QoS 1: after an outage a subscriber may
+    come back later than the station, and a broker keeps nothing at QoS 0 for who is away.
     """
 
     def __init__(self, outbox: Outbox, *, in_flight: int = IN_FLIGHT) -> None:
@@ -59,9 +65,12 @@ class Sender:
         self._dirty = True
         self.begin()
 
-    def begin(self, in_flight: int | None = None) -> None:
-        """Start over on a new connection, from the oldest message that is not proven delivered."""
+    def begin(self, in_flight: int | None = None, *, late: int = 0) -> None:
+        """Start over on a new connection, from the oldest message that is not proven delivered; those up to the
+        number ``late`` are late.
+        """
         self._limit = in_flight or self._limit
+        self._late = late
         self._ahead: deque[Outgoing] = deque()
         self._after = 0
         self._place = 0
@@ -106,16 +115,19 @@ class Sender:
                 self._after = self._ahead[-1].seq
         if not self._ahead:
             return None
-        full = (
-            len(self._loose) >= LOOSE if KINDS[self._ahead[0].kind].qos == 0 else self._outbox_in_flight >= self._limit
-        )
-        return None if full else self._ahead[0]
+        item = self._ahead[0]
+        full = len(self._loose) >= LOOSE if self.qos(item) == 0 else self._outbox_in_flight >= self._limit
+        return None if full else item
+
+    def qos(self, item: Outgoing) -> int:
+        """Quality of service at which ``item`` goes out on this connection."""
+        return 1 if item.seq <= self._late else KINDS[item.kind].qos
 
     def sent(self, item: Outgoing, mid: int, now_s: float) -> None:
         """``item``, the one that ``next`` returned, went out with packet identifier ``mid``."""
         self._ahead.popleft()
         self._place += 1
-        if KINDS[item.kind].qos == 0:
+        if self.qos(item) == 0:
             self._loose.append(_Sent(self._place, item.seq, now_s))
         else:
             self._tight[mid] = _Sent(self._place, item.seq, now_s)

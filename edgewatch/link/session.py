@@ -19,7 +19,7 @@ from typing import Any
 from edgewatch.errors import DeviceError, SettingsError
 from edgewatch.link.connection import Connection, ConnectionLostError
 from edgewatch.link.secrets import make_tls, read_password
-from edgewatch.link.sender import Outbox, Sender
+from edgewatch.link.sender import IN_FLIGHT, Outbox, Sender
 from edgewatch.link.state import LinkState, from_error
 from edgewatch.settings import MqttSettings, OrderSettings
 from edgewatch.wire import messages
@@ -40,6 +40,8 @@ LOOK_S = 1.0
 """The outbox is looked into this often even when nobody said that something was recorded."""
 STUCK_S = 30.0
 """A broker that answers nothing for so long although messages wait for its answer is left and connected to anew."""
+LATE_S = 5.0
+"""A first connection within this time after the start is prompt: what was recorded meanwhile is not late."""
 VIEWS = 4
 """Pictures held while they cannot be sent; the newest win."""
 
@@ -90,6 +92,9 @@ class Link:
         self._since_utc_s = stamp().utc_s
         self.state = LinkState(state="stopped")
         self.callback_errors = 0
+        self.connections = 0
+        self._started_s = 0.0
+        self._late = self._earlier_run = 0
         self.heartbeat_s = time.monotonic()
         """Monotonic time of the loop's last turn: what a supervisor watches, rather than a flag."""
 
@@ -100,6 +105,9 @@ class Link:
         if self._thread is not None and self._thread.is_alive():
             raise ValueError("the session runs already")
         self._stopping.clear()
+        self._started_s = time.monotonic()
+        self._late = 0
+        self._earlier_run = self._newest()
         self._thread = threading.Thread(target=self._run, name="mqtt", daemon=True)
         self._thread.start()
 
@@ -205,7 +213,10 @@ class Link:
         return connection
 
     def _serve(self, connection: Connection) -> None:
-        self._sender.begin(min(connection.most_in_flight, 20))
+        prompt = self.connections == 0 and time.monotonic() - self._started_s < LATE_S
+        self._late = self._earlier_run if prompt else max(self._late, self._newest())
+        self._sender.begin(min(connection.most_in_flight, IN_FLIGHT), late=self._late)
+        self.connections += 1
         self._say_presence(connection, online=True, reason="")
         if self._orders is not None:
             connection.subscribe(self._topics.orders)
@@ -223,6 +234,12 @@ class Link:
                 raise ConnectionLostError(LinkState(state="offline", reason="no_answer", detail="messages unanswered"))
             connection.turn(POLL_S)
         self._leave(connection)
+
+    def _newest(self) -> int:
+        try:
+            return self._outbox.newest()
+        except DeviceError:
+            return 0  # told when the outbox is read next; windows then go as live ones do
 
     def _finished(self) -> bool:
         return time.monotonic() >= self._flush_until_s or (self._sender.idle and not self._live)
@@ -252,7 +269,9 @@ class Link:
                     )
                 kind = KINDS[item.kind]
                 retain = kind.retained and self._is_newest(item.kind, item.seq)
-                mid = connection.publish(self._topics.topic(item.kind), item.payload, qos=kind.qos, retain=retain)
+                mid = connection.publish(
+                    self._topics.topic(item.kind), item.payload, qos=self._sender.qos(item), retain=retain
+                )
                 self._sender.sent(item, mid, now_s)
                 if item.reply_topic:
                     copy = connection.publish(item.reply_topic, item.payload, qos=1, correlation=item.correlation)

@@ -69,6 +69,7 @@ def from_reason_code(value: int, text: str) -> LinkState:
         0x85: "rejected",
         0x86: "wrong_password",
         0x87: "not_authorised",
+        0x8B: "closed",
         0x8C: "wrong_password",
         0x8D: "no_answer",
         0x8E: "taken_over",

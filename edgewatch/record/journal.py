@@ -243,6 +243,10 @@ class Journal:
         """Return ``seq`` and payload of the newest record of a state kind (``kinds.STATES``), delivered or not."""
         return self._used(lambda db: _latest(db, kind))
 
+    def newest(self) -> int:
+        """Return the highest ``seq`` recorded, 0 when there is none."""
+        return self._used(lambda db: _newest(db) or 0)
+
     def state(self, key: str, default: Any = None) -> Any:
         """Return the value kept under ``key``."""
         return self._used(lambda db: _state(db, key, default))
