@@ -18,8 +18,8 @@ from edgewatch.sight.optics import Optics
 
 USUAL_SPEED_M_S = 28.0
 """Surface speed where the configuration does not know it."""
-MOST_BEHIND_FRAMES = 4
-"""A live rehearsal further behind its clock than this passes frames over, as a camera would."""
+MOST_BEHIND_S = 0.1
+"""A live rehearsal further behind its clock than this passes frames over, as a camera would whose queue is full."""
 
 
 def open_rehearsal(rest: str, settings: Settings, live: bool = False) -> RehearsalSource:
@@ -109,7 +109,7 @@ class RehearsalSource:
         if behind < 0.0:
             self._closed.wait(-behind / self._fps)
             return 0
-        if behind < MOST_BEHIND_FRAMES:
+        if behind < max(1.0, MOST_BEHIND_S * self._fps):
             return 0
         passed = int(behind)
         self._scene.skip(passed)

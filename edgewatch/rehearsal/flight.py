@@ -24,8 +24,6 @@ STEP_S = 0.001
 LONGEST_S = 0.2
 """Glow lasts up to about 0.2 s (common practice); the integration ends earlier once all particles are dark."""
 
-SHELL_POWER = 4
-"""How suddenly the oxide shell closes: share of the surface open = 1 - (burnt / burnable)^4."""
 LEAST_K, MOST_K = 200.0, 3500.0
 """Temperatures that are integrated: from deep frost to well above the boiling of iron (3134 K). Only dust of a
 micrometre, for which the step is too long, ever meets these ends."""
@@ -37,8 +35,9 @@ def drag_coefficient(reynolds: Array) -> Array:
     24/Re (1 + 0.27 Re)^0.43 + 0.47 (1 - exp(-0.04 Re^0.38)). Nearer to the standard curve where sparks fly (Re 1 to
     100) than Schiller and Naumann's, and needs no second branch.
     """
-    creeping = 24.0 / reynolds * np.power(1.0 + 0.27 * reynolds, 0.43)
-    return np.asarray(creeping + 0.47 * -np.expm1(-0.04 * np.power(reynolds, 0.38)))
+    # powers through logarithms: half the time of np.power
+    creeping = 24.0 / reynolds * np.exp(0.43 * np.log1p(0.27 * reynolds))
+    return np.asarray(creeping - 0.47 * np.expm1(-0.04 * np.exp(0.38 * np.log(reynolds))))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -188,12 +187,15 @@ def _heat_step(
     """Temperature that a particle tends to, share of the distance to it that a step leaves, share burnt in a step."""
     nusselt = heat.ranz_marshall(reynolds)
     transfer = nusselt * conductivity / diameter
-    gained = -heat.EMISSIVITY * heat.STEFAN_BOLTZMANN_W_M2_K4 * (kelvin**4 - air_k**4)
+    square = kelvin * kelvin
+    gained = (-heat.EMISSIVITY * heat.STEFAN_BOLTZMANN_W_M2_K4) * (square * square - air_k**4)
     burning = np.zeros_like(kelvin)
     if steel.oxidisable_share > 0.0 and oxygen > 0.0 and steel.affinity > 0.0:
         flux = heat.oxygen_flux_kg_m2_s(kelvin, film_k, density, nusselt, diameter, oxygen=oxygen)
-        # the shell closes as the burnable share is used up
-        flux *= steel.affinity * np.clip(1.0 - (burnt / steel.oxidisable_share) ** SHELL_POWER, 0.0, 1.0)
+        # the shell closes late and fast as the burnable share is used up: open share 1 - (burnt / burnable)^4
+        closed = burnt * (1.0 / steel.oxidisable_share)
+        closed *= closed
+        flux *= steel.affinity * np.maximum(1.0 - closed * closed, 0.0)
         gained += flux * heat.HEAT_PER_KG_OXYGEN_J
         burning = flux * (step_s * heat.IRON_PER_OXYGEN) / mass_per_area
     loss_rate = transfer / (mass_per_area * heat.IRON_HEAT_J_KG_K)

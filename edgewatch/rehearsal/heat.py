@@ -135,7 +135,9 @@ def oxygen_flux_kg_m2_s(
 
     ``oxygen``: mass share in the surrounding gas. The diffusion limit is Sh D rho / d ln(1 + Y) (Stefan flow).
     """
-    diffusivity = OXYGEN_DIFFUSIVITY_M2_S * (film_k / AIR_K) ** 1.75
+    ratio = film_k * (1.0 / AIR_K)
+    root = np.sqrt(ratio)
+    diffusivity = OXYGEN_DIFFUSIVITY_M2_S * ratio * root * np.sqrt(root)  # the power 1.75
     outside = sherwood * diffusivity / diameter_m
     reaction = SURFACE_RATE_M_S * np.exp(SURFACE_ACTIVATION_K * (1.0 / SURFACE_AT_K - 1.0 / temperature_k))
     return np.asarray(density_kg_m3 * math.log1p(oxygen) * outside * reaction / (outside + reaction))

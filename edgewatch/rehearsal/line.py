@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from edgewatch.rehearsal.steel import Steel, find_steel
 from edgewatch.rehearsal.swarm import Conditions
 
-STRETCH_S = 0.1
+STRETCH_S = 0.2
 """How long the contact force holds before it changes a little (s)."""
 ONSET_S = 0.03
 """Until the bar is fully pressed on, half the sparks fly (s)."""

@@ -26,8 +26,8 @@ GLOW_E_S = 6.5e7
 GLOW_REFERENCE_M = 50e-6
 FRAGMENT_K = 2300.0
 """Fragments burn hotter than their parent: fresh iron, short diffusion way."""
-BATCH_SPARKS = 400.0
-BATCH_S = 0.1
+BATCH_SPARKS = 1000.0
+BATCH_S = 0.25
 """Sparks a batch: numpy's cost a call is spread over many, and the tables stay small."""
 _MOST_GENERATIONS = 12
 
