@@ -57,15 +57,19 @@ def read_toml(path: Path) -> dict[str, Any]:
         raise SettingsError(f"{path}: not TOML: {error}") from error
 
 
+def has_station_file(args: argparse.Namespace) -> bool:
+    """Whether a station file is named, or lies where the command was given."""
+    return bool(getattr(args, "station", None)) or Path(DEFAULT_STATION).exists()
+
+
 def load_settings(args: argparse.Namespace) -> tuple[Settings, Path]:
     """Settings from the station file and the options given, and the folder that relative paths start from.
 
     Options known here: those of ``add_station``, ``add_optics``, ``add_bands``, and ``source``, ``expect``,
     ``journal`` where the command declares them. Raises ``SettingsError``.
     """
-    named = getattr(args, "station", None)
-    path = Path(named or DEFAULT_STATION)
-    from_file = bool(named) or path.exists()
+    path = Path(getattr(args, "station", None) or DEFAULT_STATION)
+    from_file = has_station_file(args)
     data: dict[str, Any] = read_toml(path) if from_file else {}
     for option, section, key in (
         ("mm_per_px", "optics", "mm_per_px"),

@@ -3,14 +3,19 @@
 from __future__ import annotations
 
 import argparse
+import contextlib
+import dataclasses
 import json
 import math
 import signal
 import sys
+import tempfile
 from collections.abc import Mapping
+from pathlib import Path
 from typing import Any
 
-from edgewatch.commands.options import add_bands, add_optics, add_station, load_settings
+from edgewatch.commands.options import add_bands, add_optics, add_station, has_station_file, load_settings
+from edgewatch.settings import Settings
 from edgewatch.station.station import Outcome, Station
 from edgewatch.wire.messages import plain
 
@@ -24,7 +29,9 @@ def declare(parser: argparse.ArgumentParser) -> None:
     add_station(parser)
     parser.add_argument("--source", metavar="URI", help="camera:DEV, clip:PATH, pipe:- or FIFO, stream:URL, rehearsal:")
     parser.add_argument("--expect", metavar="GRADE", help="grade on the line")
-    parser.add_argument("--journal", metavar="FILE", help="journal file")
+    parser.add_argument(
+        "--journal", metavar="FILE", help="journal file (default: as configured; without a station file none is kept)"
+    )
     parser.add_argument(
         "--pace",
         choices=("real", "fast"),
@@ -39,6 +46,23 @@ def declare(parser: argparse.ArgumentParser) -> None:
 def run(args: argparse.Namespace) -> int:
     """Run ``watch``."""
     settings, folder = load_settings(args)
+    with contextlib.ExitStack() as stack:
+        if not has_station_file(args) and args.journal is None:
+            scratch = stack.enter_context(tempfile.TemporaryDirectory(prefix="edgewatch-"))
+            settings = without_keeping(settings, Path(scratch))
+        return _watch(args, settings, folder)
+
+
+def without_keeping(settings: Settings, scratch: Path) -> Settings:
+    """A look at a clip without a station leaves nothing behind: its journal is thrown away, pictures are not kept."""
+    return dataclasses.replace(
+        settings,
+        journal=dataclasses.replace(settings.journal, file=str(scratch / "journal.sqlite")),
+        evidence=dataclasses.replace(settings.evidence, folder=""),
+    )
+
+
+def _watch(args: argparse.Namespace, settings: Settings, folder: Path) -> int:
     real = args.pace == "real" or (args.pace is None and settings.source.uri.partition(":")[0] in LIVE)
     station = Station(
         settings,

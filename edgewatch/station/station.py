@@ -112,6 +112,7 @@ class Station:
         self._frames = self._skipped = self._faults = self._faults_in_a_row = 0
         self._parts: list[Part] = []
         self._fault_s: dict[str, float] = {}
+        self._deviations: tuple[str, ...] = ()
         self._link: Link | None = None
         self._relay: RelayKeeper | None = None
         self._waits_for_us = False
@@ -212,13 +213,12 @@ class Station:
             part.start()
         if self._link is not None:
             self._link.start()
-        for deviation in self._source.info.deviations:
-            self._on_notice(deviation)
         for problem in self._unreadable:
             self._on_notice(problem)
         try:
             self._carry_out(self.monitor.begin(self._clock.now()))
             self._tell({"band_unreadable": bool(self._unreadable)}, "; ".join(self._unreadable)[:300])
+            self._check_deviations()
             self._watchdog.ready()
             self._judge()
             self._take_inbox()
@@ -297,7 +297,19 @@ class Station:
         self._carry_out(effects, stamp)
         self._watchdog.progress(self.monitor.status)
 
+    def _check_deviations(self) -> None:
+        """What the camera took otherwise than asked, also after it was opened anew."""
+        deviations = self._source.info.deviations
+        if deviations == self._deviations:
+            return
+        self._deviations = deviations
+        for deviation in deviations:
+            self._on_notice(deviation)
+        wrong = [one for one in deviations if one.startswith(("exposure", "automatic exposure"))]
+        self._complain({"wrong_exposure": bool(wrong)}, "; ".join(wrong)[:300])
+
     def _tick(self) -> None:
+        self._check_deviations()
         stamp = self._clock.now()
         unsent, thinned = self._backlog
         if self._fault_s and stamp.monotonic_s - max(self._fault_s.values()) >= STEADY_S:

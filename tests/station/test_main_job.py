@@ -112,7 +112,7 @@ def test_the_control_line_drops_for_the_foreign_bar(mill: tuple[Path, list[Bar]]
                     "source": {"uri": f"clip:{folder / 'shift.mkv'}", **SIZE},
                     "optics": OPTICS,
                     "judge": {"bands": str(folder / "bands"), "expect": "C80"},
-                    "relay": {"kind": "line", "port": server.url, "control_line": "rts", "read_back_line": "cts"},
+                    "relay": {"kind": "line", "port": server.url, "control_line": "rts", "sense_line": "cts"},
                 }
             )
         )
