@@ -37,6 +37,7 @@ LEVELS = {
     "relay": 1,
     "station": 2,
     "commands": 3,
+    "__main__": 4,
 }
 """Part of the package -> how high it stands; imports run downwards, and within a part."""
 CORE, RIM = 0, 1

@@ -58,8 +58,8 @@ def watch(clip: Path, folder: Path) -> int:
     bands = str(TOP / "calib" / "bands")
     station.write_text((TOP / "calib" / "optics.toml").read_text(encoding="utf-8"), encoding="utf-8")
     words = ["watch", "--station", str(station), "--bands", bands, "--expect", "C45", "--source", f"clip:{clip}"]
-    program = [sys.executable, "-c", "import sys; from edgewatch.commands.cli import main; sys.exit(main())"]
-    process = subprocess.Popen([*program, *words, "--journal", str(folder / "journal.sqlite")])
+    command = [sys.executable, "-m", "edgewatch", *words, "--journal", str(folder / "journal.sqlite")]
+    process = subprocess.Popen(command)
     _, status, usage = os.wait4(process.pid, 0)
     process.returncode = os.waitstatus_to_exitcode(status)
     if process.returncode:
