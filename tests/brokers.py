@@ -80,6 +80,11 @@ class Broker:
         self.config = folder / "mosquitto.conf"
         self.config.write_text("\n".join(config) + "\n")
 
+    @property
+    def up(self) -> bool:
+        """Whether it was started and not stopped."""
+        return self._process is not None
+
     def start(self) -> None:
         """Start it and wait until it answers."""
         with (self.folder / "mosquitto.log").open("ab") as log:
@@ -174,7 +179,7 @@ class Reader:
             if part["topic"].startswith(MARK):
                 self._marked.add(part["topic"])
                 continue
-            self.seen.append(
+            self.take(
                 Seen(
                     topic=part["topic"],
                     qos=part["qos"],
@@ -183,6 +188,10 @@ class Reader:
                     properties=part.get("properties", {}),
                 )
             )
+
+    def take(self, message: Seen) -> None:
+        """Keep one message."""
+        self.seen.append(message)
 
     def ready(self, broker: Broker) -> Reader:
         """Wait until the subscription stands: a message of our own comes through. Again after the broker was away."""

@@ -1,0 +1,146 @@
+"""Kill a recording and sending process at random moments, broker up and down, and compare journal and subscriber."""
+
+from __future__ import annotations
+
+import random
+import signal
+import subprocess
+import sys
+import time
+from collections import Counter
+from dataclasses import dataclass, field
+from pathlib import Path
+
+from edgewatch.link.session import Link
+from edgewatch.record.journal import Journal, Outgoing
+from edgewatch.settings import MqttSettings, StationSettings
+from edgewatch.wire.messages import encode
+from edgewatch.wire.topics import Topics
+from tests.brokers import Broker, Reader, running, wait_until
+from tests.record.entries import stamp
+
+ROOT = Path(__file__).parents[2]
+SITUATIONS = ("broker up", "broker down", "broker stops midway", "broker comes midway")
+
+
+@dataclass
+class Outcome:
+    """What a campaign found. All lists of numbers should be empty."""
+
+    kills: Counter[str] = field(default_factory=Counter)
+    recorded: int = 0
+    repeats: int = 0
+    lost_records: list[int] = field(default_factory=list)
+    not_delivered: list[int] = field(default_factory=list)
+    altered: list[int] = field(default_factory=list)
+    out_of_order: list[int] = field(default_factory=list)
+    second_use: list[int] = field(default_factory=list)
+
+    @property
+    def clean(self) -> bool:
+        """Nothing lost, altered, out of order, or numbered twice."""
+        return not (self.lost_records or self.not_delivered or self.altered or self.out_of_order or self.second_use)
+
+
+def campaign(folder: Path, *, kills: int, seed: int) -> Outcome:
+    """Run ``kills`` kills; the moments and situations follow from ``seed``."""
+    rng = random.Random(seed)
+    outcome = Outcome()
+    broker = Broker(folder / "broker", persistence=True)
+    promised: set[int] = set()
+    payloads: dict[int, bytes] = {}
+    with running(broker):
+        reader = Reader(broker, session="reader").ready(broker)
+        for number in range(kills):
+            situation = SITUATIONS[number % 4]
+            promised |= _one_kill(folder, broker, rng, situation, number)
+            if situation != "broker up" and not broker.up:
+                broker.start()
+            reader.ready(broker)  # what is live is for those who are there
+            _compare_journal(folder, promised, payloads, outcome)
+            outcome.kills[situation] += 1
+        _drain(folder, broker)
+        wait_until(lambda: payloads.keys() <= set(reader.seqs()), "every number arrives", within_s=60)
+        reader.stop()
+    outcome.recorded = len(payloads)
+    _compare_reader(reader, payloads, outcome)
+    return outcome
+
+
+def _one_kill(folder: Path, broker: Broker, rng: random.Random, situation: str, number: int) -> set[int]:
+    """Start the writer, kill it after a random time, and return the numbers that it was given."""
+    if situation in ("broker down", "broker comes midway"):
+        broker.stop()
+    version = "5" if number % 3 else "3.1.1"
+    words = [sys.executable, "-m", "tests.link.writer", str(folder), str(broker.port), version, str(number)]
+    process = subprocess.Popen(words, stdout=subprocess.PIPE, cwd=ROOT)
+    assert process.stdout is not None
+    first = process.stdout.readline() if rng.random() < 0.9 else b""  # now and then before it has recorded anything
+    time.sleep(rng.uniform(0, 0.25))  # the random moment is what is tested
+    if situation == "broker stops midway":
+        broker.stop()
+    elif situation == "broker comes midway":
+        broker.start()
+    time.sleep(rng.uniform(0, 0.5))
+    process.send_signal(signal.SIGKILL)
+    rest, _ = process.communicate()
+    assert process.returncode == -signal.SIGKILL, "the writer ended by itself"
+    lines = (first + rest).split(b"\n")
+    return {int(line) for line in lines[:-1]}  # the last line may be torn
+
+
+def _compare_journal(folder: Path, promised: set[int], payloads: dict[int, bytes], outcome: Outcome) -> None:
+    """Every number that was handed out is in the journal, and what was there before is still the same."""
+    journal = Journal(folder / "station.sqlite", most_mb=2)
+    rows = {row.seq: row for row in journal.rows()}
+    waiting: dict[int, Outgoing] = {message.seq: message for message in journal.pending(10**7)}
+    oldest = min(rows, default=0)
+    for seq in sorted(promised):
+        if seq not in rows and (seq >= oldest or seq not in payloads):
+            outcome.lost_records.append(seq)  # a record that gave way was seen by us before, and is older than all left
+    outcome.lost_records += [seq for seq in waiting if seq not in rows]
+    newest = max(payloads, default=0)
+    for seq, row in rows.items():
+        raw = waiting[seq].payload if seq in waiting else None
+        known = payloads.get(seq)
+        if known is None:
+            if seq <= newest:
+                outcome.second_use.append(seq)
+            payloads[seq] = raw if raw is not None else encode(row.payload)
+        elif known != encode(row.payload):
+            outcome.altered.append(seq)
+    journal.close()
+
+
+def _drain(folder: Path, broker: Broker) -> None:
+    """One last run that is not killed: whatever waits is sent."""
+    journal = Journal(folder / "station.sqlite", most_mb=2)
+    link = Link(
+        MqttSettings(host="127.0.0.1", port=broker.port),
+        Topics.of(StationSettings()),
+        journal,
+        stamp=stamp,
+        version="0",
+    )
+    link.start()
+    wait_until(lambda: journal.status().unsent == 0, "the outbox is empty", within_s=60)
+    link.stop()
+    journal.close()
+
+
+def _compare_reader(reader: Reader, payloads: dict[int, bytes], outcome: Outcome) -> None:
+    """What the subscriber saw is what was recorded, each number first seen in order."""
+    first: dict[int, bytes] = {}
+    for message in reader.seen:
+        payload = message.payload
+        if "seq" not in payload:
+            continue
+        seq, raw = payload["seq"], encode(payload)
+        if seq in first:
+            outcome.repeats += 1
+        elif seq != len(first) + 1:
+            outcome.out_of_order.append(seq)
+        if raw != payloads.get(seq):
+            outcome.altered.append(seq)
+        first.setdefault(seq, raw)
+    outcome.not_delivered += [seq for seq in payloads if seq not in first]
