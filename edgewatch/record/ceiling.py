@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import fcntl
 import os
 import zlib
@@ -59,6 +60,13 @@ class Ceiling:
         file, self._file = self._file, -1
         if file >= 0:
             os.close(file)
+
+    def abandon(self) -> None:
+        """Close it, and take it away where it holds nothing yet: no journal came about."""
+        if self._file >= 0 and self.top == 0:
+            with contextlib.suppress(OSError):
+                self._path.unlink()
+        self.close()
 
 
 def _slot(top: int) -> bytes:

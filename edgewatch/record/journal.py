@@ -203,7 +203,7 @@ class Journal:
             with self._lock:
                 self._whole()
         except BaseException:
-            self._ceiling.close()
+            self._ceiling.abandon()
             raise
 
     # ------------------------------------------------------------------ writing
