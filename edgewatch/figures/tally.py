@@ -318,25 +318,40 @@ class Tally:
         return unseen / (unseen + sums.track_mm)
 
     def _speed(self) -> float:
-        """Speed near the wheel (m/s): medians of streak length along the axis, extrapolated to the contact."""
+        """Speed near the wheel (m/s): usual streak length along the axis, extrapolated to the contact.
+
+        Usual is the mode of length, weighted by length: pieces of broken streaks and arms of bursts are many and
+        short, whole exposures carry the track and are alike. Nearer than three quarters of a streak to the contact
+        most streaks are born within the exposure, so the fit begins there.
+        """
         counts = self._lengths.sum(axis=1)
         used = np.nonzero(counts >= LEAST_SPEED_STREAKS)[0]
         if not used.size:
             return math.nan
-        used = used[: max(3, SPEED_BINS // 4)]  # near the wheel: drag has not yet sorted the particles by size
-        running = np.cumsum(self._lengths[used], axis=1)
-        half = counts[used] / 2.0
-        at = np.array([int(np.searchsorted(row, h)) for row, h in zip(running, half, strict=True)])
-        rows = np.arange(len(used))
-        before = np.where(at > 0, running[rows, np.maximum(at - 1, 0)], 0)
-        share = (half - before) / np.maximum(self._lengths[used, at], 1)
-        median = LENGTH_LOW_MM * np.exp((at + share) * LENGTH_STEP)
-        reach = self._low_mm + self._step_mm * AXIS_BINS
-        middle = (used + 0.5) / SPEED_BINS * reach
-        weight = np.sqrt(counts[used])
+        weights = self._lengths[used] * np.exp(np.arange(LENGTH_BINS) * LENGTH_STEP)
+        usual = np.array([_mode(row) for row in weights])
+        middle = (used + 0.5) / SPEED_BINS * (self._low_mm + self._step_mm * AXIS_BINS)
+        whole = middle >= 0.75 * usual.max()
+        if whole.any():
+            used, usual, middle = used[whole], usual[whole], middle[whole]
+        # near the wheel: drag has not yet sorted the particles by size
+        near = slice(0, max(3, SPEED_BINS // 4))
+        used, usual, middle = used[near], usual[near], middle[near]
         if len(used) >= 3:
-            slope, contact = np.polyfit(middle, np.log(median), 1, w=weight)
-            length = math.exp(contact) if slope < 0.0 else float(np.average(median, weights=counts[used]))
+            slope, contact = np.polyfit(middle, np.log(usual), 1, w=np.sqrt(counts[used]))
+            length = math.exp(contact) if slope < 0.0 else float(np.average(usual, weights=counts[used]))
         else:
-            length = float(np.average(median, weights=counts[used]))
+            length = float(np.average(usual, weights=counts[used]))
         return length / self.optics.exposure_ms
+
+
+_SMOOTH = np.array([1.0, 2.0, 3.0, 4.0, 3.0, 2.0, 1.0]) / 16.0
+
+
+def _mode(weights: NDArray[np.float64]) -> float:
+    """Length (mm) at the mode of a histogram of its logarithm: the centre of the heaviest stretch."""
+    at = int(np.convolve(weights, _SMOOTH, "same").argmax())
+    low = max(0, at - 4)
+    part = weights[low : at + 5]
+    centre = low + float(np.arange(len(part)) @ part) / float(part.sum()) + 0.5
+    return LENGTH_LOW_MM * math.exp(centre * LENGTH_STEP)
