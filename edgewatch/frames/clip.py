@@ -149,6 +149,8 @@ def read_picture(file: Path) -> NDArray[np.uint8]:
         if file.stat().st_size > MOST_PICTURE_BYTES:
             raise DeviceError(f"picture {file}: larger than {MOST_PICTURE_BYTES} bytes")
         content = np.frombuffer(file.read_bytes(), dtype=np.uint8)
+        if max(_png_sides(content[:24].tobytes())) > MAX_SIDE_PX:  # before gigabytes are set aside for it
+            raise DeviceError(f"picture {file}: larger than {MAX_SIDE_PX} px a side, or damaged")
         with overhear() as heard:
             decoded = cv2.imdecode(content, cv2.IMREAD_UNCHANGED) if content.size else None
         damage = [line for line in heard if is_damage(line)]
@@ -164,6 +166,13 @@ def read_picture(file: Path) -> NDArray[np.uint8]:
         raise DeviceError(f"picture {file}: cannot be read: {error.strerror or error}") from error
     except (cv2.error, ValueError) as error:
         raise DeviceError(f"picture {file}: cannot be decoded: {one_line(error)}") from error
+
+
+def _png_sides(head: bytes) -> tuple[int, int]:
+    """Width and height in the header of a PNG (PNG specification, 11.2.1); zeros for other kinds."""
+    if head[:8] != b"\x89PNG\r\n\x1a\n" or head[12:16] != b"IHDR":
+        return 0, 0
+    return int.from_bytes(head[16:20], "big"), int.from_bytes(head[20:24], "big")
 
 
 def _is_whole_jpeg(content: bytes) -> bool:

@@ -95,7 +95,7 @@ def test_folder_of_pictures_in_name_order(tmp_path: Path) -> None:
     assert worst(read_all(f"clip:{folder}"), pictures) == 0
 
 
-@pytest.mark.parametrize("damage", ["cut", "empty", "size", "flipped", "cut jpeg"])
+@pytest.mark.parametrize("damage", ["cut", "empty", "size", "flipped", "huge", "cut jpeg"])
 def test_damaged_picture_is_named(tmp_path: Path, damage: str) -> None:
     """A picture cut short, empty, altered, or of another size gives an error of one line with the file's name."""
     folder = write_pictures(tmp_path / "clip", noise_pictures(3))
@@ -108,8 +108,8 @@ def test_damaged_picture_is_named(tmp_path: Path, damage: str) -> None:
         whole = cv2.imencode(".jpg", noise_pictures(1)[0])[1].tobytes()
         victim.write_bytes(whole[: len(whole) // 2])
     else:
-        content[3000] ^= 0x40
-        victim.write_bytes({"cut": content[:40], "empty": b"", "flipped": content}[damage])
+        content[18 if damage == "huge" else 3000] ^= 0x40  # in the width, in the pixels
+        victim.write_bytes({"cut": content[:40], "empty": b""}.get(damage, content))
     with pytest.raises(DeviceError, match=r"00000[01]\.(png|jpg)") as caught:
         read_all(str(folder))
     assert victim.name in str(caught.value)
