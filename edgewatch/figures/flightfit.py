@@ -29,6 +29,8 @@ ALONG_PX, ACROSS_PX = 3.0, 2.0
 """... or within these distances (px), whichever is more."""
 LONGEST_STEP_PX = 80.0
 """A particle that moves further than this from frame to frame cannot be told from its neighbours."""
+SLOWEST_PERIOD_S = 0.0025
+"""Below 400 frames a second only the largest particles, which glow longest, show streaks enough: no sample of all."""
 LEAST_FRAMES = 6
 """A chain of fewer streaks says nothing about drag: position noise of half a pixel swamps the curvature."""
 MOST_CHAINS = 20_000
@@ -55,7 +57,7 @@ class FlightFit:
 
     ``chains``: linked streaks of at least six frames; ``particles``: of these, fitted well. ``radius_um`` and
     ``launch_speed_m_s``: medians with quartiles; ``residual_px``: median rms of the fits.
-    ``usable``: whether the frame rate is high enough to link at all.
+    ``usable``: whether the frame rate is high enough; otherwise nothing is fitted.
     """
 
     chains: int
@@ -141,8 +143,8 @@ class FlightLinker:
     def fit(self) -> FlightFit:
         """Fit all chains so far. Cost: about a millisecond a chain."""
         chains = self._done + [chain for chain in self._open if len(chain.t_s) >= LEAST_FRAMES]
-        usable = self._streaks == 0 or self._long < 0.5 * self._streaks
-        radius, speed, residual = _fit_chains(chains, self.optics)
+        usable = self.optics.period_s <= SLOWEST_PERIOD_S and self._long <= 0.5 * self._streaks
+        radius, speed, residual = _fit_chains(chains if usable else [], self.optics)
         good = np.isfinite(residual) & (residual <= MOST_RESIDUAL_PX)
         # a radius at the end of those tried is a curvature that the noise has made
         good &= (radius > RADII_UM[0] * 1.01) & (radius < RADII_UM[-1] / 1.01)

@@ -59,12 +59,16 @@ def test_radius_and_launch_speed_come_back(radius_um: float, wheel_m_s: float) -
 
 
 def test_slow_frames_are_said_to_be_unusable() -> None:
-    """At 200 frames a second a particle moves further than its neighbours are away."""
-    found = fit(radius_um=45.0, wheel_m_s=28.0, optics=replace(OPTICS, fps=200.0, exposure_ms=2.5), frames=40)
-    assert not found.usable
-    assert found.particles == 0
-    assert math.isnan(found.radius_um)
-    assert math.isnan(found.launch_speed_m_s)
+    """At 200 frames a second few particles show six streaks, at 500 and a fine scale they move too far to be linked."""
+    for slow in (
+        replace(OPTICS, fps=200.0, exposure_ms=2.5),
+        replace(OPTICS, fps=500.0, exposure_ms=1.8, mm_per_px=0.4, contact_px=(-300.0, 200.0)),
+    ):
+        found = fit(radius_um=45.0, wheel_m_s=28.0, optics=slow, frames=30)
+        assert not found.usable
+        assert found.particles == 0
+        assert math.isnan(found.radius_um)
+        assert math.isnan(found.launch_speed_m_s)
 
 
 def test_nothing_seen_nothing_fitted() -> None:
