@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import argparse
+import dataclasses
 import json
 import math
 from collections.abc import Sequence
@@ -11,9 +12,10 @@ from typing import Any, TextIO
 
 import numpy as np
 
-from edgewatch.commands.measuring import Measurement, figures_body, measure_clip
+from edgewatch.commands.measuring import Measurement, Watcher, figures_body, measure_clip
 from edgewatch.commands.options import add_optics, add_station, load_settings
 from edgewatch.errors import DeviceError
+from edgewatch.figures.flightfit import FlightFit, FlightLinker
 from edgewatch.figures.meter import BarDone
 from edgewatch.sight.detections import Detections
 
@@ -29,6 +31,11 @@ def declare(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--detections", metavar="OUT.jsonl", help="write streaks and bursts of every frame, one JSON line a frame"
     )
+    parser.add_argument(
+        "--flight",
+        action="store_true",
+        help="link streaks over frames and fit particle radius and launch speed (400 frames/s or more)",
+    )
 
 
 def run(args: argparse.Namespace) -> int:
@@ -37,9 +44,9 @@ def run(args: argparse.Namespace) -> int:
     out = _open(args.detections) if args.detections else None
     try:
         for clip in args.clips:
-            watcher = (lambda index, t_s, seen: _write(out, index, t_s, seen)) if out else None
-            found = measure_clip(clip, settings, watcher=watcher)
-            _print(found, as_json=args.json, named=len(args.clips) > 1)
+            linker = FlightLinker(settings.sight_optics()) if args.flight else None
+            found = measure_clip(clip, settings, watcher=_watcher(out, linker))
+            _print(found, linker.fit() if linker else None, as_json=args.json, named=len(args.clips) > 1)
     except OSError as error:
         raise DeviceError(f"{args.detections}: cannot be written: {error.strerror or error}") from error
     finally:
@@ -53,6 +60,20 @@ def _open(name: str) -> TextIO:
         return Path(name).open("w", encoding="utf-8")
     except OSError as error:
         raise DeviceError(f"{name}: cannot be written: {error.strerror or error}") from error
+
+
+def _watcher(out: TextIO | None, linker: FlightLinker | None) -> Watcher | None:
+    """What is done with the detections of every frame besides the figures."""
+    if out is None and linker is None:
+        return None
+
+    def watch(index: int, t_s: float, seen: Detections) -> None:
+        if out is not None:
+            _write(out, index, t_s, seen)
+        if linker is not None:
+            linker.add(seen.streaks, seen.streak_flags, t_s)
+
+    return watch
 
 
 def _write(out: TextIO, index: int, t_s: float, seen: Detections) -> None:
@@ -86,18 +107,40 @@ def _contact_body(contact: BarDone) -> dict[str, Any]:
     return body | {"begin_s": contact.begin_s, "end_s": contact.end_s, "frames": frames, "seconds": seconds}
 
 
+def _flight_body(fit: FlightFit) -> dict[str, Any]:
+    """The fit under its names, NaN as ``None``."""
+    values = dataclasses.asdict(fit)
+    return {name: None if isinstance(v, float) and math.isnan(v) else v for name, v in values.items()}
+
+
+def _flight_line(fit: FlightFit) -> str:
+    if not fit.usable:
+        return "flight: the frame rate is too low to follow particles; record a clip at 400 frames/s or more"
+    if not fit.particles:
+        return f"flight: no particle could be followed over enough frames ({fit.chains} chains)"
+    return (
+        f"flight: {fit.particles} particles, radius {fit.radius_um:.0f} um ({fit.radius_low_um:.0f} to "
+        f"{fit.radius_high_um:.0f}), launch speed {fit.launch_speed_m_s:.1f} m/s ({fit.launch_speed_low_m_s:.1f} to "
+        f"{fit.launch_speed_high_m_s:.1f}), medians and quartiles; residual {fit.residual_px:.2f} px"
+    )
+
+
 def _without(body: dict[str, Any], names: Sequence[str]) -> dict[str, Any]:
     return {name: value for name, value in body.items() if name not in names}
 
 
-def _print(found: Measurement, *, as_json: bool, named: bool) -> None:
+def _print(found: Measurement, fit: FlightFit | None, *, as_json: bool, named: bool) -> None:
     body = measurement_body(found)
     if as_json:
+        if fit is not None:
+            body["flight"] = _flight_body(fit)
         print(json.dumps(body, allow_nan=False), flush=True)
         return
     if named:
         print(found.clip)
     times = body["processing_ms"]
+    if fit is not None:
+        print(_flight_line(fit))
     print(f"{found.frames} frames, {found.seconds:.2f} s, {len(found.contacts)} contacts")
     print(_line("whole", body))
     for number, contact in enumerate(body["contacts"], 1):
