@@ -25,6 +25,8 @@ Array = NDArray[Any]
 
 SAMPLE_PX = 0.6
 """Longest way between two samples along a streak (px): below the point spread, so the line is smooth."""
+MOST_SAMPLES = 4096
+"""Samples along one streak at most: at a scale of micrometres a streak would be a million pixels long."""
 PAD_PX = 8
 """Margin kept outside the picture, whose light the lens spreads into it."""
 VISIBLE_SNR = 1.0
@@ -128,8 +130,7 @@ class Scene:
         speed = length / duration  # px/s
         peak = np.max([swarm.look_up("log_e_s", *where) for where in ends], axis=0)
         dim = self._height(np.exp(peak) / np.maximum(speed, 1e-3)) < 0.3
-        number = np.where(dim, 1, np.ceil(length / SAMPLE_PX)).astype(np.int64)
-        number = np.maximum(number, 1)
+        number = np.where(dim, 1, np.clip(np.ceil(length / SAMPLE_PX), 1, MOST_SAMPLES)).astype(np.int64)
         starts = np.cumsum(number) - number
         owner = np.repeat(np.arange(len(alive)), number)
         place = np.arange(len(owner)) - starts[owner]
@@ -199,7 +200,7 @@ class Scene:
         vx, vy = arms["vx"][alive], arms["vy"][alive]
         way = stop * (np.exp(-(begin - birth) / stop) - np.exp(-(end - birth) / stop))
         length = np.hypot(vx, vy) * way
-        number = np.maximum(np.ceil(length / SAMPLE_PX), 4).astype(np.int64)
+        number = np.clip(np.ceil(length / SAMPLE_PX), 4, MOST_SAMPLES).astype(np.int64)
         starts = np.cumsum(number) - number
         owner = np.repeat(np.arange(len(alive)), number)
         place = np.arange(len(owner)) - starts[owner]

@@ -267,6 +267,28 @@ def test_between_bars_there_is_nothing() -> None:
     assert (count[t_s > 0.98] == 0).all()
 
 
+@pytest.mark.parametrize(
+    "optics",
+    [
+        replace(OPTICS, mm_per_px=0.001),
+        replace(OPTICS, mm_per_px=100.0),
+        replace(OPTICS, contact_px=(-60_000.0, 60_000.0)),
+        replace(OPTICS, fps=1.0, exposure_ms=1000.0),
+        replace(OPTICS, fps=100_000.0, exposure_ms=0.001),
+        replace(OPTICS, width_px=16, height_px=16),
+    ],
+)
+def test_any_allowed_optics_give_pictures(optics: Optics) -> None:
+    """From micrometres to metres a pixel, from microseconds to a second: pictures and finite truth, no warning."""
+    source = stream(optics=optics, sparks_per_s=1000.0)
+    for _ in range(2):
+        picture, truth = source.frame()
+        assert picture.shape == (optics.height_px, optics.width_px)
+        assert np.isfinite(truth.streaks).all()
+        assert np.isfinite(truth.streak_snr).all()
+        assert math.isfinite(truth.track_m)
+
+
 def test_skipped_frames_pass_unseen() -> None:
     """After skipping, the time goes on and the stream is there."""
     source = stream()
