@@ -53,7 +53,8 @@ _TABLE = {
 }
 """Columns of the table for people; CSV and JSON lines hold everything."""
 
-_AGO = re.compile(r"(\d{1,6})([smhd])")
+_AGO = re.compile(r"([0-9]{1,6})([smhd])")
+_DATE = re.compile(r"[0-9]{4}-[0-9]{2}-[0-9]{2}")
 _UNIT_S = {"s": 1, "m": 60, "h": 3600, "d": 86400}
 
 
@@ -87,10 +88,13 @@ def run(args: argparse.Namespace) -> int:
     if args.confirm:
         return _confirm(path, args)
     kinds = tuple(dict.fromkeys(WHAT[word] for word in args.what or ["bars"]))
-    findings = reading.read_findings(path) if "bar" in kinds else {}
-    rows = reading.read_records(
-        path, kinds, since_utc_s=_time("--since", args.since), until_utc_s=_time("--until", args.until), last=args.last
+    now_utc_s = time.time()
+    since_utc_s, until_utc_s = (
+        None if text is None else read_when(option, text, now_utc_s=now_utc_s)
+        for option, text in (("--since", args.since), ("--until", args.until))
     )
+    rows = reading.read_records(path, kinds, since_utc_s=since_utc_s, until_utc_s=until_utc_s, last=args.last)
+    findings = reading.read_findings(path) if "bar" in kinds else {}
     records = (_record(row, findings) for row in rows)
     if args.json:
         for record in records:
@@ -102,14 +106,13 @@ def run(args: argparse.Namespace) -> int:
     return 0
 
 
-def _time(option: str, text: str | None) -> float | None:
-    if text is None:
-        return None
+def read_when(option: str, text: str, *, now_utc_s: float) -> float:
+    """Return seconds since 1970 UTC of a time, a date, or how long ago. Raises ``SettingsError`` naming ``option``."""
     ago = _AGO.fullmatch(text)
     if ago:
-        return time.time() - int(ago[1]) * _UNIT_S[ago[2]]
+        return now_utc_s - int(ago[1]) * _UNIT_S[ago[2]]
     try:
-        return read_time(f"{text}T00:00:00Z" if re.fullmatch(r"[\d-]{10}", text) else text)
+        return read_time(f"{text}T00:00:00Z" if _DATE.fullmatch(text) else text)
     except ValueError as error:
         raise SettingsError(f"{option} {text}: {error}; or a date, or how long ago, such as 8h") from None
 

@@ -234,6 +234,22 @@ def test_a_journal_of_a_newer_version_is_refused_and_left_alone(file: Path):
     assert not list(file.parent.glob("*.damaged*"))
 
 
+@pytest.mark.parametrize(
+    ("at", "content"),
+    [(18, b"\x03\x03"), (18, b"\x02\x01"), (44, b"\x00\x00\x00\x09"), (16, b"\x00\x01"), (56, b"\x00\x00\x00\x02")],
+    ids=["read only", "mixed versions", "schema format", "page size", "UTF-16"],
+)
+def test_headers_that_fuzzing_found(file: Path, at: int, content: bytes):
+    """Single fields of the header (section 1.3 of the file format) that SQLite takes for anything but damage."""
+    good = _filled(file)
+    file.write_bytes(good[:at] + content + good[at + len(content) :])
+    told: list[Path] = []
+    journal = Journal(file, on_set_aside=lambda path, reason: told.append(path))
+    assert journal.append([alert()], stamp=stamp())[0] > 60
+    assert len(told) == 1
+    journal.close()
+
+
 @settings(max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
 @given(
     changes=st.lists(st.tuples(st.floats(0, 1, exclude_max=True), st.binary(min_size=1, max_size=64)), max_size=8),
