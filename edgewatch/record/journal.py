@@ -142,14 +142,17 @@ class DamagedError(Exception):
     """The file can be opened and read, and what it holds is not right."""
 
 
+_WORLD = ("locked", "busy", "full", "I/O", "unable to open", "readonly", "interrupted", "out of memory", "denied")
+"""Words in SQLite's texts of errors that lie outside the file. Python 3.10 does not give the error's code."""
+
+
 def translated(error: sqlite3.Error, path: Path) -> Exception:
     """Return what a SQLite error means: ``DeviceError`` for the world's failures, ``DamagedError`` for the file's."""
     text = str(error)
-    if isinstance(error, sqlite3.OperationalError) and not text.startswith(("no such", "Could not decode", "near ")):
+    outside = isinstance(error, sqlite3.OperationalError) and any(word in text for word in _WORLD)
+    if outside or isinstance(error, (sqlite3.ProgrammingError, sqlite3.InterfaceError)):
         remedy = "free some space" if "full" in text else "see that it is there, writable and not in use"
         return DeviceError(f"journal {path}: {text}; {remedy}")
-    if isinstance(error, (sqlite3.ProgrammingError, sqlite3.InterfaceError)):
-        return DeviceError(f"journal {path}: {text}")
     return DamagedError(text)
 
 
@@ -555,10 +558,11 @@ def _head(path: Path) -> bytes:
 def _is_sqlite(path: Path) -> bool:
     """Whether the file is empty or begins as section 1.3 of SQLite's file format has it.
 
-    SQLite itself takes a file shorter than its header for an empty one, and would write over it.
+    SQLite itself takes a file shorter than its header for an empty one and would write over it, and opens one with
+    unknown format versions (bytes 18, 19) for reading only.
     """
     head = _head(path)
-    return not head or head.startswith(b"SQLite format 3\0")
+    return not head or (head.startswith(b"SQLite format 3\0") and head[18:20] in (b"\1\1", b"\2\2"))
 
 
 def _has_our_header(path: Path) -> bool:
