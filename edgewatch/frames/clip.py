@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from edgewatch.errors import DeviceError
-from edgewatch.frames.container import missing_bytes
+from edgewatch.frames.container import find_jpeg_damage, find_png_damage, missing_bytes
 from edgewatch.frames.luminance import one_line, open_luminance
 from edgewatch.frames.mono import make_mono
 from edgewatch.frames.quiet import hush, is_damage, overhear
@@ -149,13 +149,13 @@ def read_picture(file: Path) -> NDArray[np.uint8]:
         if file.stat().st_size > MOST_PICTURE_BYTES:
             raise DeviceError(f"picture {file}: larger than {MOST_PICTURE_BYTES} bytes")
         content = np.frombuffer(file.read_bytes(), dtype=np.uint8)
-        if max(_png_sides(content[:24].tobytes())) > MAX_SIDE_PX:  # before gigabytes are set aside for it
-            raise DeviceError(f"picture {file}: larger than {MAX_SIDE_PX} px a side, or damaged")
+        whole = content.tobytes()
+        damage = [problem for problem in (find_png_damage(whole), find_jpeg_damage(whole)) if problem]
+        if damage:
+            raise DeviceError(f"picture {file}: {damage[0]}")
         with overhear() as heard:
             decoded = cv2.imdecode(content, cv2.IMREAD_UNCHANGED) if content.size else None
         damage = [line for line in heard if is_damage(line)]
-        if content[:2].tobytes() == b"\xff\xd8" and not _is_whole_jpeg(content.tobytes()):
-            damage.append("JPEG without its end")
         if decoded is None or damage:
             why = f" ({damage[0]})" if damage else ""
             raise DeviceError(f"picture {file}: empty, damaged, or not a picture{why}")
@@ -166,18 +166,6 @@ def read_picture(file: Path) -> NDArray[np.uint8]:
         raise DeviceError(f"picture {file}: cannot be read: {error.strerror or error}") from error
     except (cv2.error, ValueError) as error:
         raise DeviceError(f"picture {file}: cannot be decoded: {one_line(error)}") from error
-
-
-def _png_sides(head: bytes) -> tuple[int, int]:
-    """Width and height in the header of a PNG (PNG specification, 11.2.1); zeros for other kinds."""
-    if head[:8] != b"\x89PNG\r\n\x1a\n" or head[12:16] != b"IHDR":
-        return 0, 0
-    return int.from_bytes(head[16:20], "big"), int.from_bytes(head[20:24], "big")
-
-
-def _is_whole_jpeg(content: bytes) -> bool:
-    """Whether an end marker follows the last scan (ITU-T T.81, B.1.1.3); OpenCV 4 fills a missing rest with grey."""
-    return content.rfind(b"\xff\xd9") > content.rfind(b"\xff\xda") >= 0
 
 
 def check_size(what: str, picture: NDArray[np.uint8], info: SourceInfo) -> None:

@@ -1,16 +1,24 @@
-"""How long a video file says it is, so that one that lost its end is not taken for a shorter recording.
+"""Whether a file is whole, by what it states of itself.
 
-Neither FFmpeg nor OpenCV tells a cut file from a whole one: both end without an error. The number of frames that
-OpenCV reports is no help, being duration times rate, where the duration may be that of a longer sound track.
+A video that lost its end must not be taken for a shorter recording. Neither FFmpeg nor OpenCV tells it from a whole
+one: both end without an error. The number of frames that OpenCV reports is no help, being duration times rate, where
+the duration may be that of a longer sound track.
+
+A damaged picture must not be taken for a whole one, nor make a decoder set gigabytes aside for a length that is wrong.
 """
 
 from __future__ import annotations
 
+import struct
+import zlib
 from pathlib import Path
 from typing import BinaryIO
 
+from edgewatch.sight.optics import MAX_SIDE_PX
+
 _EBML, _SEGMENT = b"\x1a\x45\xdf\xa3", b"\x18\x53\x80\x67"
 """Element identifiers of Matroska and WebM (RFC 8794 section 11.2.1, RFC 9559 section 5.1)."""
+_PNG = b"\x89PNG\r\n\x1a\n"
 _MOST_BOXES = 10_000
 """Top-level boxes of an MP4; fragments make a few a second."""
 
@@ -80,3 +88,37 @@ def _boxes(file: BinaryIO, size: int) -> int:
             return 0
         at += length
     return at
+
+
+def find_png_damage(content: bytes) -> str:
+    """What is wrong with a PNG; empty if nothing is, or it is no PNG.
+
+    Every chunk must fit into the file and match its check sum, up to the end chunk (PNG specification, 5.3).
+    """
+    if not content.startswith(_PNG):
+        return ""
+    at = len(_PNG)
+    while at + 12 <= len(content):
+        (length,) = struct.unpack_from(">I", content, at)
+        kind, end = content[at + 4 : at + 8], at + 8 + length
+        if end + 4 > len(content):
+            break
+        if zlib.crc32(content[at + 4 : end]) != int.from_bytes(content[end : end + 4], "big"):
+            return "damaged: a check sum is wrong"
+        if kind == b"IHDR" and max(struct.unpack_from(">II", content, at + 8)) > MAX_SIDE_PX:
+            return f"larger than {MAX_SIDE_PX} px a side"
+        if kind == b"IEND":
+            return ""
+        at = end + 4
+    return "damaged or cut short: its end is missing"
+
+
+def find_jpeg_damage(content: bytes) -> str:
+    """What is wrong with the frame of a JPEG; empty if nothing is, or it is no JPEG.
+
+    An end marker follows the last scan (ITU-T T.81, B.1.1.3); OpenCV 4 fills a missing rest with grey.
+    """
+    if not content.startswith(b"\xff\xd8"):
+        return ""
+    whole = content.rfind(b"\xff\xd9") > content.rfind(b"\xff\xda") >= 0
+    return "" if whole else "damaged or cut short: its end is missing"

@@ -19,10 +19,15 @@ _OPENCV_SILENT = 0
 
 _ONE_AT_A_TIME = threading.Lock()
 _MOST_HEARD = 65536
-_LIBRARIES = re.compile(r"libpng |Corrupt JPEG|Premature end of JPEG|Invalid SOS|Unsupported |TIFF|imdecode_")
+_LIBRARIES = re.compile(
+    "libpng |Corrupt JPEG|Premature end of JPEG|Invalid SOS|Inconsistent progression|Unsupported |Warning: unknown JFIF|"
+    "Warning: thumbnail|Unknown Adobe|Unrecognized component|TIFF|imdecode_"
+)
 """How lines of libpng, libjpeg, libtiff and OpenCV 4's decoder begin."""
-_HARMLESS = re.compile(r"libpng warning|Corrupt JPEG data: \d extraneous")
-"""Colour profiles that nobody uses, and the few stray bytes that many cameras write before an end marker."""
+_HARMLESS = re.compile(
+    r"libpng warning|Warning: |Unknown Adobe|Unrecognized component|Corrupt JPEG data: \d extraneous"
+)
+"""Odd headers and colour profiles, and the few stray bytes that many cameras write before an end marker."""
 
 
 def hush() -> None:

@@ -139,7 +139,7 @@ def main() -> int:
         targets: dict[str, tuple[Target, int]] = {
             "relay answers": (relay_target, 1000),
             "raw pipes": (pipe_target, 200),
-            **{f"pictures {kind}": (picture_target(folder, kind), 50) for kind in (".png", ".jpg", ".tif", ".pgm")},
+            **{f"pictures {kind}": (picture_target(folder, kind), 200) for kind in (".png", ".jpg", ".tif", ".pgm")},
             "clips .mkv ffv1": (clip_target(folder, ".mkv", grey), 10),
             "clips .avi ffv1": (clip_target(folder, ".avi", grey), 10),
             "clips .mp4 h264": (clip_target(folder, ".mp4", ("-c:v", "libx264", "-qp", "0")), 10),

@@ -2,14 +2,17 @@
 
 from __future__ import annotations
 
+import struct
 import subprocess
+import zlib
 from pathlib import Path
 
+import cv2
 import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
-from edgewatch.frames.container import missing_bytes
+from edgewatch.frames.container import find_jpeg_damage, find_png_damage, missing_bytes
 from tests.clips import FFV1_GREY, noise_pictures, write_clip
 
 KINDS = {
@@ -57,3 +60,34 @@ def test_any_bytes_give_a_number(tmp_path: Path, head: bytes, rest: bytes) -> No
     path = tmp_path / "any"
     path.write_bytes(head + rest)
     assert missing_bytes(path) >= 0
+
+
+def encoded(suffix: str) -> bytes:
+    """A picture of noise as a file."""
+    return bytes(cv2.imencode(suffix, noise_pictures(1, height=24, width=32)[0])[1].tobytes())
+
+
+@given(place=st.integers(8, 800), bit=st.integers(0, 7))
+def test_any_flipped_bit_of_a_png_is_found(place: int, bit: int) -> None:
+    """Lengths, kinds, contents and check sums are all covered; only the signature is left to who reads it."""
+    content = bytearray(encoded(".png"))
+    assert find_png_damage(bytes(content)) == ""
+    content[place % (len(content) - 8) + 8] ^= 1 << bit
+    assert "damaged" in find_png_damage(bytes(content)) or "larger" in find_png_damage(bytes(content))
+
+
+@given(cut=st.integers(1, 700))
+def test_any_cut_of_a_picture_is_found(cut: int) -> None:
+    """A PNG or JPEG that lost its end is found; what lies behind its end does no harm."""
+    png, jpeg = encoded(".png"), encoded(".jpg")
+    assert find_png_damage(png + b"more") == "" == find_jpeg_damage(jpeg + b"more")
+    assert find_png_damage(png[:-cut]) if len(png) - cut >= 8 else True
+    assert find_jpeg_damage(jpeg[: max(2, len(jpeg) - max(cut, 2))])
+
+
+def test_other_files_are_not_judged() -> None:
+    """What is neither PNG nor JPEG is left to its decoder; a PNG beyond all bounds is refused unread."""
+    assert find_png_damage(b"P5 1 1 255 x") == "" == find_jpeg_damage(b"P5 1 1 255 x")
+    header = struct.pack(">IIBBBBB", 40_000, 24, 8, 0, 0, 0, 0)
+    chunk = struct.pack(">I", len(header)) + b"IHDR" + header + struct.pack(">I", zlib.crc32(b"IHDR" + header))
+    assert "larger than" in find_png_damage(encoded(".png")[:8] + chunk + encoded(".png")[33:])
