@@ -20,8 +20,8 @@ _OPENCV_SILENT = 0
 _ONE_AT_A_TIME = threading.Lock()
 _MOST_HEARD = 65536
 _LIBRARIES = re.compile(
-    "libpng |Corrupt JPEG|Premature end of JPEG|Invalid SOS|Inconsistent progression|Unsupported |Warning: unknown JFIF|"
-    "Warning: thumbnail|Unknown Adobe|Unrecognized component|TIFF|imdecode_"
+    "libpng |Corrupt JPEG|Premature end of JPEG|Invalid SOS|Inconsistent progression|Unsupported |"
+    "Warning: unknown JFIF|Warning: thumbnail|Unknown Adobe|Unrecognized component|TIFF|imdecode_"
 )
 """How lines of libpng, libjpeg, libtiff and OpenCV 4's decoder begin."""
 _HARMLESS = re.compile(
