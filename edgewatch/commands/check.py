@@ -44,6 +44,8 @@ RESULTS = (GOOD, NOTE, UNFIT, MISSING, WRONG)
 
 LOOK_S = 3.0
 """How long a live source is watched (s): enough for its rate to 1 % at 100 frames a second."""
+OPEN_S = 10.0
+"""Longest wait for the first picture (s): a camera takes its time to start."""
 LOOK_FRAMES = 64
 """How many frames of a clip are looked at."""
 RATE_SHARE = 0.15
@@ -126,7 +128,7 @@ def _source(settings: Settings, folder: Path) -> Iterator[Finding]:
     if info.live:
         source = Newest(source)
     try:
-        frames, seconds = _look(source, live=info.live)
+        frames, rate = _look(source, live=info.live)
     finally:
         source.close()
     name = settings.source.uri
@@ -146,17 +148,18 @@ def _source(settings: Settings, folder: Path) -> Iterator[Finding]:
         yield Finding(check="source", result=UNFIT, detail=detail)
         return
     if info.live:
-        yield _rate(name, frames, seconds, settings.optics.fps, size)
+        yield _rate(name, rate, settings.optics.fps, size)
     else:
         yield Finding(check="source", result=GOOD, detail=f"{name}: {size}")
     yield from _pictures(frames, settings)
 
 
 def _look(source: Source, *, live: bool) -> tuple[list[Frame], float]:
-    """Frames of a few seconds, or the first of a clip, and the time from the first to the last (s)."""
+    """The last frames of a few seconds, or the first of a clip, and the rate at which they came (frames/s, or NaN)."""
     frames: list[Frame] = []
-    begin_s = last_s = time.monotonic()
-    end_s = begin_s + 10.0 + LOOK_S  # a camera takes its time to start
+    first: tuple[int, float] | None = None
+    rate = float("nan")
+    end_s = time.monotonic() + OPEN_S
     while time.monotonic() < end_s and (live or len(frames) < LOOK_FRAMES):
         try:
             frame = source.read(end_s - time.monotonic())
@@ -164,17 +167,17 @@ def _look(source: Source, *, live: bool) -> tuple[list[Frame], float]:
             break
         if frame is None:
             break
-        last_s = time.monotonic()
-        if not frames:
-            begin_s = last_s
-            end_s = begin_s + LOOK_S if live else end_s
-        frames = [*frames[-LOOK_FRAMES:], frame]
-    return frames, last_s - begin_s
+        now_s = time.monotonic()
+        if first is None:
+            first = (frame.index, now_s)
+            end_s = now_s + LOOK_S if live else end_s
+        elif now_s > first[1]:
+            rate = (frame.index - first[0]) / (now_s - first[1])
+        frames = [*frames[-LOOK_FRAMES + 1 :], frame]
+    return frames, rate
 
 
-def _rate(name: str, frames: list[Frame], seconds: float, wanted: float, size: str) -> Finding:
-    delivered = frames[-1].index
-    rate = delivered / seconds if seconds > 0 and delivered > 1 else float("nan")
+def _rate(name: str, rate: float, wanted: float, size: str) -> Finding:
     detail = f"{name}: {size}, {rate:.1f} frames/s (optics.fps is {wanted:g})"
     right = abs(rate - wanted) <= RATE_SHARE * wanted
     return Finding(check="source", result=GOOD if right else UNFIT, detail=detail)
