@@ -52,6 +52,9 @@ PRUNE_RUN = 256
 """Records that give way in one step."""
 RESERVE = 10_000
 """How far ahead ``FILE.seq`` is written; so many numbers at most are skipped when a damaged file is replaced."""
+PAGE_BYTES = 2048
+"""A transaction writes whole pages: a quarter less on the card than with 4096, as measured (1024: a third less, but
+then most bars spill over several pages)."""
 SPARE_PAGES = 64
 """Pruning begins this many pages before the size limit: the write-ahead log and the indexes need room too."""
 
@@ -326,6 +329,7 @@ class Journal:
                 raise DamagedError("it does not begin as a SQLite file")
             self._db = db = sqlite3.connect(self.path, timeout=BUSY_S, isolation_level=None, check_same_thread=False)
             check_ours(db, self.path)
+            db.execute(f"PRAGMA page_size = {PAGE_BYTES}")  # of a new file; another's stays as it is
             db.execute("PRAGMA journal_mode = WAL")
             db.execute("PRAGMA journal_size_limit = 8000000")
             if not db.execute("SELECT count(*) FROM sqlite_master").fetchone()[0]:
