@@ -173,6 +173,22 @@ def test_a_burst_keeps_its_number_and_is_first_once() -> None:
     assert max(shown.values()) >= 2
 
 
+def test_high_carbon_bursts_repeat() -> None:
+    """In a high carbon stream some particles burst again and again, under their own number; in a low one hardly any."""
+
+    def repeats(name: str) -> float:
+        source = stream(name, seed=10, sparks_per_s=1500.0)
+        of_flight: dict[int, set[int]] = {}
+        for _ in range(120):
+            _, truth = source.frame()
+            for flight, burst in zip(truth.burst_flight.tolist(), truth.burst_id.tolist(), strict=True):
+                of_flight.setdefault(flight, set()).add(burst)
+        return sum(len(found) > 1 for found in of_flight.values()) / len(of_flight)
+
+    assert repeats("C80") > 0.08
+    assert repeats("C15") < 0.03
+
+
 def test_arms_are_bright_round_a_burst() -> None:
     """Near bursts that drew long the picture is brighter than at the same distance elsewhere."""
     source = stream("C80", seed=9, sparks_per_s=1500.0)
