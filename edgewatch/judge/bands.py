@@ -346,7 +346,13 @@ def _toml(value: Any) -> str:
     if isinstance(value, tuple):
         return "[" + ", ".join(_toml(part) for part in value) + "]"
     escaped = str(value).replace("\\", "\\\\").replace('"', '\\"')
-    return '"' + "".join(c if c.isprintable() else f"\\u{ord(c):04x}" for c in escaped) + '"'
+    return '"' + "".join(c if c.isprintable() else _escape(ord(c)) for c in escaped) + '"'
+
+
+def _escape(code: int) -> str:
+    if 0xD800 <= code <= 0xDFFF:  # bytes of a file name that are no text
+        return "?"
+    return f"\\u{code:04x}" if code <= 0xFFFF else f"\\U{code:08x}"
 
 
 def band_toml(band: Band) -> str:

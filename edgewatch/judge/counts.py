@@ -16,7 +16,7 @@ from scipy.special import betainc, gammaln, pdtr, pdtrc
 NEARLY_POISSON = 1.0 + 1e-6
 """Below this dispersion the formulas for Poisson counts are used: the others lose digits."""
 
-_NODES, _NODE_WEIGHTS = np.polynomial.hermite_e.hermegauss(31)
+_NODES, _NODE_WEIGHTS = np.polynomial.hermite_e.hermegauss(21)
 NORMAL_NODES: NDArray[np.float64] = _NODES
 """Nodes of Gauss-Hermite quadrature over a standard normal variable."""
 NORMAL_WEIGHTS: NDArray[np.float64] = _NODE_WEIGHTS / _NODE_WEIGHTS.sum()
@@ -40,8 +40,9 @@ def tilt(ratio: float, dispersion: float) -> tuple[float, float]:
     return math.log(ratio * dispersion / spread), math.log(spread / dispersion) / extra
 
 
-def log_mass(count: float, mean: ArrayLike, dispersion: float) -> NDArray[np.float64]:
-    """Log probability of ``count`` at each mean."""
+def log_mass(count: ArrayLike, mean: ArrayLike, dispersion: float) -> NDArray[np.float64]:
+    """Log probability of ``count`` at each mean; they broadcast."""
+    count = np.asarray(count, dtype=np.float64)
     mean = np.maximum(np.asarray(mean, dtype=np.float64), 1e-12)
     if dispersion < NEARLY_POISSON:
         return np.asarray(count * np.log(mean) - mean - gammaln(count + 1.0))

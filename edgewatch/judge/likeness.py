@@ -7,11 +7,11 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import ndtr
+from numpy.typing import ArrayLike, NDArray
 
 from edgewatch.figures.wear import HIGH_M_S, LOW_M_S, reach_at_speed
 from edgewatch.judge.bands import Band
-from edgewatch.judge.counts import NORMAL_NODES, NORMAL_WEIGHTS, at_least, at_most, log_mass
+from edgewatch.judge.counts import NORMAL_NODES, NORMAL_WEIGHTS, log_mass
 
 LEAST_SCATTER = 0.02
 """Scatter from bar to bar is never taken as less (2 %): no line repeats itself better."""
@@ -58,26 +58,33 @@ def predictive_scatter(scatter: float | None, band: Band) -> float:
     return max(known, LEAST_SCATTER) * math.sqrt(1.0 + 1.0 / max(band.bars_used, 5))
 
 
-def means(band: Band, exposure_m: float) -> np.ndarray:
-    """Expected bursts at the quadrature nodes of the scatter."""
-    return np.asarray(
-        band.rate_center_per_m * exposure_m * np.exp(predictive_scatter(band.rate_scatter, band) * NORMAL_NODES)
-    )
+def log_rate_likelihood(band: Band, counts: ArrayLike, exposure_m: float) -> NDArray[np.float64]:
+    """Log probability of each count of bursts from a bar of this grade, scatter included; shape of ``counts``.
+
+    The hazard is log-normal from bar to bar; the integral over it is taken by Gauss-Hermite quadrature about its
+    largest point (Naylor & Smith, Applied Statistics 31, 1982), which holds from no burst to millions.
+    """
+    counts = np.asarray(counts, dtype=np.float64)
+    scatter = predictive_scatter(band.rate_scatter, band)
+    mean, spread = band.rate_center_per_m * exposure_m, band.rate_dispersion
+    # Newton's method in log hazard for the mode of Poisson likelihood times normal density; concave, so it converges
+    z = np.log((counts + 0.5 * mean + 0.5) / (1.5 * mean + 0.5)) / scatter
+    for _ in range(12):
+        expected = mean * np.exp(scatter * z)
+        z = z + (scatter * (counts - expected) / spread - z) / (scatter**2 * expected / spread + 1.0)
+    width = 1.0 / np.sqrt(scatter**2 * mean * np.exp(scatter * z) / spread + 1.0)
+    nodes = z[..., None] + width[..., None] * NORMAL_NODES
+    terms = log_mass(counts[..., None], mean * np.exp(scatter * nodes), spread) - 0.5 * nodes**2 + 0.5 * NORMAL_NODES**2
+    peak = terms.max(axis=-1)
+    return np.asarray(np.log(width) + peak + np.log(np.exp(terms - peak[..., None]) @ NORMAL_WEIGHTS))
 
 
-def rate_tails(band: Band, evidence: Evidence) -> tuple[float, float]:
-    """P(at most) and P(at least) so many bursts from a bar of this grade."""
-    mean = means(band, evidence.exposure_m)
-    low = float(NORMAL_WEIGHTS @ at_most(evidence.bursts, mean, band.rate_dispersion))
-    high = float(NORMAL_WEIGHTS @ at_least(evidence.bursts, mean, band.rate_dispersion))
-    return low, high
-
-
-def _reach_spread(band: Band, evidence: Evidence) -> float:
+def reach_spread(band: Band, reach_track_m: float) -> float:
+    """Deviation of the logarithm of a bar's reach from the grade's centre: scatter, and noise on so much track."""
     noise = band.reach_noise_mm2_m
     sampling = 0.0
-    if noise is not None and math.isfinite(noise) and evidence.reach_track_m > 0.0 and band.reach_center_mm:
-        sampling = noise / evidence.reach_track_m / band.reach_center_mm**2
+    if noise is not None and math.isfinite(noise) and reach_track_m > 0.0 and band.reach_center_mm:
+        sampling = noise / reach_track_m / band.reach_center_mm**2
     return math.sqrt(predictive_scatter(band.reach_scatter, band) ** 2 + sampling)
 
 
@@ -85,16 +92,16 @@ def reach_score(band: Band, evidence: Evidence) -> float:
     """Deviation of the bar's reach from the grade's, in standard deviations; NaN where there is none to compare."""
     if not (band.has_reach and band.reach_center_mm and evidence.reach_mm > 0.0):
         return math.nan
-    return math.log(reach_at_taught_speed(band, evidence) / band.reach_center_mm) / _reach_spread(band, evidence)
+    return math.log(reach_at_taught_speed(band, evidence) / band.reach_center_mm) / reach_spread(
+        band, evidence.reach_track_m
+    )
 
 
 def log_likelihood(band: Band, evidence: Evidence, *, use_reach: bool) -> float:
     """Log likelihood of the evidence under the grade."""
-    terms = log_mass(evidence.bursts, means(band, evidence.exposure_m), band.rate_dispersion)
-    peak = float(terms.max())
-    total = peak + math.log(float(NORMAL_WEIGHTS @ np.exp(terms - peak)))
+    total = float(log_rate_likelihood(band, evidence.bursts, evidence.exposure_m))
     if use_reach:
-        total += -0.5 * reach_score(band, evidence) ** 2 - math.log(_reach_spread(band, evidence))
+        total += -0.5 * reach_score(band, evidence) ** 2 - math.log(reach_spread(band, evidence.reach_track_m))
     return total
 
 
@@ -108,23 +115,3 @@ def nearest(bands: Sequence[Band], evidence: Evidence) -> tuple[tuple[str, float
     weights /= weights.sum()
     order = np.argsort(-weights, kind="stable")
     return tuple((bands[at].grade, float(weights[at])) for at in order)
-
-
-def excluded(other: Band, expected: Band, evidence: Evidence, *, miss: float) -> bool:
-    """Whether a bar of grade ``other`` would look so much like ``expected`` with probability at most ``miss``.
-
-    Tails of the other grade's predictive distribution on the side of the expected grade; with reach in both bands the
-    risk is split over the two figures.
-    """
-    both = other.has_reach and expected.has_reach and evidence.reach_mm > 0.0
-    risk = 0.5 * miss if both else miss
-    low, high = rate_tails(other, evidence)
-    tail = high if expected.rate_center_per_m > other.rate_center_per_m else low
-    if tail <= risk:
-        return True
-    if not both:
-        return False
-    score = reach_score(other, evidence)
-    assert expected.reach_center_mm is not None and other.reach_center_mm is not None
-    side = 1.0 if expected.reach_center_mm > other.reach_center_mm else -1.0
-    return float(ndtr(-side * score)) <= risk

@@ -15,7 +15,7 @@ from edgewatch.figures.tally import TRUNCATED_SHARE
 from edgewatch.figures.values import Figures
 from edgewatch.figures.wear import HIGH_M_S, LOW_M_S, reach_at_speed
 from edgewatch.judge.bands import Band, ReferenceBar
-from edgewatch.judge.tolerance import esd_outliers, half_width
+from edgewatch.judge.tolerance import esd_outliers, half_width, true_scatter
 from edgewatch.sight.optics import Optics
 
 CONTENT = 0.99
@@ -243,7 +243,10 @@ def _interval(values: NDArray[np.float64], noise: NDArray[np.float64], content: 
     half = half_width(variance=variance, noise=mean_noise, count=len(values), content=content, confidence=confidence)
     half = max(half, 1e-3)  # identical bars: still an interval
     return _Interval(
-        math.exp(center - half), math.exp(center + half), math.exp(center), math.sqrt(max(variance - mean_noise, 0.0))
+        math.exp(center - half),
+        math.exp(center + half),
+        math.exp(center),
+        true_scatter(variance=variance, noise=mean_noise, count=len(values)),
     )
 
 

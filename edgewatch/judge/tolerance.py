@@ -60,6 +60,19 @@ def half_width(*, variance: float, noise: float, count: int, content: float, con
     return float(needed.ravel()[order[min(at, order.size - 1)]])
 
 
+def true_scatter(*, variance: float, noise: float, count: int) -> float:
+    """Standard deviation of the true values: root of the mean of its generalised pivotal variance (see above).
+
+    The plain difference of variances is 0 in half of the teachings whose noise is larger than the scatter; this never
+    is, and with little noise it is the sample's deviation times sqrt((n - 1) / (n - 3)). At least four values.
+    """
+    if count < 4 or not (variance >= 0.0 and noise >= 0.0):
+        raise ValueError(f"count = {count!r}, variance = {variance!r}, noise = {noise!r}: out of range")
+    tails = (np.arange(_CHI_POINTS) + 0.5) / _CHI_POINTS
+    total = (count - 1) * variance / chdtri(count - 1, tails)
+    return math.sqrt(float(np.maximum(total - noise, 0.0).mean()))
+
+
 def two_sided_factor(count: int, content: float, confidence: float) -> float:
     """Exact two-sided normal tolerance factor, mean and deviation unknown (ISO 16269-6)."""
     return half_width(variance=1.0, noise=0.0, count=count, content=content, confidence=confidence)

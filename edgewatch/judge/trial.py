@@ -12,7 +12,8 @@ from edgewatch.judge.causes import BLIND
 from edgewatch.judge.contrast import told_apart
 from edgewatch.judge.counts import at_least, at_most
 from edgewatch.judge.evidence import RateEvidence, ReachEvidence, log_sum
-from edgewatch.judge.likeness import Evidence, excluded, nearest, reach_at_taught_speed, wear_factor
+from edgewatch.judge.likeness import Evidence, nearest, reach_at_taught_speed, wear_factor
+from edgewatch.judge.separation import excluded
 
 CONFORMING = "conforming"
 NONCONFORMING = "nonconforming"
