@@ -1,9 +1,9 @@
 """How clearly bars of two taught grades differ: the likelihood ratio of their figures, and what it takes to be sure.
 
-The ratio is that of ``twin`` over ``other``: a grade with the centre of ``expected`` and the scatter of ``other``. So it
-rises steadily from the one centre to the other and beyond, and a scatter of ``expected`` that was taught too small makes
-no good bar look unlike its own grade. It is looked at on a fine grid of possible bars of either grade (burst count,
-reach), so that its quantiles follow for any track.
+The ratio is that of ``twin`` over ``other``: a grade with the centre of ``expected`` and the scatter of ``other``. So
+it rises steadily from the one centre to the other and beyond, and a scatter of ``expected`` that was taught too small
+makes no good bar look unlike its own grade. It is looked at on a fine grid of possible bars of either grade (burst
+count, reach), so that its quantiles follow for any track.
 """
 
 from __future__ import annotations
