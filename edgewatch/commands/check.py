@@ -25,8 +25,8 @@ from edgewatch.link.secrets import make_tls, read_password
 from edgewatch.link.state import REASONS, LinkState, from_error
 from edgewatch.monitor.blindness import FLAG_CAUSES
 from edgewatch.record.bandfiles import load_bands
-from edgewatch.record.journal import DamagedError, check_whole
 from edgewatch.record.reading import open_journal
+from edgewatch.record.rows import DamagedError, check_whole
 from edgewatch.relay.port import open_relay
 from edgewatch.settings import Settings
 from edgewatch.sight.detections import PictureFlag

@@ -10,8 +10,8 @@ from pathlib import Path
 from typing import Any
 
 from edgewatch.errors import DeviceError
-from edgewatch.record import journal
-from edgewatch.record.journal import Row
+from edgewatch.record import rows as table
+from edgewatch.record.rows import DamagedError, Row
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -35,12 +35,12 @@ def open_journal(path: Path, *, write: bool = False) -> Iterator[sqlite3.Connect
     db: sqlite3.Connection | None = None
     try:
         db = _connect(path, "rw" if write else "ro")
-        journal.check_ours(db, path)
+        table.check_ours(db, path)
         yield db
     except sqlite3.Error as error:
-        found = journal.translated(error, path)
+        found = table.translated(error, path)
         raise _readable(found, path) from error
-    except journal.DamagedError as error:
+    except DamagedError as error:
         raise _readable(error, path) from error
     finally:
         if db is not None:
@@ -49,7 +49,7 @@ def open_journal(path: Path, *, write: bool = False) -> Iterator[sqlite3.Connect
 
 def _connect(path: Path, mode: str) -> sqlite3.Connection:
     where = path.absolute().as_uri()
-    db = sqlite3.connect(f"{where}?mode={mode}", uri=True, timeout=journal.BUSY_S, isolation_level=None)
+    db = sqlite3.connect(f"{where}?mode={mode}", uri=True, timeout=table.BUSY_S, isolation_level=None)
     try:
         db.execute("SELECT count(*) FROM sqlite_master").fetchone()
     except sqlite3.OperationalError:
@@ -78,9 +78,9 @@ def read_records(
     """Yield records of ``kinds`` in the order of ``seq``. Raises ``DeviceError``."""
     with open_journal(path) as db:
         if last is None and len(kinds) == 1:
-            yield from journal.read_rows(db, kinds[0], since_utc_s, until_utc_s)
+            yield from table.read_rows(db, kinds[0], since_utc_s, until_utc_s)
             return
-        rows = [row for kind in kinds for row in journal.read_rows(db, kind, since_utc_s, until_utc_s, last)]
+        rows = [row for kind in kinds for row in table.read_rows(db, kind, since_utc_s, until_utc_s, last)]
         rows.sort(key=lambda row: row.seq)
         yield from rows if last is None else rows[-last:] if last else []
 
@@ -111,7 +111,7 @@ def confirm(path: Path, finding: Finding) -> Mapping[str, Any]:
 
 def _newest_bar(db: sqlite3.Connection, number: int) -> Row | None:
     found = None
-    for row in journal.read_rows(db, "bar"):
+    for row in table.read_rows(db, "bar"):
         if row.payload.get("bar") == number:
             found = row
     return found

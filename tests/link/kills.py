@@ -12,9 +12,10 @@ from dataclasses import dataclass, field
 from pathlib import Path
 
 from edgewatch.link.session import Link
-from edgewatch.record.journal import Journal, Outgoing
+from edgewatch.record.journal import Journal
 from edgewatch.settings import MqttSettings, StationSettings
 from edgewatch.wire.messages import encode
+from edgewatch.wire.outgoing import Outgoing
 from edgewatch.wire.topics import Topics
 from tests.brokers import Broker, Reader, running, wait_until
 from tests.record.entries import stamp

@@ -11,7 +11,7 @@ from hypothesis import strategies as st
 
 from edgewatch.errors import DeviceError
 from edgewatch.link.sender import AHEAD, BARRIER_S, FLUSH_COUNT, FLUSH_S, IN_FLIGHT, LOOSE, Sender
-from edgewatch.record.journal import Outgoing
+from edgewatch.wire.outgoing import Outgoing
 
 
 class Box:

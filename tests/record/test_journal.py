@@ -10,7 +10,9 @@ from pathlib import Path
 import pytest
 
 from edgewatch.errors import DeviceError
-from edgewatch.record.journal import RESERVE, THIN_REPORT, THIN_RUN, Entry, Journal, checksum
+from edgewatch.record.journal import RESERVE, Entry, Journal
+from edgewatch.record.outbox import THIN_REPORT, THIN_RUN
+from edgewatch.record.rows import checksum
 from edgewatch.wire import messages
 from tests.record.entries import alert, bar, condition, stamp, window
 from tests.wire.schemas import check_message
@@ -233,6 +235,11 @@ def test_a_file_deleted_or_replaced_under_us_is_begun_anew_above(file: Path):
     assert seq == 1 + RESERVE + 1
     assert journal.rows()[0].seq == seq
     journal.close()
+    file.unlink()
+    for _ in range(3):  # opened and closed without a record: nothing is used up, nothing forgotten
+        journal = Journal(file)
+        assert journal.status().next_seq == 2 * (RESERVE + 1) + 1
+        journal.close()
 
 
 def test_a_folder_that_cannot_be_made_is_a_device_error(tmp_path: Path):

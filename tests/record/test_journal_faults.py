@@ -124,6 +124,20 @@ def test_a_disk_that_is_full_at_the_start_is_a_device_error(small_disk: SmallDis
     journal.close()
 
 
+def test_a_patient_journal_is_opened_when_it_can_be(small_disk: SmallDisk):
+    """A station starts on a full disk too: each call says so until there is room."""
+    small_disk.fill()
+    journal = Journal(small_disk.folder / "j.sqlite", patient=True)
+    for _ in range(2):
+        with pytest.raises(DeviceError, match=r"full|I/O|written"):
+            journal.append([alert()], stamp=stamp())
+    with pytest.raises(DeviceError):
+        journal.state("latch")
+    small_disk.make_room()
+    assert journal.append([alert()], stamp=stamp()) == (1,)
+    journal.close()
+
+
 # ---------------------------------------------------------------------- damage
 
 
@@ -149,6 +163,35 @@ def test_a_damaged_file_is_set_aside_whole_and_a_new_one_begun_above(file: Path)
     assert aside.parent == file.parent
     assert reason
     assert 60 < journal.append([alert()], stamp=stamp())[0] <= 60 + RESERVE
+    journal.close()
+
+
+def test_what_is_still_whole_is_taken_over(file: Path):
+    """Unsent records keep their numbers and go out; values such as a latched stop are kept; new numbers are above."""
+    journal = Journal(file)
+    for number in range(200):
+        journal.append([bar(number), condition("failure")], stamp=stamp(1000.0 + number), state={"latch": number})
+    sent = journal.pending(1000)
+    journal.delivered([message.seq for message in sent[:300]])
+    waiting = {message.seq: message.payload for message in journal.pending(1000)}
+    journal.close()
+    whole = file.read_bytes()
+    at = whole.index(b'"seq":150,')  # in the middle of the records, far from the tables' roots
+    file.write_bytes(whole[:at] + b"\xff" * 3 + whole[at + 3 :])
+    with sqlite3.connect(file) as db:  # and one unsent record altered, so that one is not whole
+        db.execute("UPDATE record SET payload = x'00' WHERE seq = 390")
+    db.close()
+    told: list[str] = []
+    journal = Journal(file, on_set_aside=lambda path, reason: told.append(reason))
+    saved = {message.seq: message.payload for message in journal.pending(1000)}
+    assert saved == {seq: payload for seq, payload in waiting.items() if seq != 390}
+    assert "taken over: 99 unsent records, 1 kept values" in told[0]
+    assert journal.state("latch") == 199
+    latest = journal.latest("condition")
+    assert latest is not None
+    assert latest[0] == 400
+    assert journal.append([alert()], stamp=stamp())[0] > 400
+    assert journal.rows()[-1].stamp.boot == "boot-1"
     journal.close()
 
 
