@@ -78,7 +78,8 @@ class VideoFile:
         if picture is None:
             picture = self._decode()
         if picture is None:
-            self._check_complete()
+            if not self._decoder.closed:
+                self._check_complete()
             return None
         check_size(f"clip {self._path}: picture {self._index}", picture, self.info)
         frame = Frame(picture=picture, index=self._index, t_s=self._index / self._fps)

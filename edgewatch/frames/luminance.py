@@ -8,10 +8,13 @@ limited range is spread to 0..255 here, once, where the file really is of limite
 
 from __future__ import annotations
 
+from typing import Any
+
 import cv2
 import numpy as np
 from numpy.typing import NDArray
 
+from edgewatch.frames.capture import GuardedCapture
 from edgewatch.frames.mono import make_mono
 from edgewatch.sight.optics import MAX_SIDE_PX
 
@@ -32,18 +35,23 @@ _LOOK_FRAMES = 64
 
 
 class Decoder:
-    """One open video. ``rate``: frames a second it claims, NaN if it claims none."""
+    """One open video. ``rate``: frames a second it claims, NaN if none. ``close`` may come from any thread."""
 
     def __init__(self, capture: cv2.VideoCapture, spread: NDArray[np.uint8] | None = None) -> None:
         """Take over an open capture; ``spread`` is a table that luminance goes through."""
-        self._capture = capture
+        self._capture = GuardedCapture(capture)
         self._spread = spread
-        rate = float(capture.get(cv2.CAP_PROP_FPS))
+        rate = self._capture.get(cv2.CAP_PROP_FPS)
         self.rate = rate if 0 < rate < 1e6 else float("nan")
+
+    @property
+    def closed(self) -> bool:
+        """Whether ``close`` was called."""
+        return self._capture.closing
 
     def read(self) -> NDArray[np.uint8] | None:
         """Return the next picture, ``None`` if there is none. Raises ``cv2.error``, ``ValueError``."""
-        picture = _read(self._capture)
+        picture = _checked(self._capture.read())
         if picture is None:
             return None
         mono = make_mono(picture)
@@ -52,8 +60,8 @@ class Decoder:
         return mono
 
     def close(self) -> None:
-        """Let go of the file or connection."""
-        self._capture.release()
+        """Let go of the file, at the latest when a read under way returns."""
+        self._capture.close()
 
 
 def open_luminance(path: str) -> Decoder:
@@ -85,13 +93,17 @@ def _open_plane(path: str) -> cv2.VideoCapture:
     return cv2.VideoCapture(path, cv2.CAP_FFMPEG, [cv2.CAP_PROP_CONVERT_RGB, 0])
 
 
-def _read(capture: cv2.VideoCapture) -> NDArray[np.uint8] | None:
+def _read(capture: cv2.VideoCapture) -> NDArray[Any] | None:
     found, picture = capture.read()
-    if not found or picture is None or picture.size == 0:
+    return _checked(np.asarray(picture)) if found and picture is not None else None
+
+
+def _checked(picture: NDArray[Any] | None) -> NDArray[Any] | None:
+    if picture is None or picture.size == 0:
         return None
     if max(picture.shape[:2]) > MAX_SIDE_PX:
         raise ValueError(f"pictures larger than {MAX_SIDE_PX} px a side")
-    return np.asarray(picture)
+    return picture
 
 
 def _is_limited(path: str, shown: NDArray[np.uint8]) -> bool:
