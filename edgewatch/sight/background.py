@@ -37,7 +37,11 @@ NOISE_STRIDE = (3, 5)
 
 
 class Background:
-    """Follows background and noise; ``excess(picture)`` is the picture less its background (DN, clipped at 0)."""
+    """Follows background and noise.
+
+    After each picture: ``level_dn`` its mean background, ``uneven_dn`` the deviation of the background across it,
+    ``raw_noise_dn`` its noise, ``noise_dn`` the same but never below what quantisation hides (DN).
+    """
 
     def __init__(self, *, period_s: float) -> None:
         """``period_s``: time between pictures (s)."""
@@ -53,6 +57,8 @@ class Background:
         self._seen = 0
         self.level_dn = 0.0
         self.noise_dn = LEAST_NOISE_DN
+        self.raw_noise_dn = 0.0
+        self.uneven_dn = 0.0
 
     def excess(self, picture: NDArray[np.uint8]) -> NDArray[np.uint8]:
         """Picture less its background (DN, clipped at 0), uint8 (H, W); learns from the picture."""
@@ -77,12 +83,14 @@ class Background:
         here = ground[::rows, ::columns]
         left = picture[::rows, ::columns].astype(np.float32) - here
         self.level_dn = float(here.mean())
+        self.uneven_dn = float(here.std())
         # Median absolute deviation finds the scale, clipping the sparks away; the clipped deviation then refines it
         # below one grey level, which a median of integers cannot do (0.9871: a Gaussian clipped at 3 deviations).
         centre = float(np.median(left))
         scale = max(LEAST_NOISE_DN, 1.4826 * float(np.median(np.abs(left - centre))))
         quiet = left[np.abs(left - centre) <= 3.0 * scale]
-        deviation = float(quiet.std()) / 0.9871 if quiet.size else LEAST_NOISE_DN
+        deviation = float(quiet.std()) / 0.9871 if quiet.size else 0.0
+        self.raw_noise_dn = deviation
         self.noise_dn = max(LEAST_NOISE_DN, deviation)
 
     def _learn(self, picture: NDArray[np.uint8], ground: NDArray[np.uint8], small: tuple[int, int]) -> None:

@@ -1,7 +1,7 @@
 """Straight pieces of ridge: ridge points linked to their neighbours where direction and position agree.
 
-Two lines that cross keep apart, because the points of one do not lie along the direction of the other; the pieces
-left of and right of a crossing are joined afterwards by ``join_segments`` when they lie on one line and the gap is lit.
+Two lines that cross keep apart, because the points of one do not lie along the direction of the other. What becomes of
+the pieces left and right of a crossing is not decided here.
 """
 
 from __future__ import annotations
@@ -12,7 +12,6 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.sparse import coo_matrix
 from scipy.sparse.csgraph import connected_components
-from scipy.spatial import cKDTree
 
 from edgewatch.sight.ridges import Ridges
 
@@ -25,8 +24,8 @@ LINK_COS = 0.92
 LINK_OFFSET_PX = 0.8
 """Each point lies within this of the other's line (px)."""
 
-LEAST_POINTS = 4
-"""A segment has at least this many ridge points."""
+LEAST_POINTS = 3
+"""A segment has at least this many ridge points: two always lie on a line."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -70,7 +69,7 @@ def link_ridges(ridges: Ridges, scratch: NDArray[np.int32]) -> NDArray[np.int32]
     return np.asarray(connected_components(graph, directed=False)[1])
 
 
-def fit_segments(ridges: Ridges, label: NDArray[np.int32], weight: NDArray[np.float32] | None = None) -> Segments:
+def fit_segments(ridges: Ridges, label: NDArray[np.int32]) -> Segments:
     """One straight line through the points of each label (total least squares); labels with few points are dropped."""
     count = int(label.max()) + 1 if label.size else 0
     n = np.bincount(label, minlength=count)
@@ -101,45 +100,3 @@ def fit_segments(ridges: Ridges, label: NDArray[np.int32], weight: NDArray[np.fl
         points=n[keep],
         spread=np.sqrt(across / safe)[keep],
     )
-
-
-JOIN_GAP_PX = 12.0
-"""Widest gap that is bridged (px): a crossing at a shallow angle hides this much of a line."""
-
-JOIN_COS = 0.966
-"""Pieces of one line differ by less than 15 degrees in direction; short ones carry that much error."""
-
-JOIN_OFFSET_PX = 1.5
-"""The end of each piece lies within this of the other's line (px)."""
-
-
-def join_segments(segments: Segments, blurred: NDArray[np.float32], threshold: float) -> NDArray[np.int32]:
-    """Which segments are pieces of one line: label of each, int32 (N,)."""
-    count = segments.length.size
-    if count < 2:
-        return np.zeros(count, np.int32)
-    ends = np.concatenate([segments.begin, segments.end])
-    out = np.concatenate([-segments.axis, segments.axis])
-    pairs = cKDTree(ends).query_pairs(JOIN_GAP_PX, output_type="ndarray")
-    i, j = pairs[:, 0], pairs[:, 1]
-    gap = ends[j] - ends[i]
-    facing = -(out[i] * out[j]).sum(axis=1)
-    side_i = np.abs(gap[:, 0] * out[i, 1] - gap[:, 1] * out[i, 0])
-    side_j = np.abs(gap[:, 0] * out[j, 1] - gap[:, 1] * out[j, 0])
-    ahead = (gap * out[i]).sum(axis=1)
-    good = (i % count != j % count) & (facing >= JOIN_COS) & (np.maximum(side_i, side_j) <= JOIN_OFFSET_PX)
-    good &= ahead > -2.0
-    i, j, side = i[good], j[good], np.maximum(side_i, side_j)[good] + 2.0 * np.sqrt(1.0 - facing[good].clip(0, 1) ** 2)
-    lit = np.ones(i.size, np.bool_)
-    for share in (0.25, 0.5, 0.75):
-        at = np.rint(ends[i] + share * (ends[j] - ends[i])).astype(np.int64)
-        lit &= blurred[at[:, 1], at[:, 0]] > threshold
-    i, j, side = i[lit], j[lit], side[lit]
-    cost = side + 0.1 * np.hypot(*(ends[j] - ends[i]).T)
-    best = np.full(2 * count, np.inf)
-    np.minimum.at(best, i, cost)
-    np.minimum.at(best, j, cost)
-    mutual = (cost <= best[i]) & (cost <= best[j])
-    i, j = i[mutual] % count, j[mutual] % count
-    graph = coo_matrix((np.ones(i.size, np.int8), (i, j)), shape=(count, count))
-    return np.asarray(connected_components(graph, directed=False)[1])

@@ -2,143 +2,131 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 from numpy.typing import NDArray
 
 from edgewatch.sight.background import Background
-from edgewatch.sight.bursts import arms_about, merge_points
-from edgewatch.sight.detections import BurstFlag, Detections, Light, PictureFlag, StreakFlag
+from edgewatch.sight.bursts import find_apexes
+from edgewatch.sight.detections import BurstFlag, Detections, StreakFlag
+from edgewatch.sight.glow import Glow, sort_lines
+from edgewatch.sight.lengths import Lengths
+from edgewatch.sight.light import LightMeter
 from edgewatch.sight.optics import Optics
-from edgewatch.sight.ridges import BLUR_PX, MARGIN_PX, NOISE_GAIN, THRESHOLD_NOISE, find_ridges
-from edgewatch.sight.segments import Segments, fit_segments, join_segments, link_ridges
+from edgewatch.sight.ridges import MARGIN_PX, NOISE_GAIN, find_ridges
+from edgewatch.sight.segments import fit_segments, link_ridges
+from edgewatch.sight.streaks import find_streaks
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class SightTuning:
-    """What may be tuned, in physical or noise units.
+    """What may be tuned, in physical or noise units. Raises ``ValueError`` naming the field that is out of range.
 
     ``least_snr``: a streak stands this many noise deviations above the background. ``least_length_px``: and is longer
-    than this. ``arm_glow_s``: how long a burst's arms glow. ``arm_draw_s``: arms that drew for less are not seen.
+    than this. ``least_sure``: probability from which a candidate is a burst. ``longest_glow_s``: no arm glows for
+    longer. ``arm_draw_s``: arms that drew for less are not seen.
     """
 
     least_snr: float = 4.7
     least_length_px: float = 6.0
-    arm_glow_s: float = 0.002
+    least_sure: float = 0.4
+    longest_glow_s: float = 0.0035
     arm_draw_s: float = 0.00035
+
+    def __post_init__(self) -> None:
+        """Check ranges once."""
+        for one in fields(self):
+            value = getattr(self, one.name)
+            if not 0.0 < value <= 1000.0:
+                raise ValueError(f"{one.name} = {value!r}: allowed is above 0 to 1000")
 
 
 class Sight:
-    """Looks at the pictures of one camera, in order. Deterministic; the first picture is already judged."""
+    """Looks at the pictures of one camera, in order. Deterministic; the first picture is already judged.
+
+    Sources of the method: see ``background``, ``ridges``, ``streaks``, ``bursts``, ``glow``.
+    """
 
     def __init__(self, optics: Optics, settings: SightTuning | None = None) -> None:
-        """``optics`` gives picture size and timing."""
+        """``optics`` gives picture size, contact point, axis and timing."""
         self.optics = optics
         self.settings = settings or SightTuning()
-        self._background = Background(period_s=optics.period_s)
         self._scratch = np.full(optics.height_px * optics.width_px, -1, np.int32)
         self.reset()
 
-    @property
-    def burst_exposure_gain(self) -> float:
-        """Time a picture in which a burst would get listed, per exposure."""
-        o, s = self.optics, self.settings
-        listed_s = min(o.period_s, o.exposure_s + s.arm_glow_s - 2.0 * s.arm_draw_s)
-        return max(0.1, listed_s / o.exposure_s)
-
     def reset(self) -> None:
         """Forget every picture seen."""
-        self._background.reset()
-        self._recent: list[NDArray[np.float64]] = []
+        o, s = self.optics, self.settings
+        self._background = Background(period_s=o.period_s)
+        self._lengths = Lengths(o.contact_px)
+        self._meter = LightMeter()
+        self._glow = Glow(o, longest_glow_s=s.longest_glow_s, arm_draw_s=s.arm_draw_s)
+
+    @property
+    def burst_exposure_gain(self) -> float:
+        """Time a picture in which a burst would get listed, per exposure, as learnt so far."""
+        return self._glow.gain
 
     def look(self, picture: NDArray[np.uint8]) -> Detections:
-        """Streaks and bursts of the next picture, uint8 (H, W). Raises ``ValueError`` on another shape or type."""
-        o = self.optics
+        """Streaks and bursts of the next picture, uint8 (H, W). Raises ``ValueError`` on another shape or type.
+
+        Cost: some dense passes of 8-bit and float32 arithmetic, then work in proportion to the lit pixels.
+        """
+        o, s = self.optics, self.settings
         if not isinstance(picture, np.ndarray) or picture.dtype != np.uint8:
             raise ValueError(f"picture: uint8 array needed, got {getattr(picture, 'dtype', type(picture).__name__)}")
         if picture.shape != (o.height_px, o.width_px):
             raise ValueError(f"picture: shape {(o.height_px, o.width_px)} needed, got {picture.shape}")
         excess = self._background.excess(picture)
-        noise = self._background.noise_dn
-        ridges = find_ridges(excess, noise)
-        threshold = THRESHOLD_NOISE * NOISE_GAIN * noise
-        label = link_ridges(ridges, self._scratch)
-        pieces = fit_segments(ridges, label)
-        ends = np.concatenate([pieces.begin, pieces.end])
-        arms, odd = arms_about(ends, ridges.blurred, threshold)
-        chosen = np.flatnonzero((arms >= 3) & (odd >= 2))
-        chosen = chosen[merge_points(ends[chosen], (arms + odd)[chosen].astype(np.float64), 12.0)]
-        bursts, burst_arms = ends[chosen], arms[chosen]
-        fresh = self._fresh(bursts)
-        lines, snr = self._streaks(pieces, bursts, ridges.blurred, threshold, noise)
-        bursts, burst_arms = bursts[fresh], burst_arms[fresh]
-        track_px = float(np.hypot(*(lines[:, 2:] - lines[:, :2]).T).sum())
+        ridges = find_ridges(excess, self._background.noise_dn)
+        noise = self._background.noise_dn * NOISE_GAIN
+        self._meter.measure_width(ridges)
+        pieces = fit_segments(ridges, link_ridges(ridges, self._scratch))
+        found = find_streaks(pieces, ridges.blurred, noise, self._lengths, o.axis)
+        apexes = find_apexes(pieces, ridges.blurred, noise, o.contact_px, s.least_sure)
+        sorted_ = sort_lines(found.begin, found.end, apexes, self._glow, self._lengths)
+        begin, end = sorted_.begin, sorted_.end
+        length = np.hypot(end[:, 0] - begin[:, 0], end[:, 1] - begin[:, 1])
+        snr = found.level / self._background.noise_dn * self._meter.line_gain
+        keep = sorted_.streak & (snr >= s.least_snr) & (length > s.least_length_px)
+        lines = np.concatenate([begin, end], axis=1)[keep]
+        fresh = self._glow.take(apexes, sorted_.stem)
+        at, late = apexes.at[fresh], ~sorted_.stem[fresh]
+        track_px = float(length[keep].sum())
+        snr = snr[keep]
         return Detections(
             streaks=lines.astype(np.float32),
             streak_snr=snr.astype(np.float32),
-            streak_flags=self._cut(lines),
-            bursts=bursts.astype(np.float32),
-            burst_arms=burst_arms.astype(np.int16),
-            burst_flags=np.full(fresh.size, BurstFlag.NONE, np.uint8),
-            light=Light(
-                background_dn=self._background.level_dn,
-                noise_dn=noise,
-                saturated_share=float((picture >= 254).mean()),
-                streak_width_px=float("nan"),
-                streak_peak_dn=float(np.median(snr) * noise) if snr.size else float("nan"),
-                flags=PictureFlag.NONE,
-            ),
+            streak_flags=self._cut_flags(lines),
+            bursts=at.astype(np.float32),
+            burst_arms=sorted_.arms[fresh].astype(np.int16),
+            burst_flags=np.where(late, BurstFlag.LATE, 0).astype(np.uint8) | self._edge_flags(at),
+            light=self._meter.read(picture, self._background, lines, snr),
             rate_bursts=int(fresh.size),
-            rate_exposure_px=track_px * self.burst_exposure_gain,
+            rate_exposure_px=track_px * self._glow.gain,
         )
 
-    def _fresh(self, bursts: NDArray[np.float64]) -> NDArray[np.int64]:
-        old = np.concatenate(self._recent) if self._recent else np.zeros((0, 2))
-        gap = np.hypot(*(bursts[:, None] - old[None]).transpose(2, 0, 1))
-        fresh = np.flatnonzero(~(gap < 12.0).any(axis=1))
-        pictures = int(np.ceil(2.0 * self.settings.arm_glow_s / self.optics.period_s))
-        self._recent = [*self._recent, bursts][-max(1, pictures) :]
-        return fresh
+    def _near_edge(self, x: NDArray[np.float64], y: NDArray[np.float64], margin_px: float) -> NDArray[np.bool_]:
+        o = self.optics
+        return np.asarray(
+            (x < margin_px) | (y < margin_px) | (x > o.width_px - 1 - margin_px) | (y > o.height_px - 1 - margin_px)
+        )
 
-    def _streaks(
-        self,
-        pieces: Segments,
-        bursts: NDArray[np.float64],
-        blurred: NDArray[np.float32],
-        threshold: float,
-        noise: float,
-    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        label = join_segments(pieces, blurred, threshold)
-        count = int(label.max()) + 1 if label.size else 0
-        weight = np.bincount(label, pieces.length, count)
-        longest = np.lexsort((pieces.length, label))
-        longest = longest[np.searchsorted(label[longest], np.arange(count), side="right") - 1]
-        axis, origin = pieces.axis[longest], pieces.begin[longest]
-        low, high = np.full(count, np.inf), np.full(count, -np.inf)
-        for ends in (pieces.begin, pieces.end):
-            at = ((ends - origin[label]) * axis[label]).sum(axis=1)
-            np.minimum.at(low, label, at)
-            np.maximum.at(high, label, at)
-        height = np.bincount(label, pieces.height * pieces.length, count) / np.maximum(weight, 1e-9)
-        bend = np.bincount(label, pieces.bend * pieces.length, count) / np.maximum(weight, 1e-9)
-        variance = np.maximum(height / np.maximum(bend, 1e-9), BLUR_PX**2 + 0.3)
-        snr = height * np.sqrt(variance / (variance - BLUR_PX**2)) / noise
-        begin, end = origin + axis * low[:, None], origin + axis * high[:, None]
-        ax, ay = self.optics.axis
-        turned = axis[:, 0] * ax + axis[:, 1] * ay < 0.0
-        begin[turned], end[turned] = end[turned], begin[turned].copy()
-        starts_in_burst = (np.hypot(*(begin[:, None] - bursts[None]).transpose(2, 0, 1)) < 8.0).any(axis=1)
-        keep = (snr >= self.settings.least_snr) & (high - low > self.settings.least_length_px) & ~starts_in_burst
-        return np.concatenate([begin, end], axis=1)[keep], snr[keep]
-
-    def _cut(self, lines: NDArray[np.float64]) -> NDArray[np.uint8]:
-        o, near = self.optics, MARGIN_PX + 2.0
-        flags = np.zeros(lines.shape[0], np.uint8)
-        for flag, x, y in (
-            (StreakFlag.CUT_BEGIN, lines[:, 0], lines[:, 1]),
-            (StreakFlag.CUT_END, lines[:, 2], lines[:, 3]),
-        ):
-            edge = (x < near) | (y < near) | (x > o.width_px - 1 - near) | (y > o.height_px - 1 - near)
-            flags[edge] |= np.uint8(flag)
+    def _cut_flags(self, lines: NDArray[np.float64]) -> NDArray[np.uint8]:
+        flags = np.zeros(len(lines), np.uint8)
+        flags[self._near_edge(lines[:, 0], lines[:, 1], CUT_PX)] |= np.uint8(StreakFlag.CUT_BEGIN)
+        flags[self._near_edge(lines[:, 2], lines[:, 3], CUT_PX)] |= np.uint8(StreakFlag.CUT_END)
         return flags
+
+    def _edge_flags(self, at: NDArray[np.float64]) -> NDArray[np.uint8]:
+        near = self._near_edge(at[:, 0], at[:, 1], EDGE_PX)
+        flags: NDArray[np.uint8] = np.where(near, BurstFlag.EDGE, 0).astype(np.uint8)
+        return flags
+
+
+CUT_PX = MARGIN_PX + 2.0
+"""A streak that comes this near to the picture's edge leaves it: ridge points end at the margin (px)."""
+
+EDGE_PX = 10.0
+"""A burst this near to the edge may have arms outside (px)."""

@@ -1,0 +1,85 @@
+"""How long streaks are at a distance from the contact point.
+
+All sparks of one stream fly at nearly the same speed at one distance, so a streak of which one end is hidden is known
+to be about as long as its neighbours. What is learnt comes from streaks that lead from darkness to darkness.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+KEPT = 400
+"""Streaks remembered: several pictures' worth, so that a change of wheel speed is followed within a second."""
+
+LEAST_KEPT = 8
+"""Fewer streaks than this say nothing."""
+
+PARTS = 8
+PART_LEAST = 12
+"""The distance is cut into at most PARTS parts of at least PART_LEAST streaks."""
+
+SPREAD_LEAST, SPREAD_MOST = 0.1, 0.6
+"""Limits of the deviation of the logarithm of length."""
+
+LONGEST_FACTOR = 2.0
+LONGEST_PX = 400.0
+"""No streak is longer than this many typical lengths; before any is known, than so many px."""
+
+
+class Lengths:
+    """Lengths seen lately, as a function of the distance from the contact point."""
+
+    def __init__(self, contact_px: tuple[float, float]) -> None:
+        """``contact_px``: the contact point (px)."""
+        self._contact = np.asarray(contact_px, dtype=np.float64)
+        self._away = np.zeros(0)
+        self._log = np.zeros(0)
+        self._places = np.zeros(0)
+        self._typical = np.zeros(0)
+        self.spread = SPREAD_MOST
+
+    @property
+    def known(self) -> bool:
+        """Whether enough streaks have been seen."""
+        return bool(self._places.size)
+
+    @property
+    def longest_px(self) -> float:
+        """No streak is longer than this (px)."""
+        return LONGEST_FACTOR * float(np.exp(self._typical.max())) if self.known else LONGEST_PX
+
+    def typical_px(self, at: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Typical length (px) of streaks whose middle is at points (N, 2) px."""
+        return np.asarray(np.exp(np.interp(self._distance(at), self._places, self._typical)))
+
+    def deviation(self, at: NDArray[np.float64], length_px: NDArray[np.floating]) -> NDArray[np.float64]:
+        """How unusual lengths are at points (N, 2), in standard deviations of the logarithm."""
+        expected = np.interp(self._distance(at), self._places, self._typical)
+        return np.asarray((np.log(length_px) - expected) / self.spread)
+
+    def learn(self, begin: NDArray[np.float64], end: NDArray[np.float64]) -> None:
+        """Add streaks from ``begin`` to ``end`` (N, 2) px."""
+        gap = end - begin
+        self._away = np.concatenate([self._away, self._distance(0.5 * (begin + end))])[-KEPT:]
+        self._log = np.concatenate([self._log, np.log(np.maximum(np.hypot(gap[:, 0], gap[:, 1]), 1.0))])[-KEPT:]
+        count = self._away.size
+        if count < LEAST_KEPT:
+            return
+        order = np.argsort(self._away, kind="stable")
+        away, log = self._away[order], self._log[order]
+        parts = int(np.clip(count // PART_LEAST, 1, PARTS))
+        cuts = np.linspace(0, count, parts + 1).astype(np.int64)
+        part = np.repeat(np.arange(parts), np.diff(cuts))
+        # Medians weighted by length: a streak cut short by a burst says less than one drawn in full.
+        ranked = np.lexsort((log, part))
+        weight = np.cumsum(np.exp(log[ranked]))
+        before = np.concatenate(([0.0], weight))[cuts]
+        half = np.searchsorted(weight, 0.5 * (before[:-1] + before[1:]))
+        typical = log[ranked][np.minimum(half, count - 1)]
+        self._places, self._typical = away[(cuts[:-1] + cuts[1:]) // 2], typical
+        off = float(np.median(np.abs(log - typical[part])))
+        self.spread = float(np.clip(1.4826 * off, SPREAD_LEAST, SPREAD_MOST))
+
+    def _distance(self, at: NDArray[np.float64]) -> NDArray[np.float64]:
+        return np.asarray(np.hypot(at[:, 0] - self._contact[0], at[:, 1] - self._contact[1]))

@@ -1,0 +1,103 @@
+"""State of the picture itself: light, noise, width of streaks, and what is wrong with it."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from numpy.typing import NDArray
+
+from edgewatch.sight.background import Background
+from edgewatch.sight.detections import Light, PictureFlag
+from edgewatch.sight.ridges import BLUR_PX, Ridges
+
+FULL_DN = 254
+"""From here on a pixel counts as full scale (DN): compression takes the last level away."""
+
+SATURATED_SHARE = 0.02
+"""More of the picture at full scale than this hides streaks: as much as a hundred streaks cover."""
+
+NO_LIGHT_LEVEL_DN, NO_LIGHT_NOISE_DN = 1.5, 0.35
+"""Below both, not even the offset and read noise of a camera arrive."""
+
+DEFOCUSED_WIDTH_PX = 5.0
+"""Full width at half maximum of streaks (px): twice that of a lens in focus on pixels that sample it well."""
+
+STRAY_LEVEL_DN = 150.0
+STRAY_UNEVEN_DN = 60.0
+"""Background so high, or so uneven across the picture, that less than half of the range is left for streaks (DN)."""
+
+CROWDED_SHARE = 0.12
+"""Share of pixels on ridges: one in eight means streaks as near to each other as they are wide."""
+
+LEAST_POINTS = 30
+BRIGHT_NOISE = 9.0
+CENTRED_PX = 0.2
+"""Width is measured on at least so many ridge points, this bright (noise deviations), whose crest is this central."""
+
+KEEP = 0.8
+"""Share of the width known so far that each picture keeps."""
+
+DEFAULT_WIDTH_PX = 2.1
+
+WIDTH_PER_SIGMA = 2.0 * math.sqrt(2.0 * math.log(2.0))
+BETWEEN_PIXELS = 1.0 / 6.0
+"""Mean variance that reading between pixels adds (px²): that of a triangle one pixel wide."""
+
+
+class LightMeter:
+    """Follows the width of streaks from picture to picture and judges each picture's light."""
+
+    def __init__(self) -> None:
+        self._variance = math.nan
+        self._ridge_share = 0.0
+
+    @property
+    def line_gain(self) -> float:
+        """Height of a streak per level read along it in the blurred picture."""
+        own = self._variance if math.isfinite(self._variance) else (DEFAULT_WIDTH_PX / WIDTH_PER_SIGMA) ** 2
+        return math.sqrt((own + BLUR_PX**2 + BETWEEN_PIXELS) / own)
+
+    def measure_width(self, ridges: Ridges) -> None:
+        """Width of streaks from height and curvature of ridges: of a Gaussian of variance V, sampled at pixels, the
+        second difference at the crest is 2 (exp(-1 / 2V) - 1) of its height.
+        """
+        self._ridge_share = ridges.index.size / max(1, ridges.blurred.size)
+        bright = ridges.height > BRIGHT_NOISE * ridges.threshold_noise
+        bright &= np.abs(ridges.offset) < CENTRED_PX
+        if int(bright.sum()) < LEAST_POINTS:
+            return
+        share = np.clip(ridges.bend[bright] / (2.0 * ridges.height[bright]), 1e-3, 0.9)
+        total = float(np.median(-0.5 / np.log1p(-share)))
+        own = max(total - BLUR_PX**2, 0.1)
+        self._variance = own if math.isnan(self._variance) else KEEP * self._variance + (1.0 - KEEP) * own
+
+    def read(
+        self,
+        picture: NDArray[np.uint8],
+        background: Background,
+        lines: NDArray[np.float64],
+        snr: NDArray[np.float64],
+    ) -> Light:
+        """State of this picture. ``lines`` (N, 4) and ``snr`` (N,): its streaks."""
+        share = float(np.count_nonzero(picture >= FULL_DN)) / picture.size
+        width = WIDTH_PER_SIGMA * math.sqrt(self._variance) if math.isfinite(self._variance) else math.nan
+        flags = PictureFlag.NONE
+        if background.level_dn < NO_LIGHT_LEVEL_DN and background.raw_noise_dn < NO_LIGHT_NOISE_DN and not len(lines):
+            flags |= PictureFlag.NO_LIGHT
+        if share > SATURATED_SHARE:
+            flags |= PictureFlag.SATURATED
+        if len(lines) and width > DEFOCUSED_WIDTH_PX:
+            flags |= PictureFlag.DEFOCUSED
+        if self._ridge_share > CROWDED_SHARE:
+            flags |= PictureFlag.CROWDED
+        if background.level_dn > STRAY_LEVEL_DN or background.uneven_dn > STRAY_UNEVEN_DN:
+            flags |= PictureFlag.STRAY_LIGHT
+        return Light(
+            background_dn=background.level_dn,
+            noise_dn=background.noise_dn,
+            saturated_share=share,
+            streak_width_px=width if len(lines) else math.nan,
+            streak_peak_dn=float(np.median(snr)) * background.noise_dn if snr.size else math.nan,
+            flags=flags,
+        )

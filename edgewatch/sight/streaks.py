@@ -1,0 +1,297 @@
+"""Streaks: a beginning and an end on one line that stays lit between them.
+
+Along each piece of ridge the brightness is read beyond both its ends, and its steps are found by differences of boxes
+(Rosenfeld & Thurston, IEEE Trans. Computers C-20, 1971). A step up is where a streak begins, a step down where one
+ends; where streaks overlap, brightness adds up and the steps remain. Beginnings and ends are then paired, cheapest
+first: on one line, of like height, with the line lit all the way, and about as long as its neighbours (``Lengths``). A
+step left alone, because the other end is hidden or fades out, makes a streak as long as is typical there. So a streak
+is found whole although others cross it, hide part of it, or run on from its end.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from edgewatch.sight.lengths import Lengths
+from edgewatch.sight.reading import read_levels
+from edgewatch.sight.segments import Segments
+
+BOX_PX = 4
+"""Length of the two boxes whose difference is a step (px): twice the width of a streak's own blur."""
+
+BEYOND_PX = 3
+"""Steps are looked for up to this far beyond a piece's ends (px)."""
+
+STEP_NOISE = 4.0
+"""A step is this many deviations of its own noise high."""
+
+STEP_NOISE_GAIN = 0.92
+"""Noise of a difference of boxes per noise of a pixel of the blurred picture, whose pixels are correlated."""
+
+STEP_SHARE = 0.16
+"""And this share of the brightness on its high side: less is a streak's own unevenness."""
+
+FULL_SHARE = 0.7
+"""A step of at least this share of its high side leads from darkness: a streak's own end, with nothing beyond."""
+
+STREAK_POINTS = 4
+"""A piece with fewer ridge points than this has no direction good enough to look for steps along it."""
+
+SIDE_PX = 1.6
+SIDE_TAN = 0.12
+"""A step lies within SIDE_PX of the other's line, and more by the error of that line's direction: half a pixel over
+the piece's length, at most SIDE_TAN."""
+
+LEAST_RUN_PX = 3.0
+RATIO_LOG = 0.35
+FADE_PX = 150.0
+"""Logarithm of the ratio between the heights of a streak's two steps: error, and fading along the way."""
+
+RATIO_MOST = 2.5
+PATH_SHARE = 0.35
+"""Between its steps a streak is brighter than this share of the lower one."""
+
+DARK_MOST_PX = 1.5
+"""Pixels along a streak that may be darker."""
+
+LENGTH_COST_FULL = 4.0
+LENGTH_COST_MOST = 16.0
+"""Greatest cost of an unusual length; the first where both ends lead from darkness: short streaks exist."""
+
+COST_MOST = 9.0
+"""Pairs dearer than this are none: three standard deviations."""
+
+DARK_NOISE = 2.5
+DARK_SHARE = 0.15
+"""A streak with one end seen runs until it is darker than these noise deviations and this share of its step."""
+
+ALONE_LEAST_PX = 8.0
+"""A streak of which one end is seen is at least this long."""
+
+SAME_SIDE_PX = 2.5
+SAME_COS = 0.97
+SAME_OVERLAP = 0.6
+"""A streak with one end seen that runs within another for this share of the shorter is the same."""
+
+LEVEL_SAMPLES = 12
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Steps:
+    """Steps along pieces, arrays of length N: ``at`` (N, 2) px; ``inward`` (N, 2) unit vector into the streak;
+    ``height`` DN; ``size`` px, length of the piece it lies on; ``begins``: up along the stream;
+    ``full``: from darkness.
+    """
+
+    at: NDArray[np.float64]
+    inward: NDArray[np.float64]
+    height: NDArray[np.float64]
+    size: NDArray[np.float64]
+    begins: NDArray[np.bool_]
+    full: NDArray[np.bool_]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Lines:
+    """Streaks, arrays of length N: ``begin``, ``end`` (N, 2) px, the first nearer the wheel along the axis;
+    ``level`` DN, height in the blurred picture over the darker third; ``whole``: both ends seen.
+    """
+
+    begin: NDArray[np.float64]
+    end: NDArray[np.float64]
+    level: NDArray[np.float64]
+    whole: NDArray[np.bool_]
+
+
+def find_streaks(
+    pieces: Segments,
+    blurred: NDArray[np.float32],
+    noise: float,
+    lengths: Lengths,
+    axis: tuple[float, float],
+) -> Lines:
+    """Streaks of one picture. ``blurred``: float32 (H, W) from the ridge detector, ``noise``: its noise (DN);
+    ``lengths`` learns from what is found; ``axis``: unit vector of the stream.
+    """
+    steps = find_steps(pieces, blurred, noise, axis)
+    pairs = pair_steps(steps, blurred, lengths)
+    first = not lengths.known
+    full = steps.full[pairs].all(axis=1)
+    lengths.learn(steps.at[pairs[full, 0]], steps.at[pairs[full, 1]])
+    if first and lengths.known:  # what was just learnt helps the first picture too
+        pairs = pair_steps(steps, blurred, lengths)
+    alone_begin, alone_end = _complete(steps, pairs, blurred, noise, lengths)
+    begin = np.concatenate([steps.at[pairs[:, 0]], alone_begin])
+    end = np.concatenate([steps.at[pairs[:, 1]], alone_end])
+    whole = np.arange(len(begin)) < len(pairs)
+    keep = _distinct(begin, end, whole)
+    begin, end, whole = begin[keep], end[keep], whole[keep]
+    return Lines(begin=begin, end=end, level=_line_levels(begin, end, blurred), whole=whole)
+
+
+def find_steps(pieces: Segments, blurred: NDArray[np.float32], noise: float, axis: tuple[float, float]) -> Steps:
+    """Steps along every piece. All pieces are laid end to end into one row, so that sums run over them together."""
+    long = np.flatnonzero(pieces.points >= STREAK_POINTS)
+    along_axis = pieces.axis[long] @ np.asarray(axis)
+    heading = np.where(along_axis < 0.0, -1.0, 1.0)[:, None] * pieces.axis[long]
+    start = np.where(along_axis[:, None] < 0.0, pieces.end[long], pieces.begin[long])
+    length = pieces.length[long]
+    margin = BEYOND_PX + 2 * BOX_PX
+    size = np.ceil(length).astype(np.int64) + 1 + 2 * margin
+    first = np.cumsum(size) - size
+    owner = np.repeat(np.arange(long.size), size)
+    place = (np.arange(owner.size) - first[owner] - margin).astype(np.float64)
+    x = start[owner, 0] + heading[owner, 0] * place
+    y = start[owner, 1] + heading[owner, 1] * place
+    total = np.concatenate([np.zeros(1), np.cumsum(read_levels(blurred, x, y), dtype=np.float64)])
+    ahead, behind = np.zeros(owner.size), np.zeros(owner.size)
+    ahead[: -BOX_PX - 1] = (total[BOX_PX + 1 : -1] - total[1 : -BOX_PX - 1]) / BOX_PX
+    behind[BOX_PX:] = (total[BOX_PX:-1] - total[: -BOX_PX - 1]) / BOX_PX
+    rise = ahead - behind
+    height, high = np.abs(rise), np.maximum(ahead, behind)
+    inside = (place >= -BEYOND_PX) & (place <= length[owner] + BEYOND_PX)
+    found = np.flatnonzero(inside & (height > np.maximum(STEP_NOISE * STEP_NOISE_GAIN * noise, STEP_SHARE * high)))
+    peak = np.ones(found.size, np.bool_)
+    for shift in (-3, -2, -1, 1, 2, 3):  # margins keep the neighbours within the same piece
+        peak &= height[found] >= rise[found + shift] * np.sign(rise[found])
+    found = found[peak]
+    begins = rise[found] > 0.0
+    return Steps(
+        at=np.stack([x[found], y[found]], axis=1),
+        inward=heading[owner[found]] * np.where(begins, 1.0, -1.0)[:, None],
+        height=height[found],
+        size=length[owner[found]],
+        begins=begins,
+        full=height[found] > FULL_SHARE * high[found],
+    )
+
+
+def pair_steps(steps: Steps, blurred: NDArray[np.float32], lengths: Lengths) -> NDArray[np.int64]:
+    """Pairs (begin, end) of steps that make a streak, int64 (N, 2)."""
+    begins, ends = np.flatnonzero(steps.begins), np.flatnonzero(~steps.begins)
+    none = np.zeros((0, 2), np.int64)
+    if not begins.size or not ends.size:
+        return none
+    at, way = steps.at.astype(np.float32), np.where(steps.begins[:, None], 1, -1).astype(np.float32) * steps.inward
+    way = way.astype(np.float32)
+    gx = at[ends, 0][None] - at[begins, 0][:, None]
+    gy = at[ends, 1][None] - at[begins, 1][:, None]
+    run = gx * way[begins, 0][:, None] + gy * way[begins, 1][:, None]
+    tangent = np.minimum(SIDE_TAN, 1.0 / np.maximum(steps.size, 1.0)).astype(np.float32)
+    near = (run > LEAST_RUN_PX) & (run < lengths.longest_px)
+    near &= (
+        np.abs(gx * way[begins, 1][:, None] - gy * way[begins, 0][:, None]) < SIDE_PX + run * tangent[begins][:, None]
+    )
+    row, column = np.nonzero(near)
+    b, e = begins[row], ends[column]
+    run = run[row, column]
+    gx, gy = gx[row, column], gy[row, column]
+    side_b = np.abs(gx * way[b, 1] - gy * way[b, 0]) / (SIDE_PX + run * tangent[b])
+    side_e = np.abs(gx * way[e, 1] - gy * way[e, 0]) / (SIDE_PX + run * tangent[e])
+    ratio = np.abs(np.log(steps.height[b] / steps.height[e]))
+    cost = side_b**2 + side_e**2 + (ratio / (RATIO_LOG + run / FADE_PX)) ** 2
+    if lengths.known:
+        off = lengths.deviation(0.5 * (steps.at[b] + steps.at[e]), run) ** 2
+        cost = cost + np.minimum(off, np.where(steps.full[b] & steps.full[e], LENGTH_COST_FULL, LENGTH_COST_MOST))
+    good = np.flatnonzero((side_e < 1.0) & (ratio < RATIO_MOST) & (cost < COST_MOST))
+    b, e, cost = b[good], e[good], cost[good]
+    lit = _stay_lit(steps.at[b], steps.at[e], PATH_SHARE * np.minimum(steps.height[b], steps.height[e]), blurred)
+    b, e, cost = b[lit], e[lit], cost[lit]
+    chosen = _cheapest(b, e, cost, steps.height.size)
+    return np.stack([b[chosen], e[chosen]], axis=1)
+
+
+def _stay_lit(
+    a: NDArray[np.float64], b: NDArray[np.float64], level: NDArray[np.float64], blurred: NDArray[np.float32]
+) -> NDArray[np.bool_]:
+    """Whether the line from each a to its b is brighter than ``level`` all the way, but for a pixel."""
+    gap = b - a
+    length = np.hypot(gap[:, 0], gap[:, 1])
+    size = np.maximum(np.ceil(length - 4.0), 1.0).astype(np.int64)
+    owner = np.repeat(np.arange(size.size), size)
+    place = (np.arange(owner.size) - (np.cumsum(size) - size)[owner] + 0.5) / size[owner]
+    inner = np.minimum(2.0 / length, 0.4)[owner]  # near its ends a line is half lit by its own blur
+    place = inner + (1.0 - 2.0 * inner) * place
+    seen = read_levels(blurred, a[owner, 0] + place * gap[owner, 0], a[owner, 1] + place * gap[owner, 1])
+    return np.asarray(np.bincount(owner, seen < level[owner], size.size) <= DARK_MOST_PX)
+
+
+def _cheapest(i: NDArray[np.int64], j: NDArray[np.int64], cost: NDArray[np.float64], count: int) -> NDArray[np.int64]:
+    """Rows of the pairs taken, each index used once: rounds of mutually cheapest pairs; few rounds are needed."""
+    cost = cost + 1e-9 * np.arange(cost.size)  # no ties: every round takes at least one pair
+    alive = np.arange(i.size)
+    chosen = [alive[:0]]
+    while alive.size:
+        best = np.full(count, np.inf)
+        np.minimum.at(best, i[alive], cost[alive])
+        np.minimum.at(best, j[alive], cost[alive])
+        taken = alive[(cost[alive] <= best[i[alive]]) & (cost[alive] <= best[j[alive]])]
+        chosen.append(taken)
+        used = np.zeros(count, np.bool_)
+        used[i[taken]] = used[j[taken]] = True
+        alive = alive[~(used[i[alive]] | used[j[alive]])]
+    return np.concatenate(chosen)
+
+
+def _complete(
+    steps: Steps, pairs: NDArray[np.int64], blurred: NDArray[np.float32], noise: float, lengths: Lengths
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Streaks (begins, ends) of the steps left alone: as long as is typical there, or until it is dark."""
+    alone = np.ones(steps.height.size, np.bool_)
+    alone[pairs.ravel()] = False
+    k = np.flatnonzero(alone)
+    if not lengths.known or not k.size:
+        return np.zeros((0, 2)), np.zeros((0, 2))
+    at, inward = steps.at[k], steps.inward[k]
+    size = lengths.typical_px(at)
+    size = lengths.typical_px(at + 0.5 * size[:, None] * inward)
+    number = np.maximum(np.ceil(size).astype(np.int64), 2)
+    first = np.cumsum(number) - number
+    owner = np.repeat(np.arange(k.size), number)
+    place = np.arange(owner.size) - first[owner] + 1.0
+    seen = read_levels(blurred, at[owner, 0] + place * inward[owner, 0], at[owner, 1] + place * inward[owner, 1])
+    level = np.maximum(DARK_NOISE * noise, DARK_SHARE * steps.height[k])
+    dark = (seen < level[owner]) & (place > 2.0)
+    run = np.minimum(np.minimum.reduceat(np.where(dark, place, np.inf), first), size)
+    end = at + inward * run[:, None]
+    begins = steps.begins[k, None]
+    good = run >= np.minimum(ALONE_LEAST_PX, 0.6 * size)
+    return np.where(begins, at, end)[good], np.where(begins, end, at)[good]
+
+
+def _distinct(begin: NDArray[np.float64], end: NDArray[np.float64], whole: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Lines to keep: of two that run within each other the one seen whole, or the longer; two seen whole both stay."""
+    keep = np.ones(len(begin), np.bool_)
+    part = np.flatnonzero(~whole)
+    if not part.size:
+        return keep
+    gap = end - begin
+    length = np.maximum(np.hypot(gap[:, 0], gap[:, 1]), 1e-6)
+    unit = gap / length[:, None]
+    ux, uy = unit[part, 0][:, None], unit[part, 1][:, None]
+    bx, by = begin[part, 0][:, None], begin[part, 1][:, None]
+    a = (begin[:, 0] - bx) * ux + (begin[:, 1] - by) * uy
+    b = (end[:, 0] - bx) * ux + (end[:, 1] - by) * uy
+    side = np.abs((0.5 * (begin[:, 0] + end[:, 0]) - bx) * uy - (0.5 * (begin[:, 1] + end[:, 1]) - by) * ux)
+    common = np.minimum(np.maximum(a, b), length[part][:, None]) - np.maximum(np.minimum(a, b), 0.0)
+    same = (side < SAME_SIDE_PX) & (common > SAME_OVERLAP * np.minimum(length[part][:, None], length))
+    same &= np.abs(ux * unit[:, 0] + uy * unit[:, 1]) > SAME_COS
+    rank = np.where(whole, np.inf, length)
+    order = np.arange(len(begin))
+    better = (rank > rank[part][:, None]) | ((rank == rank[part][:, None]) & (order < part[:, None]))
+    keep[part] = ~(same & better).any(axis=1)
+    return keep
+
+
+def _line_levels(
+    begin: NDArray[np.float64], end: NDArray[np.float64], blurred: NDArray[np.float32]
+) -> NDArray[np.float64]:
+    """Height along each line, the lower third of samples left out: what overlaps it counts little."""
+    share = (np.arange(LEVEL_SAMPLES) + 0.5) / LEVEL_SAMPLES
+    x = begin[:, :1] + share * (end - begin)[:, :1]
+    y = begin[:, 1:] + share * (end - begin)[:, 1:]
+    level = read_levels(blurred, x.ravel(), y.ravel()).reshape(x.shape)
+    return np.partition(level, LEVEL_SAMPLES // 3, axis=1)[:, LEVEL_SAMPLES // 3].astype(np.float64)
