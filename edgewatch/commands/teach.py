@@ -52,9 +52,11 @@ def run(args: argparse.Namespace) -> int:
     out = Path(args.out) if args.out else default_file(args, settings, folder)
     if args.verify:
         return _verify(args, settings, out)
-    kept, old_optics = _kept_bars(args.add)
+    kept, old = _kept_bars(args.add)
+    if args.clips:
+        _check_conditions(old, settings, args.add)
     measured = [measure_clip(clip, settings) for clip in args.clips]
-    optics = _one_optics(measured, old_optics)
+    optics = _one_optics(measured, old)
     bars = _numbered(kept, measured)
     band = teach(
         args.grade,
@@ -130,9 +132,14 @@ def _one_optics(measured: Sequence[Measurement], old: Band | None) -> Optics:
     for one in measured[1:]:
         if one.optics != optics:
             raise SettingsError(f"{one.clip}: picture size differs from {measured[0].clip}: teach them apart")
-    if old is not None and (misfit := old.misfit(optics)):
-        raise SettingsError(f"--add: the band was taught under other conditions: {', '.join(misfit)}")
     return optics
+
+
+def _check_conditions(band: Band | None, settings: Settings, file: str | Path | None) -> None:
+    """Refuse bars of another scale, exposure or frame rate before any clip is read."""
+    misfit = band.misfit(settings.sight_optics()) if band else ()
+    if misfit:
+        raise SettingsError(f"{file}: the band was taught under other conditions: {', '.join(misfit)}")
 
 
 def _numbered(kept: Sequence[ReferenceBar], measured: Sequence[Measurement]) -> list[ReferenceBar]:
@@ -200,10 +207,8 @@ def _print(band: Band, out: Path, *, as_json: bool) -> None:
 def _verify(args: argparse.Namespace, settings: Settings, path: Path) -> int:
     """Hold master bars against the band there is; exit status 1 if they do not fit."""
     band = load_band(path)
+    _check_conditions(band, settings, path)
     measured = [measure_clip(clip, settings) for clip in args.clips]
-    misfit = band.misfit(measured[0].optics)
-    if misfit:
-        raise SettingsError(f"{path}: the band was taught under other conditions: {', '.join(misfit)}")
     masters = [reference_bar(n, "", c.bar, c.windows) for one in measured for n, c in enumerate(one.contacts, 1)]
     found = verify(band, masters)
     if args.json:
