@@ -87,6 +87,18 @@ def test_source_that_is_not_there(check: Check, source: str, status: int, says: 
     assert "clock" in found
 
 
+def test_pictures_that_show_nothing(check: Check, tmp_path: Path) -> None:
+    """A lens cap (no offset, no noise) and a lamp in the picture are found."""
+    black = write_clip(tmp_path / "black.mkv", np.zeros((12, 120, 160), np.uint8))
+    status, found, _ = check(source=str(black))
+    assert status == 1
+    assert any(detail.startswith("no_light") for _, detail in found["pictures"])
+    white = write_clip(tmp_path / "white.mkv", np.full((12, 120, 160), 255, np.uint8))
+    status, found, _ = check(source=str(white))
+    assert status == 1
+    assert any(detail.startswith("saturated") for _, detail in found["pictures"])
+
+
 def test_rate_of_a_live_source(check: Check, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     """A live FIFO that is fed at half the configured rate is unfit; at the right rate it is good."""
     monkeypatch.setattr(command, "LOOK_S", 0.6)
