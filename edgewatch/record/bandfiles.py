@@ -1,4 +1,4 @@
-"""Band files: ``FOLDER/GRADE.toml``, read all at once, written atomically."""
+"""Band files: one a grade in a folder, by habit ``GRADE.toml``; read all at once, written atomically."""
 
 from __future__ import annotations
 
@@ -31,10 +31,7 @@ def load_band(path: Path) -> Band:
         raise SettingsError(f"{path}: not UTF-8 text: {error.reason} at byte {error.start}") from error
     except (tomllib.TOMLDecodeError, RecursionError, ValueError) as error:
         raise SettingsError(f"{path}: not TOML: {error}") from error
-    band = read_band(data, file=str(path))
-    if band.grade != path.stem:
-        raise SettingsError(f"{path}: grade = {band.grade!r}: the file of this grade is named {band.grade}.toml")
-    return band
+    return read_band(data, file=str(path))
 
 
 def load_bands(folder: Path, *, on_problem: Callable[[str], None] | None = None) -> dict[str, Band]:
@@ -47,7 +44,9 @@ def load_bands(folder: Path, *, on_problem: Callable[[str], None] | None = None)
     problems: list[str] = []
     for path in sorted(folder.glob("*.toml")) if folder.is_dir() else []:
         band = _tried(path, problems)
-        if band is not None:
+        if band is not None and band.grade in bands:
+            problems.append(f"{path}: grade = {band.grade!r}: another file in {folder} holds this grade too")
+        elif band is not None:
             bands[band.grade] = band
     if problems and on_problem is None:
         raise SettingsError(*problems)
