@@ -156,6 +156,7 @@ class Row:
     caught: int
     passed: int
     reach_shift: float
+    by_grade: tuple[tuple[str, str, int], ...]
 
 
 def wear_table(bars: int, *, teach_bars: int = 40, foreign_share: float = 0.1, seed: int = 1) -> list[Row]:
@@ -167,7 +168,7 @@ def wear_table(bars: int, *, teach_bars: int = 40, foreign_share: float = 0.1, s
     others = list(bands.values())
     line = make_line(bars, seed + 100, grade="C45", foreign=round(foreign_share * bars), worn_m_s=WORN_M_S)
     rng = np.random.default_rng(seed + 200)
-    found: dict[tuple[str, str], list[tuple[bool, str, float]]] = {}
+    found: dict[tuple[str, str], list[tuple[str, str, float]]] = {}
     parts = ("first third", "middle third", "last third")
     for k in range(bars):
         seen = look_at(line[k], rng)
@@ -175,11 +176,12 @@ def wear_table(bars: int, *, teach_bars: int = 40, foreign_share: float = 0.1, s
             verdict, factor, _ = judge(seen, band, others, compensate=way)
             shift = seen.whole.reach_mm * factor / (band.reach_center_mm or math.nan) - 1.0
             for part in (parts[min(2, 3 * k // bars)], "whole life"):
-                found.setdefault((way, part), []).append((seen.bar.foreign, verdict, shift))
+                found.setdefault((way, part), []).append((seen.bar.grade if seen.bar.foreign else "", verdict, shift))
     rows = []
     for (way, part), verdicts in found.items():
         good = Counter(verdict for foreign, verdict, _ in verdicts if not foreign)
         bad = Counter(verdict for foreign, verdict, _ in verdicts if foreign)
+        grades = Counter((foreign, verdict) for foreign, verdict, _ in verdicts if foreign)
         rows.append(
             Row(
                 way=way,
@@ -191,6 +193,7 @@ def wear_table(bars: int, *, teach_bars: int = 40, foreign_share: float = 0.1, s
                 caught=bad["nonconforming"],
                 passed=bad["conforming"],
                 reach_shift=float(np.median([shift for foreign, _, shift in verdicts if not foreign])),
+                by_grade=tuple((grade, verdict, count) for (grade, verdict), count in sorted(grades.items())),
             )
         )
     return sorted(
@@ -253,11 +256,16 @@ def main() -> None:
     )
     print(f"wheel {FULL_M_S:g} -> {WORN_M_S:g} m/s")
     print("compensation  part of life    good  false  incon.  foreign  caught  passed  reach shift")
-    for row in wear_table(bars):
+    rows = wear_table(bars)
+    for row in rows:
         print(
             f"{row.way:12s}  {row.part:14s}  {row.good:4d}  {row.false_alarms:5d}  {row.good_inconclusive:6d}  "
             f"{row.foreign:7d}  {row.caught:6d}  {row.passed:6d}  {100 * row.reach_shift:+10.1f} %"
         )
+    for row in rows:
+        if row.part == "whole life":
+            verdicts = ", ".join(f"{grade} {verdict} {count}" for grade, verdict, count in row.by_grade)
+            print(f"foreign bars, compensation {row.way}: {verdicts}")
     print(
         "force  bars  reach shift  rate shift  false  incon.  evidence median  99 % (limit "
         f"{-math.log(FALSE_ALARM):.2f})"
