@@ -31,6 +31,12 @@ contact's mean are such a tail, not grinding. Simulated tails begin below a tent
 TAIL_S = 0.5
 """What counts as a tail decays with this time (s) once the contact has ended, so that a weaker bar is soon seen."""
 
+IDLE_FACTOR = 2.0
+"""A contact begins this many times above what is seen between contacts, plus ``least_streaks``: a glowing wheel and lit
+haze may look like a few streaks all the time."""
+IDLE_S = 0.5
+"""Time over which that is averaged (s)."""
+
 
 class ContactFinder:
     """Finds contacts; one call a frame, in order of time.
@@ -55,6 +61,7 @@ class ContactFinder:
         self._level = 0.0  # mean streaks a frame of the contact under way, or of the last one
         self._frames = 0
         self._ended_s = -math.inf
+        self._idle = 0.0  # mean streaks a frame between contacts
 
     @property
     def in_contact(self) -> bool:
@@ -66,6 +73,11 @@ class ContactFinder:
         """Begin of the contact under way (s), NaN without one."""
         return math.nan if self._begin_s is None else self._begin_s
 
+    @property
+    def last_spark_s(self) -> float:
+        """Last frame of the contact under way that belongs to it for certain (s), NaN without a contact."""
+        return self._last_spark_s
+
     def is_spark(self, streaks: int) -> bool:
         """Whether one frame by itself shows sparks, and not just the tail of a contact."""
         return streaks >= max(1.0, self._least())
@@ -75,6 +87,7 @@ class ContactFinder:
         tail = TAIL_SHARE * self._level
         if self._begin_s is None:
             tail *= math.exp(-max(0.0, self._last_s - self._ended_s) / TAIL_S)
+            return max(self._settings.least_streaks + IDLE_FACTOR * self._idle, tail)
         return max(self._settings.least_streaks, tail)
 
     def update(self, t_s: float, streaks: int) -> Begin | End | None:
@@ -86,9 +99,15 @@ class ContactFinder:
             self._ended_s = -math.inf
         if not self._recent:
             self._watching_s = t_s
+        step_s = min(max(t_s - self._last_s, 0.0), IDLE_S)
         self._last_s = t_s
         self._recent.append((t_s, streaks))
-        return self._look_for_begin(t_s) if self._begin_s is None else self._look_for_end(t_s, streaks)
+        if self._begin_s is not None:
+            return self._look_for_end(t_s, streaks)
+        found = self._look_for_begin(t_s)
+        if found is None and streaks < max(1.0, self._least()):  # the first sparks of a contact are not idle
+            self._idle += (streaks - self._idle) * step_s / IDLE_S
+        return found
 
     def _mean_over(self, span_s: float, t_s: float) -> float:
         """Mean streaks a frame over the last ``span_s``; older frames are let go of."""
@@ -114,21 +133,23 @@ class ContactFinder:
         if self.is_spark(streaks):
             self._frames += 1
             self._level += (streaks - self._level) / self._frames
-            steady = self._recent[-2][1] > 0 if len(self._recent) > 1 else True
-            if steady or t_s - self._last_spark_s < self._settings.begin_s:
+            # a single frame is a stray; sparks last, or follow sparks
+            last = [count for at, count in self._recent if at > t_s - self._settings.begin_s]
+            if sum(last) >= self._least() * len(last) or t_s - self._last_spark_s < 2.5 * self._period_s:
                 self._last_spark_s = t_s
         if t_s - self._begin_s > self._settings.longest_s:
             return self._end("longest")
         span = max(self._settings.gap_s, self._period_s)
         mean = self._mean_over(span, t_s)
         silent = t_s - self._last_spark_s >= span - 0.5 * self._period_s
-        return self._end("gap") if mean < self._least() and silent else None
+        return self._end("gap", idle=mean) if mean < self._least() and silent else None
 
-    def _end(self, reason: str) -> End:
+    def _end(self, reason: str, *, idle: float = 0.0) -> End:
         assert self._begin_s is not None
         end = End(begin_s=self._begin_s, t_s=self._last_spark_s, reason=reason)
         self._begin_s = None
         self._ended_s = end.t_s
+        self._idle = idle
         self._last_spark_s = math.nan
         self._recent.clear()
         return end

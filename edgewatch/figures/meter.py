@@ -52,7 +52,7 @@ class BarMeter:
         self._optics = optics
         self._finder = ContactFinder(settings, optics.fps)
         self._before: deque[_Waiting] = deque()
-        self._held: list[_Waiting] = []
+        self._held: deque[_Waiting] = deque()
         self._start()
 
     def _start(self) -> None:
@@ -100,12 +100,9 @@ class BarMeter:
                 self._before.popleft()
             return []
         self._held.append(frame)
-        if not self._finder.is_spark(streaks):
-            return []  # part of the contact only if sparks follow
         found = []
-        held, self._held = self._held, []
-        for one in held:
-            found += self._take(one)
+        while self._held and self._held[0][1] <= self._finder.last_spark_s:  # the rest only if sparks follow
+            found += self._take(self._held.popleft())
         return found
 
     def _take(self, frame: _Waiting) -> list[Begin | WindowDone | BarDone]:
