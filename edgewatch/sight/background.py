@@ -29,8 +29,8 @@ LEARN_PICTURES = 8
 PATTERN_RATE_HZ = 25.0
 """Grey levels per second that the pattern may follow: a lamp warming up, not a spark stream."""
 
-LEAST_NOISE_DN = 0.6
-"""Quantisation, 1/sqrt(12), and what compression hides: noise is never taken to be lower (DN)."""
+LEAST_NOISE_DN = 1.0
+"""Noise is never taken to be lower than a grey level: compression smooths it away and leaves ripples instead (DN)."""
 
 NOISE_STRIDE = (3, 5)
 """Rows and columns between the pixels that noise is estimated from; coprime with compression blocks of 8 and 16."""

@@ -24,6 +24,10 @@ from edgewatch.sight.optics import Optics
 SAME_PX = 8.0
 """A burst nearer than this to one seen before is the same (px)."""
 
+DRIFT_SHARE = 0.6
+DRIFT_S = 0.001
+"""Arms fly on with some of the particle's speed, for about a millisecond, until air has stopped such small pieces."""
+
 ARM_SIDE_PX = 3.0
 """The line of an arm passes within this of its burst (px)."""
 
@@ -82,10 +86,26 @@ class Glow:
         """Bursts (M, 2) px of earlier pictures that may still glow."""
         return np.concatenate(self.recent) if self.recent else np.zeros((0, 2))
 
-    def take(self, apexes: Apexes, stem: NDArray[np.bool_]) -> NDArray[np.int64]:
-        """Indices of the bursts that are new; remembers all of them."""
+    def _drift(self, lengths: Lengths) -> NDArray[np.float64]:
+        """How far (px) the arms of each remembered burst may have drifted along the flight."""
         old = self.remembered()
-        gap = np.hypot(apexes.at[:, None, 0] - old[None, :, 0], apexes.at[:, None, 1] - old[None, :, 1])
+        if not lengths.known:
+            return np.zeros(len(old))
+        speed = lengths.typical_px(old) / self.optics.exposure_s
+        number = [len(at) for at in self.recent]
+        age = np.repeat(np.arange(len(number), 0, -1), number) * self.optics.period_s
+        return np.asarray(DRIFT_SHARE * speed * np.minimum(age, DRIFT_S))
+
+    def take(self, apexes: Apexes, stem: NDArray[np.bool_], lengths: Lengths) -> NDArray[np.int64]:
+        """Indices of the bursts that are new; remembers all of them."""
+        old, drift = self.remembered(), self._drift(lengths)
+        gx = apexes.at[:, None, 0] - old[None, :, 0]
+        gy = apexes.at[:, None, 1] - old[None, :, 1]
+        away = old - np.asarray(self.optics.contact_px)
+        away /= np.maximum(np.hypot(away[:, 0], away[:, 1]), 1e-6)[:, None]
+        # The cloud of arms drifts on along the flight: the nearest point of the way it may have come counts.
+        on = np.clip(gx * away[:, 0] + gy * away[:, 1], 0.0, drift)
+        gap = np.hypot(gx - on * away[:, 0], gy - on * away[:, 1])
         fresh = np.flatnonzero(~(gap < SAME_PX).any(axis=1))
         self.recent = [*self.recent, apexes.at][-self._pictures :] if self._pictures else []
         fade = (1.0 - FORGET) ** fresh.size

@@ -22,6 +22,9 @@ PART_LEAST = 12
 SPREAD_LEAST, SPREAD_MOST = 0.1, 0.6
 """Limits of the deviation of the logarithm of length."""
 
+RADIAL_COS = 0.985
+"""Only lines that come from the contact point teach: within 10 degrees. Arms of bursts fly any way."""
+
 LONGEST_FACTOR = 2.0
 LONGEST_PX = 400.0
 """No streak is longer than this many typical lengths; before any is known, than so many px."""
@@ -60,9 +63,12 @@ class Lengths:
 
     def learn(self, begin: NDArray[np.float64], end: NDArray[np.float64]) -> None:
         """Add streaks from ``begin`` to ``end`` (N, 2) px."""
-        gap = end - begin
-        self._away = np.concatenate([self._away, self._distance(0.5 * (begin + end))])[-KEPT:]
-        self._log = np.concatenate([self._log, np.log(np.maximum(np.hypot(gap[:, 0], gap[:, 1]), 1.0))])[-KEPT:]
+        gap, middle = end - begin, 0.5 * (begin + end)
+        length, away = np.maximum(np.hypot(gap[:, 0], gap[:, 1]), 1.0), self._distance(middle)
+        along = np.abs((gap * (middle - self._contact)).sum(axis=1))
+        straight = along > RADIAL_COS * length * away
+        self._away = np.concatenate([self._away, away[straight]])[-KEPT:]
+        self._log = np.concatenate([self._log, np.log(length[straight])])[-KEPT:]
         count = self._away.size
         if count < LEAST_KEPT:
             return
@@ -77,8 +83,12 @@ class Lengths:
         before = np.concatenate(([0.0], weight))[cuts]
         half = np.searchsorted(weight, 0.5 * (before[:-1] + before[1:]))
         typical = log[ranked][np.minimum(half, count - 1)]
+        # Air only slows sparks down: nearer the wheel they are no shorter, whatever fragments say.
+        typical = np.maximum.accumulate(typical[::-1])[::-1]
         self._places, self._typical = away[(cuts[:-1] + cuts[1:]) // 2], typical
-        off = float(np.median(np.abs(log - typical[part])))
+        # Bursts shorten streaks, nothing makes them longer: the deviation is that of the longer ones.
+        above = log[log > typical[part]] - typical[part][log > typical[part]]
+        off = float(np.median(above)) if above.size else 0.0
         self.spread = float(np.clip(1.4826 * off, SPREAD_LEAST, SPREAD_MOST))
 
     def _distance(self, at: NDArray[np.float64]) -> NDArray[np.float64]:

@@ -30,7 +30,7 @@ class SightTuning:
 
     least_snr: float = 4.7
     least_length_px: float = 6.0
-    least_sure: float = 0.4
+    least_sure: float = 0.6
     longest_glow_s: float = 0.0035
     arm_draw_s: float = 0.00035
 
@@ -91,7 +91,7 @@ class Sight:
         snr = found.level / self._background.noise_dn * self._meter.line_gain
         keep = sorted_.streak & (snr >= s.least_snr) & (length > s.least_length_px)
         lines = np.concatenate([begin, end], axis=1)[keep]
-        fresh = self._glow.take(apexes, sorted_.stem)
+        fresh = self._glow.take(apexes, sorted_.stem, self._lengths)
         at, late = apexes.at[fresh], ~sorted_.stem[fresh]
         track_px = float(length[keep].sum())
         snr = snr[keep]
