@@ -345,6 +345,19 @@ class RelaySettings:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class ContactSettings:
+    """Contact input: a switch or an output of the line's control that is closed while a bar is at the wheel."""
+
+    port: str = _declare("", _text(), "serial port of its own, or pyserial URL; empty: no such input")
+    line: str = _declare(
+        "cts", _choice("cts", "dsr", "dcd", "ri"), "input line; the switch lies between it and RTS or DTR"
+    )
+    late_s: float = _declare(
+        1.0, _number(0.05, 60), "a bar at the wheel for this long without sparks: the station does not see (s)"
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class RehearsalSettings:
     """The simulated line behind the source ``rehearsal:``."""
 
@@ -375,6 +388,7 @@ class Settings:
     mqtt: MqttSettings = MqttSettings()
     orders: OrderSettings = OrderSettings()
     relay: RelaySettings = RelaySettings()
+    contact: ContactSettings = ContactSettings()
     rehearsal: RehearsalSettings = RehearsalSettings()
 
     def sight_optics(self) -> Optics:
@@ -504,6 +518,11 @@ def _contradictions(settings: Settings) -> list[tuple[str, str]]:
             "relay.kind relay.on_frame relay.off_frame",
             relay.kind != "frames" or relay.on_frame != relay.off_frame or not relay.on_frame,
             "relay.on_frame, relay.off_frame: the same bytes cannot do both",
+        ),
+        (
+            "relay.kind relay.port contact.port",
+            relay.kind == "none" or not relay.port or settings.contact.port != relay.port,
+            f"contact.port = {settings.contact.port!r}: is the relay's; the contact input needs a port of its own",
         ),
         (
             "relay.kind relay.blind_stop_s",

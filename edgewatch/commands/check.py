@@ -28,6 +28,7 @@ from edgewatch.record.bandfiles import load_bands
 from edgewatch.record.reading import open_journal
 from edgewatch.record.rows import DamagedError, check_whole
 from edgewatch.relay.port import open_relay
+from edgewatch.relay.serialport import SerialPort
 from edgewatch.settings import Settings
 from edgewatch.sight.detections import PictureFlag
 from edgewatch.sight.picture import reduce_picture
@@ -84,6 +85,7 @@ def run(args: argparse.Namespace) -> int:
         ("bands", _bands),
         ("broker", _broker),
         ("relay", _relay),
+        ("contact input", _contact),
         ("journal", _journal),
         ("evidence", _evidence),
         ("disk", _disk),
@@ -270,6 +272,21 @@ def _relay(settings: Settings, folder: Path) -> Iterator[Finding]:
     if relay.energise_to == "stop":
         detail = 'relay.energise_to = "stop": a dead board or a cut wire lets the line run'
         yield Finding(check="relay", result=NOTE, detail=detail)
+
+
+def _contact(settings: Settings, folder: Path) -> Iterator[Finding]:
+    """Its port opens and the line can be read."""
+    contact = settings.contact
+    if not contact.port:
+        yield Finding(check="contact input", result=NOTE, detail='contact.port = "": the line does not report its bars')
+        return
+    port = SerialPort(contact.port, part="contact", raised=True)
+    try:
+        closed = port.sensed(contact.line)
+    finally:
+        port.close()
+    says = "a bar is at the wheel" if closed else "no bar is at the wheel"
+    yield Finding(check="contact input", result=GOOD, detail=f"{contact.line} at {contact.port}: {says}")
 
 
 def _journal(settings: Settings, folder: Path) -> Iterator[Finding]:

@@ -20,6 +20,7 @@ from edgewatch.judge.trial import CONFORMING, NONCONFORMING
 from edgewatch.judge.verification import bar_evidence, verify
 from edgewatch.monitor.alerts import Alert, AlertList
 from edgewatch.monitor.bar import BarAtWheel, band_body, bar_line
+from edgewatch.monitor.barline import BarLine
 from edgewatch.monitor.blindness import FLAG_CAUSES, Blindness
 from edgewatch.monitor.condition import Complaints
 from edgewatch.monitor.effects import Effect, Publish, Record, Remember, SaveBand, SendView, SetRelay, Told
@@ -76,6 +77,7 @@ class Monitor:
             live=live,
             stall_s=settings.source.stall_s,
         )
+        self._line = BarLine(late_s=settings.contact.late_s)
         self._alerts = AlertList(next_number=memory.next_alert, open_alerts=memory.alerts)
         self._number = memory.bar
         self._counts = dict(memory.counts)
@@ -133,6 +135,7 @@ class Monitor:
         effects += self.complain({cause: cause in causes for cause in FLAG_CAUSES.values()}, stamp)
         for event in self._meter.update(detections, t_s=frame.t_s, skipped=frame.skipped):
             effects += self._on_event(event, stamp)
+        effects += self._look_at_line(stamp)
         if self._bar is not None:
             self._bar.note(self._complaints.blinding)
             self._bar.exhibits.offer(frame.picture, detections, frame.t_s)
@@ -171,8 +174,18 @@ class Monitor:
             },
             stamp,
         )
+        effects += self._look_at_line(stamp)
         effects += self._blind_stop(stamp)
         return effects + self._summary(stamp)
+
+    def bar_at_wheel(self, closed: bool, stamp: Stamp) -> list[Effect]:
+        """The line's contact input says that a bar is at the wheel, or no longer."""
+        self._line.report(closed, stamp.monotonic_s)
+        return self._look_at_line(stamp)
+
+    def _look_at_line(self, stamp: Stamp) -> list[Effect]:
+        missed = self._line.missed(self._bar is not None, stamp.monotonic_s)
+        return self.complain({"no_contact": missed}, stamp)
 
     def complain(self, causes: Mapping[str, bool], stamp: Stamp, *, detail: str = "") -> list[Effect]:
         """Causes that are active or not, as whoever looks after them says; records what changed."""

@@ -11,20 +11,15 @@ keeps its level, unless it has a communication watchdog of its own: set that whe
 from __future__ import annotations
 
 import contextlib
-import fcntl
-import struct
-import termios
 import time
-from collections.abc import Callable, Iterator
-from typing import Any, Protocol, TypeVar
-
-import serial
+from collections.abc import Callable
+from typing import Protocol
 
 from edgewatch.errors import DeviceError, SettingsError
+from edgewatch.relay.serialport import SLICE_S, SerialPort
 from edgewatch.settings import RelaySettings
 from edgewatch.wire.relayframes import (
     BoardFrames,
-    FrameError,
     find_coil,
     find_written,
     has_answer,
@@ -34,18 +29,6 @@ from edgewatch.wire.relayframes import (
     silence_s,
     write_coil,
 )
-
-_SLICE_S = 0.02
-"""Longest single wait for a byte (s); pyserial sets the port anew when a time-out changes, so it never does."""
-_MOST_ANSWER = 4096
-"""A board that babbles more than this (bytes) within one answer time is not answering."""
-
-_ATTEMPTS = 2
-"""One mangled answer is noise on the line; two in a row are a fault."""
-
-_PARITIES = {"none": serial.PARITY_NONE, "even": serial.PARITY_EVEN, "odd": serial.PARITY_ODD}
-
-T = TypeVar("T")
 
 
 class Relay(Protocol):
@@ -94,7 +77,7 @@ class LineRelay:
         if settings.port.startswith("socket://"):  # pyserial would accept the level and send nothing
             raise SettingsError(f"relay.port = {settings.port!r}: a raw socket has no control lines; use rfc2217://")
         self._settings = settings
-        self._port = _Port(settings)
+        self._port = _open_port(settings)
         self._energised = False
 
     def apply(self, stop: bool) -> None:
@@ -113,7 +96,7 @@ class LineRelay:
             return None if energised is None else is_stopped(energised, settings.energise_to)
         give_up_s = time.monotonic() + settings.answer_s
         while (closed := self._port.sensed(settings.sense_line)) != self._energised and time.monotonic() < give_up_s:
-            time.sleep(_SLICE_S)  # control lines can only be asked: there is nothing to wait on that every driver has
+            time.sleep(SLICE_S)  # control lines can only be asked: there is nothing to wait on that every driver has
         return is_stopped(closed, settings.energise_to)
 
     def close(self, *, leave: bool = False) -> None:
@@ -134,7 +117,7 @@ class FramesRelay:
             on_answer=settings.on_answer,
             off_answer=settings.off_answer,
         )
-        self._port = _Port(settings)
+        self._port = _open_port(settings)
         self._energised: bool | None = None
 
     def apply(self, stop: bool) -> None:
@@ -166,7 +149,7 @@ class CoilRelay:
     def __init__(self, settings: RelaySettings) -> None:
         """Open the port; the board keeps its level. Raises ``SettingsError``, ``DeviceError``."""
         self._settings = settings
-        self._port = _Port(settings, silence_s=silence_s(settings.baud))
+        self._port = _open_port(settings, silence_s=silence_s(settings.baud))
 
     def apply(self, stop: bool) -> None:
         """Write the coil and wait for the echo."""
@@ -192,93 +175,12 @@ def _say_farewell(relay: Relay, settings: RelaySettings, leave: bool) -> None:
             relay.apply(True)
 
 
-class _Port:
-    """An open serial port whose errors are all ``DeviceError``."""
-
-    def __init__(self, settings: RelaySettings, *, silence_s: float = 0.0) -> None:
-        """``silence_s``: the line rests this long between an answer and the next request."""
-        self._name, self._answer_s, self._silence_s = settings.port, settings.answer_s, silence_s
-        self._quiet_since_s = time.monotonic()
-        with self._translated("cannot be opened"):
-            try:
-                port: Any = serial.serial_for_url(settings.port, do_not_open=True)
-            except ValueError as error:
-                raise SettingsError(
-                    f"relay.port = {settings.port!r}: allowed is a serial port or a pyserial URL ({error})"
-                ) from error
-            port.baudrate, port.parity = settings.baud, _PARITIES[settings.parity]
-            port.timeout = _SLICE_S
-            port.rts = port.dtr = False  # before opening, so that a line relay stays released
-            if isinstance(port, serial.Serial):  # a device; pyserial's URLs know neither
-                port.write_timeout = settings.answer_s
-                port.exclusive = True  # two programs that switch one relay would fight
-            port.open()
-        self._port = port
-
-    def exchange(self, request: bytes, find: Callable[[bytes], T | None]) -> T:
-        """Send ``request`` and read until ``find`` finds an answer; once more if it was lost or mangled.
-
-        Raises ``DeviceError`` if no answer comes in time, or the board refuses.
-        """
-        received = b""
-        with self._translated("does not answer"):
-            for _ in range(_ATTEMPTS):
-                self._rest()
-                self._port.reset_input_buffer()  # late answers to earlier requests
-                self._port.write(request)
-                received, answer = self._listen(find)
-                self._quiet_since_s = time.monotonic()
-                if answer is not None:
-                    return answer
-        said = f"answers {received[-16:].hex(' ').upper()}" if received else "does not answer"
-        raise DeviceError(f"relay {self._name}: {said} to {request.hex(' ').upper()}")
-
-    def _listen(self, find: Callable[[bytes], T | None]) -> tuple[bytes, T | None]:
-        received = b""
-        give_up_s = time.monotonic() + self._answer_s
-        while True:
-            try:
-                answer = find(received)
-            except FrameError as error:
-                raise DeviceError(f"relay {self._name}: {error}") from error
-            if answer is not None or time.monotonic() >= give_up_s or len(received) > _MOST_ANSWER:
-                return received, answer
-            received += self._port.read(max(1, self._port.in_waiting))
-
-    def set_line(self, line: str, level: bool) -> None:
-        """Set RTS or DTR."""
-        with self._translated(f"cannot switch {line.upper()}"):
-            setattr(self._port, line, level)
-
-    def driven(self, line: str) -> bool | None:
-        """Level of RTS or DTR as the driver holds it; ``None`` where there is no driver to ask (URLs)."""
-        if not isinstance(self._port, serial.Serial):
-            return None
-        with self._translated(f"cannot read {line.upper()}"):
-            word = fcntl.ioctl(self._port.fileno(), termios.TIOCMGET, struct.pack("I", 0))
-        return bool(struct.unpack("I", word)[0] & (termios.TIOCM_RTS if line == "rts" else termios.TIOCM_DTR))
-
-    def sensed(self, line: str) -> bool:
-        """Level of CTS, DSR or DCD."""
-        with self._translated(f"cannot read {line.upper()}"):
-            return bool(getattr(self._port, "cd" if line == "dcd" else line))
-
-    def close(self) -> None:
-        """Let go of the port; one that is gone raises nothing."""
-        with contextlib.suppress(OSError, termios.error):
-            self._port.close()
-
-    def _rest(self) -> None:
-        rest_s = self._quiet_since_s + self._silence_s - time.monotonic()
-        if rest_s > 0:
-            time.sleep(rest_s)
-
-    @contextlib.contextmanager
-    def _translated(self, what: str) -> Iterator[None]:
-        try:
-            yield
-        except (OSError, termios.error) as error:  # serial.SerialException is an OSError
-            text = " ".join(str(error).split())
-            if "exclusively lock" in text:
-                text = "another program uses it"
-            raise DeviceError(f"relay {self._name}: {what}: {text}") from error
+def _open_port(settings: RelaySettings, *, silence_s: float = 0.0) -> SerialPort:
+    return SerialPort(
+        settings.port,
+        part="relay",
+        baud=settings.baud,
+        parity=settings.parity,
+        answer_s=settings.answer_s,
+        silence_s=silence_s,
+    )

@@ -38,6 +38,7 @@ from edgewatch.monitor.monitor import Monitor
 from edgewatch.record.bandfiles import load_bands, save_band
 from edgewatch.record.evidence import EvidenceStore
 from edgewatch.record.journal import Entry, Journal
+from edgewatch.relay.contact import ContactInput
 from edgewatch.relay.keeper import RelayKeeper, RelayReport
 from edgewatch.relay.port import open_relay
 from edgewatch.settings import Settings
@@ -191,6 +192,8 @@ class Station:
         if settings.relay.kind != "none":
             self._relay = RelayKeeper(lambda: open_relay(settings.relay), self._relay_report, chance=random.random)
             self._add("relay", self._relay.run)
+        if settings.contact.port:
+            self._add("contact input", ContactInput(settings.contact, self._bar_at_wheel).run)
         self._watchdog = Watchdog()
 
     def _add(self, name: str, work: Callable[[threading.Event], None]) -> None:
@@ -396,6 +399,9 @@ class Station:
         lost = state.state == "offline" and not refused and not untrusted
         detail = f"{state.reason}: {state.detail}" if state.reason else ""
         self._tell({"broker_lost": lost, "broker_refuses": refused, "broker_untrusted": untrusted}, detail)
+
+    def _bar_at_wheel(self, closed: bool) -> None:
+        self._inbox.put(lambda monitor, stamp: monitor.bar_at_wheel(closed, stamp))
 
     def _relay_report(self, report: RelayReport) -> None:
         self._inbox.put(

@@ -57,7 +57,19 @@ def test_a_sound_station(check: Check) -> None:
     status, found, _ = check()
     assert status == 0
     assert list(found) == [
-        *("configuration", "source", "pictures", "bands", "broker", "relay", "journal", "evidence", "disk", "clock")
+        *(
+            "configuration",
+            "source",
+            "pictures",
+            "bands",
+            "broker",
+            "relay",
+            "contact input",
+            "journal",
+            "evidence",
+            "disk",
+            "clock",
+        )
     ]
     assert found["source"][0][0] == "good" and "12 pictures of 160 x 120 px" in found["source"][0][1]
     assert found["broker"] == [("note", "mqtt.enabled = false: not used")]
@@ -177,6 +189,14 @@ def test_relay(check: Check) -> None:
     status, found, _ = check("[relay]\nkind = 'line'\nport = 'loop://'\nenergise_to = 'stop'\n")
     assert status == 0
     assert [result for result, _ in found["relay"]] == ["good", "note"]
+
+
+def test_contact_input(check: Check) -> None:
+    """A port that can be read says whether a bar is at the wheel; one that is not there is exit status 3."""
+    status, found, _ = check("[contact]\nport = 'loop://'\nline = 'cts'\n")  # the loop wires RTS to CTS
+    assert status == 0 and found["contact input"] == [("good", "cts at loop://: a bar is at the wheel")]
+    status, _, line = check("[contact]\nport = '/dev/nowhere'\n")
+    assert status == 3 and "contact /dev/nowhere: cannot be opened" in line
 
 
 def test_journal_whole_and_damaged(check: Check, tmp_path: Path) -> None:
