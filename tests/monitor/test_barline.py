@@ -6,6 +6,9 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from edgewatch.monitor.barline import BarLine
+from edgewatch.monitor.effects import Effect
+from tests.monitor.streams import stamp
+from tests.monitor.test_monitor import monitor, records, run
 
 
 def test_bar_without_sparks_is_missed_until_one_is_seen() -> None:
@@ -59,3 +62,21 @@ def test_missed_only_after_a_long_report_without_sparks(steps: list[tuple[bool, 
         if in_contact:
             assert not missed
         before = missed
+
+
+def test_monitor_is_blind_until_it_sees_a_contact() -> None:
+    """A bar reported and not seen is a blinding cause, told once; the next bar that is seen ends it and is judged."""
+
+    def told(effects: list[Effect]) -> list[bool]:
+        conditions = [one["causes"] for one in records(effects, "condition")]
+        return ["no_contact" in [cause["cause"] for cause in causes] for causes in conditions]
+
+    station = monitor("C15")
+    effects = station.bar_at_wheel(True, stamp(0.0))
+    for tick in range(1, 30):
+        effects += station.tick(stamp(tick / 10.0))
+    effects += station.bar_at_wheel(False, stamp(3.0))
+    assert told(effects) == [True]
+    effects = station.bar_at_wheel(True, stamp(10.0)) + run(station, begin_s=10.0)
+    assert told(effects) == [False]
+    assert [one["verdict"] for one in records(effects, "bar")] == ["conforming"]
