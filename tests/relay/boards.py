@@ -74,7 +74,7 @@ def board(frames: dict[bytes, bool], answer: Answer) -> Iterator[Board]:
 class LineServer:
     """A serial port with control lines behind RFC 2217 (Telnet COM port control) on a real socket.
 
-    A pty has no control lines, this has. Its RTS is wired to its CTS and DTR to DSR, unless ``stuck`` opens the wire.
+    A pty has no control lines, this has. Its RTS is wired to its CTS and DTR to DSR. When the client goes, both fall.
     """
 
     def __init__(self) -> None:
@@ -115,6 +115,7 @@ class LineServer:
                     for _ in manager.filter(data):
                         pass
                     manager.check_modem_lines()
+            self.serial.rts = self.serial.dtr = False  # as a driver does when the last one closes the port (HUPCL)
 
     def close(self) -> None:
         """Stop serving and cut the connection."""

@@ -6,6 +6,9 @@ import asyncio
 import dataclasses
 import os
 import select
+import signal
+import subprocess
+import sys
 import threading
 import time
 from collections.abc import Iterator
@@ -217,6 +220,19 @@ def test_control_line_over_a_socket(server: LineServer) -> None:
         assert relay.read_back() is stop
     relay.close()
     wait_for(lambda: server.serial.rts is False)
+
+
+@pytest.mark.parametrize("death", [signal.SIGKILL, signal.SIGTERM])
+def test_line_stops_when_the_process_dies(server: LineServer, death: signal.Signals) -> None:
+    """Energised to run, and the process is killed outright: nobody holds the port any more, so the line stops."""
+    program = (
+        "import sys, time\nfrom edgewatch.relay.port import open_relay\nfrom edgewatch.settings import RelaySettings\n"
+        "relay = open_relay(RelaySettings(kind='line', port=sys.argv[1]))\nrelay.apply(False)\ntime.sleep(600)\n"
+    )
+    with subprocess.Popen([sys.executable, "-W", "ignore", "-c", program, server.url]) as station:
+        wait_for(lambda: server.serial.rts)
+        station.send_signal(death)
+        wait_for(lambda: not server.serial.rts)
 
 
 def test_pty_has_no_control_lines() -> None:
