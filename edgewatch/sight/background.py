@@ -23,6 +23,9 @@ CELL_PX = 8
 OPENING_CELLS = 5
 """Side of the opening in cells: bundles of streaks narrower than 40 px do not enter the drift."""
 
+DEEPEST_HOLE_DN = 1.0
+"""A cell further below the pattern than the picture as a whole is not drift, which is smooth (DN)."""
+
 LEARN_PICTURES = 8
 """Pictures over which the pattern is first taken as the lowest value seen: sparks move on, machine parts stay."""
 
@@ -67,6 +70,8 @@ class Background:
         cells = _cv.resize(picture, small, interpolation=_cv.INTER_AREA).astype(np.float32)
         if self._pattern_cells is not None:
             cells -= self._pattern_cells
+            # where a glow that the pattern has learnt goes out, the opening would carry the hole to its surroundings
+            cells = np.maximum(cells, float(np.median(cells)) - DEEPEST_HOLE_DN)
         drift = _open(cells)
         whole = _cv.resize(np.rint(drift * 64.0).astype(np.int16), (width, height), interpolation=_cv.INTER_LINEAR)
         ground = _cv.convertScaleAbs(whole, alpha=1.0 / 64.0) if self._pattern is None else None
