@@ -1,8 +1,8 @@
 """A rehearsed line from pictures to verdicts: teach four grades, then judge bars of which one in twenty is foreign.
 
-``python -m tests.bench.bench_line [--references 20] [--bars 200] [--expect C45]``. Everything goes through the same sight,
-meter, teaching and trial as a station's; bars scatter in hazard, stream, particle size, launch temperature and force, and
-the wheel wears by a seventh while the line runs.
+``python -m tests.bench.bench_line [--references 20] [--bars 200] [--expect C45]``. Everything goes through the same
+sight, meter, teaching and trial as a station's; bars scatter in hazard, stream, particle size, launch temperature and
+force, and the wheel wears by a seventh while the line runs.
 """
 
 from __future__ import annotations
