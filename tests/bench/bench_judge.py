@@ -502,12 +502,12 @@ def _part_coverage() -> None:
 
 
 def _part_bands() -> None:
-    print("Share of taught bands that hold 99 % of bars' true values (promised 0.95): burst-rate, reach; 2000 a point")
+    print("Share of taught bands that hold 99 % of bars' true values (promised 0.95): burst-rate, reach; 500 a point")
     for count in (5, 10, 20, 50):
         for windows, hazard in ((5, 0.08), (5, 0.45), (20, 2.2)):
             for scatter in (0.05, 0.2):
                 found = band_coverage(
-                    count, Population(hazard_per_m=hazard, windows=windows, scatter=scatter), teachings=2000
+                    count, Population(hazard_per_m=hazard, windows=windows, scatter=scatter), teachings=500
                 )
                 mean = hazard * windows * WINDOW_S * TRACK_M_S
                 print(f"  {count:3d} bars of {mean:5.1f} bursts, scatter {scatter:g}: {found[0]:.3f}, {found[1]:.3f}")
