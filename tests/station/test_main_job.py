@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import json
 import shutil
 import subprocess
@@ -83,7 +84,8 @@ def test_the_foreign_bar_is_on_journal_broker_and_relay(mill: tuple[Path, list[B
         told = lines(edgewatch("watch", "--json", folder=tmp_path))
         wait_until(lambda: any(m.payload["state"] == "offline" for m in reader.on("presence")), "the station to leave")
         reader.stop()
-        assert relay.requests[:2] == [ON, OFF]  # energised to run, released by the foreign bar
+        levels = [level for level, _ in itertools.groupby(relay.requests)]  # a level is repeated now and then as proof
+        assert levels == [ON, OFF]  # energised to run, released by the foreign bar, and it stays so
         assert not relay.energised
     assert [line["verdict"] for line in told] == verdicts(truth)
     bars = {m.payload["bar"]: m.payload["verdict"] for m in reader.on("bar")}
@@ -93,7 +95,7 @@ def test_the_foreign_bar_is_on_journal_broker_and_relay(mill: tuple[Path, list[B
     seqs = sorted(set(reader.seqs()))
     assert seqs == list(range(seqs[0], seqs[0] + len(seqs)))
     switches = [m.payload for m in reader.on("relay")]
-    assert [(one["wanted"], one["read_back"]) for one in switches] == [("run", "unknown"), ("stop", "unknown")]
+    assert [(one["wanted"], one["read_back"]) for one in switches] == [("run", "run"), ("stop", "stop")]
     journal = lines(edgewatch("journal", "bars", "--json", folder=tmp_path))
     assert [row["verdict"] for row in journal] == verdicts(truth)
     pictures = sorted(path.name for path in (tmp_path / "evidence").rglob("*.jpg"))
