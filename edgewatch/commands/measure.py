@@ -14,10 +14,13 @@ import numpy as np
 
 from edgewatch.commands.measuring import Measurement, Watcher, figures_body, measure_clip
 from edgewatch.commands.options import add_optics, add_station, load_settings
-from edgewatch.errors import DeviceError
+from edgewatch.errors import DeviceError, SettingsError
 from edgewatch.figures.flightfit import FlightFit, FlightLinker
 from edgewatch.figures.meter import BarDone
+from edgewatch.monitor.annotate import annotate, encode_jpeg
+from edgewatch.monitor.exhibits import Exhibits
 from edgewatch.sight.detections import Detections
+from edgewatch.sight.frame import Frame
 
 EXAMPLE = "edgewatch measure bar.mkv --mm-per-px 0.8 --contact 20,200 --direction 0 --exposure-ms 2.5 --fps 200 --json"
 
@@ -32,6 +35,9 @@ def declare(parser: argparse.ArgumentParser) -> None:
         "--detections", metavar="OUT.jsonl", help="write streaks and bursts of every frame, one JSON line a frame"
     )
     parser.add_argument(
+        "--picture", metavar="OUT.jpg", help="write the frame with the most to see, streaks and bursts drawn into it"
+    )
+    parser.add_argument(
         "--flight",
         action="store_true",
         help="link streaks over frames and fit particle radius and launch speed (400 frames/s or more)",
@@ -41,18 +47,35 @@ def declare(parser: argparse.ArgumentParser) -> None:
 def run(args: argparse.Namespace) -> int:
     """Run ``measure``."""
     settings, _ = load_settings(args)
+    if args.picture and len(args.clips) > 1:
+        raise SettingsError(f"--picture {args.picture}: only with one clip")
+    best = Exhibits(1) if args.picture else None
     out = _open(args.detections) if args.detections else None
     try:
         for clip in args.clips:
             linker = FlightLinker(settings.sight_optics()) if args.flight else None
-            found = measure_clip(clip, settings, watcher=_watcher(out, linker))
+            found = measure_clip(clip, settings, watcher=_watcher(out, linker, best))
             _print(found, linker.fit() if linker else None, as_json=args.json, named=len(args.clips) > 1)
     except OSError as error:
         raise DeviceError(f"{args.detections}: cannot be written: {error.strerror or error}") from error
     finally:
         if out is not None:
             out.close()
+    if best is not None:
+        _write_picture(Path(args.picture), found, best)
     return 0
+
+
+def _write_picture(path: Path, found: Measurement, best: Exhibits) -> None:
+    """Annotate the worthiest frame. Raises ``DeviceError`` when there is none or it cannot be written."""
+    if not best.kept:
+        raise DeviceError(f"{path}: not written: nothing was seen in {found.clip}")
+    (one,) = best.kept
+    caption = f"{one.t_s:.3f} s: {len(one.detections.streaks)} streaks, {len(one.detections.bursts)} bursts"
+    try:
+        path.write_bytes(encode_jpeg(annotate(one.picture, one.detections, found.optics, [caption])))
+    except OSError as error:
+        raise DeviceError(f"{path}: cannot be written: {error.strerror or error}") from error
 
 
 def _open(name: str) -> TextIO:
@@ -62,16 +85,18 @@ def _open(name: str) -> TextIO:
         raise DeviceError(f"{name}: cannot be written: {error.strerror or error}") from error
 
 
-def _watcher(out: TextIO | None, linker: FlightLinker | None) -> Watcher | None:
+def _watcher(out: TextIO | None, linker: FlightLinker | None, best: Exhibits | None) -> Watcher | None:
     """What is done with the detections of every frame besides the figures."""
-    if out is None and linker is None:
+    if out is None and linker is None and best is None:
         return None
 
-    def watch(index: int, t_s: float, seen: Detections) -> None:
+    def watch(frame: Frame, seen: Detections) -> None:
         if out is not None:
-            _write(out, index, t_s, seen)
+            _write(out, frame.index, frame.t_s, seen)
         if linker is not None:
-            linker.add(seen.streaks, seen.streak_flags, t_s)
+            linker.add(seen.streaks, seen.streak_flags, frame.t_s)
+        if best is not None:
+            best.offer(frame.picture, seen, frame.t_s)
 
     return watch
 

@@ -22,6 +22,7 @@ from edgewatch.frames.registry import open_source
 from edgewatch.frames.values import Source
 from edgewatch.settings import Settings
 from edgewatch.sight.detections import Detections
+from edgewatch.sight.frame import Frame
 from edgewatch.sight.optics import Optics
 from edgewatch.sight.sight import Sight
 
@@ -30,8 +31,8 @@ PROGRESS_S = 5.0
 BLINK_S = 0.2
 """The same on a terminal (s)."""
 
-Watcher = Callable[[int, float, Detections], None]
-"""Called with frame number, time (s) and what was seen."""
+Watcher = Callable[[Frame, Detections], None]
+"""Called with every frame, its picture reduced as configured, and what was seen in it."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -108,7 +109,7 @@ def measure_source(
         times.append(time.perf_counter() - begun)
         contacts += [event for event in found if isinstance(event, BarDone)]
         if watcher is not None:
-            watcher(frame.index, frame.t_s, detections)
+            watcher(dataclasses.replace(frame, picture=picture), detections)
         frames, last_s = frames + 1, frame.t_s
         progress.step(frames, last_s)
     progress.end()

@@ -57,7 +57,7 @@ class Exhibits:
             give_way = []
         else:
             give_way = [min(self._kept, key=lambda one: one.worth)]
-        if any(one.worth >= worth for one in give_way):
+        if any(one.worth >= worth for one in give_way):  # the earlier of two equals stays
             return
         self._kept = [one for one in self._kept if one not in give_way]
         self._kept.append(Exhibit(t_s=t_s, picture=picture.copy(), detections=detections))
