@@ -40,8 +40,6 @@ LOOK_S = 1.0
 """The outbox is looked into this often even when nobody said that something was recorded."""
 STUCK_S = 30.0
 """A broker that answers nothing for so long although messages wait for its answer is left and connected to anew."""
-LATE_S = 5.0
-"""A first connection within this time after the start is prompt: what was recorded meanwhile is not late."""
 VIEWS = 4
 """Pictures held while they cannot be sent; the newest win."""
 
@@ -93,7 +91,7 @@ class Link:
         self.state = LinkState(state="stopped")
         self.callback_errors = 0
         self.connections = 0
-        self._started_s = 0.0
+        self._attempts = 0
         self._late = self._earlier_run = 0
         self.heartbeat_s = time.monotonic()
         """Monotonic time of the loop's last turn: what a supervisor watches, rather than a flag."""
@@ -105,7 +103,7 @@ class Link:
         if self._thread is not None and self._thread.is_alive():
             raise ValueError("the session runs already")
         self._stopping.clear()
-        self._started_s = time.monotonic()
+        self._attempts = 0
         self._late = 0
         self._earlier_run = self._newest()
         self._thread = threading.Thread(target=self._run, name="mqtt", daemon=True)
@@ -176,6 +174,7 @@ class Link:
 
     def _one_connection(self) -> LinkState:
         """Connect, serve until the connection ends, and return why it ended."""
+        self._attempts += 1
         self._tell(LinkState(state="connecting"))
         connection: Connection | None = None
         try:
@@ -213,8 +212,8 @@ class Link:
         return connection
 
     def _serve(self, connection: Connection) -> None:
-        prompt = self.connections == 0 and time.monotonic() - self._started_s < LATE_S
-        self._late = self._earlier_run if prompt else max(self._late, self._newest())
+        # What an earlier run left is late, and all that waits when the first attempt failed or a connection was lost.
+        self._late = self._earlier_run if self._attempts == 1 else max(self._late, self._newest())
         self._sender.begin(min(connection.most_in_flight, IN_FLIGHT), late=self._late)
         self.connections += 1
         self._say_presence(connection, online=True, reason="")

@@ -43,6 +43,7 @@ def kills(count: int, seed: int) -> bool:
         for situation, number in sorted(outcome.kills.items()):
             print(f"  {situation:22} {number:5d} kills")
         print(f"  records {outcome.recorded}, sent again with the same number {outcome.repeats}")
+        print(f"  live windows missed by a subscriber still away after the broker's restart {outcome.windows_missed}")
         for name in ("lost_records", "not_delivered", "altered", "out_of_order", "second_use"):
             print(f"  {name.replace('_', ' '):22} {len(getattr(outcome, name)):5d}")
         return outcome.clean
@@ -129,7 +130,8 @@ def _outage(folder: Path, away_s: float) -> bool:
     good &= reader.told <= status.windows_thinned < reader.told + 1001
     print(
         f"  {_span(away_s):>8} {status.next_seq - 1:11d} {status.windows_thinned:9d} {status.used_bytes / 1e6:6.0f} MB"
-        f" {total_s * together / max(1, steps) * 1e3:5.2f}/{slowest_ms:5.1f} {reader.firsts:9d} {reader.firsts / drained_s:9.0f}"
+        f" {total_s * together / max(1, steps) * 1e3:5.2f}/{slowest_ms:5.1f} {reader.firsts:9d}"
+        f" {reader.firsts / drained_s:9.0f}"
         f" {'all' if reader.bars == bars else 'LOST':>6} {'all, once, in order' if good else 'WRONG':>20}"
         f" {reader.repeats:8d} {longest_live_s:7.2f}",
         flush=True,

@@ -1,4 +1,9 @@
-"""Kill a recording and sending process at random moments, broker up and down, and compare journal and subscriber."""
+"""Kill a recording and sending process at random moments, broker up and down, and compare journal and subscriber.
+
+Two things are MQTT's, not ours, and are counted by themselves. Order holds within one quality of service: a broker
+hands on QoS 0 at once while QoS 1 waits in a subscriber's queue (MQTT 5 section 4.6). And a live window, at QoS 0, is
+for those who are there: when the broker has just come back, the subscriber may come back after the station.
+"""
 
 from __future__ import annotations
 
@@ -26,7 +31,9 @@ SITUATIONS = ("broker up", "broker down", "broker stops midway", "broker comes m
 
 @dataclass
 class Outcome:
-    """What a campaign found. All lists of numbers should be empty."""
+    """What a campaign found. All lists of numbers should be empty; ``windows_missed``: live windows that a subscriber
+    missed while it was away after a restart of the broker.
+    """
 
     kills: Counter[str] = field(default_factory=Counter)
     recorded: int = 0
@@ -35,6 +42,7 @@ class Outcome:
     not_delivered: list[int] = field(default_factory=list)
     altered: list[int] = field(default_factory=list)
     out_of_order: list[int] = field(default_factory=list)
+    windows_missed: int = 0
     second_use: list[int] = field(default_factory=list)
 
     @property
@@ -49,22 +57,28 @@ def campaign(folder: Path, *, kills: int, seed: int) -> Outcome:
     outcome = Outcome()
     broker = Broker(folder / "broker", persistence=True)
     promised: set[int] = set()
+    restarted: set[int] = set()
     payloads: dict[int, bytes] = {}
     with running(broker):
         reader = Reader(broker, session="reader").ready(broker)
         for number in range(kills):
             situation = SITUATIONS[number % 4]
-            promised |= _one_kill(folder, broker, rng, situation, number)
+            given = _one_kill(folder, broker, rng, situation, number)
+            promised |= given
+            if situation in ("broker stops midway", "broker comes midway"):
+                restarted |= given
             if situation != "broker up" and not broker.up:
                 broker.start()
             reader.ready(broker)  # what is live is for those who are there
             _compare_journal(folder, promised, payloads, outcome)
             outcome.kills[situation] += 1
         _drain(folder, broker)
-        wait_until(lambda: payloads.keys() <= set(reader.seqs()), "every number arrives", within_s=60)
+        until_s = time.monotonic() + 30.0
+        while not payloads.keys() <= set(reader.seqs()) and time.monotonic() < until_s:
+            time.sleep(0.1)  # what has not arrived by then is counted as not delivered
         reader.stop()
     outcome.recorded = len(payloads)
-    _compare_reader(reader, payloads, outcome)
+    _compare_reader(reader, payloads, restarted, outcome)
     return outcome
 
 
@@ -129,19 +143,26 @@ def _drain(folder: Path, broker: Broker) -> None:
     journal.close()
 
 
-def _compare_reader(reader: Reader, payloads: dict[int, bytes], outcome: Outcome) -> None:
-    """What the subscriber saw is what was recorded, each number first seen in order."""
-    first: dict[int, bytes] = {}
+def _compare_reader(reader: Reader, payloads: dict[int, bytes], restarted: set[int], outcome: Outcome) -> None:
+    """What the subscriber saw is what was recorded, each number first seen in order within its quality of service."""
+    seen: set[int] = set()
+    newest = {0: 0, 1: 0}
     for message in reader.seen:
         payload = message.payload
         if "seq" not in payload:
             continue
-        seq, raw = payload["seq"], encode(payload)
-        if seq in first:
+        seq = payload["seq"]
+        if seq in seen:
             outcome.repeats += 1
-        elif seq != len(first) + 1:
+        elif seq < newest[message.qos]:
             outcome.out_of_order.append(seq)
-        if raw != payloads.get(seq):
+        else:
+            newest[message.qos] = seq
+        if encode(payload) != payloads.get(seq):
             outcome.altered.append(seq)
-        first.setdefault(seq, raw)
-    outcome.not_delivered += [seq for seq in payloads if seq not in first]
+        seen.add(seq)
+    for seq in sorted(payloads.keys() - seen):
+        if seq in restarted and b'"edgewatch.window"' in payloads[seq]:
+            outcome.windows_missed += 1
+        else:
+            outcome.not_delivered.append(seq)

@@ -537,10 +537,11 @@ def test_a_broker_that_forbids_publishing_keeps_the_outbox_whole(tmp_path: Path,
     broker = Broker(tmp_path / "broker", acl=acl)
     with running(broker):
         station = make_station(broker.port)
-        station.record(alert(), bar(), alert())
+        # Nothing after the bar: Mosquitto 2.0.11 closes as well, and what it had not read would cost us its answer.
+        station.record(alert(), bar())
         station.link.start()
         station.wait("offline", "not_authorised")
-        wait_until(lambda: station.journal.status().unsent <= 2, "the first alert")
+        wait_until(lambda: station.journal.status().unsent == 1, "the first alert")
         assert station.journal.pending(1)[0].kind == "bar"
 
 
