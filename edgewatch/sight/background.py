@@ -35,7 +35,7 @@ PATTERN_RATE_HZ = 25.0
 LEAST_NOISE_DN = 1.0
 """Noise is never taken to be lower than a grey level: compression smooths it away and leaves ripples instead (DN)."""
 
-NOISE_STRIDE = (3, 5)
+NOISE_STRIDE = (5, 7)
 """Rows and columns between the pixels that noise is estimated from; coprime with compression blocks of 8 and 16."""
 
 
@@ -86,13 +86,14 @@ class Background:
     def _measure_noise(self, picture: NDArray[np.uint8], ground: NDArray[np.uint8]) -> None:
         rows, columns = NOISE_STRIDE
         here = ground[::rows, ::columns]
-        left = picture[::rows, ::columns].astype(np.float32) - here
+        left = picture[::rows, ::columns].ravel().astype(np.float32) - here.ravel()
         self.level_dn = float(here.mean())
         self.uneven_dn = float(here.std())
         # Median absolute deviation finds the scale, clipping the sparks away; the clipped deviation then refines it
         # below one grey level, which a median of integers cannot do (0.9871: a Gaussian clipped at 3 deviations).
-        centre = float(np.median(left))
-        scale = max(LEAST_NOISE_DN, 1.4826 * float(np.median(np.abs(left - centre))))
+        half = left.size // 2
+        centre = float(np.partition(left, half)[half])
+        scale = max(LEAST_NOISE_DN, 1.4826 * float(np.partition(np.abs(left - centre), half)[half]))
         quiet = left[np.abs(left - centre) <= 3.0 * scale]
         deviation = float(quiet.std()) / 0.9871 if quiet.size else 0.0
         self.raw_noise_dn = deviation

@@ -20,6 +20,7 @@ from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
 from edgewatch.sight.burst_weights import HIDDEN, HIDDEN_BIAS, OUTPUT, OUTPUT_BIAS
+from edgewatch.sight.ridges import Ridges
 from edgewatch.sight.segments import Segments
 
 _cv: Any = cv2
@@ -36,22 +37,25 @@ GAP_LENGTHS = 3.0
 LEAST_SIN = 0.2
 """Pieces that meet differ in direction by at least this sine (12 degrees): else the meeting point is not determined."""
 
-CELL_PX = 2.0
-"""Side of the cells in which meeting points are counted (px)."""
+CELL_PX = 4.0
+CELL_BLUR = 0.7
+"""Side of the cells in which meeting points are counted (px), and blur of the count (cells)."""
 
-LEAST_VOTES = 0.8
-"""Votes, after blurring, that make a candidate: one clear meeting point."""
+LEAST_VOTES = 0.25
+"""Count after the blur that makes a candidate: one meeting point, which the blur leaves a third of."""
 
 BLOB_BLUR_PX = 1.5
-BLOB_ROUND = 0.15
-"""A blob's weaker curvature is at least this share of its stronger one; along a streak it is nearly zero."""
+BLOB_STEPS = ((3, 0), (2, 2), (0, 3), (2, -2))
+BLOB_FALL = 0.13
+"""At these steps either way (dx, dy; three pixels long) brightness has fallen by this share;
+along a streak it has not."""
 
 BLOB_NOISE = 8.0
 """A blob stands this many deviations of the blurred picture's noise above the background."""
 
-RING_RADII_PX = (0.0, 1.5, 3.0, 4.5, 6.0, 7.5, 9.0, 11.0, 13.0, 16.0)
+RING_RADII_PX = (0.0, 1.5, 3.0, 4.5, 6.0, 7.5, 9.0, 11.0, 13.0, 15.5, 18.5, 22.0)
 RING_DIRECTIONS = 36
-"""Rings and directions on which the picture about a candidate is read: at most 2.8 px apart."""
+"""Rings and directions on which the picture about a candidate is read: at most 3.8 px apart."""
 
 LEVEL_NOISE = 3.0
 """Levels enter as log(1 + level / (this many noise deviations))."""
@@ -71,12 +75,10 @@ class Apexes:
     sure: NDArray[np.float64]
 
 
-def find_apexes(
-    pieces: Segments, blurred: NDArray[np.float32], noise: float, contact_px: tuple[float, float], least_sure: float
-) -> Apexes:
-    """Bursts of one picture. ``blurred``: float32 (H, W) from the ridge detector, ``noise``: its noise (DN)."""
-    at = find_candidates(pieces, blurred, noise)
-    sure = judge_patches(read_patches(at, blurred, noise, contact_px))
+def find_apexes(pieces: Segments, ridges: Ridges, contact_px: tuple[float, float], least_sure: float) -> Apexes:
+    """Bursts of one picture: candidates of at least the probability ``least_sure``."""
+    at = find_candidates(pieces, ridges)
+    sure = judge_patches(read_patches(at, ridges.blurred, ridges.threshold_noise, contact_px))
     likely = sure >= least_sure
     at, sure = at[likely], sure[likely]
     gap = np.hypot(at[:, None, 0] - at[None, :, 0], at[:, None, 1] - at[None, :, 1])
@@ -86,72 +88,64 @@ def find_apexes(
     return Apexes(at=at[keep], sure=sure[keep])
 
 
-def find_candidates(pieces: Segments, blurred: NDArray[np.float32], noise: float) -> NDArray[np.float64]:
+def find_candidates(pieces: Segments, ridges: Ridges) -> NDArray[np.float64]:
     """Points (M, 2) in px that may be bursts."""
-    return np.concatenate([_blobs(blurred, BLOB_NOISE * noise), _meeting_points(pieces, blurred.shape)])
+    return np.concatenate([_blobs(ridges), _meeting_points(pieces, ridges.blurred.shape)])
 
 
 def _meeting_points(pieces: Segments, shape: tuple[int, ...]) -> NDArray[np.float64]:
     count = pieces.length.size
-    none = np.zeros((0, 2))
     if count < 2:
-        return none
+        return np.zeros((0, 2))
     ends = np.concatenate([pieces.begin, pieces.end])
     inward = np.concatenate([pieces.axis, -pieces.axis])
-    pairs = cKDTree(ends).query_pairs(1.2 * GAP_PX, output_type="ndarray")
+    pairs = cKDTree(ends).query_pairs(GAP_PX, output_type="ndarray")
     i, j = pairs[:, 0], pairs[:, 1]
-    cross = inward[i, 0] * inward[j, 1] - inward[i, 1] * inward[j, 0]
-    good = (np.abs(cross) > LEAST_SIN) & (i % count != j % count)
+    ux, uy = inward[:, 0], inward[:, 1]
+    cross = ux[i] * uy[j] - uy[i] * ux[j]
+    good = np.flatnonzero((np.abs(cross) > LEAST_SIN) & (i % count != j % count))
     i, j, cross = i[good], j[good], cross[good]
-    gap = ends[j] - ends[i]
+    gx, gy = ends[j, 0] - ends[i, 0], ends[j, 1] - ends[i, 1]
     # ends[i] - s inward[i] = ends[j] - t inward[j], solved by Cramer's rule
-    s = -(gap[:, 0] * inward[j, 1] - gap[:, 1] * inward[j, 0]) / cross
-    t = -(gap[:, 0] * inward[i, 1] - gap[:, 1] * inward[i, 0]) / cross
+    s = -(gx * uy[j] - gy * ux[j]) / cross
+    t = -(gx * uy[i] - gy * ux[i]) / cross
     reach = np.minimum(GAP_PX, GAP_LENGTHS * pieces.length + 2.0)
-    good = (s > -INNER_PX) & (s < reach[i % count]) & (t > -INNER_PX) & (t < reach[j % count])
-    at = (ends[i] - s[:, None] * inward[i])[good]
-    at = at[(at > 0.0).all(axis=1) & (at[:, 0] < shape[1] - 1) & (at[:, 1] < shape[0] - 1)]
-    return _densest(at, shape) if at.size else none
+    good = np.flatnonzero((s > -INNER_PX) & (s < reach[i % count]) & (t > -INNER_PX) & (t < reach[j % count]))
+    i, s = i[good], s[good]
+    x, y = ends[i, 0] - s * ux[i], ends[i, 1] - s * uy[i]
+    inside = (x > 0.0) & (y > 0.0) & (x < shape[1] - 1) & (y < shape[0] - 1)
+    return _densest(x[inside], y[inside], shape)
 
 
-def _densest(votes: NDArray[np.float64], shape: tuple[int, ...]) -> NDArray[np.float64]:
-    """Places (M, 2) where votes (N, 2) are dense: maxima of a blurred count, then the mean of the votes about each."""
+def _densest(x: NDArray[np.float64], y: NDArray[np.float64], shape: tuple[int, ...]) -> NDArray[np.float64]:
+    """Places (M, 2) where votes at ``x``, ``y`` are dense: maxima of a blurred count, mean of the votes there."""
     high, wide = int(shape[0] / CELL_PX) + 1, int(shape[1] / CELL_PX) + 1
-    cell = (votes[:, 1] / CELL_PX).astype(np.int64) * wide + (votes[:, 0] / CELL_PX).astype(np.int64)
-    count = np.bincount(cell, minlength=high * wide).reshape(high, wide).astype(np.float32)
-    spread = 1.2
-    count = _cv.GaussianBlur(count, (7, 7), spread) * np.float32(2.0 * math.pi * spread**2)
-    top = _cv.dilate(count, np.ones((5, 5), np.uint8))
-    row, column = np.nonzero((count >= top) & (count > LEAST_VOTES))
-    at = np.stack([(column + 0.5) * CELL_PX, (row + 0.5) * CELL_PX], axis=1)
-    if not at.size:
-        return at
-    for _ in range(2):
-        near, which = cKDTree(at).query(votes, distance_upper_bound=2.0 * CELL_PX)
-        which = which[np.isfinite(near)]
-        mine = votes[np.isfinite(near)]
-        number = np.bincount(which, minlength=len(at))[:, None]
-        total = np.stack([np.bincount(which, mine[:, k], len(at)) for k in (0, 1)], axis=1)
-        at = np.where(number > 0, total / np.maximum(number, 1), at)
-    return at
+    cell = (y / CELL_PX).astype(np.int64) * wide + (x / CELL_PX).astype(np.int64)
+    layers = [np.bincount(cell, weight, high * wide).reshape(high, wide) for weight in (None, x, y)]
+    votes, sum_x, sum_y = (_cv.GaussianBlur(layer.astype(np.float32), (3, 3), CELL_BLUR) for layer in layers)
+    top = _cv.dilate(votes, np.ones((3, 3), np.uint8))
+    found = np.flatnonzero((votes >= top) & (votes > LEAST_VOTES))
+    number = votes.ravel()[found]
+    return np.stack([sum_x.ravel()[found] / number, sum_y.ravel()[found] / number], axis=1).astype(np.float64)
 
 
-def _blobs(blurred: NDArray[np.float32], threshold: float) -> NDArray[np.float64]:
-    """Local maxima (M, 2) from which brightness falls off in every direction."""
-    soft = _cv.GaussianBlur(blurred, (9, 9), BLOB_BLUR_PX)
-    top = _cv.dilate(soft, np.ones((5, 5), np.uint8))
-    found = (soft >= top) & (soft > threshold)
+def _blobs(ridges: Ridges) -> NDArray[np.float64]:
+    """Local maxima (M, 2) from which brightness falls off in every direction: no streak runs on from them."""
+    width = ridges.excess.shape[1]
+    soft = _cv.GaussianBlur(ridges.excess, (7, 7), BLOB_BLUR_PX)
+    found = soft >= _cv.dilate(soft, np.ones((5, 5), np.uint8))
+    found &= soft > max(2, int(BLOB_NOISE * ridges.threshold_noise))
     found[:EDGE_PX] = found[-EDGE_PX:] = False
     found[:, :EDGE_PX] = found[:, -EDGE_PX:] = False
-    row, column = np.nonzero(found)
-    centre = soft[row, column]
-    bxx = soft[row, column - 1] + soft[row, column + 1] - 2.0 * centre
-    byy = soft[row - 1, column] + soft[row + 1, column] - 2.0 * centre
-    bxy = soft[row - 1, column - 1] + soft[row + 1, column + 1] - soft[row - 1, column + 1] - soft[row + 1, column - 1]
-    half = np.hypot(0.5 * (bxx - byy), 0.25 * bxy)
-    mean = 0.5 * (bxx + byy)
-    keep = (mean + half) < BLOB_ROUND * (mean - half)
-    return np.stack([column[keep], row[keep]], axis=1).astype(np.float64)
+    index = np.flatnonzero(found)
+    flat = soft.ravel()
+    most = (2.0 * (1.0 - BLOB_FALL)) * flat.take(index)
+    keep = np.ones(index.size, np.bool_)
+    for dx, dy in BLOB_STEPS:
+        step = dy * width + dx
+        keep &= flat.take(index + step).astype(np.int16) + flat.take(index - step) < most
+    row, column = np.divmod(index[keep], width)
+    return np.stack([column, row], axis=1).astype(np.float64)
 
 
 def read_patches(
@@ -179,5 +173,8 @@ def read_patches(
 
 def judge_patches(patches: NDArray[np.float32]) -> NDArray[np.float64]:
     """Probability (M,) that each description (M, F) is a burst."""
-    hidden = np.maximum(patches @ HIDDEN + HIDDEN_BIAS, 0.0)
+    if not len(patches):
+        return np.zeros(0)
+    # OpenCV's product: for so small a one a threaded library spends more on waking its threads
+    hidden = np.maximum(_cv.gemm(patches, HIDDEN, 1.0, None, 0.0) + HIDDEN_BIAS, 0.0)
     return np.asarray(1.0 / (1.0 + np.exp(-np.clip(hidden @ OUTPUT + OUTPUT_BIAS, -30.0, 30.0))), dtype=np.float64)

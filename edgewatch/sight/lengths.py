@@ -15,6 +15,9 @@ KEPT = 400
 LEAST_KEPT = 8
 """Fewer streaks than this say nothing."""
 
+NEW_PART = 8
+"""The table is made anew once so great a part (one in NEW_PART) is new: it changes slowly, and costs."""
+
 PARTS = 8
 PART_LEAST = 12
 """The distance is cut into at most PARTS parts of at least PART_LEAST streaks."""
@@ -40,6 +43,7 @@ class Lengths:
         self._log = np.zeros(0)
         self._places = np.zeros(0)
         self._typical = np.zeros(0)
+        self._new = 0
         self.spread = SPREAD_MOST
 
     @property
@@ -69,9 +73,11 @@ class Lengths:
         straight = along > RADIAL_COS * length * away
         self._away = np.concatenate([self._away, away[straight]])[-KEPT:]
         self._log = np.concatenate([self._log, np.log(length[straight])])[-KEPT:]
+        self._new += int(straight.sum())
         count = self._away.size
-        if count < LEAST_KEPT:
+        if count < LEAST_KEPT or (self.known and self._new < count // NEW_PART):
             return
+        self._new = 0
         order = np.argsort(self._away, kind="stable")
         away, log = self._away[order], self._log[order]
         parts = int(np.clip(count // PART_LEAST, 1, PARTS))

@@ -30,6 +30,10 @@ STRAY_UNEVEN_DN = 60.0
 CROWDED_SHARE = 0.12
 """Share of pixels on ridges: one in eight means streaks as near to each other as they are wide."""
 
+SAMPLE_ROWS = 4
+"""Full scale is counted in one row of so many."""
+
+MOST_POINTS = 500
 LEAST_POINTS = 30
 BRIGHT_NOISE = 9.0
 CENTRED_PX = 0.2
@@ -63,10 +67,12 @@ class LightMeter:
         second difference at the crest is 2 (exp(-1 / 2V) - 1) of its height.
         """
         self._ridge_share = ridges.index.size / max(1, ridges.blurred.size)
-        bright = ridges.height > BRIGHT_NOISE * ridges.threshold_noise
-        bright &= np.abs(ridges.offset) < CENTRED_PX
-        if int(bright.sum()) < LEAST_POINTS:
+        bright = np.flatnonzero(
+            (ridges.height > BRIGHT_NOISE * ridges.threshold_noise) & (np.abs(ridges.offset) < CENTRED_PX)
+        )
+        if bright.size < LEAST_POINTS:
             return
+        bright = bright[:: -(-bright.size // MOST_POINTS)]
         share = np.clip(ridges.bend[bright] / (2.0 * ridges.height[bright]), 1e-3, 0.9)
         total = float(np.median(-0.5 / np.log1p(-share)))
         own = max(total - BLUR_PX**2, 0.1)
@@ -80,7 +86,8 @@ class LightMeter:
         snr: NDArray[np.float64],
     ) -> Light:
         """State of this picture. ``lines`` (N, 4) and ``snr`` (N,): its streaks."""
-        share = float(np.count_nonzero(picture >= FULL_DN)) / picture.size
+        sample = picture[::SAMPLE_ROWS]
+        share = float(np.count_nonzero(sample >= FULL_DN)) / sample.size
         width = WIDTH_PER_SIGMA * math.sqrt(self._variance) if math.isfinite(self._variance) else math.nan
         flags = PictureFlag.NONE
         if background.level_dn < NO_LIGHT_LEVEL_DN and background.raw_noise_dn < NO_LIGHT_NOISE_DN and not len(lines):

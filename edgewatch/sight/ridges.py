@@ -44,7 +44,8 @@ class Ridges:
     ``index``: int64, flat pixel index. ``x``, ``y``: float32, crest (px). ``cos``, ``sin``: float32, unit vector along
     the ridge. ``height``: float32, blurred picture at the pixel (DN). ``bend``: float32, minus the second derivative
     across (DN/px²). ``offset``: float32, crest from the pixel's centre, across (px). ``threshold_noise``: noise of the
-    blurred picture (DN). ``blurred``: float32 (H, W), the blurred picture.
+    blurred picture (DN). ``blurred``: float32 (H, W), the blurred picture. ``excess``: uint8 (H, W), what it was
+    made from.
     """
 
     index: NDArray[np.int64]
@@ -57,6 +58,7 @@ class Ridges:
     offset: NDArray[np.float32]
     threshold_noise: float
     blurred: NDArray[np.float32]
+    excess: NDArray[np.uint8]
 
 
 def find_ridges(excess: NDArray[np.uint8], noise_dn: float) -> Ridges:
@@ -95,16 +97,22 @@ def find_ridges(excess: NDArray[np.uint8], noise_dn: float) -> Ridges:
         offset=step,
         threshold_noise=NOISE_GAIN * noise_dn,
         blurred=blurred,
+        excess=excess,
     )
 
 
 def _candidates(blurred: NDArray[np.float32], threshold: float) -> NDArray[np.int64]:
-    """Flat indices of pixels above the threshold that are a local maximum along their row or their column."""
-    inner = blurred[1:-1, 1:-1]
-    found = np.zeros(blurred.shape, dtype=np.bool_)
-    m = MARGIN_PX
-    row = (inner >= blurred[1:-1, :-2]) & (inner > blurred[1:-1, 2:])
-    row |= (inner >= blurred[:-2, 1:-1]) & (inner > blurred[2:, 1:-1])
-    row &= inner > threshold
-    found[m:-m, m:-m] = row[m - 1 : 1 - m, m - 1 : 1 - m]
-    return np.flatnonzero(found)
+    """Flat indices of pixels above the threshold that are a local maximum along their row or their column.
+
+    The threshold thins the pixels first: the rest is done on what is left.
+    """
+    m, width = MARGIN_PX, blurred.shape[1]
+    lit = np.zeros(blurred.shape, dtype=np.bool_)
+    np.greater(blurred[m:-m, m:-m], threshold, out=lit[m:-m, m:-m])
+    index = np.flatnonzero(lit)
+    flat = blurred.ravel()
+    centre = flat.take(index)
+    along_row = (centre >= flat.take(index - 1)) & (centre > flat.take(index + 1))
+    along_column = (centre >= flat.take(index - width)) & (centre > flat.take(index + width))
+    kept: NDArray[np.int64] = index[along_row | along_column]
+    return kept

@@ -30,7 +30,7 @@ class SightTuning:
 
     least_snr: float = 4.7
     least_length_px: float = 6.0
-    least_sure: float = 0.6
+    least_sure: float = 0.55
     longest_glow_s: float = 0.0035
     arm_draw_s: float = 0.00035
 
@@ -84,7 +84,7 @@ class Sight:
         self._meter.measure_width(ridges)
         pieces = fit_segments(ridges, link_ridges(ridges, self._scratch))
         found = find_streaks(pieces, ridges.blurred, noise, self._lengths, o.axis)
-        apexes = find_apexes(pieces, ridges.blurred, noise, o.contact_px, s.least_sure)
+        apexes = find_apexes(pieces, ridges, o.contact_px, s.least_sure)
         sorted_ = sort_lines(found.begin, found.end, apexes, self._glow, self._lengths)
         begin, end = sorted_.begin, sorted_.end
         length = np.hypot(end[:, 0] - begin[:, 0], end[:, 1] - begin[:, 1])

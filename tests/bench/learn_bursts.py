@@ -29,11 +29,11 @@ from edgewatch.sight.segments import fit_segments, link_ridges
 from tests.scenes import Look, Scene, Stream, crossing_lines
 from tests.scoring import far
 
-FRAMES = 8
-HIDDEN_UNITS = 24
-RIGHT_PX, DOUBTFUL_PX = 5.0, 9.0
+FRAMES = 6
+HIDDEN_UNITS = 32
+RIGHT_PX, DOUBTFUL_PX = 9.0, 13.0
 """A candidate this near to a burst is one; up to the second distance it is left out."""
-DRAWN_S, HARDLY_DRAWN_S = 0.35e-3, 0.2e-3
+DRAWN_S, HARDLY_DRAWN_S = 0.35e-3, 0.3e-3
 
 Array = NDArray[np.float64]
 
@@ -57,7 +57,7 @@ def _scene(kind: str, seed: int) -> Iterator[tuple[NDArray[np.uint8], Array, Arr
     """Pictures, positions of glowing bursts, and for how long their third arm drew (s)."""
     rng = np.random.default_rng([77, seed, ord(kind)])
     optics = _optics(rng)
-    hazard = float(np.exp(rng.uniform(np.log(0.3), np.log(4.0))))
+    hazard = float(np.exp(rng.uniform(np.log(0.03), np.log(4.0))))
     sparks = float(np.exp(rng.uniform(np.log(600), np.log(6000))))
     if kind == "r":
         steel = find_steel(str(rng.choice(["C15", "C45", "C80"]))).varied(rng)
@@ -108,7 +108,7 @@ def collect(kinds: str, seeds: range) -> tuple[NDArray[np.float32], NDArray[np.b
                 noise = background.noise_dn * NOISE_GAIN
                 ridges = find_ridges(excess, background.noise_dn)
                 pieces = fit_segments(ridges, link_ridges(ridges, scratch))
-                at = find_candidates(pieces, ridges.blurred, noise)
+                at = find_candidates(pieces, ridges)
                 at = at[far(at, optics.contact_px)]
                 gap = np.hypot(*(at[:, None] - bursts[None]).transpose(2, 0, 1))
                 right = ((gap < RIGHT_PX) & (drew_s >= DRAWN_S)).any(axis=1)
