@@ -9,6 +9,7 @@ from __future__ import annotations
 import argparse
 import importlib
 import os
+import re
 import sys
 from collections.abc import Sequence
 from typing import NoReturn
@@ -44,7 +45,7 @@ class _Parser(argparse.ArgumentParser):
 
 def main(argv: Sequence[str] | None = None) -> int:
     """Run one command and return its exit status."""
-    words = list(sys.argv[1:] if argv is None else argv)
+    words = _with_pairs(sys.argv[1:] if argv is None else argv)
     parser = _Parser(prog="edgewatch", description="Edge monitor for inline grinding inspection.")
     parser.add_argument("--version", action="version", version=f"edgewatch {__version__}")
     choices = parser.add_subparsers(dest="command", metavar="COMMAND", required=True, parser_class=_Parser)
@@ -69,6 +70,20 @@ def main(argv: Sequence[str] | None = None) -> int:
     except BrokenPipeError:  # the reader of our output has gone: nothing more to tell it
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return 0
+
+
+_PAIR = re.compile(r"-[0-9.][^,]*,.+")
+
+
+def _with_pairs(words: Sequence[str]) -> list[str]:
+    """Tie a value such as ``-20,200`` to its option: argparse would take it for an option of its own."""
+    tied: list[str] = []
+    for word in words:
+        if _PAIR.fullmatch(word) and tied and tied[-1].startswith("--") and "=" not in tied[-1]:
+            tied[-1] += f"={word}"
+        else:
+            tied.append(word)
+    return tied
 
 
 def _say(status: int, *problems: str) -> int:

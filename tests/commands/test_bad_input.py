@@ -108,6 +108,14 @@ def test_every_command_explains_itself(capsys: pytest.CaptureFixture[str], comma
     assert f"edgewatch {command}" in capsys.readouterr().out.partition("example")[2]
 
 
+def test_a_contact_point_left_of_the_picture_is_no_option(capsys: pytest.CaptureFixture[str], folder: Path) -> None:
+    """``--contact -20,30`` as people write it, and with an equals sign."""
+    rest = ["--mm-per-px", "1", "--direction", "-90", "--exposure-ms", "2", "--fps", "100", "--json"]
+    assert run(capsys, "measure", "good.mkv", "--contact", "-20,30", *rest)[0] == 0
+    assert run(capsys, "measure", "good.mkv", "--contact=-20.5,-30", *rest)[0] == 0
+    assert folder.is_dir()
+
+
 @settings(max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
 @given(data=st.binary(max_size=400))
 def test_any_bytes_as_configuration(capsys: pytest.CaptureFixture[str], tmp_path: Path, data: bytes) -> None:
