@@ -41,7 +41,8 @@ RADIAL_COS = 0.985
 """Sparks fly straight from the contact point: within 10 degrees, given the direction error of a short line."""
 
 ACROSS_COS = 0.96
-"""A short line more than 16 degrees off is no spark's streak but the arm of some burst."""
+ACROSS_SHARE = 1.2
+"""A line more than 16 degrees off, and not longer than sparks fly, is no spark's streak but the arm of some burst."""
 
 STEM_LEAST_PX = 6.0
 """A stem is seen from this length on (px)."""
@@ -128,9 +129,14 @@ class Sorted:
 
 
 def sort_lines(
-    begin: NDArray[np.float64], end: NDArray[np.float64], apexes: Apexes, glow: Glow, lengths: Lengths
+    begin: NDArray[np.float64],
+    end: NDArray[np.float64],
+    whole: NDArray[np.bool_],
+    apexes: Apexes,
+    glow: Glow,
+    lengths: Lengths,
 ) -> Sorted:
-    """Tell streaks from arms. ``begin``, ``end`` (N, 2) px, the first nearer the wheel."""
+    """Tell streaks from arms. ``begin``, ``end`` (N, 2) px, the first nearer the wheel; ``whole``: both ends seen."""
     contact = np.asarray(glow.optics.contact_px)
     end = end.copy()
     gap = end - begin
@@ -142,7 +148,9 @@ def sort_lines(
     radial = np.abs((away * unit).sum(axis=1))
     typical = lengths.typical_px(middle) if lengths.known else np.full(len(begin), np.inf)
     short = length < SHORT_SHARE * typical
-    streak = ~(short & (radial < ACROSS_COS)) if lengths.known else np.ones(len(begin), np.bool_)
+    streak = np.ones(len(begin), np.bool_)
+    if lengths.from_contact:
+        streak = (radial > ACROSS_COS) | (length > ACROSS_SHARE * typical)
 
     # Of this picture's bursts: position of each along each line, from its begin, and beside it.
     along = (apexes.at[None, :, 0] - begin[:, None, 0]) * unit[:, None, 0]
@@ -155,7 +163,13 @@ def sort_lines(
     straight = (radial > RADIAL_COS)[:, None]
     left = length[:, None] - along
     ends_here = on & straight & (along > STEM_LEAST_PX) & (np.abs(left) <= ARM_GAP_PX)
-    runs_on = on & straight & (along > STEM_LEAST_PX) & (left > ARM_GAP_PX) & (left < SHORT_SHARE * typical[:, None])
+    runs_on = on & straight & (along > STEM_LEAST_PX) & (left > ARM_GAP_PX)
+    runs_on &= ~whole[:, None] | (left < SHORT_SHARE * typical[:, None])
+    if len(begin):  # one stem leads to a burst: the line that comes nearest
+        nearest = np.argmin(np.where(ends_here | runs_on, side, np.inf), axis=0)
+        only = np.arange(len(begin))[:, None] == nearest
+        ends_here &= only
+        runs_on &= only
     begins_here = on & (np.abs(along) <= ARM_GAP_PX) & (short[:, None] | ~straight)
     across = on & ~straight & (along > -ARM_GAP_PX) & (left > -ARM_GAP_PX) & short[:, None]
     streak &= ~(begins_here | across).any(axis=1)

@@ -28,6 +28,10 @@ SPREAD_LEAST, SPREAD_MOST = 0.1, 0.6
 RADIAL_COS = 0.985
 """Only lines that come from the contact point teach: within 10 degrees. Arms of bursts fly any way."""
 
+SHARE_KEEP = 0.95
+FROM_CONTACT_SHARE = 0.5
+"""Over some twenty pictures, this share of the length seen comes from the contact point if that is given rightly."""
+
 LONGEST_FACTOR = 2.0
 LONGEST_PX = 400.0
 """No streak is longer than this many typical lengths; before any is known, than so many px."""
@@ -44,12 +48,19 @@ class Lengths:
         self._places = np.zeros(0)
         self._typical = np.zeros(0)
         self._new = 0
+        self._all_px = 0.0
+        self._straight_px = 0.0
         self.spread = SPREAD_MOST
 
     @property
     def known(self) -> bool:
         """Whether enough streaks have been seen."""
         return bool(self._places.size)
+
+    @property
+    def from_contact(self) -> bool:
+        """Whether streaks come from the contact point as given: most of their length lies that way."""
+        return self.known and self._straight_px > FROM_CONTACT_SHARE * self._all_px
 
     @property
     def longest_px(self) -> float:
@@ -71,6 +82,9 @@ class Lengths:
         length, away = np.maximum(np.hypot(gap[:, 0], gap[:, 1]), 1.0), self._distance(middle)
         along = np.abs((gap * (middle - self._contact)).sum(axis=1))
         straight = along > RADIAL_COS * length * away
+        total, kept = float(length.sum()), float(length[straight].sum())
+        self._all_px = SHARE_KEEP * self._all_px + total
+        self._straight_px = SHARE_KEEP * self._straight_px + kept
         self._away = np.concatenate([self._away, away[straight]])[-KEPT:]
         self._log = np.concatenate([self._log, np.log(length[straight])])[-KEPT:]
         self._new += int(straight.sum())

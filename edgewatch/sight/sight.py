@@ -85,7 +85,7 @@ class Sight:
         pieces = fit_segments(ridges, link_ridges(ridges, self._scratch))
         found = find_streaks(pieces, ridges.blurred, noise, self._lengths, o.axis)
         apexes = find_apexes(pieces, ridges, o.contact_px, s.least_sure)
-        sorted_ = sort_lines(found.begin, found.end, apexes, self._glow, self._lengths)
+        sorted_ = sort_lines(found.begin, found.end, found.whole, apexes, self._glow, self._lengths)
         begin, end = sorted_.begin, sorted_.end
         length = np.hypot(end[:, 0] - begin[:, 0], end[:, 1] - begin[:, 1])
         snr = found.level / self._background.noise_dn * self._meter.line_gain
