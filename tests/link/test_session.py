@@ -235,6 +235,26 @@ def test_an_outage_loses_nothing(tmp_path: Path, make_station: Make, version: st
     assert {message.qos for message in reader.on("window")} == {0, 1}
 
 
+@pytest.mark.slow
+def test_a_broker_that_hangs_is_left_and_found_again(broker: Broker, reader: Reader, make_station: Make):
+    """The connection stands and nothing is answered: told by the keep alive, and nothing is lost."""
+    station = make_station(broker.port, mqtt={"keepalive_s": 2}).online()
+    station.record(bar())
+    station.emptied()
+    broker.pause()
+    try:
+        for number in range(100):
+            station.record(window(number), bar(number))
+        station.wait("offline", "no_answer")
+    finally:
+        broker.resume()
+    station.wait("online")
+    station.emptied()
+    wait_until(lambda: len(set(reader.seqs())) == 201, "every number")
+    recorded = {row.seq: row.payload for row in station.journal.rows()}
+    assert all(m.payload == recorded[m.payload["seq"]] for m in reader.seen if "seq" in m.payload)
+
+
 def test_a_broker_without_memory_gets_the_states_again(tmp_path: Path, make_station: Make):
     """After a restart of a broker that kept nothing, the condition in force is retained anew, without a number."""
     broker = Broker(tmp_path / "broker")
