@@ -4,7 +4,8 @@ Two parts. A *pattern* follows each pixel slowly by sigma-delta steps of one gre
 pixel's median over time (McFarlane & Schofield, Machine Vision and Applications 8, 1995): machine parts, hot pixels,
 the wheel's glow. A *drift* is what the picture at hand adds smoothly over space (haze, lamp flicker): the
 difference from the pattern, averaged in cells and opened morphologically (Serra 1982), so that nothing as thin as
-a streak survives in it. A single picture has no pattern: its background is drift alone.
+a streak survives in it. A single picture has no pattern: its background is the median over a neighbourhood, which
+bright streaks and dark bars both leave alone as long as they cover less than half of it.
 """
 
 from __future__ import annotations
@@ -26,8 +27,23 @@ OPENING_CELLS = 5
 DEEPEST_HOLE_DN = 1.0
 """A cell further below the pattern than the picture as a whole is not drift, which is smooth (DN)."""
 
-LEARN_PICTURES = 8
-"""Pictures over which the pattern is first taken as the lowest value seen: sparks move on, machine parts stay."""
+MEDIAN_STEP, MEDIAN_WINDOW = 3, 11
+"""The median of a single picture is taken over 33 px, of every third: several streaks apart."""
+
+MEAN_BELOW = 0.3989
+"""Mean of the negative part of Gaussian noise per deviation, 1 / sqrt(2 pi)."""
+
+TEXTURE_NOISE = 1.6
+TEXTURE_REACH = 5.0
+"""Roughness from this many noise deviations on raises the ground by so many of its own."""
+
+OTHER_SCENE_DN = 20.0
+"""When half of the picture changes by more than this at once, beside what all of it changes by (a lamp), it is another
+scene, and all is learnt anew (DN)."""
+
+LEARN_AT = (4, 8, 16)
+"""After so many pictures the pattern is the lowest value seen: sparks have moved on. That it lies below the mean by one
+or two noise deviations everywhere is made up for by the drift."""
 
 PATTERN_RATE_HZ = 25.0
 """Grey levels per second that the pattern may follow: a lamp warming up, not a spark stream."""
@@ -57,6 +73,7 @@ class Background:
         self._lowest: NDArray[np.uint8] | None = None
         self._pattern: NDArray[np.uint8] | None = None
         self._pattern_cells: NDArray[np.float32] | None = None
+        self._cells: NDArray[np.float32] | None = None
         self._seen = 0
         self.level_dn = 0.0
         self.noise_dn = LEAST_NOISE_DN
@@ -68,19 +85,28 @@ class Background:
         height, width = picture.shape
         small = (max(2, width // CELL_PX), max(2, height // CELL_PX))
         cells = _cv.resize(picture, small, interpolation=_cv.INTER_AREA).astype(np.float32)
+        if self._cells is not None:
+            change = cells - self._cells
+            if float(np.median(np.abs(change - np.median(change)))) > OTHER_SCENE_DN:
+                self.reset()
+        self._cells = cells
         if self._pattern_cells is not None:
-            cells -= self._pattern_cells
+            cells = cells - self._pattern_cells
             # where a glow that the pattern has learnt goes out, the opening would carry the hole to its surroundings
             cells = np.maximum(cells, float(np.median(cells)) - DEEPEST_HOLE_DN)
         drift = _open(cells)
         whole = _cv.resize(np.rint(drift * 64.0).astype(np.int16), (width, height), interpolation=_cv.INTER_LINEAR)
-        ground = _cv.convertScaleAbs(whole, alpha=1.0 / 64.0) if self._pattern is None else None
-        if ground is None:
-            assert self._pattern is not None
+        if self._pattern is None:
+            opened = _cv.convertScaleAbs(whole, alpha=1.0 / 64.0)
+            ground = _median(picture) if self._seen == 0 else opened
+        else:
+            opened = None
             ground = _cv.add(self._pattern, _cv.convertScaleAbs(_cv.max(whole, 0), alpha=1.0 / 64.0))
             ground = _cv.subtract(ground, _cv.convertScaleAbs(_cv.min(whole, 0), alpha=1.0 / 64.0))
         self._measure_noise(picture, ground)
-        self._learn(picture, ground, small)
+        self._learn(picture, opened, small)
+        if self._seen == 1:
+            ground = self._over_texture(picture, ground, small)
         return np.asarray(_cv.subtract(picture, ground))
 
     def _measure_noise(self, picture: NDArray[np.uint8], ground: NDArray[np.uint8]) -> None:
@@ -99,14 +125,27 @@ class Background:
         self.raw_noise_dn = deviation
         self.noise_dn = max(LEAST_NOISE_DN, deviation)
 
-    def _learn(self, picture: NDArray[np.uint8], ground: NDArray[np.uint8], small: tuple[int, int]) -> None:
+    def _over_texture(
+        self, picture: NDArray[np.uint8], ground: NDArray[np.uint8], small: tuple[int, int]
+    ) -> NDArray[np.uint8]:
+        """Ground raised where the picture is rough. Sparks only add light, so what lies below the ground is noise or
+        texture alone: where its mean is greater than noise explains, that texture reaches as far above the ground too.
+        """
+        below = _cv.resize(_cv.subtract(ground, picture), small, interpolation=_cv.INTER_AREA).astype(np.float32)
+        rough = _cv.blur(below, (3, 3)) / MEAN_BELOW - TEXTURE_NOISE * self.noise_dn
+        if float(rough.max()) <= 0.0:
+            return ground
+        raised = np.clip(TEXTURE_REACH * rough, 0.0, 255.0).astype(np.uint8)
+        return np.asarray(_cv.add(ground, _cv.resize(raised, ground.shape[::-1], interpolation=_cv.INTER_LINEAR)))
+
+    def _learn(self, picture: NDArray[np.uint8], opened: NDArray[np.uint8] | None, small: tuple[int, int]) -> None:
         self._seen += 1
         if self._first is None or self._lowest is None:
-            self._first, self._lowest = ground, picture.copy()
+            self._first, self._lowest = opened, picture.copy()
             return
-        if self._seen <= LEARN_PICTURES:
+        if self._seen <= max(LEARN_AT):
             self._lowest = _cv.min(self._lowest, picture)
-            if self._seen < LEARN_PICTURES // 2:
+            if self._seen not in LEARN_AT:
                 return
             self._pattern = _cv.max(self._first, self._lowest)
         elif self._seen % self._every == 0:
@@ -116,6 +155,14 @@ class Background:
         else:
             return
         self._pattern_cells = _cv.resize(self._pattern, small, interpolation=_cv.INTER_AREA).astype(np.float32)
+
+
+def _median(picture: NDArray[np.uint8]) -> NDArray[np.uint8]:
+    """Median about each pixel, of one pixel in MEDIAN_STEP each way, over MEDIAN_WINDOW of these."""
+    thin = np.ascontiguousarray(picture[::MEDIAN_STEP, ::MEDIAN_STEP])
+    height, width = picture.shape
+    smooth = _cv.blur(_cv.medianBlur(thin, MEDIAN_WINDOW), (3, 3))
+    return np.asarray(_cv.resize(smooth, (width, height), interpolation=_cv.INTER_LINEAR))
 
 
 def _open(cells: NDArray[np.float32]) -> NDArray[np.float32]:

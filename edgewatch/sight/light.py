@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from edgewatch.sight.background import Background
 from edgewatch.sight.detections import Light, PictureFlag
+from edgewatch.sight.reading import read_levels
 from edgewatch.sight.ridges import BLUR_PX, Ridges
 
 FULL_DN = 254
@@ -33,11 +34,14 @@ CROWDED_SHARE = 0.12
 SAMPLE_ROWS = 4
 """Full scale is counted in one row of so many."""
 
-MOST_POINTS = 500
-LEAST_POINTS = 30
-BRIGHT_NOISE = 9.0
-CENTRED_PX = 0.2
-"""Width is measured on at least so many ridge points, this bright (noise deviations), whose crest is this central."""
+LEAST_LENGTH_PX = 8.0
+MOST_LINES = 60
+PROFILE_AT = (0.2, 0.35, 0.5, 0.65, 0.8)
+PROFILE_PX = 9.0
+PROFILE_STEP_PX = 0.5
+PROFILE_NOISE = 6.0
+"""Width is read from profiles so far to either side, at these parts of at most so many lines, each of which is so long
+and stands so many noise deviations above the ground."""
 
 KEEP = 0.8
 """Share of the width known so far that each picture keeps."""
@@ -62,20 +66,30 @@ class LightMeter:
         own = self._variance if math.isfinite(self._variance) else (DEFAULT_WIDTH_PX / WIDTH_PER_SIGMA) ** 2
         return math.sqrt((own + BLUR_PX**2 + BETWEEN_PIXELS) / own)
 
-    def measure_width(self, ridges: Ridges) -> None:
-        """Width of streaks from height and curvature of ridges: of a Gaussian of variance V, sampled at pixels, the
-        second difference at the crest is 2 (exp(-1 / 2V) - 1) of its height.
-        """
+    def measure_width(self, begin: NDArray[np.float64], end: NDArray[np.float64], ridges: Ridges) -> None:
+        """Width of streaks from ``begin`` to ``end`` (N, 2) px: where profiles across them fall to half."""
         self._ridge_share = ridges.index.size / max(1, ridges.blurred.size)
-        bright = np.flatnonzero(
-            (ridges.height > BRIGHT_NOISE * ridges.threshold_noise) & (np.abs(ridges.offset) < CENTRED_PX)
-        )
-        if bright.size < LEAST_POINTS:
+        gap = end - begin
+        length = np.hypot(gap[:, 0], gap[:, 1])
+        chosen = np.flatnonzero(length > LEAST_LENGTH_PX)[:MOST_LINES]
+        if not chosen.size:
             return
-        bright = bright[:: -(-bright.size // MOST_POINTS)]
-        share = np.clip(ridges.bend[bright] / (2.0 * ridges.height[bright]), 1e-3, 0.9)
-        total = float(np.median(-0.5 / np.log1p(-share)))
-        own = max(total - BLUR_PX**2, 0.1)
+        unit = gap[chosen] / length[chosen, None]
+        side = np.arange(-PROFILE_PX, PROFILE_PX + 0.1, PROFILE_STEP_PX)
+        at = begin[chosen, None] + np.asarray(PROFILE_AT)[:, None] * gap[chosen, None]
+        x = at[..., 0, None] - side * unit[:, None, 1, None]
+        y = at[..., 1, None] + side * unit[:, None, 0, None]
+        level = read_levels(ridges.blurred, x.ravel(), y.ravel()).reshape(chosen.size, len(PROFILE_AT), side.size)
+        profile = np.median(level, axis=1)
+        top = profile.max(axis=1)
+        clear = top > PROFILE_NOISE * ridges.threshold_noise
+        if not clear.any():
+            return
+        wide = np.sort((profile[clear] >= 0.5 * top[clear, None]).sum(axis=1)) * PROFILE_STEP_PX
+        part = wide.size // 4  # the middle half: neighbours widen some, noise narrows others
+        across = float(wide[part : wide.size - part].mean())
+        total = (across / WIDTH_PER_SIGMA) ** 2
+        own = max(total - BLUR_PX**2 - BETWEEN_PIXELS, 0.1)
         self._variance = own if math.isnan(self._variance) else KEEP * self._variance + (1.0 - KEEP) * own
 
     def read(

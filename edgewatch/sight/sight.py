@@ -81,9 +81,9 @@ class Sight:
         excess = self._background.excess(picture)
         ridges = find_ridges(excess, self._background.noise_dn)
         noise = self._background.noise_dn * NOISE_GAIN
-        self._meter.measure_width(ridges)
         pieces = fit_segments(ridges, link_ridges(ridges, self._scratch))
         found = find_streaks(pieces, ridges.blurred, noise, self._lengths, o.axis)
+        self._meter.measure_width(found.begin, found.end, ridges)
         apexes = find_apexes(pieces, ridges, o.contact_px, s.least_sure)
         sorted_ = sort_lines(found.begin, found.end, found.whole, apexes, self._glow, self._lengths)
         begin, end = sorted_.begin, sorted_.end

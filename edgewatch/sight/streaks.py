@@ -22,8 +22,8 @@ from edgewatch.sight.segments import Segments
 BOX_PX = 4
 """Length of the two boxes whose difference is a step (px): twice the width of a streak's own blur."""
 
-BEYOND_PX = 3
-"""Steps are looked for up to this far beyond a piece's ends (px)."""
+BEYOND_PX = 5
+"""Steps are looked for this far beyond a piece's ends (px): at the picture's edge ridges end three pixels short."""
 
 STEP_NOISE = 4.0
 """A step is this many deviations of its own noise high."""
@@ -155,12 +155,16 @@ def find_steps(pieces: Segments, blurred: NDArray[np.float32], noise: float, axi
     inside = (place >= -BEYOND_PX) & (place <= length[owner] + BEYOND_PX)
     found = np.flatnonzero(inside & (height > np.maximum(STEP_NOISE * STEP_NOISE_GAIN * noise, STEP_SHARE * high)))
     peak = np.ones(found.size, np.bool_)
-    for shift in (-3, -2, -1, 1, 2, 3):  # margins keep the neighbours within the same piece
-        peak &= height[found] >= rise[found + shift] * np.sign(rise[found])
+    for aside in (-3, -2, -1, 1, 2, 3):  # margins keep the neighbours within the same piece
+        peak &= height[found] >= rise[found + aside] * np.sign(rise[found])
     found = found[peak]
     begins = rise[found] > 0.0
+    # A parabola through the rise and its neighbours puts the step between pixels.
+    before, here, after = height[found - 1], height[found], height[found + 1]
+    shift = np.clip(0.5 * (before - after) / np.minimum(before - 2.0 * here + after, -1e-9), -0.5, 0.5)
+    own = heading[owner[found]]
     return Steps(
-        at=np.stack([x[found], y[found]], axis=1),
+        at=np.stack([x[found] + shift * own[:, 0], y[found] + shift * own[:, 1]], axis=1),
         inward=heading[owner[found]] * np.where(begins, 1.0, -1.0)[:, None],
         height=height[found],
         size=length[owner[found]],
