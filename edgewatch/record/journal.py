@@ -176,7 +176,7 @@ class Journal:
         db = self._whole()
         try:
             return job(db)
-        except sqlite3.Error as error:
+        except table.FAILURES as error:
             self._roll_back(db)
             raise table.translated(error, self.path) from error
         except BaseException:
@@ -188,7 +188,7 @@ class Journal:
             if db.in_transaction:
                 db.execute("ROLLBACK")
             self._outbox.count(db)
-        except (sqlite3.Error, DamagedError):
+        except (*table.FAILURES, DamagedError):
             self._drop()  # opened anew by the next call
 
     def _whole(self) -> sqlite3.Connection:
@@ -244,7 +244,7 @@ class Journal:
             newest = max(table.newest(db) or 0, self._floor)
             if newest > ceiling.top:
                 ceiling.raise_to(newest + RESERVE)
-        except sqlite3.Error as error:
+        except table.FAILURES as error:
             self._drop()
             raise table.translated(error, self.path) from error
         except OSError as error:
@@ -309,7 +309,7 @@ class Journal:
             db = self._opened()
             records, states = self._write(db, lambda: salvage(aside, db))
             self._outbox.count(db)
-        except (sqlite3.Error, DeviceError, DamagedError, OSError) as error:
+        except (*table.FAILURES, DeviceError, DamagedError, OSError) as error:
             self._drop()
             return f"nothing could be taken over: {error}"
         return f"taken over: {records} unsent records, {states} kept values"

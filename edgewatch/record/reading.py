@@ -37,7 +37,7 @@ def open_journal(path: Path, *, write: bool = False) -> Iterator[sqlite3.Connect
         db = _connect(path, "rw" if write else "ro")
         table.check_ours(db, path)
         yield db
-    except sqlite3.Error as error:
+    except table.FAILURES as error:
         found = table.translated(error, path)
         raise _readable(found, path) from error
     except DamagedError as error:

@@ -91,8 +91,12 @@ _WORLD = ("locked", "busy", "full", "I/O", "unable to open", "readonly", "interr
 """Words in SQLite's texts of errors that lie outside the file. Python 3.10 does not give the error's code."""
 
 
-def translated(error: sqlite3.Error, path: Path) -> Exception:
-    """Return what a SQLite error means: ``DeviceError`` for the world's failures, ``DamagedError`` for the file's."""
+FAILURES = (sqlite3.Error, UnicodeDecodeError)
+"""What reading a file can raise: SQLite's errors, and the decoding of an error text that quotes a damaged table."""
+
+
+def translated(error: Exception, path: Path) -> Exception:
+    """Return what a failure means: ``DeviceError`` for the world's failures, ``DamagedError`` for the file's."""
     text = str(error)
     outside = isinstance(error, sqlite3.OperationalError) and any(word in text for word in _WORLD)
     if outside or isinstance(error, (sqlite3.ProgrammingError, sqlite3.InterfaceError)):
@@ -166,9 +170,9 @@ def newest(db: sqlite3.Connection) -> int | None:
     return None if value is None else int(value)
 
 
-def checked(seq: int, check: Any, payload: Any) -> bytes:
+def checked(seq: Any, check: Any, payload: Any) -> bytes:
     """Return the payload when it matches its check sum. Raises ``DamagedError``."""
-    if not isinstance(payload, bytes) or checksum(seq, payload) != check:
+    if not isinstance(seq, int) or not isinstance(payload, bytes) or checksum(seq, payload) != check:
         raise DamagedError(f"record {seq} does not match its check sum")
     return payload
 

@@ -8,7 +8,7 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
-from edgewatch.record.rows import checksum
+from edgewatch.record.rows import FAILURES, checksum
 from edgewatch.wire.kinds import KINDS
 
 MOST_RECORDS = 1_000_000
@@ -49,7 +49,7 @@ def _rows(old: sqlite3.Connection, query: str) -> Iterator[Any]:
             if number >= MOST_RECORDS:
                 return
             yield row
-    except (sqlite3.Error, OverflowError):
+    except (*FAILURES, OverflowError):
         return
 
 

@@ -19,6 +19,7 @@ from hypothesis import HealthCheck, example, given, settings
 from hypothesis import strategies as st
 
 from edgewatch.errors import DeviceError
+from edgewatch.record import reading
 from edgewatch.record.journal import RESERVE, Journal
 from tests.record.entries import alert, bar, condition, stamp, window
 
@@ -290,6 +291,28 @@ def test_headers_that_fuzzing_found(file: Path, at: int, content: bytes):
     journal = Journal(file, on_set_aside=lambda path, reason: told.append(path))
     assert journal.append([alert()], stamp=stamp())[0] > 60
     assert len(told) == 1
+    journal.close()
+
+
+@pytest.mark.parametrize(
+    ("before", "after"),
+    [
+        (b"CREATE TABLE boot(", b"CREATE TABLE boo\xa9("),
+        (b"seq INTEGER PRIMARY KEY, kind TEXT NOT NULL, boot", b"seq INTEGEQ PRIMARY KEY, kind TEXT NOT NULL, boot"),
+        (b"CREATE TABLE outbox(seq INTEGER", b"CREATE TABLE outbox(seq \xc5NTEGER"),
+    ],
+    ids=["table name", "number that is none", "type"],
+)
+def test_table_definitions_that_fuzzing_found(file: Path, before: bytes, after: bytes):
+    """SQLite quotes them in error texts that are not UTF-8 then, or hands out numbers that are NULL."""
+    good = _filled(file)
+    assert good.count(before) == 1
+    file.write_bytes(good.replace(before, after))
+    with contextlib.suppress(DeviceError):
+        list(reading.read_records(file, ("bar", "window")))
+    journal = Journal(file)
+    assert journal.append([alert()], stamp=stamp())[0] > 60
+    assert all(row.seq > 0 for row in journal.rows())
     journal.close()
 
 
