@@ -132,6 +132,72 @@ def running(broker: Broker) -> Iterator[Broker]:
         broker.stop()
 
 
+class Line:
+    """The network between station and broker: bytes pass through until the line is cut, in the middle of a message or
+    not. Subscribers are connected to the broker itself and stay.
+    """
+
+    def __init__(self, broker: Broker) -> None:
+        self._broker = broker
+        self._open = True
+        self._pairs: set[tuple[socket.socket, socket.socket]] = set()
+        self._lock = threading.Lock()
+        self._server = socket.create_server(("127.0.0.1", 0))
+        self.port = int(self._server.getsockname()[1])
+        self._thread = threading.Thread(target=self._accept, daemon=True)
+        self._thread.start()
+
+    def _accept(self) -> None:
+        while True:
+            try:
+                near, _ = self._server.accept()
+            except OSError:
+                return
+            with self._lock:
+                if not self._open:
+                    near.close()
+                    continue
+                far = socket.create_connection(("127.0.0.1", self._broker.port))
+                for end in (near, far):
+                    end.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
+                self._pairs.add((near, far))
+            for source, target in ((near, far), (far, near)):
+                threading.Thread(target=self._pass_on, args=(source, target, (near, far)), daemon=True).start()
+
+    def _pass_on(self, source: socket.socket, target: socket.socket, pair: tuple[socket.socket, socket.socket]) -> None:
+        with contextlib.suppress(OSError):
+            while data := source.recv(257):  # an odd size, so that a cut falls within messages
+                target.sendall(data)
+        self._end(pair)
+
+    def _end(self, pair: tuple[socket.socket, socket.socket]) -> None:
+        with self._lock:
+            self._pairs.discard(pair)
+        for end in pair:
+            with contextlib.suppress(OSError):
+                end.shutdown(socket.SHUT_RDWR)
+            end.close()
+
+    def cut(self) -> None:
+        """End every connection at once and take no new one."""
+        with self._lock:
+            self._open = False
+            pairs = list(self._pairs)
+        for pair in pairs:
+            self._end(pair)
+
+    def mend(self) -> None:
+        """Take connections again."""
+        self._open = True
+
+    def close(self) -> None:
+        """End it for good."""
+        self.cut()
+        self._server.shutdown(socket.SHUT_RDWR)
+        self._server.close()
+        self._thread.join(WAIT_S)
+
+
 @dataclass(frozen=True)
 class Seen:
     """One message as ``mosquitto_sub`` saw it."""

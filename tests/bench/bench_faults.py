@@ -43,7 +43,6 @@ def kills(count: int, seed: int) -> bool:
         for situation, number in sorted(outcome.kills.items()):
             print(f"  {situation:22} {number:5d} kills")
         print(f"  records {outcome.recorded}, sent again with the same number {outcome.repeats}")
-        print(f"  live windows missed by a subscriber still away after the broker's restart {outcome.windows_missed}")
         for name in ("lost_records", "not_delivered", "altered", "out_of_order", "second_use"):
             print(f"  {name.replace('_', ' '):22} {len(getattr(outcome, name)):5d}")
         return outcome.clean
