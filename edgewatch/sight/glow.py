@@ -4,10 +4,10 @@ An arm is a line that runs out from a burst of this picture or of one before tha
 the streak that led to the burst. A burst is listed in the picture where it first shows; one without a stem went off
 while the shutter was closed (late).
 
-Burst-rate without bias: bursts get listed during the exposure and for some time before it, as long as their arms
-glow on, but never for longer than the period. How long that is follows from the share of bursts with a stem: bursts
-strike at a constant hazard, so bursts are spread evenly over the time in which they get listed, and those with a stem
-lie in a known part of it, the exposure less the time a stem needs to show and arms need to be drawn.
+Burst-rate without bias: a burst gets listed when it goes off during the exposure, but for the last part of it, in which
+its arms cannot be drawn long enough; and when it goes off so shortly before that enough of its arms is left to see.
+Both times are the detector's own and do not depend on the camera's timing, so they are settings, measured with both
+simulations; never is a burst listed twice, so the time is never longer than the period.
 """
 
 from __future__ import annotations
@@ -20,6 +20,8 @@ from numpy.typing import NDArray
 from edgewatch.sight.bursts import Apexes
 from edgewatch.sight.lengths import Lengths
 from edgewatch.sight.optics import Optics
+from edgewatch.sight.reading import read_levels
+from edgewatch.sight.ridges import Ridges
 
 SAME_PX = 8.0
 """A burst nearer than this to one seen before is the same (px)."""
@@ -47,41 +49,30 @@ ACROSS_SHARE = 1.2
 STEM_LEAST_PX = 6.0
 """A stem is seen from this length on (px)."""
 
-PRIOR_GLOW_S = 0.0015
-PRIOR_BURSTS = 30.0
-"""Glow assumed before bursts have told it, with the weight of this many bursts."""
+STEM_FROM_PX, STEM_TO_PX = 2.5, 10.0
+STEM_ASIDE_PX, STEM_FLANK_PX = 2.0, 2.0
+STEM_NOISE = 3.0
+STEM_SHARE = 0.75
+"""A stem is looked for on this way back from the burst, so far to either side: along most of it the picture is brighter
+than at the flanks, and than so many noise deviations."""
 
-FORGET = 1.0 / 2000.0
-"""What was learnt about the glow fades over this many bursts."""
+LEAST_LISTED = 0.1
+"""However short the exposure, this share of it counts: some arms are drawn at once."""
 
 
 class Glow:
-    """Bursts that may still glow, and what the share of stems says about the time in which bursts get listed."""
+    """Bursts that may still glow, and the time in which bursts get listed."""
 
-    def __init__(self, optics: Optics, *, longest_glow_s: float, arm_draw_s: float) -> None:
-        """``longest_glow_s``: no arm glows for longer; ``arm_draw_s``: arms must draw for this long to be seen."""
+    def __init__(self, optics: Optics, *, longest_glow_s: float, arm_draw_s: float, late_listed_s: float) -> None:
+        """``longest_glow_s``: no arm glows for longer; ``arm_draw_s``: arms must draw for this long to be seen;
+        ``late_listed_s``: bursts are listed that went off up to this long before the exposure.
+        """
         self.optics = optics
-        self._arm_draw_s = arm_draw_s
         # A burst at the end of one exposure glows in the next n for which n periods less one exposure are shorter.
         self._pictures = max(0, int(np.ceil((longest_glow_s + optics.exposure_s) / optics.period_s)) - 1)
         self.recent: list[NDArray[np.float64]] = []
-        before = min(optics.period_s, optics.exposure_s + PRIOR_GLOW_S - 2.0 * arm_draw_s)
-        self._listed_s = max(before, 0.2 * optics.exposure_s)
-        self._all = PRIOR_BURSTS
-        self._stems = PRIOR_BURSTS * min(1.0, self._stem_s / self._listed_s)
-
-    @property
-    def _stem_s(self) -> float:
-        """Time a picture in which a burst would show a stem."""
-        return max(0.2 * self.optics.exposure_s, self.optics.exposure_s - self._arm_draw_s - self.stem_draw_s)
-
-    stem_draw_s = 0.0002
-
-    @property
-    def gain(self) -> float:
-        """Time a picture in which a burst would get listed, per exposure."""
-        listed_s = min(self._stem_s * self._all / max(self._stems, 1e-9), self.optics.period_s)
-        return listed_s / self.optics.exposure_s
+        listed_s = min(optics.exposure_s - arm_draw_s + late_listed_s, optics.period_s)
+        self.gain = max(listed_s, LEAST_LISTED * optics.exposure_s) / optics.exposure_s
 
     def remembered(self) -> NDArray[np.float64]:
         """Bursts (M, 2) px of earlier pictures that may still glow."""
@@ -97,7 +88,7 @@ class Glow:
         age = np.repeat(np.arange(len(number), 0, -1), number) * self.optics.period_s
         return np.asarray(DRIFT_SHARE * speed * np.minimum(age, DRIFT_S))
 
-    def take(self, apexes: Apexes, stem: NDArray[np.bool_], lengths: Lengths) -> NDArray[np.int64]:
+    def take(self, apexes: Apexes, lengths: Lengths) -> NDArray[np.int64]:
         """Indices of the bursts that are new; remembers all of them."""
         old, drift = self.remembered(), self._drift(lengths)
         gx = apexes.at[:, None, 0] - old[None, :, 0]
@@ -109,22 +100,35 @@ class Glow:
         gap = np.hypot(gx - on * away[:, 0], gy - on * away[:, 1])
         fresh = np.flatnonzero(~(gap < SAME_PX).any(axis=1))
         self.recent = [*self.recent, apexes.at][-self._pictures :] if self._pictures else []
-        fade = (1.0 - FORGET) ** fresh.size
-        self._all = self._all * fade + fresh.size
-        self._stems = self._stems * fade + float(stem[fresh].sum())
         return fresh
+
+
+def find_stems(apexes: Apexes, ridges: Ridges, contact_px: tuple[float, float]) -> NDArray[np.bool_]:
+    """Whether a streak leads from the contact point's side to each burst: a ridge on the way back from it."""
+    back = np.asarray(contact_px) - apexes.at
+    back /= np.maximum(np.hypot(back[:, 0], back[:, 1]), 1e-6)[:, None]
+    along = np.arange(STEM_FROM_PX, STEM_TO_PX)
+    aside = np.arange(-STEM_ASIDE_PX - STEM_FLANK_PX, STEM_ASIDE_PX + STEM_FLANK_PX + 0.5)
+    x = apexes.at[:, 0, None, None] + along * back[:, 0, None, None] - aside[:, None] * back[:, 1, None, None]
+    y = apexes.at[:, 1, None, None] + along * back[:, 1, None, None] + aside[:, None] * back[:, 0, None, None]
+    level = read_levels(ridges.blurred, x.ravel(), y.ravel()).reshape(x.shape)
+    flank = int(STEM_FLANK_PX)
+    middle = level[:, flank:-flank]
+    ridge = (middle >= level[:, : -2 * flank]) & (middle >= level[:, 2 * flank :])
+    ridge &= middle > STEM_NOISE * ridges.threshold_noise
+    stem: NDArray[np.bool_] = ridge.mean(axis=2).max(axis=1, initial=0.0) >= STEM_SHARE
+    return stem
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Sorted:
     """``begin``, ``end`` (N, 2) px: lines, cut where they ran on into an arm; ``streak`` (N,) bool: no arm;
-    ``stem`` (M,) bool: the burst has a stem; ``arms`` (M,) int64: lines that run out from it, three at least.
+    ``arms`` (M,) int64: lines that run out from it, three at least.
     """
 
     begin: NDArray[np.float64]
     end: NDArray[np.float64]
     streak: NDArray[np.bool_]
-    stem: NDArray[np.bool_]
     arms: NDArray[np.int64]
 
 
@@ -193,6 +197,5 @@ def sort_lines(
         begin=begin,
         end=end,
         streak=streak,
-        stem=(ends_here | runs_on).any(axis=0),
         arms=np.maximum(arms, 3).astype(np.int64),
     )

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from edgewatch.sight.background import Background
 from edgewatch.sight.bursts import find_apexes
 from edgewatch.sight.detections import BurstFlag, Detections, StreakFlag
-from edgewatch.sight.glow import Glow, sort_lines
+from edgewatch.sight.glow import Glow, find_stems, sort_lines
 from edgewatch.sight.lengths import Lengths
 from edgewatch.sight.light import LightMeter
 from edgewatch.sight.optics import Optics
@@ -25,14 +25,16 @@ class SightTuning:
 
     ``least_snr``: a streak stands this many noise deviations above the background. ``least_length_px``: and is longer
     than this. ``least_sure``: probability from which a candidate is a burst. ``longest_glow_s``: no arm glows for
-    longer. ``arm_draw_s``: arms that drew for less are not seen.
+    longer. ``arm_draw_s``: arms that drew for less are not seen. ``late_listed_s``: bursts that went
+    off up to this long before the exposure are listed.
     """
 
     least_snr: float = 4.7
     least_length_px: float = 6.0
-    least_sure: float = 0.55
+    least_sure: float = 0.6
     longest_glow_s: float = 0.0035
     arm_draw_s: float = 0.00035
+    late_listed_s: float = 0.0005
 
     def __post_init__(self) -> None:
         """Check ranges once."""
@@ -61,11 +63,11 @@ class Sight:
         self._background = Background(period_s=o.period_s)
         self._lengths = Lengths(o.contact_px)
         self._meter = LightMeter()
-        self._glow = Glow(o, longest_glow_s=s.longest_glow_s, arm_draw_s=s.arm_draw_s)
+        self._glow = Glow(o, longest_glow_s=s.longest_glow_s, arm_draw_s=s.arm_draw_s, late_listed_s=s.late_listed_s)
 
     @property
     def burst_exposure_gain(self) -> float:
-        """Time a picture in which a burst would get listed, per exposure, as learnt so far."""
+        """Time a picture in which a burst would get listed, per exposure."""
         return self._glow.gain
 
     def look(self, picture: NDArray[np.uint8]) -> Detections:
@@ -91,8 +93,9 @@ class Sight:
         snr = found.level / self._background.noise_dn * self._meter.line_gain
         keep = sorted_.streak & (snr >= s.least_snr) & (length > s.least_length_px)
         lines = np.concatenate([begin, end], axis=1)[keep]
-        fresh = self._glow.take(apexes, sorted_.stem, self._lengths)
-        at, late = apexes.at[fresh], ~sorted_.stem[fresh]
+        late = ~find_stems(apexes, ridges, o.contact_px)
+        fresh = self._glow.take(apexes, self._lengths)
+        at, late = apexes.at[fresh], late[fresh]
         track_px = float(length[keep].sum())
         snr = snr[keep]
         return Detections(
