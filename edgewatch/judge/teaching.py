@@ -15,6 +15,7 @@ from edgewatch.figures.tally import TRUNCATED_SHARE
 from edgewatch.figures.values import Figures
 from edgewatch.figures.wear import HIGH_M_S, LOW_M_S, reach_at_speed
 from edgewatch.judge.bands import Band, ReferenceBar
+from edgewatch.judge.likeness import LEAST_SCATTER
 from edgewatch.judge.tolerance import esd_outliers, half_width, true_scatter
 from edgewatch.sight.optics import Optics
 
@@ -143,7 +144,7 @@ def teach(
     if wrong:
         raise SettingsError(f"{grade}: bar {wrong[0]} has no track: leave it out")
     dispersion = pooled_dispersion(used)
-    rate = _rate_interval(used, dispersion, content, confidence)
+    rate = _rate_interval(used, content, confidence)
     reach = _reach_interval(used, content, confidence)
     return Band(
         grade=grade,
@@ -187,8 +188,13 @@ class _Interval:
 
 def pooled_dispersion(bars: Sequence[ReferenceBar]) -> float:
     """Variance over mean of burst counts within bars, at least 1 (Pearson's estimate, pooled)."""
+    return max(1.0, _measured_dispersion(bars))
+
+
+def _measured_dispersion(bars: Sequence[ReferenceBar]) -> float:
+    """The estimate itself, which chance takes below 1: as noise to be taken out no more than was measured."""
     freedom = sum(bar.rate_freedom for bar in bars)
-    return max(1.0, sum(bar.rate_misfit for bar in bars) / freedom) if freedom else 1.0
+    return sum(bar.rate_misfit for bar in bars) / freedom if freedom else 1.0
 
 
 def pooled_reach_noise(bars: Sequence[ReferenceBar]) -> float:
@@ -240,8 +246,14 @@ def _interval(values: NDArray[np.float64], noise: NDArray[np.float64], content: 
     center = float(values.mean())
     variance = float(values.var(ddof=1))
     mean_noise = float(noise.mean())
-    half = half_width(variance=variance, noise=mean_noise, count=len(values), content=content, confidence=confidence)
-    half = max(half, 1e-3)  # identical bars: still an interval
+    half = half_width(
+        variance=variance,
+        noise=mean_noise,
+        count=len(values),
+        content=content,
+        confidence=confidence,
+        least_scatter=LEAST_SCATTER,
+    )
     return _Interval(
         math.exp(center - half),
         math.exp(center + half),
@@ -250,8 +262,8 @@ def _interval(values: NDArray[np.float64], noise: NDArray[np.float64], content: 
     )
 
 
-def _rate_interval(used: Sequence[ReferenceBar], dispersion: float, content: float, confidence: float) -> _Interval:
-    values, noise = log_rates(used, dispersion)
+def _rate_interval(used: Sequence[ReferenceBar], content: float, confidence: float) -> _Interval:
+    values, noise = log_rates(used, _measured_dispersion(used))
     found = _interval(values, noise, content, confidence)
     return found if any(bar.bursts for bar in used) else dataclasses.replace(found, low=0.0)
 

@@ -33,22 +33,25 @@ def _needed(offset: NDArray[np.float64], content: float) -> NDArray[np.float64]:
     return np.where(offset > _LARGEST_OFFSET, offset + float(ndtri(content)), np.interp(offset, grid, half))
 
 
-def half_width(*, variance: float, noise: float, count: int, content: float, confidence: float) -> float:
+def half_width(
+    *, variance: float, noise: float, count: int, content: float, confidence: float, least_scatter: float = 0.0
+) -> float:
     """Half-width about the mean of ``count`` values so that an interval holds ``content`` of the *true* values.
 
-    ``variance``: sample variance of the values; ``noise``: the part of it that is measurement, known. Generalised
-    pivotal quantities (Weerahandi, JASA 88, 1993; Krishnamoorthy & Mathew, Statistical Tolerance Regions, 2009): with U
-    chi-squared on n - 1 degrees of freedom and Z normal, the total variance is (n - 1) s^2 / U, the scatter of the true
-    values what noise leaves of it, and the mean is off by Z times the total's standard error; the half-width holds
-    the content in a share ``confidence`` of the pairs (U, Z). Without noise this is the exact two-sided factor of
-    ISO 16269-6. Two-sided, centred. Raises ``ValueError`` for fewer than two values.
+    ``variance``: sample variance of the values; ``noise``: the part of it that is measurement, known. The true values
+    scatter by ``least_scatter`` or more. Generalised pivotal quantities (Weerahandi, JASA 88, 1993; Krishnamoorthy &
+    Mathew, Statistical Tolerance Regions, 2009): with U chi-squared on n - 1 degrees of freedom and Z normal, the total
+    variance is (n - 1) s^2 / U, the scatter of the true values what noise leaves of it, and the mean is off by Z times
+    the total's standard error; the half-width holds the content in a share ``confidence`` of the pairs (U, Z). Without
+    noise this is the exact two-sided factor of ISO 16269-6. Two-sided, centred. Raises ``ValueError`` for fewer than
+    two values.
     """
     if count < 2 or not (variance >= 0.0 and noise >= 0.0):
         raise ValueError(f"count = {count!r}, variance = {variance!r}, noise = {noise!r}: out of range")
     even = (np.arange(_CHI_POINTS) + 0.5) / _CHI_POINTS
     chi_weight, tails = 2.0 * even, 1.0 - even**2  # chdtri takes the upper tail; small values widen the band
     total = (count - 1) * variance / chdtri(count - 1, tails)
-    scatter = np.sqrt(np.maximum(total - noise, 0.0))[:, None]
+    scatter = np.sqrt(np.maximum(total - noise, least_scatter**2))[:, None]
     even = (np.arange(_NORMAL_POINTS) + 0.5) / _NORMAL_POINTS
     normal_weight, normal = 2.0 * even, ndtri(1.0 - 0.5 * even**2)
     offset = normal[None, :] * np.sqrt(np.maximum(total, noise) / count)[:, None]
