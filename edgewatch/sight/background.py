@@ -55,6 +55,10 @@ NOISE_STRIDE = (5, 7)
 """Rows and columns between the pixels that noise is estimated from; coprime with compression blocks of 8 and 16."""
 
 
+NOISE_EVERY = 4
+"""After the first pictures noise is measured in one of so many: gain and light do not change faster."""
+
+
 class Background:
     """Follows background and noise.
 
@@ -103,18 +107,18 @@ class Background:
             opened = None
             ground = _cv.add(self._pattern, _cv.convertScaleAbs(_cv.max(whole, 0), alpha=1.0 / 64.0))
             ground = _cv.subtract(ground, _cv.convertScaleAbs(_cv.min(whole, 0), alpha=1.0 / 64.0))
-        self._measure_noise(picture, ground)
+        rows, columns = NOISE_STRIDE
+        here = ground[::rows, ::columns]
+        self.level_dn, self.uneven_dn = float(here.mean()), float(here.std())
+        if self._seen < NOISE_EVERY or self._seen % NOISE_EVERY == 0:
+            self._measure_noise(picture[::rows, ::columns], here)
         self._learn(picture, opened, small)
         if self._seen == 1:
             ground = self._over_texture(picture, ground, small)
         return np.asarray(_cv.subtract(picture, ground))
 
     def _measure_noise(self, picture: NDArray[np.uint8], ground: NDArray[np.uint8]) -> None:
-        rows, columns = NOISE_STRIDE
-        here = ground[::rows, ::columns]
-        left = picture[::rows, ::columns].ravel().astype(np.float32) - here.ravel()
-        self.level_dn = float(here.mean())
-        self.uneven_dn = float(here.std())
+        left = picture.ravel().astype(np.float32) - ground.ravel()
         # Median absolute deviation finds the scale, clipping the sparks away; the clipped deviation then refines it
         # below one grey level, which a median of integers cannot do (0.9871: a Gaussian clipped at 3 deviations).
         half = left.size // 2

@@ -63,6 +63,9 @@ LEVEL_NOISE = 3.0
 MERGE_PX = 12.0
 """Of candidates nearer to each other than this only the likeliest is kept (px)."""
 
+CONTACT_PX = 12.0
+"""Nothing nearer to the contact point than this is a burst (px): sparks leave it in every direction."""
+
 EDGE_PX = 6
 """Blobs nearer to the picture's edge than this are not looked at (px)."""
 
@@ -78,6 +81,7 @@ class Apexes:
 def find_apexes(pieces: Segments, ridges: Ridges, contact_px: tuple[float, float], least_sure: float) -> Apexes:
     """Bursts of one picture: candidates of at least the probability ``least_sure``."""
     at = find_candidates(pieces, ridges)
+    at = at[np.hypot(at[:, 0] - contact_px[0], at[:, 1] - contact_px[1]) > CONTACT_PX]  # its own glow is no burst
     sure = judge_patches(read_patches(at, ridges.blurred, ridges.threshold_noise, contact_px))
     likely = sure >= least_sure
     at, sure = at[likely], sure[likely]

@@ -43,8 +43,11 @@ PROFILE_NOISE = 6.0
 """Width is read from profiles so far to either side, at these parts of at most so many lines, each of which is so long
 and stands so many noise deviations above the ground."""
 
-KEEP = 0.8
-"""Share of the width known so far that each picture keeps."""
+WIDTH_EVERY = 8
+"""Once known, width is measured in one picture of so many: lenses do not change faster."""
+
+KEEP = 0.5
+"""Share of the width known so far that each measurement keeps."""
 
 DEFAULT_WIDTH_PX = 2.1
 
@@ -59,6 +62,7 @@ class LightMeter:
     def __init__(self) -> None:
         self._variance = math.nan
         self._ridge_share = 0.0
+        self._count = -1
 
     @property
     def line_gain(self) -> float:
@@ -69,6 +73,9 @@ class LightMeter:
     def measure_width(self, begin: NDArray[np.float64], end: NDArray[np.float64], ridges: Ridges) -> None:
         """Width of streaks from ``begin`` to ``end`` (N, 2) px: where profiles across them fall to half."""
         self._ridge_share = ridges.index.size / max(1, ridges.blurred.size)
+        self._count += 1
+        if math.isfinite(self._variance) and self._count % WIDTH_EVERY:
+            return
         gap = end - begin
         length = np.hypot(gap[:, 0], gap[:, 1])
         chosen = np.flatnonzero(length > LEAST_LENGTH_PX)[:MOST_LINES]

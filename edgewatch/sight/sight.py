@@ -31,7 +31,7 @@ class SightTuning:
 
     least_snr: float = 4.7
     least_length_px: float = 6.0
-    least_sure: float = 0.6
+    least_sure: float = 0.65
     longest_glow_s: float = 0.0035
     arm_draw_s: float = 0.00035
     late_listed_s: float = 0.0005
