@@ -101,13 +101,14 @@ class Band:
         problems = _problems(self)
         if problems:
             raise ValueError("; ".join(f"{key} = {value!r}: {allowed}" for key, value, allowed in problems))
-        low, high = max(self.burst_rate_low_per_m, 1e-6), self.burst_rate_high_per_m
+        high = self.burst_rate_high_per_m
+        low = max(self.burst_rate_low_per_m, 1e-3 * high)  # a band from 0 has a logarithm too
         if math.isnan(self.rate_center_per_m):
             object.__setattr__(self, "rate_center_per_m", math.sqrt(low * high))
         if math.isnan(self.rate_scatter):
             object.__setattr__(self, "rate_scatter", math.log(high / low) / (2.0 * _HAND_FACTOR))
         if self.reach_low_mm is not None and self.reach_high_mm is not None:
-            reach_low = max(self.reach_low_mm, 1e-3)
+            reach_low = max(self.reach_low_mm, 1e-3 * self.reach_high_mm)
             if self.reach_center_mm is None:
                 object.__setattr__(self, "reach_center_mm", math.sqrt(reach_low * self.reach_high_mm))
             if self.reach_scatter is None:
