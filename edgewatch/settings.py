@@ -269,7 +269,7 @@ class JournalSettings:
     file: str = _declare("edgewatch.sqlite", _text(least=1), "journal file, relative to this file")
     most_mb: float = _declare(512.0, _number(1, 1e6), "size at which the oldest delivered records give way (MB)")
     thin_windows_mb: float = _declare(
-        128.0, _number(0.5, 1e6), "unsent messages above this size (MB): window messages are thinned, and counted"
+        128.0, _number(0.5, 1e6), "unsent window messages above this size (MB) are thinned evenly, and counted"
     )
 
 
