@@ -81,7 +81,7 @@ class BarAtWheel:
         return [
             KeepPicture(
                 bar=self.number,
-                name=f"bar-{self.number:06d}-{place}.jpg",
+                name=f"{place}",
                 picture=exhibit.picture,
                 detections=exhibit.detections,
                 captions=(*captions, f"{exhibit.t_s - event.begin_s:.3f} s after contact began"),

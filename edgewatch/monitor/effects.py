@@ -56,13 +56,18 @@ class SetRelay:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class KeepPicture:
-    """Draw and keep a picture of a nonconforming bar as evidence."""
+    """Draw and keep a picture of a nonconforming bar as evidence; ``name`` tells the pictures of one bar apart."""
 
     bar: int
     name: str
     picture: NDArray[np.uint8]
     detections: Detections
     captions: tuple[str, ...]
+
+    @property
+    def file(self) -> str:
+        """Name of the file that it is kept in, as the bar's message gives it."""
+        return f"bar-{self.bar:06d}-{self.name}.jpg"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

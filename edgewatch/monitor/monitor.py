@@ -291,7 +291,7 @@ class Monitor:
         self._counts[judgement.verdict] += 1
         self._rolling = messages.figures(event.bar)
         pictures = bar.pictures(event, judgement) if self._settings.evidence.folder else []
-        body = bar.body(event, judgement, [picture.name for picture in pictures])
+        body = bar.body(event, judgement, [picture.file for picture in pictures])
         effects += pictures
         effects.append(Record(kind="bar", payload=body))
         effects.append(Remember(values={"bar": bar.number, "counts": dict(self._counts)}))

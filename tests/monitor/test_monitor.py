@@ -98,7 +98,7 @@ def test_a_foreign_bar_stops_the_line_before_its_contact_ends() -> None:
     alerts = records(effects, "alert")
     assert [(one["state"], one["bar"], one["latched"]) for one in alerts] == [("raised", 1, True)]
     pictures = [e for e in effects if isinstance(e, KeepPicture)]
-    assert [p.name for p in pictures] == bar["pictures"]
+    assert [p.file for p in pictures] == bar["pictures"]
     assert len(pictures) == 3
     assert any("band 2 to 3" in caption for caption in pictures[0].captions)
 

@@ -11,7 +11,10 @@ import numpy as np
 import pytest
 
 from edgewatch.errors import DeviceError
+from edgewatch.monitor.effects import KeepPicture
 from edgewatch.record.evidence import EvidenceStore
+from edgewatch.sight.optics import Optics
+from edgewatch.sight.sight import Sight
 
 
 def picture(size: int = 1000, ending: str = ".jpg") -> bytes:
@@ -111,3 +114,13 @@ def test_threads_keep_the_total_right(tmp_path: Path):
     for thread in threads:
         thread.join()
     assert store.total_bytes == sum(file.stat().st_size for file in tmp_path.iterdir()) == 20_000
+
+
+def test_a_picture_lies_where_the_bars_message_says(tmp_path: Path):
+    """The monitor names the file in the message before it is written; the folder gives it that very name."""
+    optics = Optics(
+        width_px=32, height_px=16, mm_per_px=1.0, contact_px=(0.0, 8.0), direction_deg=0.0, exposure_ms=2.5, fps=200.0
+    )
+    seen = np.zeros((16, 32), np.uint8)
+    effect = KeepPicture(bar=7, name="1", picture=seen, detections=Sight(optics).look(seen), captions=())
+    assert EvidenceStore(tmp_path, most_mb=1).keep(effect.bar, effect.name, picture()).name == effect.file
