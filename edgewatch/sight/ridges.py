@@ -33,6 +33,10 @@ THRESHOLD_NOISE = 4.5
 CREST_PX = 0.65
 """The crest lies within this much of the pixel's centre, in x and in y (px); 0.5 would leave gaps on noise."""
 
+LEAST_BEND = 0.06
+"""Curvature across a ridge, as a share of its height: that of a streak nine pixels wide. The flank of a streak, where
+noise makes maxima along it, bends less or the other way."""
+
 MARGIN_PX = 3
 """Ridge points nearer to the edge than this are not looked for (px)."""
 
@@ -81,7 +85,7 @@ def find_ridges(excess: NDArray[np.uint8], noise_dn: float) -> Ridges:
     across = bxx * sin * sin - 2.0 * bxy * sin * cos + byy * cos * cos
     slope = 0.5 * ((right - left) * -sin + (below - above) * cos)
     with np.errstate(divide="ignore", invalid="ignore"):
-        step = np.where(across < 0.0, -slope / across, np.float32(math.inf))
+        step = np.where(across < -LEAST_BEND * centre, -slope / across, np.float32(math.inf))
         keep = (np.abs(step * sin) <= CREST_PX) & (np.abs(step * cos) <= CREST_PX)
     kept = np.flatnonzero(keep)
     index, step, cos, sin = index[kept], step[kept], cos[kept], sin[kept]

@@ -208,7 +208,9 @@ def test_random_pictures_raise_nothing() -> None:
         assert np.isfinite(seen.streaks).all()
 
 
-@pytest.mark.parametrize("name", ["least_snr", "least_length_px", "least_sure", "longest_glow_s", "arm_draw_s", "late_listed_s"])
+@pytest.mark.parametrize(
+    "name", ["least_snr", "least_length_px", "least_sure", "longest_glow_s", "arm_draw_s", "late_listed_s"]
+)
 @pytest.mark.parametrize("value", [0.0, -1.0, math.nan, math.inf])
 def test_tuning_out_of_range_names_the_field(name: str, value: float) -> None:
     """Tuning is checked when built."""
