@@ -85,7 +85,9 @@ def find_ridges(excess: NDArray[np.uint8], noise_dn: float) -> Ridges:
     across = bxx * sin * sin - 2.0 * bxy * sin * cos + byy * cos * cos
     slope = 0.5 * ((right - left) * -sin + (below - above) * cos)
     with np.errstate(divide="ignore", invalid="ignore"):
-        step = np.where(across < -LEAST_BEND * centre, -slope / across, np.float32(math.inf))
+        # the greater of the two second derivatives by amount, and it is that of a crest
+        crest = -across > np.maximum(LEAST_BEND * centre, bxx + byy - across)
+        step = np.where(crest, -slope / across, np.float32(math.inf))
         keep = (np.abs(step * sin) <= CREST_PX) & (np.abs(step * cos) <= CREST_PX)
     kept = np.flatnonzero(keep)
     index, step, cos, sin = index[kept], step[kept], cos[kept], sin[kept]
