@@ -1,6 +1,7 @@
 """Invented pictures with exact truth, apart from the rehearsal: the second judge of the detector.
 
-A stream is drawn by quite different code and with a looser physics than the rehearsal's, and its rendering varies: point spread, noise, gamma, brightness along the streak, number, length and spread of arms, background. Tuning looks at
+A stream is drawn by quite different code and with a looser physics than the rehearsal's, and its rendering varies:
+point spread, noise, gamma, brightness along the streak, number, length and spread of arms, background. Tuning looks at
 seeds below ``JUDGE_SEED`` only.
 """
 

@@ -84,6 +84,11 @@ class Background:
         self.raw_noise_dn = 0.0
         self.uneven_dn = 0.0
 
+    @property
+    def settled(self) -> bool:
+        """Whether this is the picture with which the pattern is first complete."""
+        return self._seen == max(LEARN_AT)
+
     def excess(self, picture: NDArray[np.uint8]) -> NDArray[np.uint8]:
         """Picture less its background (DN, clipped at 0), uint8 (H, W); learns from the picture."""
         height, width = picture.shape

@@ -32,7 +32,7 @@ SHARE_KEEP = 0.95
 FROM_CONTACT_SHARE = 0.5
 """Over some twenty pictures, this share of the length seen comes from the contact point if that is given rightly."""
 
-LONGEST_FACTOR = 2.0
+LONGEST_FACTOR = 3.0
 LONGEST_PX = 400.0
 """No streak is longer than this many typical lengths; before any is known, than so many px."""
 

@@ -81,6 +81,8 @@ class Sight:
         if picture.shape != (o.height_px, o.width_px):
             raise ValueError(f"picture: shape {(o.height_px, o.width_px)} needed, got {picture.shape}")
         excess = self._background.excess(picture)
+        if self._background.settled:  # what was learnt while the ground was not yet known is not to be relied on
+            self._lengths, self._meter = Lengths(o.contact_px), LightMeter()
         ridges = find_ridges(excess, self._background.noise_dn)
         noise = self._background.noise_dn * NOISE_GAIN
         pieces = fit_segments(ridges, link_ridges(ridges, self._scratch))

@@ -37,6 +37,10 @@ STEP_SHARE = 0.16
 FULL_SHARE = 0.7
 """A step of at least this share of its high side leads from darkness: a streak's own end, with nothing beyond."""
 
+LEARN_NOISE = 8.0
+"""Lengths are learnt from streaks whose steps are this many noise deviations high: never from noise, however long the
+scene stays dark."""
+
 STREAK_POINTS = 4
 """A piece with fewer ridge points than this has no direction good enough to look for steps along it."""
 
@@ -119,7 +123,7 @@ def find_streaks(
     steps = find_steps(pieces, blurred, noise, axis)
     pairs = pair_steps(steps, blurred, lengths)
     first = not lengths.known
-    full = steps.full[pairs].all(axis=1)
+    full = (steps.full[pairs] & (steps.height[pairs] > LEARN_NOISE * noise)).all(axis=1)
     lengths.learn(steps.at[pairs[full, 0]], steps.at[pairs[full, 1]])
     if first and lengths.known:  # what was just learnt helps the first picture too
         pairs = pair_steps(steps, blurred, lengths)
