@@ -21,7 +21,7 @@ from paho.mqtt.enums import CallbackAPIVersion
 from edgewatch.commands.options import add_bands, add_station, load_settings
 from edgewatch.commands.shipped import find_calib
 from edgewatch.commands.watch import bar_text, run_until_stopped
-from edgewatch.errors import DeviceError, SettingsError
+from edgewatch.errors import DeviceError, EdgewatchError, SettingsError
 from edgewatch.frames.rehearsal import RehearsalSource
 from edgewatch.link.private_broker import PrivateBroker, find_mosquitto
 from edgewatch.settings import Settings
@@ -70,7 +70,14 @@ def run(args: argparse.Namespace) -> int:
             print(json.dumps(plain(line), allow_nan=False) if args.json else bar_text(line), flush=True)
 
         real = args.pace == "real"
-        station = Station(settings, folder, live=False, paced=real, named=args.grade, on_told=told, on_notice=_notice)
+        try:
+            station = Station(
+                settings, folder, live=False, paced=real, named=args.grade, on_told=told, on_notice=_notice
+            )
+        except EdgewatchError:
+            with contextlib.suppress(OSError):
+                folder.rmdir()  # nothing came about; a folder that holds something stays
+            raise
         if not args.json:
             _introduce(settings, broker=listener is not None)
         outcome = run_until_stopped(station)

@@ -214,6 +214,18 @@ class Monitor:
         )
         return [*effects, Record(kind="relay", payload=body)]
 
+    def remember(self) -> list[Effect]:
+        """Everything that must outlive a restart, anew: the journal that held it was damaged."""
+        values = {
+            "bar": self._number,
+            "expected": keep_expectation(self._expectation),
+            "counts": dict(self._counts),
+            "stop": self._stop_value(),
+            "alerts": keep_alerts(self._alerts),
+            "drift": dict(self._drift),
+        }
+        return [Remember(values=values)]
+
     def end(self, stamp: Stamp) -> list[Effect]:
         """The source has ended or the station stops: the contact under way is closed."""
         effects: list[Effect] = []

@@ -33,8 +33,9 @@ from edgewatch.monitor.effects import (
     SetRelay,
     Told,
 )
-from edgewatch.monitor.memory import KEYS, read_memory
+from edgewatch.monitor.memory import KEYS, Memory, read_memory
 from edgewatch.monitor.monitor import Monitor
+from edgewatch.monitor.stop import StopState
 from edgewatch.record.bandfiles import load_bands, save_band
 from edgewatch.record.evidence import EvidenceStore
 from edgewatch.record.journal import Entry, Journal
@@ -156,8 +157,9 @@ class Station:
             most_mb=settings.journal.most_mb,
             thin_windows_mb=settings.journal.thin_windows_mb,
             on_set_aside=self._set_aside,
+            patient=settings.mqtt.enabled,  # where somebody can be told, judging begins on a full disk too
         )
-        memory = read_memory({key: self._journal.state(key) for key in KEYS})
+        memory = self._read_memory()
         self.monitor = Monitor(settings, bands=bands, memory=memory, named=named, live=self._source.info.live)
         self._gate = OrderGate(
             most_per_minute=settings.orders.most_per_minute,
@@ -195,6 +197,14 @@ class Station:
         if settings.contact.port:
             self._add("contact input", ContactInput(settings.contact, self._bar_at_wheel).run)
         self._watchdog = Watchdog()
+
+    def _read_memory(self) -> Memory:
+        """What the last run remembered; where that cannot be read, the safe reading of the latch is "stopped"."""
+        try:
+            return read_memory({key: self._journal.state(key) for key in KEYS})
+        except DeviceError as error:
+            self._tell({"journal_lost": True}, str(error))
+            return Memory(stop=StopState.LATCHED, stop_reason="it is not known whether the line was stopped")
 
     def _add(self, name: str, work: Callable[[threading.Event], None]) -> None:
         self._parts.append(Part(name, work, on_fault=self._part_fault))
@@ -419,6 +429,7 @@ class Station:
 
     def _set_aside(self, path: Path, reason: str) -> None:
         self._tell({"journal_damaged": True}, f"{path.name}: {reason}")
+        self._inbox.put(lambda monitor, stamp: monitor.remember())
 
     def _part_fault(self, name: str, error: BaseException) -> None:
         what = " ".join(f"{name}: {type(error).__name__}: {error}".split())[:300]
