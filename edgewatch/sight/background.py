@@ -96,13 +96,13 @@ class Background:
         cells = _cv.resize(picture, small, interpolation=_cv.INTER_AREA).astype(np.float32)
         if self._cells is not None:
             change = cells - self._cells
-            if float(np.median(np.abs(change - np.median(change)))) > OTHER_SCENE_DN:
+            if _middle(np.abs(change - _middle(change))) > OTHER_SCENE_DN:
                 self.reset()
         self._cells = cells
         if self._pattern_cells is not None:
             cells = cells - self._pattern_cells
             # where a glow that the pattern has learnt goes out, the opening would carry the hole to its surroundings
-            cells = np.maximum(cells, float(np.median(cells)) - DEEPEST_HOLE_DN)
+            cells = np.maximum(cells, _middle(cells) - DEEPEST_HOLE_DN)
         drift = _open(cells)
         whole = _cv.resize(np.rint(drift * 64.0).astype(np.int16), (width, height), interpolation=_cv.INTER_LINEAR)
         if self._pattern is None:
@@ -126,9 +126,8 @@ class Background:
         left = picture.ravel().astype(np.float32) - ground.ravel()
         # Median absolute deviation finds the scale, clipping the sparks away; the clipped deviation then refines it
         # below one grey level, which a median of integers cannot do (0.9871: a Gaussian clipped at 3 deviations).
-        half = left.size // 2
-        centre = float(np.partition(left, half)[half])
-        scale = max(LEAST_NOISE_DN, 1.4826 * float(np.partition(np.abs(left - centre), half)[half]))
+        centre = _middle(left)
+        scale = max(LEAST_NOISE_DN, 1.4826 * _middle(np.abs(left - centre)))
         quiet = left[np.abs(left - centre) <= 3.0 * scale]
         deviation = float(quiet.std()) / 0.9871 if quiet.size else 0.0
         self.raw_noise_dn = deviation
@@ -164,6 +163,12 @@ class Background:
         else:
             return
         self._pattern_cells = _cv.resize(self._pattern, small, interpolation=_cv.INTER_AREA).astype(np.float32)
+
+
+def _middle(values: NDArray[np.float32]) -> float:
+    """Median, without the care that ``numpy.median`` takes of axes and gaps, which costs more than the work."""
+    half = values.size // 2
+    return float(np.partition(values.ravel(), half)[half])
 
 
 def _median(picture: NDArray[np.uint8]) -> NDArray[np.uint8]:

@@ -7,7 +7,7 @@ while the shutter was closed (late).
 Burst-rate without bias: a burst gets listed when it goes off during the exposure, but for the last part of it, in which
 its arms cannot be drawn long enough; and when it goes off so shortly before that enough of its arms is left to see.
 Both times are the detector's own and do not depend on the camera's timing, so they are settings, measured with both
-simulations; never is a burst listed twice, so the time is never longer than the period.
+simulations; never is a burst listed twice, so the time stays below the period.
 """
 
 from __future__ import annotations
@@ -56,6 +56,10 @@ STEM_SHARE = 0.75
 """A stem is looked for on this way back from the burst, so far to either side: along most of it the picture is brighter
 than at the flanks, and than so many noise deviations."""
 
+LIMIT_POWER = 4.0
+"""No burst is listed twice, so the time in which it gets listed stays below the period; softly, because near the limit a
+burst that hardly shows in one exposure has a second chance in the next, not a certainty."""
+
 LEAST_LISTED = 0.1
 """However short the exposure, this share of it counts: some arms are drawn at once."""
 
@@ -71,8 +75,9 @@ class Glow:
         # A burst at the end of one exposure glows in the next n for which n periods less one exposure are shorter.
         self._pictures = max(0, int(np.ceil((longest_glow_s + optics.exposure_s) / optics.period_s)) - 1)
         self.recent: list[NDArray[np.float64]] = []
-        listed_s = min(optics.exposure_s - arm_draw_s + late_listed_s, optics.period_s)
-        self.gain = max(listed_s, LEAST_LISTED * optics.exposure_s) / optics.exposure_s
+        listed_s = max(optics.exposure_s - arm_draw_s + late_listed_s, LEAST_LISTED * optics.exposure_s)
+        limited_s = (listed_s**-LIMIT_POWER + optics.period_s**-LIMIT_POWER) ** (-1.0 / LIMIT_POWER)
+        self.gain = limited_s / optics.exposure_s
 
     def remembered(self) -> NDArray[np.float64]:
         """Bursts (M, 2) px of earlier pictures that may still glow."""
