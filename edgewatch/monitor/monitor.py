@@ -86,7 +86,8 @@ class Monitor:
         if self._expectation is not memory.expectation:
             self._counts = dict.fromkeys(messages.VERDICTS, 0)
         self._bar: BarAtWheel | None = None
-        self._wheel = WheelWatch(self._told_speed())
+        self._wheel = WheelWatch()
+        self._tell_wheel()
         self._drift = dict(memory.drift)
         self._watch: DriftWatch | None = self._drift_watch()
         self._lesson: Lesson | None = None
@@ -380,9 +381,12 @@ class Monitor:
     def _lacks_band(self) -> bool:
         return bool(self._expectation.grade) and self._expectation.grade not in self._bands
 
-    def _told_speed(self) -> float:
-        told = self._expectation.wheel_surface_speed_m_s
-        return told if math.isfinite(told) else self._settings.wheel.surface_speed_m_s or math.nan
+    def _tell_wheel(self) -> None:
+        ordered = self._expectation.wheel_surface_speed_m_s
+        if math.isfinite(ordered):
+            self._wheel.tell(ordered, current=True)
+        else:
+            self._wheel.tell(self._settings.wheel.surface_speed_m_s or math.nan, current=False)
 
     # ------------------------------------------------------------------ orders
 
@@ -405,7 +409,7 @@ class Monitor:
             configured=self._settings.judge.expect,
         )
         self._counts = dict.fromkeys(messages.VERDICTS, 0)
-        self._wheel.told_m_s = self._told_speed()
+        self._tell_wheel()
         self._watch = self._drift_watch()
         known = not self._lacks_band()
         effects: list[Effect] = [

@@ -15,11 +15,17 @@ WINDOWS = 20
 
 
 class WheelWatch:
-    """``told_m_s``: surface speed from the configuration or an order (NaN: not known)."""
+    """``told_m_s``: surface speed from the configuration or an order (NaN: not known). ``current``: an order told it,
+    so somebody keeps it up to date; what the configuration says was true of a new wheel, and there sparks know better.
+    """
 
-    def __init__(self, told_m_s: float = math.nan) -> None:
-        self.told_m_s = told_m_s
+    def __init__(self, told_m_s: float = math.nan, *, current: bool = False) -> None:
+        self.tell(told_m_s, current=current)
         self._speeds: deque[float] = deque(maxlen=WINDOWS)
+
+    def tell(self, told_m_s: float, *, current: bool) -> None:
+        """Take another surface speed (m/s, NaN: not known)."""
+        self.told_m_s, self._current = told_m_s, current
 
     def update(self, window: Figures) -> None:
         """Take a window's spark speed, if it has one."""
@@ -33,9 +39,11 @@ class WheelWatch:
 
     def factor(self, band: Band) -> float:
         """What reach must be multiplied by to hold at the speed the band was taught at."""
+        taught_spark = _in_range(band.spark_speed_m_s)
+        by_sparks = not self._current and math.isfinite(taught_spark) and math.isfinite(self.spark_m_s)
         return reach_factor(
-            taught_wheel_m_s=_in_range(band.wheel_speed_m_s),
-            taught_spark_m_s=_in_range(band.spark_speed_m_s),
+            taught_wheel_m_s=math.nan if by_sparks else _in_range(band.wheel_speed_m_s),
+            taught_spark_m_s=taught_spark,
             wheel_m_s=_in_range(self.told_m_s),
             spark_m_s=self.spark_m_s,
         )
