@@ -57,8 +57,8 @@ STEM_SHARE = 0.75
 than at the flanks, and than so many noise deviations."""
 
 LIMIT_POWER = 4.0
-"""No burst is listed twice, so the time in which it gets listed stays below the period; softly, because near the limit a
-burst that hardly shows in one exposure has a second chance in the next, not a certainty."""
+"""No burst is listed twice, so the time in which it gets listed stays below the period; softly, because near the limit
+a burst that hardly shows in one exposure has a second chance in the next, not a certainty."""
 
 LEAST_LISTED = 0.1
 """However short the exposure, this share of it counts: some arms are drawn at once."""
@@ -77,7 +77,7 @@ class Glow:
         self.recent: list[NDArray[np.float64]] = []
         listed_s = max(optics.exposure_s - arm_draw_s + late_listed_s, LEAST_LISTED * optics.exposure_s)
         limited_s = (listed_s**-LIMIT_POWER + optics.period_s**-LIMIT_POWER) ** (-1.0 / LIMIT_POWER)
-        self.gain = limited_s / optics.exposure_s
+        self.gain = float(limited_s / optics.exposure_s)
 
     def remembered(self) -> NDArray[np.float64]:
         """Bursts (M, 2) px of earlier pictures that may still glow."""
