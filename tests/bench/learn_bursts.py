@@ -213,13 +213,18 @@ def write(weights: tuple, path: Path) -> None:  # type: ignore[type-arg]
 def main() -> None:
     """Collect, learn, report, write."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0] if __doc__ else None)
-    parser.add_argument("--scenes", type=int, default=60, help="scenes of each simulation to learn from")
+    parser.add_argument(
+        "--scenes",
+        type=int,
+        default=180,
+        help="scenes of the rehearsal to learn from; of the other simulation five sixths of that",
+    )
     parser.add_argument("--out", type=Path, default=Path("edgewatch/sight/burst_weights.py"))
     args = parser.parse_args()
     cv2.setNumThreads(1)
-    own = {kind: collect(kind, range(args.scenes)) for kind in "rm"}
-    own["x"] = collect("x", range(max(2, args.scenes // 4)))
-    apart = {kind: collect(kind, range(10_000, 10_000 + max(2, args.scenes // 5))) for kind in "rm"}
+    number = {"r": args.scenes, "m": args.scenes * 5 // 6, "x": args.scenes * 2 // 9}
+    own = {kind: collect(kind, range(max(2, number[kind]))) for kind in "rmx"}
+    apart = {kind: collect(kind, range(10_000, 10_000 + max(2, number[kind] // 6))) for kind in "rm"}
     for kinds in ("r", "m", "rm"):
         weights = learn(*(np.concatenate([own[k][i] for k in kinds + "x"]) for i in (0, 1)))  # type: ignore[arg-type]
         for k in "rm":
