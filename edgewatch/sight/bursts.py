@@ -77,6 +77,11 @@ class Apexes:
     at: NDArray[np.float64]
     sure: NDArray[np.float64]
 
+    def surer_than(self, least_sure: float) -> Apexes:
+        """Those of at least this probability."""
+        keep = self.sure >= least_sure
+        return Apexes(at=self.at[keep], sure=self.sure[keep])
+
 
 def find_apexes(pieces: Segments, ridges: Ridges, contact_px: tuple[float, float], least_sure: float) -> Apexes:
     """Bursts of one picture: candidates of at least the probability ``least_sure``."""

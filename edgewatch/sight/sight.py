@@ -24,14 +24,16 @@ class SightTuning:
     """What may be tuned, in physical or noise units. Raises ``ValueError`` naming the field that is out of range.
 
     ``least_snr``: a streak stands this many noise deviations above the background. ``least_length_px``: and is longer
-    than this. ``least_sure``: probability from which a candidate is a burst. ``longest_glow_s``: no arm glows for
+    than this. ``least_sure``: probability from which a candidate is listed as a burst; ``rate_sure``: from
+    which it counts for the burst-rate, which false bursts would lift where there are few. ``longest_glow_s``: no arm glows for
     longer. ``arm_draw_s``: arms that drew for less are not seen. ``late_listed_s``: bursts that went
     off up to this long before the exposure are listed.
     """
 
     least_snr: float = 4.7
     least_length_px: float = 6.0
-    least_sure: float = 0.65
+    least_sure: float = 0.4
+    rate_sure: float = 0.65
     longest_glow_s: float = 0.0035
     arm_draw_s: float = 0.00035
     late_listed_s: float = 0.0005
@@ -63,7 +65,10 @@ class Sight:
         self._background = Background(period_s=o.period_s)
         self._lengths = Lengths(o.contact_px)
         self._meter = LightMeter()
-        self._glow = Glow(o, longest_glow_s=s.longest_glow_s, arm_draw_s=s.arm_draw_s, late_listed_s=s.late_listed_s)
+        self._glow, self._rate_glow = (
+            Glow(o, longest_glow_s=s.longest_glow_s, arm_draw_s=s.arm_draw_s, late_listed_s=s.late_listed_s)
+            for _ in range(2)
+        )
 
     @property
     def burst_exposure_gain(self) -> float:
@@ -108,7 +113,7 @@ class Sight:
             burst_arms=sorted_.arms[fresh].astype(np.int16),
             burst_flags=np.where(late, BurstFlag.LATE, 0).astype(np.uint8) | self._edge_flags(at),
             light=self._meter.read(picture, self._background, lines, snr),
-            rate_bursts=int(fresh.size),
+            rate_bursts=int(self._rate_glow.take(apexes.surer_than(s.rate_sure), self._lengths).size),
             rate_exposure_px=track_px * self._glow.gain,
         )
 

@@ -209,7 +209,7 @@ def test_random_pictures_raise_nothing() -> None:
 
 
 @pytest.mark.parametrize(
-    "name", ["least_snr", "least_length_px", "least_sure", "longest_glow_s", "arm_draw_s", "late_listed_s"]
+    "name", ["least_snr", "least_length_px", "least_sure", "rate_sure", "longest_glow_s", "arm_draw_s", "late_listed_s"]
 )
 @pytest.mark.parametrize("value", [0.0, -1.0, math.nan, math.inf])
 def test_tuning_out_of_range_names_the_field(name: str, value: float) -> None:
