@@ -67,10 +67,9 @@ class Detections:
     ``burst_arms``: int16 (M,), arms seen. ``burst_flags``: uint8 (M,).
     ``light``: state of the picture.
 
-    For the burst-rate: ``rate_bursts``, bursts of this picture that count for the rate
-    (the surer ones), and ``rate_exposure_px``, the
-    track (px) during which such a burst would have been counted. Sums over pictures give the rate without bias from
-    the time between exposures; left out, they are all bursts and all track.
+    For the burst-rate: ``rate_bursts``, bursts of this picture that count for the rate (the surer ones), and
+    ``rate_exposure_px``, the track (px) during which such a burst would have been counted. Sums over pictures give the
+    rate without bias from the time between exposures; left out, they are all bursts and all track.
     """
 
     streaks: NDArray[np.float32]

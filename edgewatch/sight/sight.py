@@ -24,10 +24,10 @@ class SightTuning:
     """What may be tuned, in physical or noise units. Raises ``ValueError`` naming the field that is out of range.
 
     ``least_snr``: a streak stands this many noise deviations above the background. ``least_length_px``: and is longer
-    than this. ``least_sure``: probability from which a candidate is listed as a burst; ``rate_sure``: from
-    which it counts for the burst-rate, which false bursts would lift where there are few. ``longest_glow_s``: no arm glows for
-    longer. ``arm_draw_s``: arms that drew for less are not seen. ``late_listed_s``: bursts that went
-    off up to this long before the exposure are listed.
+    than this. ``least_sure``: probability from which a candidate is listed as a burst; ``rate_sure``: from which it
+    counts for the burst-rate, which false bursts would lift where there are few. ``longest_glow_s``: no arm glows for
+    longer. ``arm_draw_s``: arms that drew for less are not seen. ``late_listed_s``: bursts that went off up to this
+    long before the exposure are listed.
     """
 
     least_snr: float = 4.7
