@@ -63,6 +63,9 @@ LEVEL_NOISE = 3.0
 MERGE_PX = 12.0
 """Of candidates nearer to each other than this only the likeliest is kept (px)."""
 
+LEAST_ENDS = 2
+"""Within the outermost ring at least so many ends of pieces lie, one line: a lone bright spot is a hot pixel."""
+
 CONTACT_PX = 12.0
 """Nothing nearer to the contact point than this is a burst (px): sparks leave it in every direction."""
 
@@ -90,6 +93,10 @@ def find_apexes(pieces: Segments, ridges: Ridges, contact_px: tuple[float, float
     sure = judge_patches(read_patches(at, ridges.blurred, ridges.threshold_noise, contact_px))
     likely = sure >= least_sure
     at, sure = at[likely], sure[likely]
+    ends = np.concatenate([pieces.begin, pieces.end])
+    near = np.hypot(at[:, None, 0] - ends[None, :, 0], at[:, None, 1] - ends[None, :, 1]) < RING_RADII_PX[-1]
+    backed = near.sum(axis=1) >= LEAST_ENDS
+    at, sure = at[backed], sure[backed]
     gap = np.hypot(at[:, None, 0] - at[None, :, 0], at[:, None, 1] - at[None, :, 1])
     order = np.arange(sure.size)
     better = (sure[None] > sure[:, None]) | ((sure[None] == sure[:, None]) & (order[None] < order[:, None]))
