@@ -19,11 +19,11 @@ from types import FrameType
 from typing import Any
 
 from edgewatch.commands import journal as journal_command
-from edgewatch.commands.options import read_toml
 from edgewatch.errors import DeviceError, SettingsError
 from edgewatch.judge.bands import read_band
 from edgewatch.record import reading
 from edgewatch.record.journal import Journal
+from edgewatch.record.tomlfile import read_toml
 from edgewatch.settings import StationSettings, read_settings
 from edgewatch.wire import messages, relayframes
 from edgewatch.wire.messages import Stamp

@@ -6,8 +6,8 @@ from pathlib import Path
 
 import pytest
 
-from edgewatch.commands.options import read_toml
 from edgewatch.judge.bands import Band, read_band
+from edgewatch.record.tomlfile import read_toml
 from edgewatch.rehearsal.steel import find_steel
 from edgewatch.settings import Settings, read_settings
 

@@ -12,8 +12,8 @@ from pathlib import Path
 import pytest
 
 from edgewatch.commands.cli import COMMANDS, main
-from edgewatch.commands.options import read_toml
 from edgewatch.judge.causes import CAUSES
+from edgewatch.record.tomlfile import read_toml
 from edgewatch.settings import allowed, read_settings, sections
 from edgewatch.wire.kinds import KINDS
 from edgewatch.wire.orders import ORDERS

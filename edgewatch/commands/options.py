@@ -4,21 +4,14 @@ from __future__ import annotations
 
 import argparse
 import dataclasses
-import sys
 from pathlib import Path
 from typing import Any
 
 from edgewatch.errors import SettingsError
+from edgewatch.record.tomlfile import read_toml
 from edgewatch.settings import Settings, read_settings
 
-if sys.version_info >= (3, 11):
-    import tomllib
-else:  # pragma: no cover - the same parser under its older name
-    import tomli as tomllib
-
 DEFAULT_STATION = "station.toml"
-MAX_TOML_BYTES = 1_000_000
-"""A configuration or band file larger than this is not one."""
 
 
 def add_station(parser: argparse.ArgumentParser) -> None:
@@ -41,20 +34,6 @@ def add_optics(parser: argparse.ArgumentParser) -> None:
 def add_bands(parser: argparse.ArgumentParser) -> None:
     """``--bands DIR``."""
     parser.add_argument("--bands", metavar="DIR", help="folder of band files (overrides judge.bands)")
-
-
-def read_toml(path: Path) -> dict[str, Any]:
-    """Parse a TOML file. Raises ``SettingsError`` naming the file when it cannot be read or parsed."""
-    try:
-        if path.stat().st_size > MAX_TOML_BYTES:
-            raise SettingsError(f"{path}: larger than {MAX_TOML_BYTES} bytes: not a configuration")
-        return tomllib.loads(path.read_text(encoding="utf-8"))
-    except OSError as error:
-        raise SettingsError(f"{path}: cannot be read: {error.strerror or error}") from error
-    except UnicodeDecodeError as error:
-        raise SettingsError(f"{path}: not UTF-8 text: {error.reason} at byte {error.start}") from error
-    except (tomllib.TOMLDecodeError, RecursionError, ValueError) as error:
-        raise SettingsError(f"{path}: not TOML: {error}") from error
 
 
 def has_station_file(args: argparse.Namespace) -> bool:

@@ -3,35 +3,17 @@
 from __future__ import annotations
 
 import os
-import sys
 from collections.abc import Callable
 from pathlib import Path
 
 from edgewatch.errors import DeviceError, SettingsError
 from edgewatch.judge.bands import Band, band_toml, read_band
-
-if sys.version_info >= (3, 11):
-    import tomllib
-else:  # pragma: no cover - the same parser under its older name
-    import tomli as tomllib
-
-MOST_BYTES = 4_000_000
-"""A band holds its reference bars; a file larger than this is none (thousands of bars fit)."""
+from edgewatch.record.tomlfile import read_toml
 
 
 def load_band(path: Path) -> Band:
     """Read one band file. Raises ``SettingsError`` naming file, key, value and what is allowed."""
-    try:
-        if path.stat().st_size > MOST_BYTES:
-            raise SettingsError(f"{path}: larger than {MOST_BYTES} bytes: not a band file")
-        data = tomllib.loads(path.read_text(encoding="utf-8"))
-    except OSError as error:
-        raise SettingsError(f"{path}: cannot be read: {error.strerror or error}") from error
-    except UnicodeDecodeError as error:
-        raise SettingsError(f"{path}: not UTF-8 text: {error.reason} at byte {error.start}") from error
-    except (tomllib.TOMLDecodeError, RecursionError, ValueError) as error:
-        raise SettingsError(f"{path}: not TOML: {error}") from error
-    return read_band(data, file=str(path))
+    return read_band(read_toml(path), file=str(path))
 
 
 def load_bands(folder: Path, *, on_problem: Callable[[str], None] | None = None) -> dict[str, Band]:

@@ -22,8 +22,8 @@ import cv2
 import numpy as np
 from numpy.typing import NDArray
 
-from edgewatch.commands.options import read_toml
 from edgewatch.frames.registry import open_source
+from edgewatch.record.tomlfile import read_toml
 from edgewatch.settings import Settings, read_settings
 from tests.clips import write_clip
 
