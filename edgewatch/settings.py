@@ -391,14 +391,11 @@ class Settings:
     contact: ContactSettings = ContactSettings()
     rehearsal: RehearsalSettings = RehearsalSettings()
 
-    def sight_optics(self) -> Optics:
-        """Optics of the pictures that the sight gets: after region of interest and binning.
-
-        Raises ``SettingsError`` when the parts do not fit together.
-        """
+    def source_optics(self) -> Optics:
+        """Optics of the pictures as the source delivers them. Raises ``SettingsError``."""
         source, optics = self.source, self.optics
         try:
-            whole = Optics(
+            return Optics(
                 width_px=source.width_px,
                 height_px=source.height_px,
                 mm_per_px=optics.mm_per_px,
@@ -409,6 +406,13 @@ class Settings:
             )
         except ValueError as error:
             raise SettingsError(f"optics.{error}") from error
+
+    def sight_optics(self) -> Optics:
+        """Optics of the pictures that the sight gets: after region of interest and binning.
+
+        Raises ``SettingsError`` when the parts do not fit together.
+        """
+        source, whole = self.source, self.source_optics()
         x, y, width, height = source.region_px or (0, 0, source.width_px, source.height_px)
         if x + width > source.width_px or y + height > source.height_px:
             raise SettingsError(

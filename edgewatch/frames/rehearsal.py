@@ -14,7 +14,6 @@ from edgewatch.rehearsal.line import Bar, Line
 from edgewatch.rehearsal.scene import Scene
 from edgewatch.rehearsal.steel import STEELS
 from edgewatch.settings import Settings
-from edgewatch.sight.optics import Optics
 
 USUAL_SPEED_M_S = 28.0
 """Surface speed where the configuration does not know it."""
@@ -51,19 +50,7 @@ class RehearsalSource:
 
     def __init__(self, settings: Settings, *, live: bool = False) -> None:
         """Plan the line; the first picture is made when read. Raises ``SettingsError`` for optics that do not fit."""
-        own, source, optics = settings.rehearsal, settings.source, settings.optics
-        try:
-            whole = Optics(
-                width_px=source.width_px,
-                height_px=source.height_px,
-                mm_per_px=optics.mm_per_px,
-                contact_px=(optics.contact_px[0], optics.contact_px[1]) if optics.contact_px else (0.0, 0.0),
-                direction_deg=optics.direction_deg,
-                exposure_ms=optics.exposure_ms,
-                fps=optics.fps,
-            )
-        except ValueError as error:
-            raise SettingsError(f"optics: {error}") from error
+        own, whole = settings.rehearsal, settings.source_optics()
         plan_rng, scene_rng = (np.random.default_rng(part) for part in np.random.SeedSequence(own.seed).spawn(2))
         self.line = Line(
             bars=own.bars,
@@ -76,13 +63,13 @@ class RehearsalSource:
             rng=plan_rng,
         )
         self._scene = Scene(whole, self.line.conditions(), camera=CameraModel(hot_pixels=5), rng=scene_rng)
-        self._fps = optics.fps
+        self._fps = whole.fps
         self._index = 0
         self._live = live
         self._begun_at: float | None = None
         self._closed = threading.Event()
         self.info = SourceInfo(
-            uri="rehearsal:", width_px=source.width_px, height_px=source.height_px, fps=optics.fps, live=live
+            uri="rehearsal:", width_px=whole.width_px, height_px=whole.height_px, fps=whole.fps, live=live
         )
 
     @property
