@@ -45,8 +45,9 @@ class BurstFlag(enum.IntFlag):
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Light:
     """State of one picture. ``background_dn`` and ``noise_dn``: typical level and noise (DN, 0..255);
-    ``saturated_share``: share of pixels at full scale; ``streak_width_px``: median full width at half maximum of
-    streaks (px), NaN without streaks; ``streak_peak_dn``: median height of streaks above background (DN), NaN without.
+    ``saturated_share``: share of the picture in patches at full scale; ``streak_width_px``: median full width at half
+    maximum of streaks (px), NaN without streaks; ``streak_peak_dn``: median height of streaks above background (DN),
+    NaN without.
     """
 
     background_dn: float

@@ -16,7 +16,8 @@ FULL_DN = 254
 """From here on a pixel counts as full scale (DN): compression takes the last level away."""
 
 SATURATED_SHARE = 0.02
-"""More of the picture at full scale than this hides streaks: as much as a hundred streaks cover."""
+"""More of the picture in patches at full scale than this hides streaks. Lines make no patches: the cores of bright
+streaks are at full scale in many a good picture."""
 
 NO_LIGHT_LEVEL_DN, NO_LIGHT_NOISE_DN = 1.5, 0.35
 """Below both, not even the offset and read noise of a camera arrive."""
@@ -31,8 +32,9 @@ STRAY_UNEVEN_DN = 60.0
 CROWDED_SHARE = 0.12
 """Share of pixels on ridges: one in eight means streaks as near to each other as they are wide."""
 
-SAMPLE_ROWS = 4
-"""Full scale is counted in one row of so many."""
+SAMPLE_STEP_PX = 4
+"""Full scale is looked for in one pixel of so many each way; a patch shows in two by two of them, so it is wider than a
+streak in focus whatever the streak's direction."""
 
 LEAST_LENGTH_PX = 8.0
 MOST_LINES = 60
@@ -46,8 +48,9 @@ and stands so many noise deviations above the ground."""
 WIDTH_EVERY = 8
 """Once known, width is measured in one picture of so many: lenses do not change faster."""
 
-KEEP = 0.5
-"""Share of the width known so far that each measurement keeps."""
+KNOWN_LINES = 24
+"""So many lines make the width known; later ones move it with the weight that they have beside so many. The first few
+of a contact lie in the bundle at the wheel and look wide."""
 
 DEFAULT_WIDTH_PX = 2.1
 
@@ -61,6 +64,7 @@ class LightMeter:
 
     def __init__(self) -> None:
         self._variance = math.nan
+        self._lines = 0
         self._ridge_share = 0.0
         self._count = -1
 
@@ -74,7 +78,7 @@ class LightMeter:
         """Width of streaks from ``begin`` to ``end`` (N, 2) px: where profiles across them fall to half."""
         self._ridge_share = ridges.index.size / max(1, ridges.blurred.size)
         self._count += 1
-        if math.isfinite(self._variance) and self._count % WIDTH_EVERY:
+        if self._lines >= KNOWN_LINES and self._count % WIDTH_EVERY:
             return
         gap = end - begin
         length = np.hypot(gap[:, 0], gap[:, 1])
@@ -97,7 +101,10 @@ class LightMeter:
         across = float(wide[part : wide.size - part].mean())
         total = (across / WIDTH_PER_SIGMA) ** 2
         own = max(total - BLUR_PX**2 - BETWEEN_PIXELS, 0.1)
-        self._variance = own if math.isnan(self._variance) else KEEP * self._variance + (1.0 - KEEP) * own
+        new = wide.size
+        before = 0.0 if math.isnan(self._variance) else self._variance
+        self._variance = (self._lines * before + new * own) / (self._lines + new)
+        self._lines = min(self._lines + new, KNOWN_LINES)
 
     def read(
         self,
@@ -107,15 +114,16 @@ class LightMeter:
         snr: NDArray[np.float64],
     ) -> Light:
         """State of this picture. ``lines`` (N, 4) and ``snr`` (N,): its streaks."""
-        sample = picture[::SAMPLE_ROWS]
-        share = float(np.count_nonzero(sample >= FULL_DN)) / sample.size
+        full = picture[::SAMPLE_STEP_PX, ::SAMPLE_STEP_PX] >= FULL_DN
+        patches = full[1:, 1:] & full[:-1, 1:] & full[1:, :-1] & full[:-1, :-1]
+        share = float(np.count_nonzero(patches)) / patches.size
         width = WIDTH_PER_SIGMA * math.sqrt(self._variance) if math.isfinite(self._variance) else math.nan
         flags = PictureFlag.NONE
         if background.level_dn < NO_LIGHT_LEVEL_DN and background.raw_noise_dn < NO_LIGHT_NOISE_DN and not len(lines):
             flags |= PictureFlag.NO_LIGHT
         if share > SATURATED_SHARE:
             flags |= PictureFlag.SATURATED
-        if len(lines) and width > DEFOCUSED_WIDTH_PX:
+        if len(lines) and self._lines >= KNOWN_LINES and width > DEFOCUSED_WIDTH_PX:
             flags |= PictureFlag.DEFOCUSED
         if self._ridge_share > CROWDED_SHARE:
             flags |= PictureFlag.CROWDED
