@@ -17,6 +17,7 @@ from edgewatch.commands.options import add_optics, add_station, load_settings
 from edgewatch.errors import DeviceError, SettingsError
 from edgewatch.figures.flightfit import FlightFit, FlightLinker
 from edgewatch.figures.meter import BarDone
+from edgewatch.figures.values import Figures
 from edgewatch.monitor.annotate import annotate, encode_jpeg
 from edgewatch.monitor.exhibits import Exhibits
 from edgewatch.sight.detections import Detections
@@ -116,7 +117,7 @@ def measurement_body(found: Measurement) -> dict[str, Any]:
     """The JSON object of one clip."""
     times = found.processing_s * 1000.0
     body = {"clip": found.clip, "frames": found.frames, "seconds": found.seconds}
-    body |= _without(figures_body(found.whole), ("begin_s", "end_s", "frames_seen"))
+    body |= _without(_clip_figures(found.whole), ("begin_s", "end_s", "frames_seen"))
     body["contacts"] = [_contact_body(contact) for contact in found.contacts]
     body["processing_ms"] = {
         "median": float(np.median(times)) if times.size else None,
@@ -125,8 +126,14 @@ def measurement_body(found: Measurement) -> dict[str, Any]:
     return body
 
 
+def _clip_figures(figures: Figures) -> dict[str, Any]:
+    """The figures with ``bursts`` as listed frame by frame; ``rate_bursts`` of them count for the burst-rate."""
+    body = figures_body(figures)
+    return body | {"bursts": body.pop("bursts_listed"), "rate_bursts": body["bursts"]}
+
+
 def _contact_body(contact: BarDone) -> dict[str, Any]:
-    body = figures_body(contact.bar)
+    body = _clip_figures(contact.bar)
     frames = body.pop("frames_seen")
     seconds = contact.bar.end_s - contact.bar.begin_s
     return body | {"begin_s": contact.begin_s, "end_s": contact.end_s, "frames": frames, "seconds": seconds}

@@ -50,6 +50,7 @@ class _Sums:
     frames_skipped: int = 0
     streaks: int = 0
     bursts: int = 0
+    bursts_listed: int = 0
     track_mm: float = 0.0
     exposure_mm: float = 0.0
     cut_streaks: int = 0
@@ -114,6 +115,7 @@ class Tally:
         sums.frames_skipped += skipped
         sums.streaks += len(detections.streaks)
         sums.bursts += detections.rate_bursts
+        sums.bursts_listed += len(detections.bursts)
         if math.isfinite(detections.rate_exposure_px) and detections.rate_exposure_px > 0.0:
             sums.exposure_mm += detections.rate_exposure_px * self.optics.mm_per_px
         elif len(detections.streaks):  # refused: the finite streaks alone
@@ -252,6 +254,7 @@ class Tally:
             reach_truncated=cut > TRUNCATED_SHARE,
             streaks_per_frame=sums.streaks / sums.frames_seen if sums.frames_seen else math.nan,
             spark_speed_m_s=self._speed(),
+            bursts_listed=sums.bursts_listed,
         )
 
     def _reach(self) -> tuple[float, float, float]:

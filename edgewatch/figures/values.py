@@ -16,6 +16,7 @@ class Figures:
     ``reach_mm``: distance from the contact point along the axis within which 90 % of the track lies (NaN without
     track), ``reach_low_mm`` / ``reach_high_mm`` its 95 % limits; ``cut_share``: share of the track that leaves the
     picture, ``reach_truncated``: more than 2 % does. ``spark_speed_m_s``: speed near the wheel (NaN if unknown).
+    ``bursts_listed``: all bursts listed, the less sure ones too, which would lift the rate where there are few.
     ``frames_seen`` judged and ``frames_skipped`` not seen although the camera delivered them.
     """
 
@@ -37,3 +38,4 @@ class Figures:
     reach_truncated: bool
     streaks_per_frame: float
     spark_speed_m_s: float
+    bursts_listed: int = 0

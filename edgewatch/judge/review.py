@@ -108,6 +108,7 @@ def _joined(group: Sequence[Figures]) -> Figures:
         reach_truncated=any(one.reach_truncated for one in group),
         streaks_per_frame=streaks / frames if frames else math.nan,
         spark_speed_m_s=by_track("spark_speed_m_s"),
+        bursts_listed=sum(one.bursts_listed for one in group),
     )
 
 

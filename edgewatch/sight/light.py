@@ -97,7 +97,7 @@ class LightMeter:
         if not clear.any():
             return
         wide = np.sort((profile[clear] >= 0.5 * top[clear, None]).sum(axis=1)) * PROFILE_STEP_PX
-        # the narrower half without its narrowest eighth: neighbours widen many lines of a full stream, noise narrows few
+        # the narrower half but for the narrowest: neighbours widen many lines of a full stream, noise narrows few
         across = float(wide[wide.size // 8 : max(1, (wide.size + 1) // 2)].mean())
         total = (across / WIDTH_PER_SIGMA) ** 2
         own = max(total - BLUR_PX**2 - BETWEEN_PIXELS, 0.1)

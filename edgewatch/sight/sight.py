@@ -32,7 +32,7 @@ class SightTuning:
 
     least_snr: float = 4.7
     least_length_px: float = 6.0
-    least_sure: float = 0.5
+    least_sure: float = 0.4
     rate_sure: float = 0.65
     longest_glow_s: float = 0.0035
     arm_draw_s: float = 0.00035

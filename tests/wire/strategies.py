@@ -30,6 +30,7 @@ figures = st.builds(
     frames_skipped=counts,
     streaks=counts,
     bursts=counts,
+    bursts_listed=counts,
     track_m=amounts,
     exposure_m=amounts,
     burst_rate_per_m=amounts,
