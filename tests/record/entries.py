@@ -21,7 +21,7 @@ def stamp(utc_s: float | None = None, *, boot: str = "boot-1") -> Stamp:
 def figures(number: int = 1) -> Figures:
     """Figures as a bar of some hundred streaks gives them."""
     values: dict[str, Any] = {part.name: 1.23456789 + number for part in dataclasses.fields(Figures)}
-    counts = {"frames_seen": 50, "frames_skipped": 0, "streaks": 200 + number, "bursts": 40}
+    counts = {"frames_seen": 50, "frames_skipped": 0, "streaks": 200 + number, "bursts": 40, "bursts_listed": 44}
     return Figures(**{**values, **counts, "reach_truncated": False})
 
 
