@@ -120,7 +120,7 @@ class SerialPort:
     def _rest(self) -> None:
         rest_s = self._quiet_since_s + self._silence_s - time.monotonic()
         if rest_s > 0:
-            time.sleep(rest_s)
+            time.sleep(rest_s)  # Modbus RTU wants silence between frames: time itself is what is waited for
 
     @contextlib.contextmanager
     def _translated(self, what: str) -> Iterator[None]:

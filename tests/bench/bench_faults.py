@@ -147,9 +147,9 @@ def _live_while_draining(journal: Journal, link: Link, reader: Tally) -> float:
         link.publish("summary", {"condition": "good"})
         began_s = time.monotonic()
         while reader.summaries == before and journal.status().unsent:
-            time.sleep(0.005)
+            time.sleep(0.005)  # the answer comes from another process; five ms are the resolution of the figure
         longest_s = max(longest_s, time.monotonic() - began_s)
-        time.sleep(0.1)
+        time.sleep(0.1)  # a live message now and then, as a station sends them
     return longest_s
 
 

@@ -118,7 +118,7 @@ class Camera:
     def read(self, timeout_s: float) -> Frame | None:
         """Wait for the next exposure."""
         due_s = self._begin_s + self._index * self._period_s
-        time.sleep(max(0.0, due_s - time.monotonic()))
+        time.sleep(max(0.0, due_s - time.monotonic()))  # a camera delivers by the clock
         self._index += 1
         return Frame(picture=self._picture, index=self._index - 1, t_s=due_s)
 
