@@ -71,6 +71,9 @@ class Detections:
     For the burst-rate: ``rate_bursts``, bursts of this picture that count for the rate (the surer ones), and
     ``rate_exposure_px``, the track (px) during which such a burst would have been counted. Sums over pictures give the
     rate without bias from the time between exposures; left out, they are all bursts and all track.
+
+    ``origin_offset_px``: how far from the contact point, across the axis, the streaks come from, with its standard
+    error ``origin_error_px``; NaN with too few streaks. It scatters from picture to picture when the camera shakes.
     """
 
     streaks: NDArray[np.float32]
@@ -82,6 +85,8 @@ class Detections:
     light: Light
     rate_bursts: int = -1
     rate_exposure_px: float = math.nan
+    origin_offset_px: float = math.nan
+    origin_error_px: float = math.nan
 
     def __post_init__(self) -> None:
         """Fill in what was left out."""

@@ -16,6 +16,7 @@ from edgewatch.sight.light import LightMeter
 from edgewatch.sight.optics import Optics
 from edgewatch.sight.ridges import MARGIN_PX, NOISE_GAIN, find_ridges
 from edgewatch.sight.segments import fit_segments, link_ridges
+from edgewatch.sight.steadiness import read_origin
 from edgewatch.sight.streaks import find_streaks
 
 
@@ -105,6 +106,7 @@ class Sight:
         at, late = apexes.at[fresh], late[fresh]
         track_px = float(length[keep].sum())
         snr = snr[keep]
+        origin_offset_px, origin_error_px = read_origin(lines, o)
         return Detections(
             streaks=lines.astype(np.float32),
             streak_snr=snr.astype(np.float32),
@@ -115,6 +117,8 @@ class Sight:
             light=self._meter.read(picture, self._background, lines, snr),
             rate_bursts=int(self._rate_glow.take(apexes.surer_than(s.rate_sure), self._lengths).size),
             rate_exposure_px=track_px * self._glow.gain,
+            origin_offset_px=origin_offset_px,
+            origin_error_px=origin_error_px,
         )
 
     def _near_edge(self, x: NDArray[np.float64], y: NDArray[np.float64], margin_px: float) -> NDArray[np.bool_]:
