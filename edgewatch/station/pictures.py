@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import threading
-from collections import deque
 from collections.abc import Callable
 from pathlib import Path
 from typing import Protocol
@@ -12,6 +11,7 @@ from edgewatch.errors import DeviceError
 from edgewatch.monitor.annotate import annotate, encode_jpeg
 from edgewatch.monitor.effects import KeepPicture, SendView
 from edgewatch.sight.optics import Optics
+from edgewatch.station.backlog import Backlog
 from edgewatch.wire import messages
 
 MOST_WAITING = 64
@@ -40,9 +40,7 @@ class PictureDesk:
         self._store = store
         self._publish = publish
         self._on_state = on_state
-        self._waiting: deque[KeepPicture | SendView] = deque()
-        self._change = threading.Condition()
-        self._busy = False
+        self._backlog: Backlog[KeepPicture | SendView] = Backlog()
         self._trouble = ""
         self.kept = 0
         """Pictures stored since the start."""
@@ -51,35 +49,27 @@ class PictureDesk:
 
     def put(self, effect: KeepPicture | SendView) -> None:
         """Take one; never blocks."""
-        with self._change:
-            if len(self._waiting) >= MOST_WAITING:
-                self._waiting.popleft()
+        with self._backlog.change:
+            if len(self._backlog.items) >= MOST_WAITING:
+                self._backlog.items.popleft()
                 self.given_up += 1
-            self._waiting.append(effect)
-            self._change.notify_all()
+            self._backlog.items.append(effect)
+            self._backlog.change.notify_all()
 
     def flush(self, timeout_s: float) -> bool:
         """Wait until all is done; say whether it is."""
-        with self._change:
-            return self._change.wait_for(lambda: not self._waiting and not self._busy, timeout_s)
+        return self._backlog.flush(timeout_s)
 
     def work(self, stop: threading.Event) -> None:
-        """Draw until ``stop`` is set and nothing waits; for a supervised thread."""
-        while True:
-            with self._change:
-                self._change.wait_for(lambda: bool(self._waiting) or stop.is_set(), timeout=0.5)
-                if not self._waiting:
-                    if stop.is_set():
-                        return
-                    continue
-                effect = self._waiting.popleft()
-                self._busy = True
+        """Draw until ``stop`` is set and nothing waits; for a supervised thread.
+
+        A picture is taken out first: one that cannot be drawn must not be tried for ever.
+        """
+        while (effect := self._backlog.next(stop, take=True)) is not None:
             try:
                 self._do(effect)
             finally:
-                with self._change:
-                    self._busy = False
-                    self._change.notify_all()
+                self._backlog.done()
 
     def _do(self, effect: KeepPicture | SendView) -> None:
         drawn = annotate(effect.picture, effect.detections, self._optics, effect.captions)

@@ -16,6 +16,7 @@ from typing import Any, Protocol
 from edgewatch.backoff import Backoff
 from edgewatch.errors import DeviceError
 from edgewatch.record.journal import Entry
+from edgewatch.station.backlog import Backlog
 from edgewatch.wire.messages import Stamp
 
 MOST_WAITING = 20_000
@@ -59,12 +60,10 @@ class Recorder:
         self._on_written = on_written
         self._most_waiting = most_waiting
         self._backoff = backoff or Backoff(random.random, first_s=0.2, most_s=10.0)
-        self._waiting: deque[Batch] = deque()
+        self._backlog: Backlog[Batch] = Backlog()
         self._entries = 0
         self._shed = 0
-        self._busy = False
         self._failing = False
-        self._change = threading.Condition()
 
     @property
     def waiting(self) -> int:
@@ -78,35 +77,26 @@ class Recorder:
 
     def put(self, batch: Batch) -> None:
         """Take a batch; never blocks."""
-        with self._change:
-            self._waiting.append(batch)
+        with self._backlog.change:
+            self._backlog.items.append(batch)
             self._entries += len(batch.entries)
             if self._entries > self._most_waiting:
                 self._give_up()
-            self._change.notify_all()
+            self._backlog.change.notify_all()
 
     def put_when_room(self, batch: Batch, *, room: int = 2_000) -> None:
         """Take a batch, waiting while ``room`` entries or more wait: for sources that can wait too (clips)."""
-        with self._change:
-            self._change.wait_for(lambda: self._entries < room or self._failing)
+        with self._backlog.change:
+            self._backlog.change.wait_for(lambda: self._entries < room or self._failing)
         self.put(batch)
 
     def flush(self, timeout_s: float) -> bool:
         """Wait until everything is written; say whether it is."""
-        with self._change:
-            return self._change.wait_for(lambda: not self._waiting and not self._busy, timeout_s)
+        return self._backlog.flush(timeout_s)
 
     def work(self, stop: threading.Event) -> None:
         """Write until ``stop`` is set and nothing waits, or cannot be written; for a supervised thread."""
-        while True:
-            with self._change:
-                self._change.wait_for(lambda: bool(self._waiting) or stop.is_set(), timeout=0.5)
-                if not self._waiting:
-                    if stop.is_set():
-                        return
-                    continue
-                batch = self._waiting[0]
-                self._busy = True
+        while (batch := self._backlog.next(stop)) is not None:
             try:
                 self._journal.append(batch.entries, stamp=batch.stamp, state=batch.state)
             except DeviceError as error:
@@ -116,48 +106,46 @@ class Recorder:
                 stop.wait(self._backoff.next_s())
                 continue
             finally:
-                with self._change:
-                    self._busy = False
-                    self._change.notify_all()
+                self._backlog.done()
             self._written(batch)
 
     def _written(self, batch: Batch) -> None:
-        with self._change:
+        with self._backlog.change:
             if (
-                self._waiting and self._waiting[0] is batch
+                self._backlog.items and self._backlog.items[0] is batch
             ):  # it may have been given up meanwhile: then it is kept twice
-                self._waiting.popleft()
+                self._backlog.items.popleft()
                 self._entries -= len(batch.entries)
             recovered, self._failing = self._failing, False
-            self._change.notify_all()
+            self._backlog.change.notify_all()
         if recovered:
             self._backoff.reset()
             self._on_state(None, self._shed)
         self._on_written()
 
     def _failed(self, error: DeviceError) -> None:
-        with self._change:
+        with self._backlog.change:
             first, self._failing = not self._failing, True
-            self._change.notify_all()
+            self._backlog.change.notify_all()
         if first:
             self._on_state(error, self._shed)
 
     def _give_up(self) -> None:
         """Make room: first the windows of all but the batch being written, then the oldest batches."""
         kept: deque[Batch] = deque()
-        for position, batch in enumerate(self._waiting):
-            if position == 0 and self._busy:
+        for position, batch in enumerate(self._backlog.items):
+            if position == 0 and self._backlog.busy:
                 kept.append(batch)
                 continue
             entries = tuple(entry for entry in batch.entries if entry.kind != "window")
             if entries or batch.state:
                 kept.append(batch if len(entries) == len(batch.entries) else replace(batch, entries=entries))
         before = self._entries
-        self._waiting = kept
+        self._backlog.items = kept
         self._entries = sum(len(batch.entries) for batch in kept)
-        start = 1 if self._busy else 0
-        while self._entries > self._most_waiting // 2 and len(self._waiting) > start:
-            batch = self._waiting[start]
-            del self._waiting[start]
+        start = 1 if self._backlog.busy else 0
+        while self._entries > self._most_waiting // 2 and len(self._backlog.items) > start:
+            batch = self._backlog.items[start]
+            del self._backlog.items[start]
             self._entries -= len(batch.entries)
         self._shed += before - self._entries
