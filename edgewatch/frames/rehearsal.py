@@ -2,21 +2,18 @@
 
 from __future__ import annotations
 
+import os
 import threading
 import time
 
-import numpy as np
-
-from edgewatch.errors import SettingsError
+from edgewatch.errors import SettingsError, StalledError
+from edgewatch.frames.apart import RendererApart
+from edgewatch.frames.renderer import Renderer, plan_line
 from edgewatch.frames.values import Frame, SourceInfo
-from edgewatch.rehearsal.camera import CameraModel
-from edgewatch.rehearsal.line import Bar, Line
-from edgewatch.rehearsal.scene import Scene
+from edgewatch.rehearsal.line import Bar
 from edgewatch.rehearsal.steel import STEELS
 from edgewatch.settings import Settings
 
-USUAL_SPEED_M_S = 28.0
-"""Surface speed where the configuration does not know it."""
 MOST_BEHIND_S = 0.1
 """A live rehearsal further behind its clock than this passes frames over, as a camera would whose queue is full."""
 
@@ -39,30 +36,24 @@ def open_rehearsal(rest: str, settings: Settings, live: bool = False) -> Rehears
     ]
     if problems:
         raise SettingsError(*problems)
-    return RehearsalSource(settings, live=live)
+    return RehearsalSource(settings, live=live, apart=len(os.sched_getaffinity(0)) > 1)
 
 
 class RehearsalSource:
     """The simulated line. See ``Source``; ``bars`` tells what is true.
 
-    Same settings, same pictures. ``t_s`` is ``index / fps``, the beginning of the exposure, live or not.
+    Same settings, same pictures; after frames passed over (live only) the pictures depend on which they were. ``t_s``
+    is ``index / fps``, the beginning of the exposure, live or not.
     """
 
-    def __init__(self, settings: Settings, *, live: bool = False) -> None:
-        """Plan the line; the first picture is made when read. Raises ``SettingsError`` for optics that do not fit."""
-        own, whole = settings.rehearsal, settings.source_optics()
-        plan_rng, scene_rng = (np.random.default_rng(part) for part in np.random.SeedSequence(own.seed).spawn(2))
-        self.line = Line(
-            bars=own.bars,
-            foreign=own.foreign,
-            grade=own.grade,
-            foreign_grades=own.foreign_grades,
-            contact_s=own.contact_s,
-            pause_s=own.pause_s,
-            wheel_speed_m_s=max(1.0, settings.wheel.surface_speed_m_s or USUAL_SPEED_M_S),
-            rng=plan_rng,
-        )
-        self._scene = Scene(whole, self.line.conditions(), camera=CameraModel(hot_pixels=5), rng=scene_rng)
+    def __init__(self, settings: Settings, *, live: bool = False, apart: bool = False) -> None:
+        """Plan the line. ``apart``: draw the pictures ahead in a process of its own, else here, when they are read.
+
+        Raises ``SettingsError`` for optics that do not fit, ``DeviceError`` when the process cannot be started.
+        """
+        whole = settings.source_optics()
+        self.line, _ = plan_line(settings)
+        self._renderer = RendererApart(settings) if apart else Renderer(settings)
         self._fps = whole.fps
         self._index = 0
         self._live = live
@@ -78,31 +69,38 @@ class RehearsalSource:
         return [self.line[index] for index in range(self.line.begun(self._index / self._fps))]
 
     def read(self, timeout_s: float) -> Frame | None:
-        """Return the next frame; ``None`` at the end of the line or after ``close``. Never stalls."""
-        skipped = self._keep_pace() if self._live else 0
-        if self._closed.is_set() or self._index / self._fps >= self.line.end_s:
+        """Return the next frame; ``None`` at the end of the line or after ``close``.
+
+        Raises ``StalledError`` if none comes within ``timeout_s``, ``DeviceError`` when the process that draws them
+        has died.
+        """
+        give_up_s = time.monotonic() + timeout_s
+        if self._live:
+            self._keep_pace(timeout_s)
+        if self._closed.is_set():
             return None
-        picture, _ = self._scene.frame()
-        frame = Frame(picture=picture, index=self._index, t_s=self._index / self._fps, skipped=skipped)
-        self._index += 1
+        taken = self._renderer.take(max(0.0, give_up_s - time.monotonic()))
+        if taken is None:
+            return None
+        index, picture = taken
+        frame = Frame(picture=picture, index=index, t_s=index / self._fps, skipped=index - self._index)
+        self._index = index + 1
         return frame
 
-    def _keep_pace(self) -> int:
-        """Wait for the next exposure's end, or pass over what is too late; returns how many frames were passed over."""
+    def _keep_pace(self, timeout_s: float) -> None:
+        """Wait for the next exposure's end, or pass over what is too late. Raises ``StalledError``."""
         now = time.monotonic()
         if self._begun_at is None:
             self._begun_at = now
         behind = (now - self._begun_at) * self._fps - (self._index + 1)
         if behind < 0.0:
-            self._closed.wait(-behind / self._fps)
-            return 0
-        if behind < max(1.0, MOST_BEHIND_S * self._fps):
-            return 0
-        passed = int(behind)
-        self._scene.skip(passed)
-        self._index += passed
-        return passed
+            wait_s = -behind / self._fps
+            if not self._closed.wait(min(wait_s, timeout_s)) and wait_s > timeout_s:
+                raise StalledError(f"{self.info.uri}: no picture for {timeout_s:g} s")
+        elif behind >= max(1.0, MOST_BEHIND_S * self._fps):
+            self._renderer.go_on_from(self._index + int(behind))
 
     def close(self) -> None:
         """End the line; the next ``read`` returns ``None``."""
         self._closed.set()
+        self._renderer.close()
