@@ -269,7 +269,12 @@ class JournalSettings:
     file: str = _declare("edgewatch.sqlite", _text(least=1), "journal file, relative to this file")
     most_mb: float = _declare(512.0, _number(1, 1e6), "size at which the oldest delivered records give way (MB)")
     thin_windows_mb: float = _declare(
-        128.0, _number(0.5, 1e6), "unsent window messages above this size (MB) are thinned evenly, and counted"
+        64.0,
+        _number(0.2, 1e6),
+        "unsent window messages above this size (MB) are thinned evenly, and counted; a quarter of most_mb at most",
+    )
+    keep_damaged: int = _declare(
+        3, _whole(1, 1000), "damaged journals kept beside the journal; beyond that the oldest are deleted, and said"
     )
 
 
@@ -532,6 +537,12 @@ def _contradictions(settings: Settings) -> list[tuple[str, str]]:
             "relay.kind relay.blind_stop_s",
             relay.blind_stop_s == 0 or relay.kind != "none",
             f'relay.blind_stop_s = {relay.blind_stop_s:g}: stops nothing with relay.kind = "none"',
+        ),
+        (
+            "journal.most_mb journal.thin_windows_mb",
+            settings.journal.thin_windows_mb <= settings.journal.most_mb / 4,
+            f"journal.thin_windows_mb = {settings.journal.thin_windows_mb:g}: at most a quarter of journal.most_mb = "
+            f"{settings.journal.most_mb:g}, so that bars and alerts have the rest",
         ),
         (
             "mqtt.enabled mqtt.host",

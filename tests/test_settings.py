@@ -239,6 +239,8 @@ def test_byte_frames_are_read_from_hexadecimal() -> None:
         ({"mqtt": {"ca_file": "ca.pem"}}, "mqtt.tls"),
         ({"mqtt": {"password_file": "p"}}, "mqtt.user"),
         ({"orders": {"enabled": True}}, "mqtt.enabled"),
+        ({"journal": {"most_mb": 100, "thin_windows_mb": 26}}, "journal.thin_windows_mb = 26"),
+        ({"journal": {"most_mb": 100}}, "journal.most_mb = 100"),
         ({"figures": {"longest_s": 1, "window_s": 2}}, "figures.longest_s"),
         ({"rehearsal": {"foreign": 13}}, "rehearsal.bars"),
         ({"rehearsal": {"foreign_grades": []}}, "rehearsal.foreign_grades"),

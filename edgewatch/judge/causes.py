@@ -22,11 +22,13 @@ doubtful figures, because while somebody works on the station its figures mean n
 
 @dataclass(frozen=True, slots=True)
 class Cause:
-    """What it means in one sentence, the condition it makes of the station (empty: none), whether it blinds."""
+    """What it means in one sentence, the condition it makes of the station (empty: none), whether it blinds,
+    whether it is an alert where a failure or blindness is one anyway."""
 
     sentence: str
     condition: str = ""
     blinds: bool = False
+    alerts: bool = False
 
 
 CAUSES = MappingProxyType(
@@ -72,7 +74,8 @@ CAUSES = MappingProxyType(
         "relay_lost": Cause("The relay does not answer, or is not in the wanted state.", FAILURE),
         "journal_lost": Cause("The journal cannot be written; records wait in memory.", FAILURE),
         "records_shed": Cause("The journal was away too long; records were given up, and counted.", FAILURE),
-        "journal_damaged": Cause("A damaged journal was set aside whole and a new one begun.", MAINTENANCE),
+        "journal_damaged": Cause("A damaged journal was set aside whole; a new one began.", MAINTENANCE, alerts=True),
+        "outbox_filling": Cause("Unsent messages have nearly filled journal or disk.", MAINTENANCE, alerts=True),
         "windows_thinned": Cause("Unsent window messages were thinned to save space.", MAINTENANCE),
         "evidence_lost": Cause("Evidence pictures cannot be kept.", MAINTENANCE),
         "clock_not_synced": Cause("The clock is not synchronised; times may be wrong.", MAINTENANCE),

@@ -163,8 +163,8 @@ class Monitor:
             effects += self._begin_lesson(found, stamp)
         return effects
 
-    def tick(self, stamp: Stamp, *, unsent: int = 0, thinned: int = 0) -> list[Effect]:
-        """Time passes, a few times a second at least, also while no picture comes."""
+    def tick(self, stamp: Stamp, *, unsent: int = 0, thinned: int = 0, filling: str = "") -> list[Effect]:
+        """Time passes, a few times a second at least, also while no picture comes. ``filling``: see ``Filling``."""
         self._unsent, self._thinned = unsent, thinned
         silent = self._feed.silent(stamp.monotonic_s)
         effects = self.complain(
@@ -175,6 +175,7 @@ class Monitor:
             },
             stamp,
         )
+        effects += self.complain({"outbox_filling": bool(filling)}, stamp, detail=filling)
         effects += self._look_at_line(stamp)
         effects += self._blind_stop(stamp)
         return effects + self._summary(stamp)
@@ -469,9 +470,11 @@ class Monitor:
     # ------------------------------------------------------------------ what is told
 
     def _cause_alert(self, cause: str, *, active: bool) -> list[Effect]:
-        """Failures and whatever blinds the station, and drift, are alerts; the rest shows in the condition alone."""
+        """Failures, whatever blinds the station, drift, and what threatens records are alerts; the rest shows in the
+        condition alone.
+        """
         what = CAUSES[cause]
-        if not (what.blinds or what.condition == FAILURE or cause.startswith("drift")):
+        if not (what.blinds or what.alerts or what.condition == FAILURE or cause.startswith("drift")):
             return []
         if not active:
             return self._told_alerts(self._alerts.go(cause))

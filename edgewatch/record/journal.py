@@ -16,6 +16,7 @@ import contextlib
 import copy
 import dataclasses
 import json
+import shutil
 import sqlite3
 import threading
 import time
@@ -25,6 +26,7 @@ from typing import Any, TypeVar
 
 from edgewatch.errors import DeviceError
 from edgewatch.record import rows as table
+from edgewatch.record.aside import Aside
 from edgewatch.record.ceiling import Ceiling
 from edgewatch.record.outbox import Outbox
 from edgewatch.record.rows import DamagedError, Entry, JournalStatus, Row
@@ -56,7 +58,8 @@ class Journal:
     recorded and published as ``thinned``.
 
     A damaged file is set aside whole and a new one begun, with the unsent records and the states that can still be
-    read; ``on_set_aside(path, reason)`` is told, from the thread that found it, and may call the journal.
+    read; ``on_set_aside(path, reason)`` is told, from the thread that found it, and may call the journal. The newest
+    ``keep_damaged`` of them stay, the others are deleted, which ``reason`` says.
 
     All methods raise ``DeviceError`` when the file cannot be used (locked, disk full, read-only): nothing of that call
     was then recorded, and the same call may be made again. The constructor does too unless ``patient``: then the file
@@ -68,13 +71,15 @@ class Journal:
         path: Path,
         *,
         most_mb: float = 512.0,
-        thin_windows_mb: float = 128.0,
+        thin_windows_mb: float = 64.0,
+        keep_damaged: int = 3,
         on_set_aside: Callable[[Path, str], None] | None = None,
         patient: bool = False,
         utc: Callable[[], float] = time.time,
     ) -> None:
         self.path = path
         self._most_bytes = most_mb * 1e6
+        self._aside = Aside(path, keep=keep_damaged)
         self._on_set_aside = on_set_aside
         self._utc = utc
         self._lock = threading.RLock()
@@ -114,8 +119,7 @@ class Journal:
     def delivered(self, seqs: Sequence[int]) -> None:
         """Take the messages ``seqs`` out of the outbox: the broker has them. Unknown numbers do no harm."""
         if seqs:
-            self._used(lambda db: self._write(db, lambda: self._outbox.take(db, seqs), synced=False))
-            self._prune_after = 0
+            self._used(lambda db: self._write(db, lambda: self._take(db, seqs), synced=False))
 
     def close(self) -> None:
         """Close the file; a second call does nothing."""
@@ -187,6 +191,7 @@ class Journal:
         try:
             if db.in_transaction:
                 db.execute("ROLLBACK")
+            self._prune_after = 0
             self._outbox.count(db)
         except (*table.FAILURES, DamagedError):
             self._drop()  # opened anew by the next call
@@ -201,7 +206,9 @@ class Journal:
                     return self._db
             self._drop()  # the file was deleted or replaced under us
         try:
-            return self._opened()
+            self._opened()
+            self._take_over("found at the start")
+            return self._db or self._opened()
         except DamagedError as error:
             self._set_aside(str(error))
             try:
@@ -282,37 +289,36 @@ class Journal:
             raise DeviceError(f"journal {self.path}: is not a journal ({reason}); name another file, or move it away")
         if not known:  # its number file is gone as well: seconds since 1970 exceed any count of records
             ceiling.raise_to(max(int(self._utc()), RESERVE))
-        aside = self._free_name()
         try:
-            for ending in ("-wal", "-shm", ""):  # the file last: until it is renamed, the next start tries again
-                with contextlib.suppress(FileNotFoundError):
-                    Path(f"{self.path}{ending}").replace(f"{aside}{ending}")
+            aside = self._aside.take(self._utc())
         except OSError as error:
             raise DeviceError(
                 f"journal {self.path}: is damaged ({reason}) and cannot be set aside: {error.strerror or error}"
             ) from error
-        saved = self._salvaged(aside)
-        if self._on_set_aside is not None:
-            self._on_set_aside(aside, f"{reason}; {saved}")
+        # A new file that cannot be written now is begun empty by the next call that can, and then takes over.
+        with contextlib.suppress(DeviceError, DamagedError):
+            self._opened()
+        self._take_over(reason, aside)
 
-    def _free_name(self) -> Path:
-        stamp = time.strftime("%Y%m%dT%H%M%SZ", time.gmtime(self._utc()))
-        aside, tries = Path(f"{self.path}.damaged-{stamp}"), 1
-        while aside.exists():
-            tries += 1
-            aside = Path(f"{self.path}.damaged-{stamp}-{tries}")
-        return aside
-
-    def _salvaged(self, aside: Path) -> str:
-        """Take over what is whole; a new file that cannot be written now is begun empty by the next call."""
-        try:
-            db = self._opened()
-            records, states = self._write(db, lambda: salvage(aside, db))
-            self._outbox.count(db)
-        except (*table.FAILURES, DeviceError, DamagedError, OSError) as error:
-            self._drop()
-            return f"nothing could be taken over: {error}"
-        return f"taken over: {records} unsent records, {states} kept values"
+    def _take_over(self, reason: str, newest: Path | None = None) -> None:
+        """Take over what is whole from the files set aside where that was not done yet, and tell of each."""
+        for aside in self._aside.waiting():
+            kept, saved = aside, "nothing could be taken over: there is no new file"
+            db = self._db
+            if db is not None:
+                try:
+                    records, states = self._write(db, lambda aside=aside, db=db: salvage(aside, db))  # type: ignore[misc]
+                    self._outbox.count(db)
+                    kept = self._aside.done(aside)
+                    saved = f"taken over: {records} unsent records, {states} kept values"
+                except (*table.FAILURES, DamagedError, OSError) as error:
+                    saved = f"nothing could be taken over: {error}"
+                    self._roll_back(db)
+            if kept == aside and aside != newest:
+                continue  # told before
+            deleted = self._aside.clear(kept)
+            if self._on_set_aside is not None:
+                self._on_set_aside(kept, "; ".join([reason, saved, *deleted]))
 
     # ------------------------------------------------------------------ transactions
 
@@ -336,7 +342,9 @@ class Journal:
             _keep(db, state)
             last = first + len(entries) - 1
             if entries:
-                self._outbox.thin(db)
+                gave_way = self._outbox.thin(db)
+                if gave_way is not None:
+                    self._prune_after = min(self._prune_after, gave_way - 1)
                 report = self._outbox.report()
                 if report is not None:
                     last += 1
@@ -362,6 +370,10 @@ class Journal:
             db.execute("INSERT OR REPLACE INTO latest VALUES (?, ?, ?, ?)", (entry.kind, seq, check, payload))
         self._outbox.put(db, seq, entry, len(payload))
 
+    def _take(self, db: sqlite3.Connection, seqs: Sequence[int]) -> None:
+        self._outbox.take(db, seqs)
+        self._prune_after = min(self._prune_after, min(seqs) - 1)
+
     def _prune(self, db: sqlite3.Connection) -> None:
         """Let the oldest delivered records give way when the file has come near its size limit."""
         size = int(db.execute("PRAGMA page_size").fetchone()[0])
@@ -372,17 +384,32 @@ class Journal:
             " WHERE record.seq > ? AND record.seq < (SELECT max(seq) FROM record) ORDER BY record.seq LIMIT ?",
             (self._prune_after, PRUNE_RUN),
         ).fetchall()
-        db.executemany("DELETE FROM record WHERE seq = ?", ((seq,) for seq, sent in run if sent))
-        # Unsent records stay: go on behind them, and from the beginning again when the end is reached.
-        self._prune_after = run[-1][0] if len(run) == PRUNE_RUN else 0
+        if not run:
+            return
+        if any(sent for _, sent in run):
+            span = (run[0][0], run[-1][0])
+            # What stays is written anew: a page that lost its windows and kept one bar would never be filled again.
+            kept = db.execute(
+                "SELECT record.* FROM record JOIN outbox USING (seq) WHERE record.seq BETWEEN ? AND ? ORDER BY seq",
+                span,
+            ).fetchall()
+            db.execute("DELETE FROM record WHERE seq BETWEEN ? AND ?", span)
+            db.executemany("INSERT INTO record VALUES (?, ?, ?, ?, ?, ?, ?, ?)", kept)
+        self._prune_after = run[-1][0]
 
     def _status(self, db: sqlite3.Connection) -> JournalStatus:
+        page_bytes = int(db.execute("PRAGMA page_size").fetchone()[0])
+        room = self._most_bytes
+        with contextlib.suppress(OSError):
+            room = min(room, self.path.stat().st_size + shutil.disk_usage(self.path.parent).free)
         return JournalStatus(
             unsent=self._outbox.unsent,
             unsent_bytes=self._outbox.unsent_bytes,
             windows_thinned=self._outbox.thinning.total,
-            used_bytes=table.pages_used(db) * int(db.execute("PRAGMA page_size").fetchone()[0]),
+            used_bytes=table.pages_used(db) * page_bytes,
             next_seq=max(table.newest(db) or 0, self._floor) + 1,
+            unsent_room_bytes=self._outbox.unsent_bytes + self._outbox.unsent * table.MESSAGE_ROOM_BYTES,
+            room_bytes=int(room),
         )
 
 

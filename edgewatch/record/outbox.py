@@ -103,25 +103,29 @@ class Outbox:
         if kind == "window":
             self._window_bytes -= size
 
-    def thin(self, db: sqlite3.Connection) -> None:
-        """Widen or end the thinning where it is time, and take one run of the sweep over older windows."""
+    def thin(self, db: sqlite3.Connection) -> int | None:
+        """Widen or end the thinning where it is time, and take one run of the sweep over older windows.
+
+        Returns the lowest ``seq`` that gave way, ``None`` when none did.
+        """
         now = self.thinning
         if now.stride > 1 and self._window_bytes < self._thin_bytes / 4:
             now.stride, now.swept_to = 1, None
         elif now.swept_to is None and self._window_bytes > self._thin_bytes and now.stride < MOST_STRIDE:
             now.stride, now.swept_to = now.stride * 2, 0
         if now.swept_to is None:
-            return
+            return None
         run = db.execute(
             "SELECT seq, bytes, place FROM outbox WHERE kind = 'window' AND seq > ? ORDER BY seq LIMIT ?",
             (now.swept_to, THIN_RUN),
         ).fetchall()
         now.swept_to = run[-1][0] if len(run) == THIN_RUN else None  # the end: newer ones were thinned as they came
-        for seq, size, place in run:
-            if place % now.stride:
-                db.execute("DELETE FROM outbox WHERE seq = ?", (seq,))
-                now.gave_way(seq)
-                self._gone("window", size)
+        gone = [(seq, size) for seq, size, place in run if place % now.stride]
+        for seq, size in gone:
+            db.execute("DELETE FROM outbox WHERE seq = ?", (seq,))
+            now.gave_way(seq)
+            self._gone("window", size)
+        return gone[0][0] if gone else None
 
     def report(self) -> Entry | None:
         """Return the record that tells what gave way since the last one; ``None`` while it is too little to tell."""

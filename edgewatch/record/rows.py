@@ -23,6 +23,9 @@ BUSY_S = 1.0
 CHECK_WHOLE_BYTES = 64_000_000
 """Up to this size the whole file is checked when opened (0.1 s on a desk computer, about 3 s from an SD card); a larger
 one is checked as it is read: each record carries its own check sum."""
+MESSAGE_ROOM_BYTES = 240
+"""Room that an unsent message takes beyond its payload: columns, place in the outbox, and what is left over of a page.
+As measured, bars (806 bytes) take 1045, windows (631 bytes) 700."""
 PAGE_BYTES = 2048
 """A transaction writes whole pages: a quarter less on the card than with 4096, as measured (1024: a third less, but
 then most bars spill over several pages)."""
@@ -73,7 +76,9 @@ class Row:
 @dataclass(frozen=True, slots=True, kw_only=True)
 class JournalStatus:
     """Size and backlog. ``unsent`` messages and their ``unsent_bytes``; ``windows_thinned``: window messages that gave
-    way since the journal began; ``used_bytes``: pages in use; ``next_seq``: what the next record will get.
+    way since the journal began; ``used_bytes``: pages in use; ``next_seq``: what the next record will get;
+    ``unsent_room_bytes``: room in the file that the unsent ones take, about; ``room_bytes``: what they may take, as the
+    size limit and the disk have it.
     """
 
     unsent: int
@@ -81,6 +86,8 @@ class JournalStatus:
     windows_thinned: int
     used_bytes: int
     next_seq: int
+    unsent_room_bytes: int = 0
+    room_bytes: int = 0
 
 
 class DamagedError(Exception):

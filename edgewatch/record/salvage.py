@@ -16,8 +16,9 @@ MOST_RECORDS = 1_000_000
 
 
 def salvage(damaged: Path, db: sqlite3.Connection) -> tuple[int, int]:
-    """Copy what is whole from ``damaged`` into the new, empty file ``db``, within the caller's transaction.
+    """Copy what is whole from ``damaged`` into the new file ``db``, within the caller's transaction.
 
+    What ``db`` has already stays as it is.
     Unsent records keep their numbers and go out as if nothing had happened; only those that match their check sum are
     taken. Returns how many records and states were saved. Nothing that the damaged file does raises.
     """
@@ -86,11 +87,11 @@ def _keep_state(db: sqlite3.Connection, row: Any) -> bool:
         return False
     if not isinstance(key, str) or key == "floor":
         return False
-    db.execute("INSERT OR REPLACE INTO state VALUES (?, ?)", (key, value))
+    db.execute("INSERT OR IGNORE INTO state VALUES (?, ?)", (key, value))
     return True
 
 
 def _keep_latest(db: sqlite3.Connection, row: Any) -> None:
     kind, seq, check, payload = row
     if isinstance(seq, int) and isinstance(payload, bytes) and checksum(seq, payload) == check and kind in KINDS:
-        db.execute("INSERT OR REPLACE INTO latest VALUES (?, ?, ?, ?)", row)
+        db.execute("INSERT OR IGNORE INTO latest VALUES (?, ?, ?, ?)", row)

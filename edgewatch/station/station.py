@@ -33,6 +33,7 @@ from edgewatch.monitor.effects import (
     SetRelay,
     Told,
 )
+from edgewatch.monitor.filling import Filling
 from edgewatch.monitor.memory import KEYS, Memory, read_memory
 from edgewatch.monitor.monitor import Monitor
 from edgewatch.monitor.stop import StopState
@@ -156,6 +157,7 @@ class Station:
             folder / settings.journal.file,
             most_mb=settings.journal.most_mb,
             thin_windows_mb=settings.journal.thin_windows_mb,
+            keep_damaged=settings.journal.keep_damaged,
             on_set_aside=self._set_aside,
             patient=settings.mqtt.enabled,  # where somebody can be told, judging begins on a full disk too
         )
@@ -196,6 +198,7 @@ class Station:
             self._add("relay", self._relay.run)
         if settings.contact.port:
             self._add("contact input", ContactInput(settings.contact, self._bar_at_wheel).run)
+        self._filling = Filling()
         self._watchdog = Watchdog()
 
     def _read_memory(self) -> Memory:
@@ -324,11 +327,11 @@ class Station:
     def _tick(self) -> None:
         self._check_deviations()
         stamp = self._clock.now()
-        unsent, thinned = self._backlog
+        unsent, thinned, filling = self._backlog
         if self._fault_s and stamp.monotonic_s - max(self._fault_s.values()) >= STEADY_S:
             self._fault_s.clear()
             self._complain({"part_restarted": False})
-        self._carry_out(self.monitor.tick(stamp, unsent=unsent, thinned=thinned), stamp)
+        self._carry_out(self.monitor.tick(stamp, unsent=unsent, thinned=thinned, filling=filling), stamp)
 
     def _take_inbox(self) -> None:
         while True:
@@ -428,8 +431,14 @@ class Station:
             self._link.wake()
 
     def _set_aside(self, path: Path, reason: str) -> None:
-        self._tell({"journal_damaged": True}, f"{path.name}: {reason}")
-        self._inbox.put(lambda monitor, stamp: monitor.remember())
+        said = f"{path.name}: {reason}"
+
+        def complain(monitor: Monitor, stamp: messages.Stamp) -> list[Effect]:
+            ended = monitor.complain({"journal_damaged": False}, stamp)  # each damaged file is an alert of its own
+            return ended + monitor.complain({"journal_damaged": True}, stamp, detail=said) + monitor.remember()
+
+        self._inbox.put(complain)
+        self._on_notice(f"journal: set aside as {said}")
 
     def _part_fault(self, name: str, error: BaseException) -> None:
         what = " ".join(f"{name}: {type(error).__name__}: {error}".split())[:300]
@@ -442,20 +451,26 @@ class Station:
     # ------------------------------------------------------------------ the end
 
     @property
-    def _backlog(self) -> tuple[int, int]:
-        """Unsent and thinned messages, from the last look of a few seconds ago."""
+    def _backlog(self) -> tuple[int, int, str]:
+        """Unsent and thinned messages, and whether they fill the journal, from the last look of a few seconds ago."""
         now_s = time.monotonic()
         if now_s - self._backlog_s >= BACKLOG_S:
             self._backlog_s = now_s
             try:
                 status = self._journal.status()
-                self._backlog_seen = (status.unsent, status.windows_thinned)
+                filling = self._filling.update(
+                    now_s,
+                    unsent=status.unsent,
+                    used_bytes=status.unsent_room_bytes,
+                    room_bytes=status.room_bytes,
+                )
+                self._backlog_seen = (status.unsent, status.windows_thinned, filling)
             except DeviceError:
                 pass  # the recorder tells of it
         return self._backlog_seen
 
     _backlog_s = float("-inf")
-    _backlog_seen = (0, 0)
+    _backlog_seen = (0, 0, "")
     _unsent_at_end = 0
 
     def _close(self) -> None:

@@ -85,7 +85,7 @@ def soak(folder: Path, hours: float, fps: float) -> tuple[list[Reading], int, li
                 {
                     "source": {"uri": f"pipe:{fifo}", "width_px": WIDTH, "height_px": HEIGHT},
                     "optics": {"mm_per_px": 4.0, "contact_px": [4, 50], "fps": fps, "exposure_ms": 4.0},
-                    "journal": {"file": "journal.sqlite", "most_mb": 8.0},
+                    "journal": {"file": "journal.sqlite", "most_mb": 8.0, "thin_windows_mb": 2.0},
                     "mqtt": {"enabled": True, "host": "127.0.0.1", "port": broker.port},
                 }
             )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import shutil
 import sqlite3
 from itertools import pairwise
 from pathlib import Path
@@ -151,6 +152,58 @@ def test_unsent_records_never_give_way(file: Path):
     assert {row.seq for row in journal.rows("bar")} == set(unsent)
     assert len(journal.rows("alert")) < 3000
     assert journal.status().used_bytes <= 1e6
+    journal.close()
+
+
+@pytest.mark.slow
+def test_the_limit_holds_while_all_is_unsent(file: Path):
+    """Broker away at full rate until bars fill two thirds of the limit: thinned windows leave the file, and the room
+    they leave is used again, so the file stays within its limit with every bar and alert in it.
+    """
+    journal = Journal(file, most_mb=4, thin_windows_mb=1)
+    others: list[int] = []
+    largest = second = 0
+    while len(others) * 1100 < 0.66 * 4e6:
+        entries = [window(second + n) for n in range(16)] + [bar(second), bar(second + 2), alert()]
+        others += journal.append(entries, stamp=stamp(1e9 + second))[16:]
+        second += 4
+        largest = max(largest, journal.status().used_bytes)
+    assert largest <= 4e6
+    assert journal.status().windows_thinned > 0.75 * 4 * second
+    waiting = {message.seq for message in journal.pending(10**6)}
+    assert set(others) <= waiting
+    rows = journal.rows()
+    assert {row.seq for row in rows if row.unsent} == waiting
+    assert [row.seq for row in rows] == sorted({row.seq for row in rows})
+    # The broker is back: all that waits can be taken out, and old records give way again.
+    journal.delivered(sorted(waiting))
+    for number in range(300):
+        journal.delivered(journal.append([bar(number)] * 4, stamp=stamp()))
+        assert journal.status().used_bytes <= 4e6
+    kept = [row.seq for row in journal.rows()]
+    assert kept[0] > others[0]
+    assert kept[-1200:] == list(range(kept[-1] - 1199, kept[-1] + 1))
+    journal.close()
+    with sqlite3.connect(file) as db:
+        assert db.execute("PRAGMA integrity_check").fetchone() == ("ok",)
+    db.close()
+
+
+def test_what_unsent_messages_take_is_known(file: Path):
+    """As estimated and as SQLite counts pages, for bars alone and for full rate; and what they may take."""
+    journal = Journal(file, most_mb=100)
+    for kinds in ([bar()], [window()] * 8 + [bar()]):
+        before = journal.status()
+        for _ in range(20):
+            journal.append(kinds * 20, stamp=stamp())
+        after = journal.status()
+        estimated = after.unsent_room_bytes - before.unsent_room_bytes
+        assert estimated == pytest.approx(after.used_bytes - before.used_bytes, rel=0.25)
+    assert journal.status().room_bytes == 100e6
+    journal.close()
+    journal = Journal(file, most_mb=1e9)
+    free = shutil.disk_usage(file.parent).free
+    assert journal.status().room_bytes == pytest.approx(free, rel=0.01)
     journal.close()
 
 

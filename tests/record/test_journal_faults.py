@@ -394,3 +394,121 @@ def test_a_torn_log_gives_a_whole_prefix(tmp_path: Path):
         torn.close()
     assert {0, 24} <= found
     assert len(found) > 6
+
+
+def _asides(file: Path) -> list[Path]:
+    """What was set aside; each log beside it belongs to a file that is there."""
+    found = sorted(path for path in file.parent.iterdir() if ".damaged-" in path.name)
+    files = [path for path in found if not path.name.endswith(("-wal", "-shm"))]
+    assert {path.name[:-4] for path in found} - {path.name[:-4] for path in files} <= {path.name for path in files}
+    return files
+
+
+def _spoil(file: Path) -> None:
+    file.write_bytes(b"SQLite format 3\x00" + b"\xff" * 8000)
+
+
+def test_damaged_files_have_a_bound_and_each_deletion_is_said(file: Path):
+    """A card that damages the file again and again does not fill the disk; the newest stay, with their logs."""
+    told: list[tuple[Path, str]] = []
+    (file.parent / f"{file.name}.damaged-by-hand").write_text("not ours to delete")
+    for number in range(8):
+        _filled(file, 6)
+        _spoil(file)
+        Path(f"{file}-wal").write_bytes(b"log")
+        Journal(
+            file,
+            keep_damaged=3,
+            on_set_aside=lambda path, reason: told.append((path, reason)),
+            utc=lambda number=number: 1e9 + number // 2,  # type: ignore[misc]
+        ).close()
+    names = [path.name for path, _ in told]
+    kept = {path.name for path in _asides(file)} - {f"{file.name}.damaged-by-hand"}
+    assert kept == set(names[-3:])
+    said = [reason.partition("deleted to make room: ")[2] for _, reason in told]
+    assert said == ["", "", "", *names[:5]]
+
+
+def test_the_newest_damaged_file_stays_whatever_the_clock_says(file: Path):
+    """A board that wakes in 1970 sets aside a file that seems to be the oldest."""
+    told: list[Path] = []
+    for utc_s in (1.8e9, 1.8e9 + 60, 0.0):
+        _filled(file, 6)
+        _spoil(file)
+        Journal(
+            file,
+            keep_damaged=1,
+            on_set_aside=lambda path, _: told.append(path),
+            utc=lambda utc_s=utc_s: utc_s,  # type: ignore[misc]
+        ).close()
+    assert _asides(file) == [told[-1]]
+
+
+@contextlib.contextmanager
+def _largest_file(size: int) -> Iterator[None]:
+    """No file of this process may grow beyond ``size`` bytes, until the block ends."""
+    handler = signal.signal(signal.SIGXFSZ, signal.SIG_IGN)
+    soft, hard = resource.getrlimit(resource.RLIMIT_FSIZE)
+    resource.setrlimit(resource.RLIMIT_FSIZE, (size, hard))
+    try:
+        yield
+    finally:
+        resource.setrlimit(resource.RLIMIT_FSIZE, (soft, hard))
+        signal.signal(signal.SIGXFSZ, handler)
+
+
+def test_what_could_not_be_taken_over_is_kept_and_taken_over_later(file: Path):
+    """Room for a new file and not for the unsent records: no number of damaged files deletes the one that holds them,
+    and they go out once there is room.
+    """
+    journal = Journal(file)
+    journal.append([bar(number) for number in range(60)], stamp=stamp(), state={"latch": 59})
+    waiting = [message.payload for message in journal.pending(100)]
+    journal.close()
+    with sqlite3.connect(file) as db:
+        db.execute("DROP TABLE finding")
+    db.close()
+    told: list[tuple[Path, str]] = []
+
+    def opened() -> Journal:
+        return Journal(file, keep_damaged=1, on_set_aside=lambda path, reason: told.append((path, reason)))
+
+    with _largest_file(60_000):
+        journal = opened()
+        ((held, said),) = told
+        assert held.name.endswith("-unsent")
+        assert "nothing could be taken over" in said
+        assert journal.append([alert()], stamp=stamp())[0] > 60  # recording goes on
+        journal.close()
+        for _ in range(2):
+            _spoil(file)
+            journal = opened()
+            journal.close()
+    assert len(told) == 3
+    assert held in _asides(file)
+    journal = opened()
+    assert [message.payload for message in journal.pending(100)][:60] == waiting
+    assert journal.state("latch") == 59
+    assert told[-1][0].name == held.name.removesuffix("-unsent")
+    assert "taken over: 60 unsent records" in told[-1][1]
+    journal.close()
+    opened().close()
+    assert len(told) == 4
+
+
+def test_a_kill_between_setting_aside_and_taking_over_loses_nothing(file: Path):
+    """The next start finds the file by its name, takes over once, and keeps what it has itself."""
+    journal = Journal(file)
+    journal.append([bar(1), bar(2)], stamp=stamp(), state={"latch": "old", "order": "kept"})
+    journal.close()
+    file.replace(f"{file}.damaged-20260101T000000Z-unsent")
+    journal = Journal(file)
+    assert [message.seq for message in journal.pending(10)] == [1, 2]
+    journal.append([bar(3)], stamp=stamp(), state={"latch": "new"})
+    journal.close()
+    assert [path.name for path in _asides(file)] == [f"{file.name}.damaged-20260101T000000Z"]
+    journal = Journal(file)
+    assert [row.payload["bar"] for row in journal.rows("bar")] == [1, 2, 3]
+    assert journal.state("latch") == "new"
+    assert journal.state("order") == "kept"
+    journal.close()
