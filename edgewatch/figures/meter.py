@@ -108,24 +108,32 @@ class BarMeter:
     def _take(self, frame: _Waiting) -> list[Begin | WindowDone | BarDone]:
         detections, t_s, skipped = frame
         done: list[Begin | WindowDone | BarDone] = []
-        if t_s - self._window_begin_s >= self._settings.window_s - 0.5 * self._optics.period_s:
-            done.append(self._end_window())
-            spans = math.floor((t_s - self._window_begin_s) / self._settings.window_s + 1e-6)
-            self._window_begin_s += max(1, spans) * self._settings.window_s
+        if self._is_full(t_s):  # frames are missing: none came that could end the window in time
+            done.append(self._end_window(t_s))
         self._window.add(detections, t_s=t_s, skipped=skipped)
+        next_s = t_s + self._optics.period_s
+        if self._is_full(next_s):  # with its last frame, not with the first of the next: a decision is a period earlier
+            done.append(self._end_window(next_s))
         return done
 
-    def _end_window(self) -> WindowDone:
+    def _is_full(self, t_s: float) -> bool:
+        """Whether a frame at ``t_s`` belongs to a later window."""
+        return t_s - self._window_begin_s >= self._settings.window_s - 0.5 * self._optics.period_s
+
+    def _end_window(self, next_s: float) -> WindowDone:
+        """End the window; the next one is that in which ``next_s`` lies."""
         window = self._window.figures()
         self._bar.merge(self._window)
         self._window.reset()
         self._windows.append(window)
+        spans = math.floor((next_s - self._window_begin_s) / self._settings.window_s + 1e-6)
+        self._window_begin_s += max(1, spans) * self._settings.window_s
         return WindowDone(window=window, bar=self._bar.figures())
 
     def _finish(self, end: End) -> list[Begin | WindowDone | BarDone]:
         done: list[Begin | WindowDone | BarDone] = []
         if self._window.frames_seen:
-            done.append(self._end_window())
+            done.append(self._end_window(end.t_s))
         bar = BarDone(
             begin_s=end.begin_s,
             end_s=end.t_s,

@@ -52,6 +52,24 @@ def test_windows_come_while_the_bar_touches_and_add_up() -> None:
     assert sum(one.track_m for one in windows) == pytest.approx(bar.bar.track_m)
 
 
+def test_a_window_comes_with_its_last_frame() -> None:
+    """Not with the first of the next, which would put off every decision by a frame; a gap in it does."""
+    rng = np.random.default_rng(6)
+
+    def ends(missing: set[int]) -> list[int]:
+        meter = BarMeter(FigureSettings(), OPTICS)
+        found = []
+        for number in range(200):
+            if number not in missing:
+                events = meter.update(busy(rng), t_s=number / 200.0)
+                found += [number for event in events if isinstance(event, WindowDone)]
+        return found
+
+    assert ends(set()) == [49, 99, 149, 199]
+    assert ends({99}) == [49, 100, 149, 199]
+    assert ends(set(range(98, 102))) == [49, 102, 149, 199]
+
+
 def test_bar_so_far() -> None:
     """Each window comes with the bar's figures up to it."""
     sums = [event.bar.frames_seen for event in events_of(contact()) if isinstance(event, WindowDone)]
