@@ -108,6 +108,9 @@ class Reopening:
         except DeviceError:
             self._lose(source)
             raise
+        except Exception as error:  # a bug of a driver must not end the seeing: the device is opened anew
+            self._lose(source)
+            raise DeviceError(f"{self._info.uri}: its reader died: {type(error).__name__}: {error}") from error
         if frame is None:
             return None
         return self._follow_on(frame)
@@ -135,9 +138,11 @@ class Reopening:
             raise StalledError(f"{self._info.uri}: lost; opened anew in {wait_s - timeout_s:.2g} s")
         try:
             source = self._opener()
-        except DeviceError:
+        except Exception as error:
             self._due_s = self._clock() + self._backoff.next_s()
-            raise
+            if isinstance(error, DeviceError):
+                raise
+            raise DeviceError(f"{self._info.uri}: cannot be opened: {type(error).__name__}: {error}") from error
         self._source, self._info = source, source.info
         self._index_offset, self._fresh = self._next_index, True
         self.reopened += 1

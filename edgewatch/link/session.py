@@ -48,8 +48,9 @@ class Link:
     """The session of one station. ``start`` it, ``publish`` live messages, ``wake`` it after recording, ``stop`` it.
 
     ``outbox``: the journal; ``stamp``: time of a live message; ``on_order``: called with each order or refusal;
-    ``on_state``: called with each change of state. Both are called from the session's thread, must be short, and may
-    not stop it: what they raise is caught and counted in ``callback_errors``. Paths in ``settings`` start at
+    ``on_state``: called with each change of state; ``on_fault``: with an exception that nobody expected, after which
+    the session connects anew. They are called from the session's thread, must be short, and may not stop it: what they
+    raise is caught and counted in ``callback_errors``. Paths in ``settings`` start at
     ``folder``. Raises ``SettingsError`` at once when password, certificates or key cannot be used.
     """
 
@@ -63,6 +64,7 @@ class Link:
         version: str,
         on_order: Callable[[Order | Refusal], None] | None = None,
         on_state: Callable[[LinkState], None] | None = None,
+        on_fault: Callable[[Exception], None] | None = None,
         orders: OrderSettings | None = None,
         folder: Path = Path(),
         jitter: random.Random | None = None,
@@ -76,6 +78,7 @@ class Link:
         self._version = version
         self._on_order = on_order
         self._on_state = on_state
+        self._on_fault = on_fault
         self._orders = orders if orders is not None and orders.enabled else None
         self._folder = folder
         self._jitter = jitter or random.Random()
@@ -154,7 +157,7 @@ class Link:
         wait_s = FIRST_WAIT_S
         while not self._stopping.is_set():
             begun_s = time.monotonic()
-            state = self._one_connection()
+            state = self._supervised()
             if self._stopping.is_set():
                 break
             self._tell(state)
@@ -171,6 +174,15 @@ class Link:
         while not self._stopping.is_set() and time.monotonic() < until_s:
             self.heartbeat_s = time.monotonic()
             self._stopping.wait(min(1.0, max(0.0, until_s - time.monotonic())))
+
+    def _supervised(self) -> LinkState:
+        """One connection; a bug in here, or in the MQTT client, costs a connection and not the session."""
+        try:
+            return self._one_connection()
+        except Exception as error:  # noqa: BLE001 - whatever it is, records wait in the outbox and must go out
+            if self._on_fault is not None:
+                self._guarded(self._on_fault, error)
+            return LinkState(state="offline", reason="fault", detail=f"{type(error).__name__}: {error}"[:300])
 
     def _one_connection(self) -> LinkState:
         """Connect, serve until the connection ends, and return why it ended."""

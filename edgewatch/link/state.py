@@ -26,6 +26,7 @@ REASONS = {
     "too_large": "the broker takes no message as large as the next one",
     "settings": "password, certificate or key cannot be used",
     "journal": "the outbox cannot be read or written",
+    "fault": "the session failed and is begun anew",
 }
 """Reason -> what it means."""
 

@@ -240,6 +240,11 @@ class Monitor:
         self._sight.reset()
 
     @property
+    def causes(self) -> tuple[str, ...]:
+        """Names of the causes in force, worst first."""
+        return self._complaints.causes
+
+    @property
     def status(self) -> str:
         """One line for the service manager."""
         counts = ", ".join(f"{number} {verdict}" for verdict, number in self._counts.items())

@@ -183,6 +183,7 @@ class Station:
                 version=__version__,
                 on_order=self._order,
                 on_state=self._link_state,
+                on_fault=lambda error: self._part_fault("mqtt", error),
                 orders=settings.orders,
                 folder=folder,
             )
@@ -328,7 +329,7 @@ class Station:
         self._check_deviations()
         stamp = self._clock.now()
         unsent, thinned, filling = self._backlog
-        if self._fault_s and stamp.monotonic_s - max(self._fault_s.values()) >= STEADY_S:
+        if self._fault_s and stamp.monotonic_s - max(list(self._fault_s.values())) >= STEADY_S:
             self._fault_s.clear()
             self._complain({"part_restarted": False})
         self._carry_out(self.monitor.tick(stamp, unsent=unsent, thinned=thinned, filling=filling), stamp)

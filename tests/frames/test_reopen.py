@@ -48,7 +48,7 @@ class Camera:
 class Bench:
     """A clock that moves only when told, and a row of what each opening gives."""
 
-    def __init__(self, *row: Camera | DeviceError) -> None:
+    def __init__(self, *row: Camera | Exception) -> None:
         self.now_s = 100.0
         self.row = list(row)
         self.opened = 0
@@ -57,7 +57,7 @@ class Bench:
         """The next camera, or its absence."""
         self.opened += 1
         item = self.row.pop(0)
-        if isinstance(item, DeviceError):
+        if isinstance(item, Exception):
             raise item
         return item
 
@@ -114,6 +114,26 @@ def test_back_off_is_short_again_after_a_frame() -> None:
                 source.read(0.0)
         waits.append(next_opening_s(bench, source))
     assert waits == [0.5, 1.0, 0.5]
+
+
+def test_bug_of_a_driver_is_a_loss_that_passes() -> None:
+    """Whatever a reader or an opening raises: it is said, closed, and opened anew, also under the reading thread."""
+
+    class Buggy(Camera):
+        def read(self, timeout_s: float) -> Frame | None:
+            raise ValueError("a bug")
+
+    buggy = Buggy(1)
+    bench = Bench(buggy, RuntimeError("another"), Camera(1))
+    source = bench.reopening()
+    with pytest.raises(DeviceError, match="its reader died: ValueError: a bug"):
+        source.read(0.0)
+    assert buggy.closed == 1
+    bench.now_s += 0.5
+    with pytest.raises(DeviceError, match="cannot be opened: RuntimeError: another"):
+        source.read(0.0)
+    bench.now_s += 1.0
+    assert source.read(0.0)
 
 
 def test_clock_of_a_live_camera_is_left_alone() -> None:

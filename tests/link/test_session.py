@@ -656,6 +656,27 @@ def test_callbacks_that_raise_do_not_end_the_session(broker: Broker, make_statio
     assert station.link.state.state == "online"
 
 
+def test_a_bug_in_the_session_costs_a_connection_and_no_message(
+    broker: Broker, reader: Reader, make_station: Make, monkeypatch: pytest.MonkeyPatch
+):
+    """Something nobody expected is raised in the session's thread: told, offline for a moment, then all goes out."""
+    faults: list[Exception] = []
+    station = make_station(broker.port, on_fault=faults.append).online()
+    broken = RuntimeError("a bug")
+
+    def fails(*words: Any) -> None:
+        monkeypatch.undo()
+        raise broken
+
+    monkeypatch.setattr(Link, "_send", fails)
+    station.record(bar())
+    station.wait("offline", "fault")
+    station.emptied()
+    assert faults == [broken]
+    assert station.link.alive()
+    wait_until(lambda: set(reader.seqs()) == {1}, "the bar")
+
+
 # ---------------------------------------------------------------------- other troubles
 
 
