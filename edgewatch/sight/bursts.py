@@ -57,6 +57,10 @@ RING_RADII_PX = (0.0, 1.5, 3.0, 4.5, 6.0, 7.5, 9.0, 11.0, 13.0, 15.5, 18.5, 22.0
 RING_DIRECTIONS = 36
 """Rings and directions on which the picture about a candidate is read: at most 3.8 px apart."""
 
+_TURN = np.arange(RING_DIRECTIONS) * (2.0 * math.pi / RING_DIRECTIONS)
+_ALONG = np.outer(RING_RADII_PX, np.cos(_TURN)).ravel().astype(np.float32)
+_ACROSS = np.outer(RING_RADII_PX, np.sin(_TURN)).ravel().astype(np.float32)
+
 LEVEL_NOISE = 3.0
 """Levels enter as log(1 + level / (this many noise deviations))."""
 
@@ -173,17 +177,11 @@ def read_patches(
     if not count:
         return np.zeros((0, size), np.float32)
     away = at - np.asarray(contact_px)
-    turn = np.arctan2(away[:, 1], away[:, 0])[:, None] + np.arange(RING_DIRECTIONS) * (2.0 * math.pi / RING_DIRECTIONS)
-    radii = np.asarray(RING_RADII_PX)[None, :, None]
-    x = at[:, 0, None, None] + radii * np.cos(turn)[:, None]
-    y = at[:, 1, None, None] + radii * np.sin(turn)[:, None]
-    level = _cv.remap(
-        blurred,
-        x.reshape(count, size).astype(np.float32),
-        y.reshape(count, size).astype(np.float32),
-        cv2.INTER_LINEAR,
-        borderMode=cv2.BORDER_CONSTANT,
-    )
+    away /= np.maximum(np.hypot(away[:, 0], away[:, 1]), 1e-6)[:, None]
+    place, ahead = at.astype(np.float32), away.astype(np.float32)
+    x = place[:, :1] + ahead[:, :1] * _ALONG - ahead[:, 1:] * _ACROSS
+    y = place[:, 1:] + ahead[:, 1:] * _ALONG + ahead[:, :1] * _ACROSS
+    level = _cv.remap(blurred, x, y, cv2.INTER_LINEAR, borderMode=cv2.BORDER_CONSTANT)
     return np.asarray(np.log1p(np.maximum(level, 0.0) * np.float32(1.0 / (LEVEL_NOISE * noise))))
 
 

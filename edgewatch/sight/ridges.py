@@ -110,15 +110,19 @@ def find_ridges(excess: NDArray[np.uint8], noise_dn: float) -> Ridges:
 def _candidates(blurred: NDArray[np.float32], threshold: float) -> NDArray[np.int64]:
     """Flat indices of pixels above the threshold that are a local maximum along their row or their column.
 
-    The threshold thins the pixels first: the rest is done on what is left.
+    Compared as one long row: neighbours are then plain shifts, and what wraps at the edges falls in the margin.
     """
-    m, width = MARGIN_PX, blurred.shape[1]
-    lit = np.zeros(blurred.shape, dtype=np.bool_)
-    np.greater(blurred[m:-m, m:-m], threshold, out=lit[m:-m, m:-m])
-    index = np.flatnonzero(lit)
-    flat = blurred.ravel()
-    centre = flat.take(index)
-    along_row = (centre >= flat.take(index - 1)) & (centre > flat.take(index + 1))
-    along_column = (centre >= flat.take(index - width)) & (centre > flat.take(index + width))
-    kept: NDArray[np.int64] = index[along_row | along_column]
-    return kept
+    width, flat = blurred.shape[1], blurred.ravel()
+    centre = flat[width:-width]
+    found = np.zeros(flat.size, np.bool_)
+    top = found[width:-width]
+    np.greater_equal(centre, flat[width - 1 : -width - 1], out=top)
+    top &= centre > flat[width + 1 : flat.size - width + 1]
+    along_column = centre >= flat[: -2 * width]
+    along_column &= centre > flat[2 * width :]
+    top |= along_column
+    top &= centre > threshold
+    whole = found.reshape(blurred.shape)
+    whole[:MARGIN_PX] = whole[-MARGIN_PX:] = False
+    whole[:, :MARGIN_PX] = whole[:, -MARGIN_PX:] = False
+    return np.flatnonzero(found)

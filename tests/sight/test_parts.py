@@ -6,7 +6,11 @@ import math
 
 import numpy as np
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 from numpy.typing import NDArray
+from scipy.sparse import coo_matrix
+from scipy.sparse.csgraph import connected_components
 
 from edgewatch.sight import burst_weights
 from edgewatch.sight.background import LEARN_AT, LEAST_NOISE_DN, Background
@@ -16,7 +20,7 @@ from edgewatch.sight.lengths import LEAST_KEPT, Lengths
 from edgewatch.sight.optics import Optics
 from edgewatch.sight.reading import read_levels
 from edgewatch.sight.ridges import NOISE_GAIN, Ridges, find_ridges
-from edgewatch.sight.segments import Segments, fit_segments, link_ridges
+from edgewatch.sight.segments import Segments, fit_segments, label_components, link_ridges
 from tests.sight.test_sight import SEED, draw, make_optics, star
 
 
@@ -258,3 +262,15 @@ def test_optics_of_any_size_are_looked_at_alike() -> None:
         lengths.learn(begin * scale, end * scale)
         assert lengths.typical_px(np.array([[200.0 * scale, 0.0]]))[0] == pytest.approx(50.0 * scale, rel=0.08)
     assert isinstance(make_optics(), Optics)
+
+
+@given(st.integers(0, 40), st.lists(st.tuples(st.integers(0, 39), st.integers(0, 39)), max_size=80))
+def test_labels_are_those_of_a_general_graph(count: int, pairs: list[tuple[int, int]]) -> None:
+    """Points share a label exactly when pairs join them, as scipy's connected components say."""
+    kept = sorted({(min(a, b), max(a, b)) for a, b in pairs if a != b and max(a, b) < count})
+    i, j = (np.asarray([pair[k] for pair in kept], np.int64) for k in (0, 1))
+    label = label_components(i, j, count)
+    graph = coo_matrix((np.ones(len(kept)), (i, j)), shape=(count, count))
+    number, other = connected_components(graph, directed=False)
+    assert len(set(label.tolist())) == number
+    assert len(set(zip(label.tolist(), other.tolist(), strict=True))) == number
