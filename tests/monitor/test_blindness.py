@@ -2,7 +2,10 @@
 
 import math
 
-from edgewatch.monitor.blindness import Blindness
+from hypothesis import given
+from hypothesis import strategies as st
+
+from edgewatch.monitor.blindness import LEAST_PICTURES, SPAN_S, Blindness, _Recent
 from edgewatch.sight.detections import Light, PictureFlag
 
 
@@ -58,3 +61,19 @@ def test_a_clock_that_steps_back_is_survived() -> None:
     blindness = Blindness()
     feed(blindness, [PictureFlag.SATURATED] * 100, begin_s=1000.0)
     assert feed(blindness, [PictureFlag.NONE] * 100) == frozenset()
+
+
+@given(st.lists(st.tuples(st.booleans(), st.floats(-2.0, 0.4)), max_size=120))
+def test_every_prefix_equals_the_share_counted_anew(pictures: list[tuple[bool, float]]) -> None:
+    """Whatever the flags and steps of time, also back ones: the share is that of the pictures still in the span."""
+    recent, kept, t_s = _Recent(), [], 0.0
+    for flagged, step_s in pictures:
+        t_s += step_s
+        kept.append((t_s, flagged))
+        while kept and not (t_s - SPAN_S < kept[0][0] <= t_s):
+            del kept[0]
+        share = recent.share(t_s, flagged)
+        if len(kept) < LEAST_PICTURES:
+            assert share is None
+        else:
+            assert share == sum(one for _, one in kept) / len(kept)
