@@ -44,6 +44,8 @@ PRUNE_RUN = 256
 """Records that give way in one step."""
 RESERVE = 10_000
 """How far ahead ``FILE.seq`` is written; so many numbers at most are skipped when a damaged file is replaced."""
+MOST_BOOTS = 1000
+"""Each time so many more starts have been recorded, those of which no record is left are forgotten."""
 SPARE_PAGES = 64
 """Pruning begins this many pages before the size limit: the write-ahead log and the indexes need room too."""
 
@@ -424,7 +426,10 @@ def _boot(db: sqlite3.Connection, name: str) -> int:
     row = db.execute("SELECT id FROM boot WHERE name = ?", (name,)).fetchone()
     if row is not None:
         return int(row[0])
-    return int(db.execute("INSERT INTO boot(name) VALUES (?)", (name,)).lastrowid or 0)
+    number = int(db.execute("INSERT INTO boot(name) VALUES (?)", (name,)).lastrowid or 0)
+    if db.execute("SELECT count(*) FROM boot").fetchone()[0] > MOST_BOOTS and number % MOST_BOOTS == 0:
+        db.execute("DELETE FROM boot WHERE id != ? AND id NOT IN (SELECT DISTINCT boot FROM record)", (number,))
+    return number
 
 
 def _keep(db: sqlite3.Connection, state: Mapping[str, Any]) -> None:
