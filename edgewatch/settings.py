@@ -28,6 +28,9 @@ MIN_SIDE_PX = 16
 _SECRET = re.compile(r"pass|secret|token|key|pin", re.IGNORECASE)
 """A key that is not known and looks like these may hold a secret: its value is not repeated in an error."""
 
+_URL_USER = re.compile(r"//[^/\s]*@")
+"""User and password of a URL (RFC 3986, section 3.2.1)."""
+
 Check = Callable[[Any], Any]
 S = TypeVar("S")
 
@@ -56,8 +59,10 @@ def _declare(default: Any, check: Check, says: str) -> Any:
 
 
 def _show(value: Any) -> str:
-    """Return the value as an error repeats it."""
-    return _shorten.repr(value)
+    """Return the value as an error repeats it; user and password of a URL are left out."""
+    if isinstance(value, str):
+        return _shorten.repr(_URL_USER.sub("//", value[:4096]))  # before it is cut: the @ that tells could be lost
+    return _URL_USER.sub("//", _shorten.repr(value))
 
 
 def _name(key: object) -> str:
