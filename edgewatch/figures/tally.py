@@ -54,6 +54,10 @@ class _Sums:
     track_mm: float = 0.0
     exposure_mm: float = 0.0
     cut_streaks: int = 0
+    log_peak: float = 0.0  # of the height in DN, by streaks
+    peak_streaks: int = 0
+    log_width: float = 0.0  # of the width in px, by streaks
+    width_streaks: int = 0
     refused: int = 0
 
 
@@ -122,9 +126,20 @@ class Tally:
             runs = detections.streaks[np.isfinite(detections.streaks).all(axis=1)]
             length = np.hypot(runs[:, 2] - runs[:, 0], runs[:, 3] - runs[:, 1])
             sums.exposure_mm += float(length.sum()) * self.optics.mm_per_px
+        self._note_light(detections)
         self._begin_s = t_s if math.isnan(self._begin_s) else min(self._begin_s, t_s)
         end = t_s + self.optics.period_s
         self._end_s = end if math.isnan(self._end_s) else max(self._end_s, end)
+
+    def _note_light(self, detections: Detections) -> None:
+        sums, count = self._sums, len(detections.streaks)
+        peak, width = detections.light.streak_peak_dn, detections.light.streak_width_px
+        if 0.0 < peak < math.inf:
+            sums.log_peak += count * math.log(peak)
+            sums.peak_streaks += count
+        if 0.0 < width < math.inf:
+            sums.log_width += count * math.log(width)
+            sums.width_streaks += count
 
     def merge(self, other: Tally) -> None:
         """Add another stretch of time, taken with the same optics."""
@@ -255,6 +270,8 @@ class Tally:
             streaks_per_frame=sums.streaks / sums.frames_seen if sums.frames_seen else math.nan,
             spark_speed_m_s=self._speed(),
             bursts_listed=sums.bursts_listed,
+            streak_peak_dn=math.exp(sums.log_peak / sums.peak_streaks) if sums.peak_streaks else math.nan,
+            streak_width_px=math.exp(sums.log_width / sums.width_streaks) if sums.width_streaks else math.nan,
         )
 
     def _reach(self) -> tuple[float, float, float]:

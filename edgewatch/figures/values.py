@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 
@@ -17,6 +18,8 @@ class Figures:
     track), ``reach_low_mm`` / ``reach_high_mm`` its 95 % limits; ``cut_share``: share of the track that leaves the
     picture, ``reach_truncated``: more than 2 % does. ``spark_speed_m_s``: speed near the wheel (NaN if unknown).
     ``bursts_listed``: all bursts listed, the less sure ones too, which would lift the rate where there are few.
+    ``streak_peak_dn``, ``streak_width_px``: typical height above ground (DN) and full width at half maximum (px) of
+    streaks, geometric means over pictures by their number of streaks (NaN without).
     ``frames_seen`` judged and ``frames_skipped`` not seen although the camera delivered them.
     """
 
@@ -39,3 +42,5 @@ class Figures:
     streaks_per_frame: float
     spark_speed_m_s: float
     bursts_listed: int = 0
+    streak_peak_dn: float = math.nan
+    streak_width_px: float = math.nan

@@ -32,6 +32,8 @@ class ReferenceBar:
     expected, with ``rate_freedom`` degrees of freedom; ``reach_misfit`` (mm^2 m) the sum over windows of track times
     squared deviation of reach from the bar's, with ``reach_freedom``. ``reach_mm`` comes from the settled windows,
     which hold ``reach_track_m`` of track and last ``window_s``; it is NaN when it was not measured or cut off.
+    ``streak_peak_dn``, ``streak_width_px``: height above ground and width of the bar's streaks;
+    ``None``: not known.
     """
 
     number: int
@@ -52,6 +54,8 @@ class ReferenceBar:
     reach_misfit: float = 0.0
     reach_freedom: int = 0
     window_s: float = 0.25
+    streak_peak_dn: float | None = None
+    streak_width_px: float | None = None
     left_out: bool = False
 
 
@@ -63,7 +67,9 @@ class Band:
     logarithm from bar to bar with the sampling noise taken out. ``rate_dispersion``: variance over mean of burst
     counts within a bar (1: Poisson). ``reach_center_mm``, ``reach_scatter``: the same for reach.
     ``reach_noise_mm2_m``: variance of reach times track, for sums of many windows. Reach fields are ``None`` when the
-    streams taught were cut off by the picture's edge. Optics, exposure and frame rate are those of the teaching; NaN is
+    streams taught were cut off by the picture's edge. ``streak_peak_dn``, ``streak_width_px``: typical height (DN) and
+    width (px) of streaks, with the standard deviation of the logarithm from bar to bar; ``None``: not known, so the
+    lens is not judged by this band. Optics, exposure and frame rate are those of the teaching; NaN is
     not known. ``taught``: date (RFC 3339). ``bars`` include those left out.
     """
 
@@ -83,6 +89,10 @@ class Band:
     reach_center_mm: float | None = None
     reach_scatter: float | None = None
     reach_noise_mm2_m: float | None = None
+    streak_peak_dn: float | None = None
+    streak_peak_scatter: float | None = None
+    streak_width_px: float | None = None
+    streak_width_scatter: float | None = None
     mm_per_px: float = math.nan
     contact_px: tuple[float, float] = (math.nan, math.nan)
     direction_deg: float = math.nan
@@ -168,15 +178,23 @@ def _problems(band: Band) -> list[tuple[str, Any, str]]:
             found.append((key, value, "allowed is a number between 0 and 1"))
     if not (_real(band.rate_dispersion) and 1.0 <= band.rate_dispersion <= 1e4):
         found.append(("rate_dispersion", band.rate_dispersion, "allowed is a number from 1 to 10000"))
-    for key in ("rate_center_per_m", "reach_center_mm", "mm_per_px", "exposure_ms", "fps"):
+    for key in (
+        "rate_center_per_m",
+        "reach_center_mm",
+        "streak_peak_dn",
+        "streak_width_px",
+        "mm_per_px",
+        "exposure_ms",
+        "fps",
+    ):
         value = getattr(band, key)
-        if value is None and key.startswith("reach"):
+        if value is None and key.startswith(("reach", "streak")):
             continue
         if not (_real(value) and (math.isnan(value) or 0.0 < value < math.inf)):
             found.append((key, value, f"allowed is {_POSITIVE}"))
-    for key in ("rate_scatter", "reach_scatter", "reach_noise_mm2_m"):
+    for key in ("rate_scatter", "reach_scatter", "reach_noise_mm2_m", "streak_peak_scatter", "streak_width_scatter"):
         value = getattr(band, key)
-        if value is None and key.startswith("reach"):
+        if value is None and key.startswith(("reach", "streak")):
             continue
         if not (_real(value) and (math.isnan(value) or 0.0 <= value < math.inf)):
             found.append((key, value, "allowed is a number of at least 0"))
@@ -197,6 +215,12 @@ _SECTIONS: dict[str, dict[str, str]] = {
         "center_mm": "reach_center_mm",
         "scatter": "reach_scatter",
         "noise_mm2_m": "reach_noise_mm2_m",
+    },
+    "streaks": {
+        "peak_dn": "streak_peak_dn",
+        "peak_scatter": "streak_peak_scatter",
+        "width_px": "streak_width_px",
+        "width_scatter": "streak_width_scatter",
     },
     "teaching": {
         "content": "content",
@@ -365,5 +389,6 @@ def band_toml(band: Band) -> str:
             lines += ["", f"[{section}]", *(f"{key} = {_toml(value)}" for key, value in values)]
     for bar in band.bars:
         lines += ["", "[[bars]]"]
-        lines += [f"{part.name} = {_toml(getattr(bar, part.name))}" for part in dataclasses.fields(ReferenceBar)]
+        known = [(part.name, getattr(bar, part.name)) for part in dataclasses.fields(ReferenceBar)]
+        lines += [f"{name} = {_toml(value)}" for name, value in known if value is not None]
     return "\n".join(lines) + "\n"

@@ -48,8 +48,8 @@ CAUSES = MappingProxyType(
         "no_light": Cause("No light reaches the camera: lens cap, dead sensor, no noise.", FAILURE, True),
         "saturated": Cause("Large parts of the picture are at full scale.", OUT_OF_SPECIFICATION, True),
         "out_of_focus": Cause("Streaks are much wider than they should be: out of focus.", OUT_OF_SPECIFICATION, True),
-        "soiled": Cause("Streaks are much dimmer than when the band was taught.", OUT_OF_SPECIFICATION, True),
-        "vibration": Cause("The picture shakes against its background.", OUT_OF_SPECIFICATION, True),
+        "soiled": Cause("Streaks are much dimmer or wider than in teaching.", OUT_OF_SPECIFICATION, True),
+        "vibration": Cause("The camera shakes: streaks start elsewhere in every picture.", OUT_OF_SPECIFICATION, True),
         "crowded": Cause("Streaks overlap so much that counts are not trusted.", OUT_OF_SPECIFICATION, True),
         "stray_light": Cause("The background is too bright or too uneven.", OUT_OF_SPECIFICATION, True),
         # the source: what does not come

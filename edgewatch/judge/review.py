@@ -109,6 +109,8 @@ def _joined(group: Sequence[Figures]) -> Figures:
         streaks_per_frame=streaks / frames if frames else math.nan,
         spark_speed_m_s=by_track("spark_speed_m_s"),
         bursts_listed=sum(one.bursts_listed for one in group),
+        streak_peak_dn=by_track("streak_peak_dn"),
+        streak_width_px=by_track("streak_width_px"),
     )
 
 

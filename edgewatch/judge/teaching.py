@@ -78,6 +78,8 @@ def reference_bar(number: int, clip: str, bar: Figures, windows: Sequence[Figure
         reach_misfit=reach_misfit,
         reach_freedom=reach_freedom,
         window_s=sum(one.end_s - one.begin_s for one in steady) / len(steady) if steady else 0.25,
+        streak_peak_dn=bar.streak_peak_dn if math.isfinite(bar.streak_peak_dn) else None,
+        streak_width_px=bar.streak_width_px if math.isfinite(bar.streak_width_px) else None,
     )
 
 
@@ -146,6 +148,8 @@ def teach(
     dispersion = pooled_dispersion(used)
     rate = _rate_interval(used, content, confidence)
     reach = _reach_interval(used, content, confidence)
+    peak, peak_scatter = _typical([bar.streak_peak_dn for bar in used])
+    width, width_scatter = _typical([bar.streak_width_px for bar in used])
     return Band(
         grade=grade,
         burst_rate_low_per_m=rate.low,
@@ -158,6 +162,10 @@ def teach(
         reach_center_mm=reach.center if reach else None,
         reach_scatter=reach.scatter if reach else None,
         reach_noise_mm2_m=_long_run_noise(used) if reach else None,
+        streak_peak_dn=peak,
+        streak_peak_scatter=peak_scatter,
+        streak_width_px=width,
+        streak_width_scatter=width_scatter,
         content=content,
         confidence=confidence,
         bars_used=len(used),
@@ -222,6 +230,14 @@ def _typical_speed(bars: Sequence[ReferenceBar]) -> float:
     """Median spark speed near the wheel (m/s), NaN if not known: the speed at which the band's reach holds."""
     speeds = [bar.spark_speed_m_s for bar in bars if LOW_M_S <= bar.spark_speed_m_s <= HIGH_M_S]
     return float(np.median(speeds)) if speeds else math.nan
+
+
+def _typical(values: Sequence[float | None]) -> tuple[float | None, float | None]:
+    """Geometric mean and standard deviation of the logarithm of the values that are known; ``None`` with too few."""
+    known = [math.log(value) for value in values if value is not None and 0.0 < value < math.inf]
+    if len(known) < LEAST_BARS:
+        return None, None
+    return math.exp(float(np.mean(known))), float(np.std(known, ddof=1))
 
 
 def log_reaches(

@@ -12,6 +12,7 @@ from collections.abc import Mapping, Sequence
 
 from edgewatch.figures.contact import Begin
 from edgewatch.figures.meter import BarDone, BarMeter, WindowDone
+from edgewatch.figures.values import Figures
 from edgewatch.judge.bands import Band
 from edgewatch.judge.causes import CAUSES, FAILURE
 from edgewatch.judge.drift import LEAST_MASTERS, DriftWatch
@@ -25,8 +26,10 @@ from edgewatch.monitor.blindness import FLAG_CAUSES, Blindness
 from edgewatch.monitor.condition import Complaints
 from edgewatch.monitor.effects import Effect, Publish, Record, Remember, SaveBand, SendView, SetRelay, Told
 from edgewatch.monitor.feed import Feed
+from edgewatch.monitor.lens import LensWatch, lens_limits
 from edgewatch.monitor.lessons import Lesson
 from edgewatch.monitor.memory import Expectation, Memory, keep_alerts, keep_expectation
+from edgewatch.monitor.shaking import ShakeWatch
 from edgewatch.monitor.stop import StopEvent, StopState, after
 from edgewatch.monitor.wheel import WheelWatch
 from edgewatch.settings import Settings
@@ -69,6 +72,8 @@ class Monitor:
         self._sight = Sight(self._optics)
         self._meter = BarMeter(settings.figures, self._optics)
         self._blindness = Blindness()
+        self._lens = LensWatch()
+        self._shake = ShakeWatch(self._optics.fps)
         self._complaints = Complaints()
         self._feed = Feed(
             width_px=self._optics.width_px,
@@ -134,6 +139,8 @@ class Monitor:
             return effects
         causes = self._blindness.update(detections.light, streaks, frame.t_s)
         effects += self.complain({cause: cause in causes for cause in FLAG_CAUSES.values()}, stamp)
+        shaking = self._shake.update(detections, frame.t_s)
+        effects += self.complain({"vibration": shaking}, stamp, detail=f"{self._shake.shake_px:.1f} px")
         for event in self._meter.update(detections, t_s=frame.t_s, skipped=frame.skipped):
             effects += self._on_event(event, stamp)
         effects += self._look_at_line(stamp)
@@ -253,6 +260,7 @@ class Monitor:
     def replace_bands(self, bands: Mapping[str, Band]) -> None:
         """Use these bands from the next contact on."""
         self._bands = dict(bands)
+        self._lens.reset()
 
     # ------------------------------------------------------------------ contacts
 
@@ -277,10 +285,12 @@ class Monitor:
         return self._move_stop(StopEvent.CONTACT, "")
 
     def _on_window(self, bar: BarAtWheel, event: WindowDone, stamp: Stamp) -> list[Effect]:
+        lens = self._look_at_lens(event.window, stamp)
         bar.note(self._complaints.blinding)
         self._wheel.update(event.window)
         self._rolling = messages.figures(event.bar)
         effects: list[Effect] = [
+            *lens,
             Record(kind="window", payload=messages.window(values=event.window, bar=bar.number)),
             Remember(values={"bar": bar.number}),
         ]
@@ -289,6 +299,12 @@ class Monitor:
             if standing.nonconforming and not bar.condemned:
                 effects += self._condemn(bar, f"after {standing.decided_after_s:.2f} s of contact")
         return effects + self._summary(stamp)
+
+    def _look_at_lens(self, seen: Figures, stamp: Stamp, *, whole: bool = False) -> list[Effect]:
+        """Compare a window's streaks, or those of a ``whole`` bar, with what was taught."""
+        limits = lens_limits(self._bands.values(), self._optics)
+        soiled = self._lens.see_bar(seen, limits) if whole else self._lens.see_window(seen, limits)
+        return self.complain({"soiled": soiled}, stamp, detail=self._lens.detail)
 
     def _condemn(self, bar: BarAtWheel, when: str) -> list[Effect]:
         """The bar at the wheel is nonconforming: say so now and stop the line."""
@@ -303,8 +319,10 @@ class Monitor:
         self._bar = None
         if self._lesson is not None:
             bar.note(["teaching"])
+        effects = self._look_at_lens(event.bar, stamp, whole=True)
+        if self._lens.soiled:
+            bar.note(["soiled"])
         judgement = bar.close(event)
-        effects: list[Effect] = []
         if judgement.verdict == NONCONFORMING and not bar.condemned:
             effects += self._condemn(bar, "when the contact ended")
         self._counts[judgement.verdict] += 1
@@ -380,7 +398,8 @@ class Monitor:
                 self._bands[grade] = taught.band
                 self._watch = self._drift_watch()
                 effects.append(SaveBand(band=taught.band))
-                effects += self.complain({"no_band": self._lacks_band()}, stamp)
+                self._lens.reset()
+                effects += self.complain({"no_band": self._lacks_band(), "soiled": False}, stamp)
         effects.append(self._answered(lesson.order, accepted=accepted, reason=sentence))
         return effects + self.complain({"teaching": False}, stamp)
 

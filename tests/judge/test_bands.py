@@ -34,6 +34,7 @@ BAR = ReferenceBar(
     reach_track_m=150.0,
     cut_share=0.001,
     spark_speed_m_s=24.0,
+    streak_peak_dn=75.5,
 )
 BAND = Band(
     grade="C45",
@@ -42,6 +43,9 @@ BAND = Band(
     reach_low_mm=250.0,
     reach_high_mm=380.0,
     reach_noise_mm2_m=4000.0,
+    streak_peak_dn=75.5,
+    streak_peak_scatter=0.05,
+    streak_width_px=2.25,
     bars_used=1,
     bursts=120,
     track_m=250.0,

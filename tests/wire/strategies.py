@@ -43,6 +43,8 @@ figures = st.builds(
     reach_truncated=st.booleans(),
     streaks_per_frame=amounts,
     spark_speed_m_s=amounts,
+    streak_peak_dn=amounts,
+    streak_width_px=amounts,
 )
 bands = st.builds(
     messages.band,
