@@ -171,6 +171,7 @@ class Station:
         )
         self._recorder = Recorder(self._journal, on_state=self._journal_state, on_written=self._written)
         self._add("journal", self._recorder.work)
+        self._add("backlog", self._count_backlog)
         store = None
         if settings.evidence.folder:
             store = EvidenceStore(folder / settings.evidence.folder, most_mb=settings.evidence.most_mb)
@@ -449,29 +450,29 @@ class Station:
             self._on_notice(f"{what}; it goes on")
         self._fault_s[name] = now_s
 
-    # ------------------------------------------------------------------ the end
+    def _count_backlog(self, stop: threading.Event) -> None:
+        """Unsent and thinned messages, and whether they fill the journal; the work of a supervised thread.
 
-    @property
-    def _backlog(self) -> tuple[int, int, str]:
-        """Unsent and thinned messages, and whether they fill the journal, from the last look of a few seconds ago."""
-        now_s = time.monotonic()
-        if now_s - self._backlog_s >= BACKLOG_S:
-            self._backlog_s = now_s
+        Not of the judging: the journal may be busy with a slow card, or be locked by another process for a second.
+        """
+        while not stop.is_set():
             try:
                 status = self._journal.status()
                 filling = self._filling.update(
-                    now_s,
+                    time.monotonic(),
                     unsent=status.unsent,
                     used_bytes=status.unsent_room_bytes,
                     room_bytes=status.room_bytes,
                 )
-                self._backlog_seen = (status.unsent, status.windows_thinned, filling)
+                self._backlog = (status.unsent, status.windows_thinned, filling)
             except DeviceError:
                 pass  # the recorder tells of it
-        return self._backlog_seen
+            stop.wait(BACKLOG_S)
 
-    _backlog_s = float("-inf")
-    _backlog_seen = (0, 0, "")
+    _backlog = (0, 0, "")
+
+    # ------------------------------------------------------------------ the end
+
     _unsent_at_end = 0
 
     def _close(self) -> None:
