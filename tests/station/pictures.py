@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 import contextlib
+import os
 import threading
 import time
 from collections.abc import Iterator, Sequence
+from io import RawIOBase
 from pathlib import Path
 
 import numpy as np
@@ -15,10 +17,12 @@ from tests.station.mill import SIZE
 
 class Grabber:
     """Writes ``pictures`` (raw bytes) over and over, one every ``1 / fps`` s by the clock: it never waits for the
-    station longer than the pipe makes it.
+    station longer than the pipe makes it. When the station lets go of the FIFO it is opened anew. While ``unplugged``
+    is set there is no writer.
     """
 
     def __init__(self, fifo: Path, pictures: Sequence[bytes], *, fps: float) -> None:
+        self.unplugged = threading.Event()
         self.written_s: list[float] = []
         """When the last byte of each frame was in the pipe (monotonic, s)."""
         self._fifo, self._pictures, self._fps = fifo, pictures, fps
@@ -28,17 +32,25 @@ class Grabber:
         self._thread.start()
 
     def _run(self) -> None:
-        with contextlib.suppress(BrokenPipeError), self._fifo.open("wb", buffering=0) as pipe:
-            due_s = time.monotonic()
-            while not self._stop.is_set():
-                rest = memoryview(self._pictures[len(self.written_s) % len(self._pictures)])
-                while rest:
-                    rest = rest[pipe.write(rest) :]
-                with self._change:
-                    self.written_s.append(time.monotonic())
-                    self._change.notify_all()
-                due_s += 1.0 / self._fps
-                self._stop.wait(max(0.0, due_s - time.monotonic()))
+        while not self._stop.is_set():
+            with contextlib.suppress(OSError):  # nobody reads yet, or no longer
+                fd = os.open(self._fifo, os.O_WRONLY | os.O_NONBLOCK)
+                os.set_blocking(fd, True)
+                with os.fdopen(fd, "wb", buffering=0) as pipe:
+                    self._write(pipe)
+            self._stop.wait(0.01)  # nothing tells that there is a reader
+
+    def _write(self, pipe: RawIOBase) -> None:
+        due_s = time.monotonic()
+        while not self._stop.is_set() and not self.unplugged.is_set():
+            rest = memoryview(self._pictures[len(self.written_s) % len(self._pictures)])
+            while rest:
+                rest = rest[pipe.write(rest) or 0 :]
+            with self._change:
+                self.written_s.append(time.monotonic())
+                self._change.notify_all()
+            due_s += 1.0 / self._fps
+            self._stop.wait(max(0.0, due_s - time.monotonic()))
 
     def await_frames(self, more: int) -> None:
         """Wait until ``more`` frames have been written from now on, or the grabber has ended."""
