@@ -241,7 +241,7 @@ def test_runtime_dependencies_are_exactly_six() -> None:
     project = tomllib.loads((TOP / "pyproject.toml").read_text(encoding="utf-8"))["project"]
     named = {re.split(r"[^A-Za-z0-9-]", text, maxsplit=1)[0] for text in project["dependencies"]}
     assert named == set(DISTRIBUTIONS)
-    assert set(project["optional-dependencies"]) == {"test", "desk"}
+    assert set(project["optional-dependencies"]) == {"test", "desk", "audit"}
 
 
 def test_the_package_imports_nothing_beyond_its_dependencies() -> None:
