@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 from collections.abc import Callable
 from pathlib import Path
@@ -57,4 +58,6 @@ def save_band(path: Path, band: Band) -> None:
             os.fsync(file.fileno())
         spare.replace(path)
     except OSError as error:
+        with contextlib.suppress(OSError):
+            spare.unlink(missing_ok=True)
         raise DeviceError(f"{path}: cannot be written: {error.strerror or error}") from error
