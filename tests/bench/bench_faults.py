@@ -1,7 +1,9 @@
-"""Fault campaign, long form: kills, outages up to a simulated week, a disk that is full at random moments.
+"""Fault campaign, long form: kills, outages up to a simulated week, a disk that is full at random moments, and every
+fault of the ports and threads again and again in one running station.
 
-``python -m tests.bench.bench_faults [--kills 200] [--seed 1] [--days 7]`` prints a table for each part; the exit status
-is 1 when anything was lost, altered, sent out of order or numbered twice. The short form is in the tests.
+``python -m tests.bench.bench_faults [--kills 200] [--seed 1] [--days 7] [--rounds 10]`` prints a table for each part;
+the exit status is 1 when anything was lost, altered, sent out of order or numbered twice, or did not recover. The short
+form is in the tests.
 """
 
 from __future__ import annotations
@@ -28,6 +30,7 @@ from edgewatch.wire.topics import Topics
 from tests.brokers import Broker, Reader, Seen, running, wait_until
 from tests.link.kills import campaign
 from tests.record.entries import alert, bar, condition, stamp, window
+from tests.station.faults import FAULTS, Rig, Row
 
 WINDOWS_A_SECOND = 4
 BAR_EVERY_S = 2.0
@@ -194,13 +197,47 @@ def full_disk(rounds: int, seed: int) -> bool:
     return good
 
 
+def ports(rounds: int, seed: int) -> bool:
+    """Every fault in each round, in another order each time; the damaged journal ends a round and a station."""
+    rng = random.Random(seed)
+    print(f"\nFaults of ports and threads in a running station, {rounds} rounds in random order; a bar every 0.8 s")
+    print(f"  {'fault':26} {'times':>5} {'bars':>5} {'relay':>6} {'recovered':>10} {'after s':>8} {'lost':>5}  said")
+    found: dict[str, list[Row]] = {name: [] for name in FAULTS}
+    lost = judged = 0
+    for number in range(rounds):
+        with tempfile.TemporaryDirectory() as folder:
+            rig = Rig(Path(folder), seed=seed + number)
+            order = list(FAULTS)[:-1]
+            rng.shuffle(order)
+            for name in (*order, list(FAULTS)[-1]):
+                found[name].append(rig.put_in(name))
+                if rig.troubles:
+                    print(f"  {name}: {rig.troubles.pop()}", flush=True)
+            rig.close()
+            lost += len(rig.missing())
+            judged += len(rig.told)
+    for name, rows in found.items():
+        always = set.intersection(*(set(row.said) for row in rows))
+        now_and_then = set.union(*(set(row.said) for row in rows)) - always
+        said = ", ".join(sorted(always)) + (f" (at times {', '.join(sorted(now_and_then))})" if now_and_then else "")
+        print(
+            f"  {name:26} {len(rows):5d} {sum(row.bars for row in rows):5d} {sum(row.switches for row in rows):6d}"
+            f" {sum(row.recovered for row in rows):7d}/{len(rows):<2d} {max(row.seconds for row in rows):8.1f}"
+            f" {max(row.missing for row in rows):5d}  {said or '-'}"
+        )
+    good = lost == 0 and all(row.recovered and not row.missing for rows in found.values() for row in rows)
+    print(f"  {judged} bars judged, {lost} of them never reached the reader")
+    return good
+
+
 def main() -> int:
     """Run all parts."""
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--kills", type=int, default=200)
     parser.add_argument("--seed", type=int, default=1)
     parser.add_argument("--days", type=float, default=7.0, help="the longest simulated outage")
-    parser.add_argument("--part", choices=["kills", "outages", "disk"], action="append")
+    parser.add_argument("--rounds", type=int, default=10)
+    parser.add_argument("--part", choices=["kills", "outages", "disk", "ports"], action="append")
     args = parser.parse_args()
     print(f"{platform.machine()}, {platform.system()} {platform.release()}, Python {platform.python_version()},")
     print(f"SQLite {sqlite3.sqlite_version}, paho-mqtt {version('paho-mqtt')}, seed {args.seed}")
@@ -209,6 +246,7 @@ def main() -> int:
         "kills": lambda: kills(args.kills, args.seed),
         "outages": lambda: outages(spans),
         "disk": lambda: full_disk(3000, args.seed),
+        "ports": lambda: ports(args.rounds, args.seed),
     }
     good = [job() for name, job in parts.items() if not args.part or name in args.part]
     print(json.dumps({"good": all(good)}))

@@ -3,7 +3,9 @@
 ``python -m tests.bench.bench_soak [--hours H] [--fps F]``: the real ``edgewatch watch`` reads raw pictures from a FIFO
 as fast as it judges them, with a real Mosquitto and a reader beside it, a bar every two seconds. Memory, open files,
 threads and the journal's size are read from outside, every simulated quarter of an hour; the first hour is the warm-up
-that the others are held against. Exit status 1 when anything has grown by more than 2 %, or a message is missing.
+that the others are held against. The longest time for which the station took no picture is the longest standstill of
+its judging: a camera's pictures would have waited as long (``bench_latency`` has it at a camera's own pace). Exit
+status 1 when anything has grown by more than 2 %, or a message is missing.
 """
 
 from __future__ import annotations
@@ -71,13 +73,14 @@ def read(pid: int, folder: Path, *, hours: float, speed: float) -> Reading:
     )
 
 
-def soak(folder: Path, hours: float, fps: float) -> tuple[list[Reading], int, list[int]]:
-    """Run it; readings, messages received, and the sequence numbers that are missing."""
+def soak(folder: Path, hours: float, fps: float) -> tuple[list[Reading], int, list[int], float]:
+    """Run it; readings, messages received, the sequence numbers that are missing, the longest standstill (s)."""
     fifo = folder / "grabber"
     os.mkfifo(fifo)
     broker = Broker(folder / "broker")
     pictures = make_pictures(np.random.default_rng(6), fps)
     readings: list[Reading] = []
+    longest_s = 0.0
     with running(broker):
         reader = Reader(broker).ready(broker)
         (folder / "station.toml").write_text(
@@ -100,7 +103,9 @@ def soak(folder: Path, hours: float, fps: float) -> tuple[list[Reading], int, li
             begun = time.monotonic()
             for minute in range(round(hours * 60)):
                 for picture in pictures:
+                    write_s = time.monotonic()
                     pipe.write(picture)
+                    longest_s = max(longest_s, time.monotonic() - write_s) if minute else 0.0
                 if (minute + 1) % 15 == 0:
                     simulated_h = (minute + 1) / 60
                     speed = simulated_h * 3600 / (time.monotonic() - begun)
@@ -112,7 +117,7 @@ def soak(folder: Path, hours: float, fps: float) -> tuple[list[Reading], int, li
         reader.stop()
     seqs = sorted(set(reader.seqs()))
     missing = sorted(set(range(seqs[0], seqs[-1] + 1)) - set(seqs))
-    return readings, len(seqs), missing
+    return readings, len(seqs), missing, longest_s
 
 
 def main() -> int:
@@ -123,7 +128,7 @@ def main() -> int:
     args = parser.parse_args()
     print(f"{platform.machine()}, Python {platform.python_version()}, OpenCV {cv2.__version__}, numpy {np.__version__}")
     with tempfile.TemporaryDirectory() as name:
-        readings, received, missing = soak(Path(name), args.hours, args.fps)
+        readings, received, missing, longest_s = soak(Path(name), args.hours, args.fps)
     print(f"{'hours':>6} {'resident MB':>12} {'files':>6} {'threads':>8} {'journal MB':>11} {'times real time':>16}")
     for one in readings[:: max(1, len(readings) // 12)]:
         print(
@@ -140,6 +145,7 @@ def main() -> int:
     }
     for what, share in growth.items():
         print(f"{what}: {100 * share:+.1f} % from hour {early.hours:g} to hour {late.hours:g}")
+    print(f"longest standstill of the judging: {longest_s:.2f} s")
     print(f"{received} journalled messages received, {len(missing)} missing")
     return 1 if missing or max(growth.values()) > LARGEST_GROWTH else 0
 

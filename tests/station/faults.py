@@ -108,6 +108,9 @@ class Rig:
         self._pool = ThreadPoolExecutor()
         self._run: Future[Outcome] = self._pool.submit(self.station.run)
         self.grabber = Grabber(self.fifo, _pictures(seed), fps=FPS)
+        self.await_bars(1, sure=True)
+        self.usual = set(self.station.monitor.causes)
+        """Causes of this machine, as a clock that is not synchronised."""
 
     def _prepare_broker(self) -> None:
         folder = self.folder
@@ -175,10 +178,19 @@ class Rig:
         """Wait until it is in force."""
         self.await_(lambda: cause in self.station.monitor.causes, cause)
 
-    def await_bars(self, more: int) -> None:
-        """Wait until so many more bars have been judged."""
+    def await_bars(self, more: int, *, sure: bool = False) -> None:
+        """Wait until so many more bars have been judged; ``sure``: until so many in a row were called what they are."""
         until = len(self.told) + more
-        self.await_(lambda: len(self.told) >= until, "bars to be judged")
+
+        def done() -> bool:
+            verdicts = [line["verdict"] for line in self.told[-more:]]
+            return len(self.told) >= until and not (sure and verdicts != ["nonconforming"] * more)
+
+        self.await_(done, "bars to be judged")
+
+    def is_well(self) -> bool:
+        """Whether no fault is felt."""
+        return not set(self.station.monitor.causes) - self.usual - LASTING
 
     @property
     def switches(self) -> int:
@@ -200,8 +212,7 @@ class Rig:
 
     def put_in(self, name: str) -> Row:
         """Put in one fault, end it, wait until all is as it was."""
-        before = set(self.station.monitor.causes)
-        self.said = set(before)
+        self.said = set()
         bars, board, switches = len(self.told), self.board, self.switches
         with FAULTS[name](self):
             pass
@@ -210,8 +221,8 @@ class Rig:
         ended_s = time.monotonic()
         recovered = True
         try:
-            self.await_(lambda: not set(self.station.monitor.causes) - before - LASTING, f"{name}: causes to go")
-            self.await_bars(2)
+            self.await_(self.is_well, f"{name}: causes to go")
+            self.await_bars(2, sure=True)
             last = self.told[-1]["bar"]
             self.await_(lambda: self.received()[last] and not self.missing(), f"{name}: bars to arrive")
             seen = self.switches
@@ -221,7 +232,7 @@ class Rig:
             recovered = False
         return Row(
             fault=name,
-            said=tuple(sorted(self.said - before)),
+            said=tuple(sorted(self.said - self.usual)),
             bars=bars_meanwhile,
             switches=switches_meanwhile,
             recovered=recovered,
@@ -268,7 +279,7 @@ def thread_dies(rig: Rig, owner: type, method: str) -> Iterator[None]:
     """A supervised thread dies twice; the others judge and switch on."""
     with dying(rig, owner, method, 2):
         rig.await_cause("part_restarted")
-        rig.await_bars(1)
+        rig.await_bars(1, sure=True)
         yield
 
 
@@ -293,7 +304,7 @@ def broker_away(rig: Rig, *, kill: bool) -> Iterator[None]:
     """The broker's process goes and is started again after two bars."""
     rig.broker.stop(kill=kill)
     rig.await_cause("broker_lost")
-    rig.await_bars(2)
+    rig.await_bars(2, sure=True)
     yield
     rig.broker.start()
 
@@ -305,7 +316,7 @@ def broker_refuses(rig: Rig) -> Iterator[None]:
     rig.set_password("another")
     rig.broker.start()
     rig.await_cause("broker_refuses")
-    rig.await_bars(2)
+    rig.await_bars(2, sure=True)
     yield
     rig.broker.stop()
     rig.set_password("right")
@@ -322,7 +333,7 @@ def certificate_expired(rig: Rig) -> Iterator[None]:
         shutil.copyfile(getattr(rig.expired, name), getattr(rig.certificates, name))
     rig.broker.start()
     rig.await_cause("broker_untrusted")
-    rig.await_bars(2)
+    rig.await_bars(2, sure=True)
     yield
     rig.broker.stop()
     for name in names:
@@ -335,7 +346,7 @@ def relay_gone(rig: Rig) -> Iterator[None]:
     """The relay's port vanishes, and another board appears under the same name."""
     rig.pull_board()
     rig.await_cause("relay_lost")
-    rig.await_bars(2)
+    rig.await_bars(2, sure=True)
     yield
     rig.plug_board()
 
@@ -348,7 +359,7 @@ def disk_full(rig: Rig) -> Iterator[None]:
     resource.setrlimit(resource.RLIMIT_FSIZE, (rig.rng.randrange(1, 4096), hard))
     try:
         rig.await_cause("journal_lost")
-        rig.await_bars(2)
+        rig.await_bars(2, sure=True)
         yield
     finally:
         resource.setrlimit(resource.RLIMIT_FSIZE, (soft, hard))
@@ -365,8 +376,10 @@ sys.stdin.read()
 _DAMAGE = """
 import os, random, sqlite3, sys
 db = sqlite3.connect(sys.argv[1], isolation_level=None, timeout=20)
-db.execute("PRAGMA wal_checkpoint(TRUNCATE)").fetchall()
 version = db.execute("PRAGMA user_version").fetchone()[0]
+print("ready", flush=True)
+sys.stdin.readline()
+db.execute("PRAGMA wal_checkpoint(TRUNCATE)").fetchall()
 db.execute("BEGIN IMMEDIATE")
 with open(sys.argv[1], "r+b") as file:
     file.seek(8192)
@@ -385,18 +398,27 @@ def journal_locked(rig: Rig) -> Iterator[None]:
         assert holder.stdout is not None and holder.stdin is not None
         holder.stdout.readline()
         rig.await_cause("journal_lost")
-        rig.await_bars(2)
+        rig.await_bars(2, sure=True)
         yield
         holder.stdin.close()
 
 
 @contextlib.contextmanager
 def journal_damaged(rig: Rig) -> Iterator[None]:
-    """The file's pages are overwritten under the station; the cause stays until somebody has looked."""
+    """The file's pages are overwritten under the station; the cause stays until somebody has looked.
+
+    Between two bars, when nothing waits to be sent: what waits may be gone with the pages that held it.
+    """
     words = [sys.executable, "-c", _DAMAGE, str(rig.folder / "journal.sqlite"), str(rig.rng.randrange(1000))]
-    subprocess.run(words, check=True, timeout=LONG_S)
+    with subprocess.Popen(words, stdin=subprocess.PIPE, stdout=subprocess.PIPE) as vandal:
+        assert vandal.stdout is not None and vandal.stdin is not None
+        vandal.stdout.readline()
+        bars = len(rig.told)
+        rig.await_(lambda: len(rig.told) > bars and not rig.missing(), "a bar to be delivered")
+        vandal.stdin.write(b"now\n")
+        vandal.stdin.close()
     rig.await_cause("journal_damaged")
-    rig.await_bars(2)
+    rig.await_bars(2, sure=True)
     yield
 
 
@@ -404,7 +426,7 @@ def journal_damaged(rig: Rig) -> Iterator[None]:
 def clock_jumps(rig: Rig, seconds: float) -> Iterator[None]:
     """The wall clock is set; it is never set back."""
     JumpingClock.offset_s += seconds
-    rig.await_bars(2)
+    rig.await_bars(2, sure=True)
     yield
 
 
