@@ -65,6 +65,7 @@ def test_one_core_or_two_the_same_bars(station: Path, tmp_path: Path) -> None:
     }
 
 
+@pytest.mark.slow
 @pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])
 def test_a_signal_to_all_of_it_ends_it_in_good_order(number: signal.Signals, station: Path, tmp_path: Path) -> None:
     """As Ctrl-C in a terminal and a service manager do: the result is told, no traceback, and nobody is left."""

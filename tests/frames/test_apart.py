@@ -25,8 +25,10 @@ from edgewatch.frames.rehearsal import RehearsalSource
 from edgewatch.frames.renderer import AHEAD, INDEX, Renderer
 from tests.frames.test_contract import STATION
 
-LONG = dataclasses.replace(STATION, rehearsal=dataclasses.replace(STATION.rehearsal, bars=500))
-"""So many small pictures that no pipe holds them."""
+LONG = dataclasses.replace(
+    STATION, rehearsal=dataclasses.replace(STATION.rehearsal, bars=100, contact_s=0.02, pause_s=1.0)
+)
+"""So many small pictures that no pipe holds them, soon drawn."""
 OPENS = """
 import dataclasses, sys
 from edgewatch.frames.apart import RendererApart
