@@ -272,7 +272,7 @@ class JournalSettings:
     """The journal and outbox: one SQLite file."""
 
     file: str = _declare("edgewatch.sqlite", _text(least=1), "journal file, relative to this file")
-    most_mb: float = _declare(512.0, _number(1, 1e6), "size at which the oldest delivered records give way (MB)")
+    most_mb: float = _declare(1024.0, _number(1, 1e6), "size at which the oldest delivered records give way (MB)")
     thin_windows_mb: float = _declare(
         64.0,
         _number(0.2, 1e6),

@@ -72,7 +72,7 @@ class Journal:
         self,
         path: Path,
         *,
-        most_mb: float = 512.0,
+        most_mb: float = 1024.0,
         thin_windows_mb: float = 64.0,
         keep_damaged: int = 3,
         on_set_aside: Callable[[Path, str], None] | None = None,
@@ -410,7 +410,7 @@ class Journal:
             windows_thinned=self._outbox.thinning.total,
             used_bytes=table.pages_used(db) * page_bytes,
             next_seq=max(table.newest(db) or 0, self._floor) + 1,
-            unsent_room_bytes=self._outbox.unsent_bytes + self._outbox.unsent * table.MESSAGE_ROOM_BYTES,
+            unsent_room_bytes=self._outbox.unsent_room,
             room_bytes=int(room),
         )
 

@@ -59,6 +59,7 @@ class Outbox:
         self._place = 0
         self.unsent = 0
         self.unsent_bytes = 0
+        self.unsent_room = 0
         self.thinning = Thinning()
 
     def count(self, db: sqlite3.Connection) -> None:
@@ -69,6 +70,8 @@ class Outbox:
                 " coalesce(sum(CASE kind WHEN 'window' THEN bytes ELSE 0 END), 0) FROM outbox"
             ).fetchone()
             self.unsent, self.unsent_bytes, self._place, self._window_bytes = (int(part) for part in row)
+            sizes = db.execute("SELECT bytes, count(*) FROM outbox GROUP BY bytes").fetchall()
+            self.unsent_room = sum(rows.message_room(int(size)) * count for size, count in sizes)
             self.thinning = Thinning(**rows.state(db, "thinning", {}))
         except (TypeError, ValueError) as error:
             raise DamagedError(f"the outbox cannot be counted: {error}") from error
@@ -87,6 +90,7 @@ class Outbox:
             db.execute("INSERT INTO route VALUES (?, ?, ?)", (seq, entry.reply_topic, entry.correlation))
         self.unsent += 1
         self.unsent_bytes += size
+        self.unsent_room += rows.message_room(size)
 
     def take(self, db: sqlite3.Connection, seqs: Sequence[int]) -> None:
         """Take messages out; unknown numbers do no harm."""
@@ -100,6 +104,7 @@ class Outbox:
     def _gone(self, kind: str, size: int) -> None:
         self.unsent -= 1
         self.unsent_bytes -= size
+        self.unsent_room -= rows.message_room(size)
         if kind == "window":
             self._window_bytes -= size
 

@@ -23,9 +23,6 @@ BUSY_S = 1.0
 CHECK_WHOLE_BYTES = 64_000_000
 """Up to this size the whole file is checked when opened (0.1 s on a desk computer, about 3 s from an SD card); a larger
 one is checked as it is read: each record carries its own check sum."""
-MESSAGE_ROOM_BYTES = 240
-"""Room that an unsent message takes beyond its payload: columns, place in the outbox, and what is left over of a page.
-As measured, bars (806 bytes) take 1045, windows (631 bytes) 700."""
 READ_RUN = 500
 """Records read in one step: half a megabyte in memory, milliseconds with a snapshot held."""
 PAGE_BYTES = 2048
@@ -90,6 +87,18 @@ class JournalStatus:
     next_seq: int
     unsent_room_bytes: int = 0
     room_bytes: int = 0
+
+
+_COLUMNS_BYTES = 47
+"""What a record takes beside its payload: its other columns, and its place in the page."""
+_WAITING_BYTES = 22
+"""What its row in the outbox takes."""
+
+
+def message_room(size: int) -> int:
+    """Return the room that a waiting message of ``size`` bytes takes in the file: a page holds a whole number."""
+    cell = size + _COLUMNS_BYTES
+    return max(PAGE_BYTES // max(1, (PAGE_BYTES - 8) // cell), cell) + _WAITING_BYTES
 
 
 class DamagedError(Exception):

@@ -76,7 +76,7 @@ class Tally(Reader):
 def outages(seconds: list[float]) -> bool:
     """The broker is away for a simulated time at full rate, then everything is delivered."""
     print(
-        "\nBroker away at full rate (4 windows a second, a bar every 2 s), journal 512 MB, windows thinned above 64 MB"
+        "\nBroker away at full rate (4 windows a second, a bar every 2 s), journal 1024 MB, windows thinned above 64 MB"
     )
     print(
         "  away        recorded   thinned      file   append ms      sent     msg/s   bars            delivered"

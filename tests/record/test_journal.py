@@ -194,7 +194,7 @@ def test_the_limit_holds_while_all_is_unsent(file: Path):
 def test_what_unsent_messages_take_is_known(file: Path):
     """As estimated and as SQLite counts pages, for bars alone and for full rate; and what they may take."""
     journal = Journal(file, most_mb=100)
-    for kinds in ([bar()], [window()] * 8 + [bar()]):
+    for kinds in ([bar()], [window()], [alert("x" * 1030)], [alert("x" * 3000)], [window()] * 8 + [bar()]):
         before = journal.status()
         for _ in range(20):
             journal.append(kinds * 20, stamp=stamp())

@@ -84,7 +84,7 @@ def test_an_outbox_that_fills_is_said_before_it_is_full(place: Path) -> None:
     """The broker stayed away: 0.9 of 1 MB is unsent. The condition names it, an alert tells how much; all is kept."""
     file = place / "edgewatch.sqlite"
     journal = Journal(file, most_mb=1.0, thin_windows_mb=0.2)
-    seqs = journal.append([bar(number) for number in range(860)], stamp=stamp())
+    seqs = journal.append([bar(number) for number in range(800)], stamp=stamp())
     assert journal.status().used_bytes < 1e6
     journal.close()
     station = watching(place, "--pace", "real")
