@@ -134,6 +134,8 @@ class Monitor:
         detections = self._sight.look(frame.picture) if right_size else None
         streaks = 0 if detections is None else len(detections.streaks)
         feed = self._feed.update(frame, now_s=stamp.monotonic_s, streaks=streaks)
+        if "frozen" in self._complaints.causes and "frozen" not in feed:
+            self._sight.reset()  # it has taken the frozen streaks for the background
         effects = self.complain({cause: cause in feed for cause in FEED_CAUSES}, stamp)
         if detections is None:
             return effects
@@ -204,6 +206,8 @@ class Monitor:
             return effects
         for cause in changed:
             effects += self._cause_alert(cause, active=causes[cause])
+        if self._bar is not None:  # not only with the next picture: it may not come, or end the cause
+            self._bar.note(self._complaints.blinding)
         effects.append(self._condition_record())
         return effects + self._blind_stop(stamp)
 

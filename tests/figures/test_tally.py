@@ -205,3 +205,21 @@ def test_limits_of_reach_hold_although_frames_share_particles() -> None:
     inside, width = reach_coverage(1.0, bars=120)
     assert inside >= 0.88  # 0.95 less 3.5 standard errors of 120 bars
     assert 0.8 < width < 1.5
+
+
+def test_looks_of_streaks_are_means_by_their_number() -> None:
+    """Geometric, over pictures and over tallies alike; pictures that do not know are left out, and none gives NaN."""
+    line = [60.0, 200.0, 100.0, 200.0]
+    parts = [(10, 80.0, 2.0), (30, 20.0, 4.0), (50, math.nan, math.nan)]
+    whole, halves = Tally(OPTICS), [Tally(OPTICS), Tally(OPTICS)]
+    for index, (count, peak, width) in enumerate(parts):
+        one = seen([line] * count)
+        one = dataclasses.replace(one, light=dataclasses.replace(one.light, streak_peak_dn=peak, streak_width_px=width))
+        for tally in (whole, halves[index % 2]):
+            tally.add(one, t_s=index / OPTICS.fps)
+    halves[0].merge(halves[1])
+    for tally in (whole, halves[0]):
+        found = tally.figures()
+        assert found.streak_peak_dn == pytest.approx(80.0**0.25 * 20.0**0.75)
+        assert found.streak_width_px == pytest.approx(2.0**0.25 * 4.0**0.75)
+    assert math.isnan(Tally(OPTICS).figures().streak_peak_dn)

@@ -105,6 +105,7 @@ def test_a_band_written_by_hand_needs_only_its_limits() -> None:
     assert band.rate_center_per_m == pytest.approx(0.4)
     assert 0.1 < band.rate_scatter < 0.3
     assert not band.has_reach
+    assert band.streak_peak_dn is None
 
 
 @pytest.mark.parametrize(
@@ -122,6 +123,8 @@ def test_a_band_written_by_hand_needs_only_its_limits() -> None:
         ({"optics__fps": -3.0}, "optics.fps = -3.0: allowed is a number above 0"),
         ({"optics__contact_px": [1.0]}, "optics.contact_px = [1.0]: allowed is a list of two numbers"),
         ({"burst_rate__median": 0.4}, "burst_rate.median = 0.4: no such key; known are low_per_m"),
+        ({"streaks__peak_dn": -3.0}, "streaks.peak_dn = -3.0: allowed is a number above 0"),
+        ({"streaks__width_scatter": "wide"}, "streaks.width_scatter = 'wide': allowed is a number"),
         ({"spectrum": {}}, "spectrum: no such section"),
         ({"reach": 7}, "reach = 7: allowed is a section"),
         ({"grade": "C 45/.."}, "grade = 'C 45/..': allowed are letters"),

@@ -176,3 +176,20 @@ def test_figures_of_drawn_bars_are_whole() -> None:
     """The simulation behind these tests: windows add up."""
     windows = figures_of(draw(STRONG, np.random.default_rng(1)))
     assert whole(windows).bursts == sum(one.bursts for one in windows)
+
+
+def test_looks_of_streaks_are_remembered_where_enough_bars_know_them() -> None:
+    """Typical height and width with their scatter from bar to bar; bars of former teachings do not know them."""
+    bars = bars_of(STRONG, 8)
+    assert teach("g", bars, optics=OPTICS).streak_peak_dn is None
+    rng = np.random.default_rng(3)
+    looks = np.exp(rng.normal(0.0, 0.1, len(bars)))
+    known = [
+        dataclasses.replace(b, streak_peak_dn=70.0 * k, streak_width_px=2.4) for b, k in zip(bars, looks, strict=True)
+    ]
+    band = teach("g", [*bars, *known[:4]], optics=OPTICS)
+    assert band.streak_peak_dn is None
+    band = teach("g", [*bars, *known], optics=OPTICS)
+    assert band.streak_peak_dn == pytest.approx(70.0 * np.exp(np.log(looks).mean()))
+    assert band.streak_peak_scatter == pytest.approx(np.log(looks).std(ddof=1))
+    assert (band.streak_width_px, band.streak_width_scatter) == pytest.approx((2.4, 0.0), abs=1e-6)

@@ -1,0 +1,172 @@
+"""Blind is not good: whatever keeps the station from seeing is named, no bar conforms meanwhile, and it ends.
+
+Each fault is put into the pictures or into their delivery while a good bar touches the wheel; good bars follow.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+import math
+from collections.abc import Callable
+
+import numpy as np
+import pytest
+
+from edgewatch.judge.causes import CAUSES
+from edgewatch.monitor.lens import lens_limits
+from edgewatch.monitor.monitor import Monitor
+from edgewatch.rehearsal.steel import WORKSHOP
+from tests.monitor.rehearsed import CONTACT_S, FPS, GRADE, Fault, Line, Picture, segment, settings, taught
+
+FAULT_FROM = round((CONTACT_S[0] + 0.3) * FPS)
+"""Picture of the segment from which delivery fails: the bar has touched the wheel for 0.3 s."""
+
+
+def camera(**fields: float) -> Fault:
+    """Another camera, lens or stream."""
+    return lambda line: line.show(segment(1, **fields))
+
+
+def each(change: Callable[[Picture], Picture | None], first: int = 0) -> Fault:
+    """Every picture from number ``first`` on changed."""
+    return lambda line: line.show(
+        change(picture) if index >= first else picture for index, picture in enumerate(segment(1))
+    )
+
+
+def patch(picture: Picture) -> Picture:
+    """The sun on the shield: a twenty-fifth of the picture at full scale."""
+    changed = picture.copy()
+    changed[150:, 100:152] = 255
+    return changed
+
+
+def freeze(line: Line) -> None:
+    """The grabber hands out its last picture, with sparks in it, again and again."""
+    pictures = segment(1)
+    line.show(pictures[min(index, FAULT_FROM)] for index in range(round(CONTACT_S[1] * FPS)))
+
+
+def stall(line: Line) -> None:
+    """No picture for three seconds in the middle of a contact, then the rest of it."""
+    pictures = segment(1)
+    line.show(pictures[:FAULT_FROM])
+    line.show(None for _ in range(round(3.0 * FPS)))
+    line.show(pictures[FAULT_FROM:])
+
+
+def drop(line: Line) -> None:
+    """Two of three pictures are not looked at, in the middle of a contact."""
+    pictures = segment(1)
+    line.show(pictures[:FAULT_FROM])
+    for index in range(FAULT_FROM, len(pictures) - 2, 3):
+        line.show([None, None])
+        line.show([pictures[index + 2]], skipped=2)
+
+
+def shift(picture: Picture) -> Picture:
+    """The camera was knocked aside: the stream's end is out of the picture."""
+    changed = np.full_like(picture, 8)
+    changed[:, 140:] = picture[:, :-140]
+    return changed
+
+
+def miss(line: Line) -> None:
+    """The line says that a bar is at the wheel, and the camera sees none."""
+    line.take(line.monitor.bar_at_wheel(True, line.stamp()))
+    line.show(picture for _ in range(8) for picture in segment(1)[:20])
+    line.take(line.monitor.bar_at_wheel(False, line.stamp()))
+
+
+FAULTS: dict[str, tuple[str, Fault]] = {
+    "lens cap": ("no_light", each(np.zeros_like)),
+    "lens full of dirt": ("soiled", camera(dirt_spots=400)),
+    "window gone dull": ("soiled", camera(light=0.25)),
+    "film of grease": ("soiled", camera(defocus_px=2.3)),
+    "sun on the shield": ("saturated", each(patch)),
+    "out of focus": ("out_of_focus", camera(defocus_px=5.0)),
+    "shaking": ("vibration", camera(vibration_px=4.0)),
+    "lamp": ("stray_light", each(lambda picture: np.maximum(picture, 8) // 2 + 160)),
+    "no picture": ("stalled", stall),
+    "same picture": ("frozen", freeze),
+    "pictures left out": ("dropping", drop),
+    "other size": ("wrong_size", each(lambda picture: picture[:, :300], FAULT_FROM)),
+    "frame edge": ("reach_truncated", each(shift)),
+    "thin stream": ("too_few_streaks", camera(sparks_per_s=40.0)),
+    "bar not seen": ("no_contact", miss),
+}
+"""Every cause that can be put into pictures or delivery. ``wrong_exposure`` comes from the camera's driver:
+tests/station/test_wrong_exposure.py."""
+
+
+NOT_SEEN = {"no_light", "no_contact"}
+"""Faults in which no bar is seen at all."""
+
+
+@pytest.mark.parametrize("name", FAULTS)
+def test_a_fault_is_named_and_no_bar_conforms_until_it_has_gone(name: str) -> None:
+    """(a) The condition names the cause, or, where it is the bar's alone, the bar does; (b) no bar conforms meanwhile;
+    (c) it ends with good bars, which conform again.
+    """
+    cause, fault = FAULTS[name]
+    line = Line()
+    line.take(line.monitor.begin(line.stamp()))
+    fault(line)
+    line.show(segment(2))
+    line.show(segment(3))
+    judged = [(bar["verdict"], bar["causes"]) for _, bar in line.bars]
+    if CAUSES[cause].condition:
+        assert line.named(cause), line.conditions
+    if cause not in NOT_SEEN:
+        assert len(judged) >= 3, judged
+        assert cause in judged[0][1], judged
+    for verdict, causes in judged:
+        assert (verdict == "conforming") == (cause not in causes), judged
+    for told_s, bar in line.bars:
+        assert not (line.stood(cause, told_s) and bar["verdict"] == "conforming"), judged
+    assert not line.stood(cause, line.now_s)
+    assert judged[-1] == ("conforming", []), judged
+
+
+def test_without_a_synchronised_clock_bars_are_judged_and_it_is_said() -> None:
+    """The one cause of the list that does not blind: figures come from the camera's clock, a station without a time
+    server sees as well as any. The condition names it, every record carries it.
+    """
+    line = Line(synced=False)
+    line.show(segment(2))
+    assert line.stood("clock_not_synced", line.now_s)
+    assert [bar["verdict"] for _, bar in line.bars] == ["conforming"]
+    line.synced = True
+    line.show(segment(3))
+    assert not line.stood("clock_not_synced", line.now_s)
+
+
+@pytest.mark.parametrize("steel", ["C15", "C100", "42CrMo4"])
+def test_another_steel_on_a_clean_lens_is_not_a_soiled_lens(steel: str) -> None:
+    """Narrowest, widest and dimmest streaks, on a new wheel and on a worn one; nor does the camera shake."""
+    line = Line()
+    for speed_m_s in (30.0, 20.0):
+        line.show(segment(8, steel=steel, speed_m_s=speed_m_s))
+    assert len(line.bars) == 2
+    assert not line.named("soiled"), line.conditions
+    assert not line.named("vibration")
+
+
+def test_a_steel_much_dimmer_than_any_taught_does_not_hide_behind_a_soiled_lens() -> None:
+    """White cast iron glows at a third of the height: it is condemned before a second of contact makes it dirt."""
+    line = Line()
+    line.show(segment(1, steel=WORKSHOP["white cast iron"]))
+    (_, bar), *_ = line.bars
+    assert (bar["verdict"], "soiled" in bar["causes"]) == ("nonconforming", True)
+
+
+def test_a_band_that_does_not_know_its_streaks_judges_no_lens() -> None:
+    """Files of former teachings are read and used; dirt alone is then not named."""
+    known = {"streak_peak_dn", "streak_peak_scatter", "streak_width_px", "streak_width_scatter"}
+    former = dataclasses.replace(taught(), **dict.fromkeys(known))
+    line = Line(monitor=Monitor(settings(), bands={GRADE: former}, live=True, named=GRADE))
+    line.show(segment(1, light=0.25))
+    assert not line.named("soiled")
+    limits = lens_limits([former], settings().sight_optics())
+    assert math.isnan(limits.least_peak_dn)
+    assert math.isnan(limits.most_width_px)
