@@ -49,7 +49,7 @@ def rig(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Rig]:
     assert made.received().most_common(1)[0][1] == 1  # no bar under two numbers
     bars = [line["bar"] for line in made.told]
     assert bars == list(range(1, len(bars) + 1))
-    raised = {m.payload["bar"] for m in made.reader.on("alert") if m.payload["alert"].startswith("nonconforming_bar")}
+    raised = {one["bar"] for one in made.on("alert") if one["alert"].startswith("nonconforming_bar")}
     assert raised == {line["bar"] for line in made.told if line["verdict"] == "nonconforming"}
     seqs = sorted(set(made.reader.seqs()))
     gaps = [(one, two) for one, two in itertools.pairwise(seqs) if two != one + 1]
