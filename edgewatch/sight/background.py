@@ -1,9 +1,9 @@
 """Background and noise: what the picture would be without sparks.
 
-Two parts. A *pattern* follows each pixel slowly by sigma-delta steps of one grey level, which converge to the
-pixel's median over time (McFarlane & Schofield, Machine Vision and Applications 8, 1995): machine parts, hot pixels,
-the wheel's glow. A *drift* is what the picture at hand adds smoothly over space (haze, lamp flicker): the
-difference from the pattern, averaged in cells and opened morphologically (Serra 1982), so that nothing as thin as
+Two parts. A *pattern* follows each pixel slowly by sigma-delta steps of one grey level (McFarlane & Schofield, Machine
+Vision and Applications 8, 1995): machine parts, hot pixels, the wheel's glow. Equal steps up and down converge to a
+pixel's median over time; ours are rarer upwards, so they converge to a low quantile, which a crowded stream leaves dark.
+A *drift* is what the picture at hand adds smoothly over space (haze, lamp flicker): the difference from the pattern, averaged in cells and opened morphologically (Serra 1982), so that nothing as thin as
 a streak survives in it. A single picture has no pattern: its background is the median over a neighbourhood, which
 bright streaks and dark bars both leave alone as long as they cover less than half of it.
 """
@@ -45,6 +45,10 @@ LEARN_AT = (4, 8, 16)
 """After so many pictures the pattern is the lowest value seen: sparks have moved on. That it lies below the mean by one
 or two noise deviations everywhere is made up for by the drift."""
 
+UP_EVERY = 4
+"""The pattern may step up in one learning picture of so many and down in each: it converges to the value that a fifth
+of the pictures lie below, which is dark even where a streak lies in most pictures."""
+
 PATTERN_RATE_HZ = 25.0
 """Grey levels per second that the pattern may follow: a lamp warming up, not a spark stream."""
 
@@ -79,6 +83,7 @@ class Background:
         self._pattern_cells: NDArray[np.float32] | None = None
         self._cells: NDArray[np.float32] | None = None
         self._seen = 0
+        self._steps = 0
         self.level_dn = 0.0
         self.noise_dn = LEAST_NOISE_DN
         self.raw_noise_dn = 0.0
@@ -159,9 +164,12 @@ class Background:
                 return
             self._pattern = _cv.max(self._first, self._lowest)
         elif self._seen % self._every == 0:
-            up = _cv.min(_cv.compare(picture, self._pattern, _cv.CMP_GT), 1)
+            self._steps += 1
             down = _cv.min(_cv.compare(picture, self._pattern, _cv.CMP_LT), 1)
-            self._pattern = _cv.subtract(_cv.add(self._pattern, up), down)
+            self._pattern = _cv.subtract(self._pattern, down)
+            if self._steps % UP_EVERY == 0:
+                up = _cv.min(_cv.compare(picture, self._pattern, _cv.CMP_GT), 1)
+                self._pattern = _cv.add(self._pattern, up)
         else:
             return
         self._pattern_cells = _cv.resize(self._pattern, small, interpolation=_cv.INTER_AREA).astype(np.float32)

@@ -75,10 +75,11 @@ DARK_SHARE = 0.15
 ALONE_LEAST_PX = 8.0
 """A streak of which one end is seen is at least this long."""
 
-SAME_SIDE_PX = 2.5
+SAME_SIDE_PX = 2.0
 SAME_COS = 0.97
-SAME_OVERLAP = 0.6
-"""A streak with one end seen that runs within another for this share of the shorter is the same."""
+SAME_OVERLAP = 0.7
+"""A streak with one end seen that runs within another for this share of the shorter is the same. In a crowd streaks do
+overlap: less, and wider apart, would take many for one."""
 
 LEVEL_SAMPLES = 12
 
@@ -276,21 +277,26 @@ def _distinct(begin: NDArray[np.float64], end: NDArray[np.float64], whole: NDArr
     part = np.flatnonzero(~whole)
     if not part.size:
         return keep
+    begin, end = begin.astype(np.float32), end.astype(np.float32)
     gap = end - begin
-    length = np.maximum(np.hypot(gap[:, 0], gap[:, 1]), 1e-6)
+    length = np.maximum(np.hypot(gap[:, 0], gap[:, 1]), np.float32(1e-6))
     unit = gap / length[:, None]
+    middle = 0.5 * (begin + end)
+    own = length[part][:, None]
     ux, uy = unit[part, 0][:, None], unit[part, 1][:, None]
     bx, by = begin[part, 0][:, None], begin[part, 1][:, None]
-    a = (begin[:, 0] - bx) * ux + (begin[:, 1] - by) * uy
-    b = (end[:, 0] - bx) * ux + (end[:, 1] - by) * uy
-    side = np.abs((0.5 * (begin[:, 0] + end[:, 0]) - bx) * uy - (0.5 * (begin[:, 1] + end[:, 1]) - by) * ux)
-    common = np.minimum(np.maximum(a, b), length[part][:, None]) - np.maximum(np.minimum(a, b), 0.0)
-    same = (side < SAME_SIDE_PX) & (common > SAME_OVERLAP * np.minimum(length[part][:, None], length))
-    same &= np.abs(ux * unit[:, 0] + uy * unit[:, 1]) > SAME_COS
-    rank = np.where(whole, np.inf, length)
-    order = np.arange(len(begin))
-    better = (rank > rank[part][:, None]) | ((rank == rank[part][:, None]) & (order < part[:, None]))
-    keep[part] = ~(same & better).any(axis=1)
+    same = np.abs((middle[:, 0] - bx) * uy - (middle[:, 1] - by) * ux) < SAME_SIDE_PX
+    i, j = np.nonzero(same)  # few are left: the rest is done pair by pair
+    ux, uy, bx, by = ux[i, 0], uy[i, 0], bx[i, 0], by[i, 0]
+    a = (begin[j, 0] - bx) * ux + (begin[j, 1] - by) * uy
+    b = (end[j, 0] - bx) * ux + (end[j, 1] - by) * uy
+    common = np.minimum(np.maximum(a, b), own[i, 0]) - np.maximum(np.minimum(a, b), 0.0)
+    held = common > SAME_OVERLAP * np.minimum(own[i, 0], length[j])
+    held &= np.abs(ux * unit[j, 0] + uy * unit[j, 1]) > SAME_COS
+    rank = np.where(whole, np.float32(np.inf), length)
+    k = part[i]
+    held &= (rank[j] > rank[k]) | ((rank[j] == rank[k]) & (j < k))
+    keep[k[held]] = False
     return keep
 
 
