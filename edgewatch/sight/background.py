@@ -2,10 +2,11 @@
 
 Two parts. A *pattern* follows each pixel slowly by sigma-delta steps of one grey level (McFarlane & Schofield, Machine
 Vision and Applications 8, 1995): machine parts, hot pixels, the wheel's glow. Equal steps up and down converge to a
-pixel's median over time; ours are rarer upwards, so they converge to a low quantile, which a crowded stream leaves dark.
-A *drift* is what the picture at hand adds smoothly over space (haze, lamp flicker): the difference from the pattern, averaged in cells and opened morphologically (Serra 1982), so that nothing as thin as
-a streak survives in it. A single picture has no pattern: its background is the median over a neighbourhood, which
-bright streaks and dark bars both leave alone as long as they cover less than half of it.
+pixel's median over time; ours are rarer upwards and converge to a low quantile, which a crowded stream leaves dark. A
+*drift* is what the picture at hand adds smoothly over space (haze, lamp flicker): the difference from the pattern,
+averaged in cells and opened morphologically (Serra 1982), so that nothing as thin as a streak survives in it. A single
+picture has no pattern: its background is the median over a neighbourhood, which bright streaks and dark bars both
+leave alone as long as they cover less than half of it.
 """
 
 from __future__ import annotations
