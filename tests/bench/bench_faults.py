@@ -200,7 +200,7 @@ def full_disk(rounds: int, seed: int) -> bool:
 def ports(rounds: int, seed: int) -> bool:
     """Every fault in each round, in another order each time; the damaged journal ends a round and a station."""
     rng = random.Random(seed)
-    print(f"\nFaults of ports and threads in a running station, {rounds} rounds in random order; a bar every 0.8 s")
+    print(f"\nFaults of ports and threads in a running station, {rounds} rounds in random order; a bar every 0.96 s")
     print(f"  {'fault':26} {'times':>5} {'bars':>5} {'relay':>6} {'recovered':>10} {'after s':>8} {'lost':>5}  said")
     found: dict[str, list[Row]] = {name: [] for name in FAULTS}
     lost = judged = 0
