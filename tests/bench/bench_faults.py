@@ -1,7 +1,8 @@
 """Fault campaign, long form: kills, outages up to a simulated week, a disk that is full at random moments, and every
 fault of the ports and threads again and again in one running station.
 
-``python -m tests.bench.bench_faults [--kills 200] [--seed 1] [--days 7] [--rounds 10]`` prints a table for each part;
+``python -m tests.bench.bench_faults [--kills 200] [--seed 1] [--days 7] [--rounds 10]`` prints a table for each part
+(``--longest``: of the outages only the longest);
 the exit status is 1 when anything was lost, altered, sent out of order or numbered twice, or did not recover. The short
 form is in the tests.
 """
@@ -24,12 +25,13 @@ from pathlib import Path
 
 from edgewatch.errors import DeviceError
 from edgewatch.link.session import Link
-from edgewatch.record.journal import Journal
+from edgewatch.record.journal import Entry, Journal
 from edgewatch.settings import MqttSettings, StationSettings
+from edgewatch.wire import messages
 from edgewatch.wire.topics import Topics
 from tests.brokers import Broker, Reader, Seen, running, wait_until
 from tests.link.kills import campaign
-from tests.record.entries import alert, bar, condition, stamp, window
+from tests.record.entries import alert, condition, figures, stamp, window
 from tests.station.faults import FAULTS, Rig, Row
 
 WINDOWS_A_SECOND = 4
@@ -73,6 +75,35 @@ class Tally(Reader):
             self.repeats += 1  # or out of order: then fewer first sights than messages sent are counted
 
 
+def whole_bar(number: int) -> Entry:
+    """A bar with everything that a station says of one: some 1400 bytes as a message."""
+    body = messages.bar(
+        bar=number,
+        expected="42CrMo4",
+        verdict="nonconforming",
+        values=figures(number),
+        decided_after_s=0.7512345678,
+        nearest=[(grade, 0.123456789012345) for grade in ("C45", "C15", "42CrMo4", "100Cr6", "16MnCr5")],
+        heat="H4711",
+        order_number="mes-20260301-17",
+        band=messages.band(
+            grade="42CrMo4",
+            burst_rate_low_per_m=0.8312345678901,
+            burst_rate_high_per_m=1.0212345678901,
+            reach_low_mm=312.1234567890,
+            reach_high_mm=355.1234567890,
+        ),
+        pictures=[f"20260301T060000Z-bar{number:06d}-{place}.jpg" for place in (1, 2, 3)],
+        extra={
+            "figure": "burst_rate",
+            "log_evidence": 12.3456789012345,
+            "ended_by": "quiet",
+            "reach_at_taught_speed_mm": 330.123456789012,
+        },
+    )
+    return Entry(kind="bar", body=body)
+
+
 def outages(seconds: list[float]) -> bool:
     """The broker is away for a simulated time at full rate, then everything is delivered."""
     print(
@@ -100,7 +131,7 @@ def _outage(folder: Path, away_s: float) -> bool:
         for part in range(second, second + together):
             entries += [window(part) for _ in range(WINDOWS_A_SECOND)]
             if part % BAR_EVERY_S == 0:
-                entries.append(bar(part))
+                entries.append(whole_bar(part))
                 bars += 1
             if part % 3600 == 0:
                 entries.append(condition("good"))
@@ -236,12 +267,14 @@ def main() -> int:
     parser.add_argument("--kills", type=int, default=200)
     parser.add_argument("--seed", type=int, default=1)
     parser.add_argument("--days", type=float, default=7.0, help="the longest simulated outage")
+    parser.add_argument("--longest", action="store_true", help="only the longest outage")
     parser.add_argument("--rounds", type=int, default=10)
     parser.add_argument("--part", choices=["kills", "outages", "disk", "ports"], action="append")
     args = parser.parse_args()
     print(f"{platform.machine()}, {platform.system()} {platform.release()}, Python {platform.python_version()},")
     print(f"SQLite {sqlite3.sqlite_version}, paho-mqtt {version('paho-mqtt')}, seed {args.seed}")
     spans = [span for span in (1.0, 60.0, 3600.0, 86400.0) if span < args.days * 86400] + [args.days * 86400]
+    spans = spans[-1:] if args.longest else spans
     parts: dict[str, Callable[[], bool]] = {
         "kills": lambda: kills(args.kills, args.seed),
         "outages": lambda: outages(spans),
