@@ -74,6 +74,7 @@ CAUSES = MappingProxyType(
         "relay_lost": Cause("The relay does not answer, or is not in the wanted state.", FAILURE),
         "journal_lost": Cause("The journal cannot be written; records wait in memory.", FAILURE),
         "records_shed": Cause("The journal was away too long; records were given up, and counted.", FAILURE),
+        "records_refused": Cause("Records that cannot be written were left out and counted.", MAINTENANCE, alerts=True),
         "journal_damaged": Cause("A damaged journal was set aside whole; a new one began.", MAINTENANCE, alerts=True),
         "outbox_filling": Cause("Unsent messages have nearly filled journal or disk.", MAINTENANCE, alerts=True),
         "windows_thinned": Cause("Unsent window messages were thinned to save space.", MAINTENANCE),

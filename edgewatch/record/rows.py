@@ -114,8 +114,12 @@ FAILURES = (sqlite3.Error, UnicodeDecodeError)
 
 
 def translated(error: Exception, path: Path) -> Exception:
-    """Return what a failure means: ``DeviceError`` for the world's failures, ``DamagedError`` for the file's."""
+    """Return what a failure means: ``DeviceError`` for the world's failures, ``DamagedError`` for the file's,
+    ``TypeError`` for a value that SQLite does not take: trying again does not help.
+    """
     text = str(error)
+    if "binding parameter" in text:
+        return TypeError(f"journal {path}: {text}")
     outside = isinstance(error, sqlite3.OperationalError) and any(word in text for word in _WORLD)
     if outside or isinstance(error, (sqlite3.ProgrammingError, sqlite3.InterfaceError)):
         remedy = "free some space" if "full" in text else "see that it is there, writable and not in use"

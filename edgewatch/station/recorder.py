@@ -1,7 +1,9 @@
 """Writes what was seen: batches of records in, one transaction each, in order, from a thread of its own.
 
 A card that is slow, full or locked never holds up the judging: batches wait in memory, up to a bound; beyond it the
-oldest windows are given up first, then the oldest batches, and both are counted.
+oldest windows are given up first, then the oldest batches, and both are counted. A batch that the journal cannot take
+in, whatever the state of the card, is written entry by entry after a few tries: only what cannot be written is lost,
+and each loss is told.
 """
 
 from __future__ import annotations
@@ -21,6 +23,11 @@ from edgewatch.wire.messages import Stamp
 
 MOST_WAITING = 20_000
 """Entries that wait in memory at most: about 20 MB, more than an hour of windows at full rate."""
+
+MOST_TRIES = 3
+"""So often a batch is tried that raises what no card and no lock raises; the supervisor waits longer each time."""
+MOST_TOLD = 2000
+"""Characters of a refused entry that are told, so that what it held is not gone with it."""
 
 
 class JournalLike(Protocol):
@@ -43,7 +50,8 @@ class Batch:
 
 class Recorder:
     """Takes batches and writes them in order. ``on_state(error or None, shed)`` is told when writing begins to fail,
-    when entries are given up, and when it works again.
+    when entries are given up, and when it works again; ``on_refused(what)`` of each entry, or kept value, that the
+    journal cannot take in: kind, error, content.
     """
 
     def __init__(
@@ -52,17 +60,22 @@ class Recorder:
         *,
         on_state: Callable[[DeviceError | None, int], None],
         on_written: Callable[[], None] = lambda: None,
+        on_refused: Callable[[str], None] = lambda what: None,
         most_waiting: int = MOST_WAITING,
         backoff: Backoff | None = None,
     ) -> None:
         self._journal = journal
         self._on_state = on_state
         self._on_written = on_written
+        self._on_refused = on_refused
         self._most_waiting = most_waiting
         self._backoff = backoff or Backoff(random.random, first_s=0.2, most_s=10.0)
         self._backlog: Backlog[Batch] = Backlog()
         self._entries = 0
         self._shed = 0
+        self._refused = 0
+        self._tried: Batch | None = None  # at the front, and has raised what is no failure of the world
+        self._tries = 0
         self._failing = False
 
     @property
@@ -74,6 +87,11 @@ class Recorder:
     def shed(self) -> int:
         """Entries given up since the start."""
         return self._shed
+
+    @property
+    def refused(self) -> int:
+        """Entries and kept values that could not be written in any way since the start."""
+        return self._refused
 
     def put(self, batch: Batch) -> None:
         """Take a batch; never blocks."""
@@ -95,9 +113,15 @@ class Recorder:
         return self._backlog.flush(timeout_s)
 
     def work(self, stop: threading.Event) -> None:
-        """Write until ``stop`` is set and nothing waits, or cannot be written; for a supervised thread."""
+        """Write until ``stop`` is set and nothing waits, or cannot be written; for a supervised thread.
+
+        Raises what the journal raises besides ``DeviceError``; the batch is then tried again, ``MOST_TRIES`` times.
+        """
         while (batch := self._backlog.next(stop)) is not None:
             try:
+                if batch is self._tried and self._tries >= MOST_TRIES:
+                    self._write_apart(batch)
+                    continue
                 self._journal.append(batch.entries, stamp=batch.stamp, state=batch.state)
             except DeviceError as error:
                 self._failed(error)
@@ -105,9 +129,60 @@ class Recorder:
                     return
                 stop.wait(self._backoff.next_s())
                 continue
+            except Exception:
+                self._tries = self._tries + 1 if batch is self._tried else 1
+                self._tried = batch
+                if stop.is_set() and self._tries <= MOST_TRIES:
+                    continue  # nobody would start this thread again
+                raise
             finally:
                 self._backlog.done()
             self._written(batch)
+
+    def _write_apart(self, batch: Batch) -> None:
+        """Write the front batch piece by piece; what is refused by itself is told and left out.
+
+        The kept values come first: a power cut between two pieces must not have a number used twice, or the line
+        running that was stopped. Raises ``DeviceError`` with the pieces written so far taken out of the batch, and
+        whatever even an empty transaction raises: then it is not the batch.
+        """
+        self._journal.append((), stamp=batch.stamp)
+        for key, value in batch.state.items():
+            self._write_piece(f"kept value {key}", value, batch, state={key: value})
+            batch = self._replace_front(
+                batch, replace(batch, state={name: kept for name, kept in batch.state.items() if name != key})
+            )
+        while batch.entries:
+            entry = batch.entries[0]
+            self._write_piece(entry.kind, entry.body, batch, entries=(entry,))
+            batch = self._replace_front(batch, replace(batch, entries=batch.entries[1:]))
+        self._tried = None
+        self._written(batch)
+
+    def _write_piece(
+        self,
+        name: str,
+        content: object,
+        batch: Batch,
+        *,
+        entries: tuple[Entry, ...] = (),
+        state: Mapping[str, Any] | None = None,
+    ) -> None:
+        try:
+            self._journal.append(entries, stamp=batch.stamp, state=state)
+        except DeviceError:
+            raise
+        except Exception as error:  # noqa: BLE001 - whatever it is, what waits behind this piece must be written
+            self._refused += 1
+            what = f"{name}: {type(error).__name__}: {error}: {content!r}"
+            self._on_refused(what.encode("utf-8", "backslashreplace").decode()[:MOST_TOLD])
+
+    def _replace_front(self, batch: Batch, rest: Batch) -> Batch:
+        """Put what is left of the batch in hand in its place."""
+        with self._backlog.change:
+            self._backlog.items[0] = self._tried = rest
+            self._entries -= len(batch.entries) - len(rest.entries)
+        return rest
 
     def _written(self, batch: Batch) -> None:
         with self._backlog.change:

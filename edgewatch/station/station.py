@@ -64,6 +64,8 @@ FLUSH_S = 10.0
 """Longest wait for the journal and the pictures at the end (s)."""
 NOTICE_APART_S = 60.0
 """A part that fails again and again is told of this often (s)."""
+MOST_DETAIL = 300
+"""Characters of a refused record in the condition; the notice has more."""
 STEADY_S = 600.0
 """After so long without a fault the station is good again (s)."""
 MOST_FAULTS = 20
@@ -169,7 +171,9 @@ class Station:
             seen=memory.orders,
             monotonic_s=time.monotonic(),
         )
-        self._recorder = Recorder(self._journal, on_state=self._journal_state, on_written=self._written)
+        self._recorder = Recorder(
+            self._journal, on_state=self._journal_state, on_written=self._written, on_refused=self._refused
+        )
         self._add("journal", self._recorder.work)
         self._add("backlog", self._count_backlog)
         store = None
@@ -428,6 +432,16 @@ class Station:
     def _journal_state(self, error: DeviceError | None, shed: int) -> None:
         self._tell({"journal_lost": error is not None, "records_shed": shed > 0}, str(error or f"{shed} records"))
 
+    def _refused(self, what: str) -> None:
+        count, told = self._recorder.refused, what[:MOST_DETAIL]
+
+        def complain(monitor: Monitor, stamp: messages.Stamp) -> list[Effect]:
+            ended = monitor.complain({"records_refused": False}, stamp)  # each one is an alert of its own
+            return ended + monitor.complain({"records_refused": True}, stamp, detail=f"{count} so far; {told}")
+
+        self._inbox.put(complain)
+        self._on_notice(f"journal: cannot be recorded, left out: {what}")
+
     def _written(self) -> None:
         if self._link is not None:
             self._link.wake()
@@ -479,7 +493,8 @@ class Station:
         """Flush and end every part; what cannot be flushed in time stays in the journal's outbox."""
         self._watchdog.stopping()
         self._source.close()
-        self._recorder.flush(FLUSH_S)
+        if not self._recorder.flush(FLUSH_S):
+            self._on_notice(f"journal: {self._recorder.waiting} records could not be written before the end")
         self._pictures.flush(FLUSH_S)
         if self._link is not None:
             self._link.wake()

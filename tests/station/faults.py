@@ -48,7 +48,7 @@ FPS = 25
 """Slow, so that a busy machine follows: an overload is a fault of its own (``test_overload.py``)."""
 CONTACT_FRAMES, PAUSE_FRAMES = 15, 9
 ON, OFF = bytes.fromhex("A00101A2"), bytes.fromhex("A00100A1")
-LASTING = {"journal_damaged"}
+LASTING = {"journal_damaged", "records_refused"}
 """Causes that stay until somebody has looked and started the station anew."""
 LONG_S = 90.0
 """Longest wait for what takes a few seconds on an idle machine."""
@@ -73,9 +73,9 @@ class Row:
 class BarReader(Reader):
     """Keeps which bars came, and under which ``seq``, so that nobody parses everything again and again."""
 
-    def __init__(self, broker: Broker, *options: str) -> None:
+    def __init__(self, broker: Broker) -> None:
         self.bars: set[tuple[int, int]] = set()
-        super().__init__(broker, "#", *options, session="reader")
+        super().__init__(broker, session="reader")
 
     def take(self, message: Seen) -> None:
         """Keep one message."""
@@ -142,14 +142,10 @@ class Rig:
         self._tls_port = free_port()
         cert, key = self.certificates.cert, self.certificates.key
         lines = (f"password_file {self.passwords}", f"listener {self._tls_port} 127.0.0.1")
-        # Mosquitto 2.0.11 acknowledges and then loses the message that comes to a sleeping session as the first beyond
-        # what may be in flight, 20 unless broker and reader say otherwise (its log: received, answered, never sent).
-        lines += ("max_inflight_messages 60000",)
         lines += (f"certfile {cert}", f"keyfile {key}")
         self.broker = Broker(folder / "broker", persistence=True, lines=lines)
         self.broker.start()
-        many = ("-D", "connect", "receive-maximum", "60000")
-        self.reader = BarReader(self.broker, *many)
+        self.reader = BarReader(self.broker)
         self.reader.ready(self.broker)
 
     def _settings(self) -> Any:
@@ -428,6 +424,25 @@ def journal_locked(rig: Rig) -> Iterator[None]:
 
 
 @contextlib.contextmanager
+def record_refused(rig: Rig) -> Iterator[None]:
+    """One window that no journal can take in, whatever the card."""
+    chosen: list[Any] = []
+    insert = Journal._insert
+
+    def refusing(journal: Journal, db: Any, seq: int, entry: Any, stamp: Stamp) -> None:
+        if not chosen and entry.kind == "window":
+            chosen.append(entry)
+        if chosen and entry is chosen[0]:
+            raise OverflowError("was made to be refused")
+        insert(journal, db, seq, entry, stamp)
+
+    with mock.patch.object(Journal, "_insert", refusing):
+        rig.await_cause("records_refused")
+        rig.await_bars(2, sure=True)
+        yield
+
+
+@contextlib.contextmanager
 def journal_damaged(rig: Rig) -> Iterator[None]:
     """The file's pages are overwritten under the station; the cause stays until somebody has looked.
 
@@ -471,9 +486,12 @@ FAULTS: dict[str, Callable[[Rig], contextlib.AbstractContextManager[None]]] = {
     "journal locked": journal_locked,
     "clock a day ahead": lambda rig: clock_jumps(rig, 86400.0),
     "clock two days back": lambda rig: clock_jumps(rig, -172800.0),
+    "record refused": record_refused,
     "journal damaged": journal_damaged,
 }
-"""Name -> what happens; inside, the fault lasts. The damaged journal comes last: from then on its cause is in force."""
+"""Name -> what happens; inside, the fault lasts."""
+LAST = ("record refused", "journal damaged")
+"""These come last: from then on their causes are in force."""
 
 
 def _pictures(seed: int) -> list[bytes]:

@@ -31,6 +31,7 @@ SAID = {
     "journal locked": {"journal_lost"},
     "clock a day ahead": set(),
     "clock two days back": set(),
+    "record refused": {"part_restarted", "records_refused"},
     "journal damaged": {"journal_damaged"},
 }
 """What must be said of each, at least."""
