@@ -6,6 +6,8 @@ so that it does not chatter.
 
 from __future__ import annotations
 
+import itertools
+import math
 from collections import deque
 
 import numpy as np
@@ -22,6 +24,8 @@ DROPPING_SHARE, DROPPED_ENOUGH_SHARE = 0.2, 0.05
 RATE_OFF_SHARE, RATE_RIGHT_SHARE = 0.15, 0.08
 """Deviation from the configured rate; spark speed and contact times are off by as much. Cameras keep their rate within
 1 %; what is left is the scheduler's jitter, which over the span is below 5 %."""
+GAP_APART_S = 30.0
+"""One gap, as a camera leaves that was lost for a moment, is no wrong rate; another one sooner than this (s) is."""
 FROZEN_S = 0.5
 """A picture that lasts this long (s) and ``FROZEN_FRAMES`` frames is frozen."""
 FROZEN_FRAMES = 5
@@ -51,6 +55,7 @@ class Feed:
         self._last_s: float | None = None
         self._recent: deque[tuple[float, int]] = deque()
         self._skipped = 0  # sum over ``_recent``; whole numbers do not drift
+        self._gap_s = -math.inf  # end of the last gap that was left out of the rate
         self._same_since_s, self._same = 0.0, 0
         self._frames, self._repeats = 0, 0  # of runs that were not frozen
 
@@ -113,8 +118,24 @@ class Feed:
         self._set("dropping", share > (DROPPED_ENOUGH_SHARE if "dropping" in self._causes else DROPPING_SHARE))
         span_s = now_s - recent[0][0]
         if span_s > 0.75 * SPAN_S:
-            off = abs(delivered / span_s / self._fps - 1.0)
-            self._set("wrong_rate", off > (RATE_RIGHT_SHARE if "wrong_rate" in self._causes else RATE_OFF_SHARE))
+            limit = RATE_RIGHT_SHARE if "wrong_rate" in self._causes else RATE_OFF_SHARE
+            off = abs(delivered / span_s / self._fps - 1.0) > limit
+            if not (off and self._is_gap(delivered, span_s, limit)):
+                self._set("wrong_rate", off)
+
+    def _is_gap(self, delivered: int, span_s: float, limit: float) -> bool:
+        """Whether one gap alone puts the rate off; then the span does not say what the rate is."""
+        excess_s, gap_s, end_s, frames = max(
+            (later_s - sooner_s - (1 + skipped) / self._fps, later_s - sooner_s, later_s, 1 + skipped)
+            for (sooner_s, _), (later_s, skipped) in itertools.pairwise(self._recent)
+        )
+        rest_s = span_s - gap_s
+        # What is left of a long gap's span is too short to tell a rate from jitter.
+        right = rest_s < 0.5 * SPAN_S or abs((delivered - frames) / rest_s / self._fps - 1.0) <= limit
+        if excess_s <= 0.0 or not right or 0.0 < end_s - self._gap_s < GAP_APART_S:
+            return False
+        self._gap_s = end_s
+        return True
 
 
 def _is_same(one: NDArray[np.uint8], two: NDArray[np.uint8]) -> bool:

@@ -150,6 +150,37 @@ def test_stall_and_return() -> None:
     assert line.seen == set()
 
 
+@pytest.mark.parametrize("gap_s", [0.3, 0.5, 0.9, 1.3, 1.9])
+@pytest.mark.parametrize("skipped", [0, 3])
+def test_a_gap_shorter_than_a_stall_is_no_wrong_rate(gap_s: float, skipped: int) -> None:
+    """A camera lost for a moment: at no frame afterwards is its rate blamed, also when some frames are known missed."""
+    line = Line()
+    for _ in range(2):
+        line.run(3100)
+        line.now_s += gap_s
+        line.run(1, skipped=skipped)
+    line.run(400)
+    assert line.seen == set()
+
+
+def test_gaps_again_and_again_are_a_wrong_rate() -> None:
+    """A source that hangs every other second does not deliver as it should."""
+    line = Line()
+    for _ in range(4):
+        line.run(150)
+        line.now_s += 0.8
+    assert "wrong_rate" in line.seen
+
+
+@pytest.mark.parametrize("rate", [60.0, 120.0])
+def test_a_gap_hides_no_wrong_rate(rate: float) -> None:
+    """A camera that comes back at another rate is said to."""
+    line = Line()
+    line.run(300)
+    line.now_s += 0.9
+    assert line.run(500, period_s=1 / rate) == {"wrong_rate"}
+
+
 def test_wrong_size() -> None:
     """A picture of another size is said, and forgotten with the first right one."""
     line = Line()
