@@ -13,6 +13,7 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
 
+import paho.mqtt.client as mqtt
 import pytest
 
 DEPLOY = Path(__file__).parents[1] / "deploy"
@@ -82,6 +83,33 @@ def test_the_loopback_broker_keeps_states_over_a_restart(tmp_path: Path) -> None
         assert sent.returncode == 0, sent.stderr
     with broker(config, port):
         assert client("mosquitto_sub", port, "-C", "1", "-W", "5", "-t", f"{BASE}/#").stdout == "good\n"
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("version", ["mqttv311", "mqttv5"])
+def test_the_loopback_broker_keeps_everything_for_a_reader_that_is_away(tmp_path: Path, version: str) -> None:
+    """A session that sleeps while windows (QoS 0) and bars (QoS 1) come mixed, more than may be in flight."""
+    port = free_port()
+    config = tmp_path / "mosquitto.conf"
+    config.write_text(loopback_config(tmp_path, port), encoding="utf-8")
+    topic = f"{BASE}/bar"
+    session = ["-V", version, "-c", "-i", "reader", "-q", "1", "-t", topic]
+    session += ["-x", "3600"] if version == "mqttv5" else []
+    bars = [str(number) for number in range(60)]
+    with broker(config, port):
+        assert client("mosquitto_sub", port, *session, "-E").returncode == 0
+        station = mqtt.Client(mqtt.CallbackAPIVersion.VERSION2, protocol=mqtt.MQTTv5)
+        station.max_inflight_messages_set(0)
+        station.connect("127.0.0.1", port)
+        station.loop_start()
+        sent = []
+        for number in bars:
+            sent += [station.publish(topic, f"window before {number}", qos=0), station.publish(topic, number, qos=1)]
+        for one in sent:
+            one.wait_for_publish(PATIENCE_S)
+        station.disconnect()
+        station.loop_stop()
+        assert client("mosquitto_sub", port, *session, "-C", "60", "-W", "10").stdout.split() == bars
 
 
 @pytest.mark.slow
