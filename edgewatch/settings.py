@@ -265,6 +265,9 @@ class JudgeSettings:
     least_streaks: int = _declare(
         50, _whole(1, 1_000_000), "a contact with fewer streaks than this is inconclusive: too few streaks"
     )
+    clock_must_sync: bool = _declare(
+        True, _flag(), "while the clock is not synchronised no bar of a live source is called conforming"
+    )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

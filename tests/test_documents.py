@@ -85,12 +85,13 @@ def test_the_mqtt_guide_lists_the_orders() -> None:
 
 
 def test_the_guide_to_causes_lists_them_all() -> None:
-    """Each cause with its own sentence, the condition it makes, whether it blinds, and something to do about it."""
+    """Each cause with its own sentence, the condition it makes, whether it blinds or withholds, and a remedy."""
     rows = table(text_of(TOP / "deploy/guides/causes.md"), "| cause |")
     assert [row[0].strip("`") for row in rows] == list(CAUSES)
     for (_, meaning, condition, remedy), cause in zip(rows, CAUSES.values(), strict=True):
         assert meaning == cause.sentence
-        assert condition == (f"`{cause.condition}`" if cause.condition else "–") + (", blind" if cause.blinds else "")
+        effect = ", blind" if cause.blinds else ", withholds" if cause.withholds else ""
+        assert condition == (f"`{cause.condition}`" if cause.condition else "–") + effect
         assert remedy
 
 

@@ -15,6 +15,7 @@ from collections.abc import Callable, Iterator
 from pathlib import Path
 
 from edgewatch.commands.options import add_bands, add_optics, add_station, load_settings, with_picture_size
+from edgewatch.commands.watch import LIVE
 from edgewatch.errors import DeviceError, SettingsError, StalledError
 from edgewatch.frames.newest import Newest
 from edgewatch.frames.registry import open_source
@@ -347,6 +348,12 @@ def _used_mb(path: Path) -> float:
 
 
 def _clock(settings: Settings, folder: Path) -> Iterator[Finding]:
-    synced = Clock().synced
-    detail = "synchronised" if synced else f"not synchronised: {CAUSES['clock_not_synced'].sentence}"
-    yield Finding(check="clock", result=GOOD if synced else NOTE, detail=detail)
+    if Clock().synced:
+        yield Finding(check="clock", result=GOOD, detail="synchronised")
+        return
+    if settings.judge.clock_must_sync and settings.source.uri.partition(":")[0] in LIVE:
+        detail = "not synchronised: no bar is called conforming until it is, unless judge.clock_must_sync = false"
+        yield Finding(check="clock", result=UNFIT, detail=detail)
+    else:
+        detail = f"not synchronised: {CAUSES['clock_not_synced'].sentence}"
+        yield Finding(check="clock", result=NOTE, detail=detail)

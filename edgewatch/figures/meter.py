@@ -36,7 +36,8 @@ class BarDone:
     windows: tuple[Figures, ...]
 
 
-_Waiting = tuple[Detections, float, int]
+_Waiting = tuple[Detections | None, float, int]
+"""Detections (``None``: a picture shown again, which tells nothing new), time (s), frames skipped before."""
 
 
 class BarMeter:
@@ -60,6 +61,7 @@ class BarMeter:
         self._window = Tally(self._optics)
         self._windows: list[Figures] = []
         self._window_begin_s = math.nan
+        self._skipped = 0  # before pictures shown again
         self._held.clear()
 
     @property
@@ -76,11 +78,15 @@ class BarMeter:
         """Figures of the contact under way, up to its last full window."""
         return self._bar.figures()
 
-    def update(self, detections: Detections, *, t_s: float, skipped: int = 0) -> list[Begin | WindowDone | BarDone]:
-        """Take one frame at ``t_s`` (s)."""
+    def update(
+        self, detections: Detections, *, t_s: float, skipped: int = 0, again: bool = False
+    ) -> list[Begin | WindowDone | BarDone]:
+        """Take one frame at ``t_s`` (s). ``again``: its picture is the one before, shown again: the contact goes on,
+        and nothing is counted. Its track would be, its bursts would not, so a good bar would look like a foreign one.
+        """
         streaks = len(detections.streaks)
         said = self._finder.update(t_s, streaks)
-        frame = (detections, t_s, skipped)
+        frame = (None if again else detections, t_s, skipped)
         if isinstance(said, End):
             self._before.clear()
             return self._finish(said)
@@ -109,31 +115,34 @@ class BarMeter:
         detections, t_s, skipped = frame
         done: list[Begin | WindowDone | BarDone] = []
         if self._is_full(t_s):  # frames are missing: none came that could end the window in time
-            done.append(self._end_window(t_s))
-        self._window.add(detections, t_s=t_s, skipped=skipped)
+            done += self._end_window(t_s)
+        self._skipped += skipped
+        if detections is not None:
+            self._window.add(detections, t_s=t_s, skipped=self._skipped)
+            self._skipped = 0
         next_s = t_s + self._optics.period_s
         if self._is_full(next_s):  # with its last frame, not with the first of the next: a decision is a period earlier
-            done.append(self._end_window(next_s))
+            done += self._end_window(next_s)
         return done
 
     def _is_full(self, t_s: float) -> bool:
         """Whether a frame at ``t_s`` belongs to a later window."""
         return t_s - self._window_begin_s >= self._settings.window_s - 0.5 * self._optics.period_s
 
-    def _end_window(self, next_s: float) -> WindowDone:
-        """End the window; the next one is that in which ``next_s`` lies."""
+    def _end_window(self, next_s: float) -> list[Begin | WindowDone | BarDone]:
+        """End the window; the next one is that in which ``next_s`` lies. One without a frame is not told."""
+        spans = math.floor((next_s - self._window_begin_s) / self._settings.window_s + 1e-6)
+        self._window_begin_s += max(1, spans) * self._settings.window_s
+        if not self._window.frames_seen:
+            return []
         window = self._window.figures()
         self._bar.merge(self._window)
         self._window.reset()
         self._windows.append(window)
-        spans = math.floor((next_s - self._window_begin_s) / self._settings.window_s + 1e-6)
-        self._window_begin_s += max(1, spans) * self._settings.window_s
-        return WindowDone(window=window, bar=self._bar.figures())
+        return [WindowDone(window=window, bar=self._bar.figures())]
 
     def _finish(self, end: End) -> list[Begin | WindowDone | BarDone]:
-        done: list[Begin | WindowDone | BarDone] = []
-        if self._window.frames_seen:
-            done.append(self._end_window(end.t_s))
+        done = self._end_window(end.t_s)
         bar = BarDone(
             begin_s=end.begin_s,
             end_s=end.t_s,

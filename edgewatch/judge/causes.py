@@ -1,7 +1,8 @@
 """Every cause that a bar or the station can be given: the only registry.
 
 A cause of the station makes its condition one of the five words of NAMUR NE 107; one that blinds keeps every bar from
-being called conforming while it lasts, and evidence taken meanwhile is not used. A cause of a bar alone has no
+being called conforming while it lasts, and evidence taken meanwhile is not used. One that withholds does the first
+without the second: the station sees, so a foreign bar is condemned all the same. A cause of a bar alone has no
 condition.
 """
 
@@ -23,12 +24,14 @@ doubtful figures, because while somebody works on the station its figures mean n
 @dataclass(frozen=True, slots=True)
 class Cause:
     """What it means in one sentence, the condition it makes of the station (empty: none), whether it blinds,
-    whether it is an alert where a failure or blindness is one anyway."""
+    whether it is an alert where a failure, blindness or withholding is one anyway, whether it withholds `conforming`
+    though the station sees."""
 
     sentence: str
     condition: str = ""
     blinds: bool = False
     alerts: bool = False
+    withholds: bool = False
 
 
 CAUSES = MappingProxyType(
@@ -79,7 +82,9 @@ CAUSES = MappingProxyType(
         "outbox_filling": Cause("Unsent messages have nearly filled journal or disk.", MAINTENANCE, alerts=True),
         "windows_thinned": Cause("Unsent window messages were thinned to save space.", MAINTENANCE),
         "evidence_lost": Cause("Evidence pictures cannot be kept.", MAINTENANCE),
-        "clock_not_synced": Cause("The clock is not synchronised; times may be wrong.", MAINTENANCE),
+        "clock_not_synced": Cause(
+            "The clock is not synchronised; times may be wrong.", OUT_OF_SPECIFICATION, withholds=True
+        ),
         "part_restarted": Cause("A part of the station failed and was started again.", MAINTENANCE),
     }
 )

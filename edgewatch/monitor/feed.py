@@ -33,7 +33,7 @@ NOISY_SHARE = 0.05
 """A source of whose frames fewer than this share repeated so far has noise: its pictures never repeat by themselves.
 Lossy video of a dark scene does repeat; there only a repeated picture with streaks in it is frozen."""
 _MEMORY_FRAMES = 20_000
-"""How far back that share is remembered; older frames count half."""
+"""How far back shares are remembered; older frames count half."""
 _SAMPLE_ROWS = 8
 """Every so many rows are compared first; noise tells pictures apart there, and the rest need not be read."""
 
@@ -58,6 +58,12 @@ class Feed:
         self._gap_s = -math.inf  # end of the last gap that was left out of the rate
         self._same_since_s, self._same = 0.0, 0
         self._frames, self._repeats = 0, 0  # of runs that were not frozen
+        self._lit, self._lit_again = 0, 0  # pictures with streaks, and how many of them were shown again
+        self._rare = False  # whether the picture shown now is the exception in being shown again
+        self.again = False
+        """Whether the last frame's picture, with streaks in it, was that of the frame before, from a source that hardly
+        ever does that: it is not evidence, however soon the source goes on. A clip that was brought to a higher rate by
+        showing pictures twice does it all the time, and is taken as it is, in teaching as in judging."""
 
     def update(self, frame: Frame, *, now_s: float, streaks: int) -> frozenset[str]:
         """Take one frame, when it was taken over (monotonic, s), and how many streaks were seen in it.
@@ -98,8 +104,16 @@ class Feed:
                 self._frames, self._repeats = self._frames // 2, self._repeats // 2
             self._last, self._same, self._same_since_s = frame.picture, 0, frame.t_s
             self._causes.discard("frozen")
+            self.again = False
+            self._lit += streaks > 0
+            if self._lit > _MEMORY_FRAMES:
+                self._lit, self._lit_again = self._lit // 2, self._lit_again // 2
             return
         self._same += 1
+        if self._same == 1:
+            self._rare = self._lit >= LEAST_FRAMES and self._lit_again < NOISY_SHARE * self._lit
+            self._lit_again += streaks > 0  # a run counts once, however long: a halt is no habit
+        self.again = self._rare and streaks > 0
         noisy = self._frames >= LEAST_FRAMES and self._repeats < NOISY_SHARE * self._frames
         if self._same >= FROZEN_FRAMES and frame.t_s - self._same_since_s >= FROZEN_S and (noisy or streaks > 0):
             self._causes.add("frozen")

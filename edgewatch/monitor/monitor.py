@@ -47,6 +47,8 @@ SUMMARY_APART_S = 1.0
 """Summaries during a contact are at least this far apart (s)."""
 FEED_CAUSES = ("frozen", "dropping", "wrong_size", "wrong_rate", "stalled")
 DRIFT_CAUSES = ("drift_rate", "drift_reach")
+REHEARSED = "rehearsal"
+"""The kind of source whose bars come off no line, also when it runs at a camera's pace."""
 
 
 class Monitor:
@@ -74,7 +76,7 @@ class Monitor:
         self._blindness = Blindness()
         self._lens = LensWatch()
         self._shake = ShakeWatch(self._optics.fps)
-        self._complaints = Complaints()
+        self._complaints = Complaints(tolerated=() if self._needs_clock(live) else ("clock_not_synced",))
         self._feed = Feed(
             width_px=self._optics.width_px,
             height_px=self._optics.height_px,
@@ -120,6 +122,7 @@ class Monitor:
         effects.append(self._remember_expected())
         self._complaints.set("no_band", self._lacks_band())
         effects.append(self._condition_record())
+        effects += self._look_at_clock(stamp)
         if self._settings.relay.kind != "none":
             effects.append(self._relay_effect())
         effects += self._summary(stamp, always=True)
@@ -143,11 +146,11 @@ class Monitor:
         effects += self.complain({cause: cause in causes for cause in FLAG_CAUSES.values()}, stamp)
         shaking = self._shake.update(detections, frame.t_s)
         effects += self.complain({"vibration": shaking}, stamp, detail=f"{self._shake.shake_px:.1f} px")
-        for event in self._meter.update(detections, t_s=frame.t_s, skipped=frame.skipped):
+        for event in self._meter.update(detections, t_s=frame.t_s, skipped=frame.skipped, again=self._feed.again):
             effects += self._on_event(event, stamp)
         effects += self._look_at_line(stamp)
         if self._bar is not None:
-            self._bar.note(self._complaints.blinding)
+            self._bar.note(self._complaints.withholding)
             self._bar.exhibits.offer(frame.picture, detections, frame.t_s)
         if self._view_wanted is not None:
             effects.append(self._view(self._view_wanted, frame, detections))
@@ -176,14 +179,8 @@ class Monitor:
         """Time passes, a few times a second at least, also while no picture comes. ``filling``: see ``Filling``."""
         self._unsent, self._thinned = unsent, thinned
         silent = self._feed.silent(stamp.monotonic_s)
-        effects = self.complain(
-            {
-                "clock_not_synced": not stamp.synced,
-                "windows_thinned": thinned > 0,
-                "stalled": "stalled" in silent,
-            },
-            stamp,
-        )
+        effects = self._look_at_clock(stamp)
+        effects += self.complain({"windows_thinned": thinned > 0, "stalled": "stalled" in silent}, stamp)
         effects += self.complain({"outbox_filling": bool(filling)}, stamp, detail=filling)
         effects += self._look_at_line(stamp)
         effects += self._blind_stop(stamp)
@@ -193,6 +190,17 @@ class Monitor:
         """The line's contact input says that a bar is at the wheel, or no longer."""
         self._line.report(closed, stamp.monotonic_s)
         return self._look_at_line(stamp)
+
+    def _needs_clock(self, live: bool) -> bool:
+        """Whether a bar of unknown time is kept from being called conforming: it cannot be assigned to heat and bundle.
+
+        A clip was taken at another time anyway, and a rehearsed bar is of no heat.
+        """
+        kind = self._settings.source.uri.partition(":")[0]
+        return live and kind != REHEARSED and self._settings.judge.clock_must_sync
+
+    def _look_at_clock(self, stamp: Stamp) -> list[Effect]:
+        return self.complain({"clock_not_synced": not stamp.synced}, stamp)
 
     def _look_at_line(self, stamp: Stamp) -> list[Effect]:
         missed = self._line.missed(self._bar is not None, stamp.monotonic_s)
@@ -207,7 +215,7 @@ class Monitor:
         for cause in changed:
             effects += self._cause_alert(cause, active=causes[cause])
         if self._bar is not None:  # not only with the next picture: it may not come, or end the cause
-            self._bar.note(self._complaints.blinding)
+            self._bar.note(self._complaints.withholding)
         effects.append(self._condition_record())
         return effects + self._blind_stop(stamp)
 
@@ -269,12 +277,13 @@ class Monitor:
     # ------------------------------------------------------------------ contacts
 
     def _on_event(self, event: Begin | WindowDone | BarDone, stamp: Stamp) -> list[Effect]:
+        clock = self._look_at_clock(stamp)  # not only with the next tick: the record that follows has this stamp
         if isinstance(event, Begin):
-            return self._on_begin()
+            return clock + self._on_begin()
         assert self._bar is not None
         if isinstance(event, WindowDone):
-            return self._on_window(self._bar, event, stamp)
-        return self._on_bar(self._bar, event, stamp)
+            return clock + self._on_window(self._bar, event, stamp)
+        return clock + self._on_bar(self._bar, event, stamp)
 
     def _on_begin(self) -> list[Effect]:
         self._number += 1
@@ -290,7 +299,7 @@ class Monitor:
 
     def _on_window(self, bar: BarAtWheel, event: WindowDone, stamp: Stamp) -> list[Effect]:
         lens = self._look_at_lens(event.window, stamp)
-        bar.note(self._complaints.blinding)
+        bar.note(self._complaints.withholding)
         self._wheel.update(event.window)
         self._rolling = messages.figures(event.bar)
         effects: list[Effect] = [
@@ -498,11 +507,12 @@ class Monitor:
     # ------------------------------------------------------------------ what is told
 
     def _cause_alert(self, cause: str, *, active: bool) -> list[Effect]:
-        """Failures, whatever blinds the station, drift, and what threatens records are alerts; the rest shows in the
-        condition alone.
+        """Failures, whatever keeps bars from being called conforming, drift, and what threatens records are alerts; the
+        rest shows in the condition alone.
         """
         what = CAUSES[cause]
-        if not (what.blinds or what.alerts or what.condition == FAILURE or cause.startswith("drift")):
+        withholds = self._complaints.withholds(cause)
+        if not (withholds or what.alerts or what.condition == FAILURE or cause.startswith("drift")):
             return []
         if not active:
             return self._told_alerts(self._alerts.go(cause))
@@ -531,7 +541,7 @@ class Monitor:
 
     def _condition_record(self) -> Record:
         causes = [
-            messages.cause(cause=name, condition=CAUSES[name].condition, detail=self._complaints.detail(name))
+            messages.cause(cause=name, condition=self._complaints.word(name), detail=self._complaints.detail(name))
             for name in self._complaints.causes
         ]
         return Record(kind="condition", payload=messages.condition(condition=self._complaints.condition, causes=causes))

@@ -7,6 +7,7 @@ import os
 import threading
 from collections.abc import Callable
 from pathlib import Path
+from types import SimpleNamespace
 from typing import Any
 
 import numpy as np
@@ -223,6 +224,24 @@ def test_disk_too_small(check: Check) -> None:
     free_mb = float(found["disk"][0][1].split()[0])
     assert (found["disk"][0][0] == "unfit") == (free_mb < 1e6)
     assert found["evidence"][0][0] == "note"
+
+
+@pytest.mark.parametrize(
+    ("text", "source", "result"),
+    [
+        ("", "camera:/dev/nowhere", "unfit"),
+        ("[judge]\nclock_must_sync = false\n", "camera:/dev/nowhere", "note"),
+        ("", "clip:nowhere.mkv", "note"),
+    ],
+)
+def test_a_clock_that_nobody_sets(
+    check: Check, monkeypatch: pytest.MonkeyPatch, text: str, source: str, result: str
+) -> None:
+    """A camera's bars would not conform: unfit, with the key that says otherwise; else worth a note."""
+    monkeypatch.setattr("edgewatch.commands.check.Clock", lambda: SimpleNamespace(synced=False))
+    _, found, _ = check(text, source=source)
+    ((said, detail),) = found["clock"]
+    assert (said, "judge.clock_must_sync" in detail) == (result, result == "unfit")
 
 
 def test_configuration_that_cannot_be_used(check: Check) -> None:

@@ -99,6 +99,30 @@ def test_skipped_frames_are_passed_on() -> None:
     assert bar.bar.frames_skipped == bar.bar.frames_seen == 100
 
 
+def test_a_picture_shown_again_is_not_counted() -> None:
+    """The bar goes on over 0.6 s of one picture, through two ends of windows, and is measured by the rest alone."""
+    rng = np.random.default_rng(9)
+    frames = [busy(rng) for _ in range(200)]
+    meter, without = BarMeter(FigureSettings(), OPTICS), Tally(OPTICS)
+    events = []
+    for number in range(320):
+        again = 80 <= number < 200
+        frame = frames[79] if again else frames[number - 120 if number >= 200 else number]
+        events += meter.update(frame, t_s=number / 200.0, again=again, skipped=int(number == 120))
+        if not again:
+            without.add(frame, t_s=number / 200.0, skipped=int(number == 200))
+    events += meter.close(1.6)
+    (bar,) = [event for event in events if isinstance(event, BarDone)]
+    alone = without.figures()
+    for name in ("begin_s", "end_s", "frames_seen", "streaks", "bursts"):
+        assert getattr(bar.bar, name) == getattr(alone, name), name
+    for name in ("track_m", "exposure_m", "reach_mm"):
+        assert getattr(bar.bar, name) == pytest.approx(getattr(alone, name)), name
+    assert bar.bar.frames_skipped == 1  # before one of those that were not counted
+    assert [round(one.begin_s, 3) for one in bar.windows] == [0.0, 0.25, 1.0, 1.25, 1.5]
+    assert [one.frames_seen for one in bar.windows] == [50, 30, 50, 50, 20]
+
+
 def test_an_empty_recording_has_no_contacts() -> None:
     """Nothing seen, nothing said."""
     assert events_of([seen()] * 300) == []

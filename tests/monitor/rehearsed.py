@@ -34,13 +34,13 @@ SEGMENT_S = 1.6
 GRADE = "C45"
 
 
-def settings() -> Settings:
-    """A small picture of the whole stream."""
+def settings(**judge: Any) -> Settings:
+    """A small picture of the whole stream, from a camera; ``judge``: more keys of that section."""
     return read_settings(
         {
-            "source": {"width_px": 320, "height_px": 200},
+            "source": {"uri": "camera:/dev/video0", "width_px": 320, "height_px": 200},
             "optics": {"mm_per_px": 2.5, "contact_px": [15, 100], "fps": FPS, "exposure_ms": 2.5},
-            "judge": {"expect": GRADE, "least_streaks": 80},
+            "judge": {"expect": GRADE, "least_streaks": 80, **judge},
         },
         file="test",
     )
@@ -82,7 +82,7 @@ def taught() -> Band:
 @dataclass
 class Line:
     """A monitor, live, and the clock of the test. ``conditions``: causes named after each change; ``bars``: payloads
-    with the moment at which they were told.
+    with the moment at which they were told; ``alerts``: names and states; ``word``: the condition in force.
     """
 
     monitor: Monitor = field(
@@ -91,7 +91,9 @@ class Line:
     now_s: float = 0.0
     synced: bool = True
     conditions: list[tuple[float, frozenset[str]]] = field(default_factory=list)
+    alerts: list[tuple[str, str]] = field(default_factory=list)
     bars: list[tuple[float, Mapping[str, Any]]] = field(default_factory=list)
+    word: str = ""
     _index: int = 0
 
     def take(self, effects: list[Effect]) -> None:
@@ -99,6 +101,9 @@ class Line:
         for effect in effects:
             if isinstance(effect, Record) and effect.kind == "condition":
                 self.conditions.append((self.now_s, frozenset(one["cause"] for one in effect.payload["causes"])))
+                self.word = effect.payload["condition"]
+            if isinstance(effect, Record) and effect.kind == "alert":
+                self.alerts.append((effect.payload["alert"], effect.payload["state"]))
             if isinstance(effect, Record) and effect.kind == "bar":
                 self.bars.append((self.now_s, effect.payload))
 

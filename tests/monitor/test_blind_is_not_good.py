@@ -16,6 +16,7 @@ from edgewatch.judge.causes import CAUSES
 from edgewatch.monitor.lens import lens_limits
 from edgewatch.monitor.monitor import Monitor
 from edgewatch.rehearsal.steel import WORKSHOP
+from edgewatch.settings import Settings
 from tests.monitor.rehearsed import CONTACT_S, FPS, GRADE, Fault, Line, Picture, segment, settings, taught
 
 pytestmark = pytest.mark.slow
@@ -132,14 +133,65 @@ def test_a_fault_is_named_and_no_bar_conforms_until_it_has_gone(name: str) -> No
     assert judged[-1] == ("conforming", []), judged
 
 
-def test_without_a_synchronised_clock_bars_are_judged_and_it_is_said() -> None:
-    """The one cause of the list that does not blind: figures come from the camera's clock, a station without a time
-    server sees as well as any. The condition names it, every record carries it.
+def own_line(own: Settings, *, live: bool = True, synced: bool = False) -> Line:
+    """A line with settings of its own, whose clock is not synchronised."""
+    line = Line(monitor=Monitor(own, bands={GRADE: taught()}, live=live, named=GRADE), synced=synced)
+    line.take(line.monitor.begin(line.stamp()))
+    return line
+
+
+def test_a_live_bar_of_unknown_time_does_not_conform() -> None:
+    """Its record cannot be assigned to heat and bundle. The cause is named from the start, with an alert, and ends when
+    the clock is synchronised; a bar in the middle of which that happens has begun at a time that is not known.
     """
-    line = Line(synced=False)
+    line = own_line(settings())
+    assert line.stood("clock_not_synced", line.now_s)
+    assert line.word == "out_of_specification"
+    line.show(segment(1))
+    line.show(segment(2)[:FAULT_FROM])
+    line.synced = True
+    line.show(segment(2)[FAULT_FROM:])
+    assert not line.stood("clock_not_synced", line.now_s)
+    assert line.word == "good"
+    line.show(segment(3))
+    judged = [(bar["verdict"], bar["causes"]) for _, bar in line.bars]
+    assert judged == [("inconclusive", ["clock_not_synced"])] * 2 + [("conforming", [])]
+    assert line.alerts == [("clock_not_synced-1", "raised"), ("clock_not_synced-1", "cleared")]
+
+
+def test_a_clock_lost_between_two_ticks_is_seen_with_the_bar() -> None:
+    """The verdict goes by the stamp that the bar's record will have."""
+    line = own_line(settings(), synced=True)
+    for picture in segment(2):
+        line.synced = not line.monitor._meter.in_contact or line.now_s < CONTACT_S[1]
+        line.show([picture])
+    ((_, bar),) = line.bars
+    assert (bar["verdict"], bar["causes"]) == ("inconclusive", ["clock_not_synced"])
+
+
+def test_a_foreign_bar_is_condemned_by_any_clock() -> None:
+    """The station sees: the evidence counts, and the line is stopped."""
+    line = own_line(settings())
+    line.show(segment(8, steel="C100"))
+    ((_, bar),) = line.bars
+    assert (bar["verdict"], bar["causes"]) == ("nonconforming", ["clock_not_synced"])
+    assert ("nonconforming_bar-2", "raised") in line.alerts
+
+
+@pytest.mark.parametrize("why", ["clip", "rehearsal", "no time server"])
+def test_where_the_time_of_day_is_not_claimed_bars_are_judged_without_it(why: str) -> None:
+    """A clip and a rehearsed line have a time of their own; a plant without a time server has said so. The condition
+    names the cause all the same, without an alert.
+    """
+    own = settings(clock_must_sync=why != "no time server")
+    if why == "rehearsal":
+        own = dataclasses.replace(own, source=dataclasses.replace(own.source, uri="rehearsal:"))
+    line = own_line(own, live=why != "clip")
     line.show(segment(2))
     assert line.stood("clock_not_synced", line.now_s)
-    assert [bar["verdict"] for _, bar in line.bars] == ["conforming"]
+    assert line.word == "maintenance_required"
+    assert [(bar["verdict"], bar["causes"]) for _, bar in line.bars] == [("conforming", [])]
+    assert line.alerts == []
     line.synced = True
     line.show(segment(3))
     assert not line.stood("clock_not_synced", line.now_s)

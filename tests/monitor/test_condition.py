@@ -27,6 +27,27 @@ def test_worst_word_counts_and_comes_first() -> None:
     assert complaints.blinding == ("stalled", "saturated")
 
 
+def test_withholding_is_not_blindness() -> None:
+    """Without a synchronised clock the station sees, and no bar conforms."""
+    complaints = Complaints()
+    complaints.raise_("clock_not_synced")
+    assert (complaints.blinding, complaints.withholding) == ((), ("clock_not_synced",))
+    assert complaints.condition == "out_of_specification"
+    complaints.raise_("stalled")
+    assert (complaints.blinding, complaints.withholding) == (("stalled",), ("stalled", "clock_not_synced"))
+
+
+def test_a_tolerated_cause_is_named_and_no_more() -> None:
+    """It makes maintenance required, and does not go before a worse one."""
+    complaints = Complaints(tolerated=("clock_not_synced",))
+    complaints.raise_("clock_not_synced")
+    assert (complaints.causes, complaints.withholding) == (("clock_not_synced",), ())
+    assert complaints.condition == complaints.word("clock_not_synced") == "maintenance_required"
+    complaints.raise_("saturated")
+    assert complaints.causes == ("saturated", "clock_not_synced")
+    assert complaints.condition == "out_of_specification"
+
+
 def test_repeats_change_nothing() -> None:
     """Raising or clearing twice is no news."""
     complaints = Complaints()
@@ -49,5 +70,6 @@ def test_every_cause_has_a_word_and_a_sentence() -> None:
     """The table is complete."""
     for name, cause in CAUSES.items():
         assert cause.condition in ("", *CONDITIONS[1:]), name
-        assert cause.condition or not cause.blinds, name
+        assert cause.condition or not (cause.blinds or cause.withholds), name
+        assert not (cause.blinds and cause.withholds), name
         assert len(cause.sentence) > 10, name

@@ -94,6 +94,31 @@ def test_frozen_streaks_of_any_source() -> None:
     assert line.run(1) == frozenset()
 
 
+def test_a_picture_with_streaks_shown_again_is_no_evidence() -> None:
+    """From its first repeat on, however short the halt and however many there were; dark pictures say nothing."""
+    line = Line()
+    for _ in range(30):
+        line.run(25, streaks=12)
+        assert not line.feed.again
+        still = next(pictures(seed=9))
+        line.run(1, picture=still, streaks=12)
+        assert not line.feed.again
+        for _ in range(40):
+            line.run(1, picture=still, streaks=12)
+            assert line.feed.again
+        line.run(1, picture=still, streaks=0)
+        assert not line.feed.again
+    assert line.seen == set()
+
+
+def test_a_source_that_shows_every_picture_twice_is_taken_as_it_is() -> None:
+    """A clip brought to a higher rate: teaching has counted its repeats as well."""
+    line = Line(live=False)
+    for seed in range(60):
+        line.run(2, picture=next(pictures(seed=seed)), streaks=12)
+        assert not line.feed.again
+
+
 def test_frozen_clip() -> None:
     """A freeze recorded into a clip is found as well; its time is that of the frames."""
     line = Line(live=False)
