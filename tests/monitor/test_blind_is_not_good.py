@@ -197,6 +197,27 @@ def test_where_the_time_of_day_is_not_claimed_bars_are_judged_without_it(why: st
     assert not line.stood("clock_not_synced", line.now_s)
 
 
+def test_halts_too_short_to_be_named_count_for_nothing() -> None:
+    """A good bar whose picture stands still for 0.4 s three times, which is not yet ``frozen``: it is measured by the
+    pictures that differ, and conforms.
+    """
+    line = Line()
+    pictures = segment(1)
+    line.show(pictures[:FAULT_FROM])
+    for first in range(FAULT_FROM, FAULT_FROM + 75, 25):
+        line.show([pictures[first]] * 40)
+        line.show(pictures[first : first + 25])
+    line.show(pictures[FAULT_FROM + 75 :])
+    line.show(segment(2)[:40])
+    assert not line.named("frozen")
+    whole = Line()
+    whole.show(pictures)
+    (_, bar), (_, alone) = line.bars[0], whole.bars[0]
+    assert bar["frames_seen"] == alone["frames_seen"]
+    assert bar["end_s"] - bar["begin_s"] == pytest.approx(alone["end_s"] - alone["begin_s"] + 1.2)
+    assert (bar["verdict"], bar["causes"]) == ("conforming", [])
+
+
 @pytest.mark.parametrize("steel", ["C15", "C100", "42CrMo4"])
 def test_another_steel_on_a_clean_lens_is_not_a_soiled_lens(steel: str) -> None:
     """Narrowest, widest and dimmest streaks, on a new wheel and on a worn one; nor does the camera shake."""
