@@ -1,7 +1,8 @@
 """Damaged journals beside the journal: ``FILE.damaged-TIME``, with their logs; the newest stay, older ones give way.
 
 ``-unsent`` behind the name: what it holds was not taken over yet (killed meanwhile, no room for a new file). Such a
-file is never deleted; the next start takes over and gives it its final name.
+file is never deleted, however many there are, because it may hold the only copy of undelivered records; the next start
+takes over and gives it its final name, or tells that it still waits.
 """
 
 from __future__ import annotations

@@ -91,6 +91,7 @@ class Journal:
         self._inode = 0
         self._floor = 0
         self._prune_after = 0
+        self._told: set[Path] = set()
         self._outbox = Outbox(thin_windows_mb * 1e6)
         try:
             with self._lock:
@@ -292,7 +293,7 @@ class Journal:
         if not known:  # its number file is gone as well: seconds since 1970 exceed any count of records
             ceiling.raise_to(max(int(self._utc()), RESERVE))
         try:
-            aside = self._aside.take(self._utc())
+            self._aside.take(self._utc())
         except OSError as error:
             raise DeviceError(
                 f"journal {self.path}: is damaged ({reason}) and cannot be set aside: {error.strerror or error}"
@@ -300,10 +301,12 @@ class Journal:
         # A new file that cannot be written now is begun empty by the next call that can, and then takes over.
         with contextlib.suppress(DeviceError, DamagedError):
             self._opened()
-        self._take_over(reason, aside)
+        self._take_over(reason)
 
-    def _take_over(self, reason: str, newest: Path | None = None) -> None:
-        """Take over what is whole from the files set aside where that was not done yet, and tell of each."""
+    def _take_over(self, reason: str) -> None:
+        """Take over what is whole from the files set aside where that was not done yet, and tell of each: also, once,
+        of one that goes on waiting, because undelivered records lie in it.
+        """
         for aside in self._aside.waiting():
             kept, saved = aside, "nothing could be taken over: there is no new file"
             db = self._db
@@ -316,8 +319,9 @@ class Journal:
                 except (*table.FAILURES, DamagedError, OSError) as error:
                     saved = f"nothing could be taken over: {error}"
                     self._roll_back(db)
-            if kept == aside and aside != newest:
-                continue  # told before
+            if kept == aside and aside in self._told:
+                continue
+            self._told.add(aside)
             deleted = self._aside.clear(kept)
             if self._on_set_aside is not None:
                 self._on_set_aside(kept, "; ".join([reason, saved, *deleted]))

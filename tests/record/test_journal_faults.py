@@ -214,6 +214,34 @@ def test_damage_found_while_running_loses_nothing_of_the_call(file: Path):
     journal.close()
 
 
+def test_a_damaged_file_that_still_waits_is_told_at_each_start_once(file: Path, monkeypatch: pytest.MonkeyPatch):
+    """Undelivered records lie in it: it stays, whatever is kept, and every start says so until it is taken over."""
+    good = _filled(file, 400)
+    file.write_bytes(good[: len(good) - 2048] + b"\xff" * 2048)
+
+    def full(aside: Path, db: object) -> tuple[int, int]:
+        raise sqlite3.OperationalError("database or disk is full")
+
+    told: list[str] = []
+
+    def start() -> Journal:
+        return Journal(file, keep_damaged=1, on_set_aside=lambda path, reason: told.append(f"{path.name}: {reason}"))
+
+    with monkeypatch.context() as patch:
+        patch.setattr("edgewatch.record.journal.salvage", full)
+        start().close()
+        (waiting,) = file.parent.glob("*-unsent")
+        journal = start()
+        file.rename(f"{file}.away")  # it is opened anew, and does not tell again
+        journal.append([alert()], stamp=stamp())
+        journal.close()
+    assert len(told) == 2
+    assert all(text.startswith(waiting.name) and "disk is full" in text for text in told)
+    start().close()
+    assert len(told) == 3 and "taken over: " in told[2]
+    assert not list(file.parent.glob("*-unsent"))
+
+
 def test_two_damaged_files_in_one_second_do_not_overwrite_each_other(file: Path):
     """Names are kept apart."""
     told: list[Path] = []
