@@ -6,7 +6,7 @@ from collections.abc import Iterator
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.typing import NDArray
 
@@ -61,6 +61,7 @@ def test_sound_delivery_is_not_blamed() -> None:
     assert line.seen == set()
 
 
+@settings(deadline=None)
 @given(jitter=st.lists(st.floats(-0.009, 0.03), min_size=50, max_size=300))
 def test_jitter_of_the_scheduler_is_not_blamed(jitter: list[float]) -> None:
     """Frames taken over late, in bunches, are no wrong rate as long as they are not late for ever."""
