@@ -62,7 +62,8 @@ class Stream:
 class Truth:
     """What a picture shows: ``streaks`` (N, 4) px with their height in noise deviations ``snr`` (N,); ``bursts``
     (M, 2) in the picture where three arms first drew long enough; ``late`` (M,): went off before this exposure began;
-    ``glowing`` (K, 2) and ``drew_s`` (K,): every burst with an arm drawn here, and for how long its third arm was;
+    ``glowing`` (K, 2), ``drew_s`` and ``glowing_late`` (K,): every burst with an arm drawn here, for how long its third
+    arm was, and whether it went off before;
     ``track_px``: streak length within the picture, faint ones too; ``struck``: bursts that went off in this exposure.
     """
 
@@ -72,6 +73,7 @@ class Truth:
     late: NDArray[np.bool_]
     glowing: NDArray[np.float64]
     drew_s: NDArray[np.float64]
+    glowing_late: NDArray[np.bool_]
     track_px: float
     struck: int
 
@@ -267,6 +269,7 @@ class Scene:
             late=time[shown] < begin,
             glowing=px[glowing],
             drew_s=third[glowing],
+            glowing_late=time[glowing] < begin,
             track_px=track,
             struck=int(((time >= begin) & (time < end) & within).sum()),
         )
@@ -335,3 +338,30 @@ def crossing_lines(
     scene.optics, scene.look, scene._rng = optics, look, rng
     scene._hot, scene._hot_dn = np.zeros(0, np.int64), np.zeros(0)
     return scene._develop(light)
+
+
+def loose_dashes(optics: Optics, look: Look, rng: np.random.Generator, *, dashes: int = 60) -> NDArray[np.uint8]:
+    """Dashes and spots strewn about, from thin to several pixels wide: spatter, drops, lamps, none of them a burst."""
+    w, h = optics.width_px, optics.height_px
+    at, weight = [], []
+    for _ in range(dashes):
+        length = float(rng.choice([0.0, rng.uniform(2, 15), rng.uniform(10, 50)]))
+        wide = float(rng.uniform(0.0, 2.5))
+        turn = (
+            math.radians(optics.direction_deg + rng.normal(0, 25)) if rng.uniform() < 0.6 else rng.uniform(0, math.pi)
+        )
+        number = max(40, int(length * 12))
+        s = rng.uniform(-0.5, 0.5, number) * length
+        aside = rng.normal(0, wide, number)
+        x, y = rng.uniform(0, w), rng.uniform(0, h)
+        at.append(
+            np.stack(
+                [x + s * math.cos(turn) - aside * math.sin(turn), y + s * math.sin(turn) + aside * math.cos(turn)], 1
+            )
+        )
+        area = (length + 2.5 * look.spread_px) * 2.5 * math.hypot(wide, look.spread_px)
+        weight.append(np.full(number, rng.uniform(30, 250) * area / number))
+    scene = Scene.__new__(Scene)
+    scene.optics, scene.look, scene._rng = optics, look, rng
+    scene._hot, scene._hot_dn = np.zeros(0, np.int64), np.zeros(0)
+    return scene._develop(_splat(np.concatenate(at), np.concatenate(weight), w, h, look.spread_px))

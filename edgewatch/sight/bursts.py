@@ -3,9 +3,11 @@
 Candidates are points where the lines of pieces of ridge meet beyond their ends (a Hough transform for points: every
 pair of pieces votes for its intersection), and points from which brightness falls off in every direction. About each
 the picture is read on rings, turned so that the stream's own direction there comes first (a log-polar description,
-Belongie et al. 2002); a perceptron with one hidden layer (Rumelhart, Hinton & Williams 1986) tells a burst from a
-crossing, an end beside another streak, or two streaks that overlap. Its weights were learnt from both simulations with
-varied rendering by ``tests/bench/learn_bursts.py``.
+Belongie et al. 2002). A small perceptron sifts out what is clearly none (a cascade, Viola & Jones 2001). On the rest a
+net that shares its weights over directions (convolution, LeCun et al. 1989, here round the ring) tells a burst from a
+crossing, an end beside another streak, or two streaks that overlap; it also says where the burst is, since what is
+seen of a late one lies further down the stream, and whether it went off before the exposure. Weights were learnt from
+both simulations with varied rendering by ``tests/bench/learn_bursts.py``.
 """
 
 from __future__ import annotations
@@ -19,7 +21,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
-from edgewatch.sight.burst_weights import HIDDEN, HIDDEN_BIAS, OUTPUT, OUTPUT_BIAS
+from edgewatch.sight import burst_weights as learnt
 from edgewatch.sight.ridges import Ridges
 from edgewatch.sight.segments import Segments
 
@@ -52,7 +54,7 @@ this share; along a streak it has not."""
 BLOB_NOISE = 8.0
 """A blob stands this many deviations of the blurred picture's noise above the background."""
 
-RING_RADII_PX = (0.0, 1.5, 3.0, 4.5, 6.0, 7.5, 9.0, 11.0, 13.0, 15.5, 18.5, 22.0)
+RING_RADII_PX = (0.0, 1.5, 3.0, 4.5, 6.0, 7.5, 9.0, 11.0, 13.0, 15.5, 18.5, 22.0, 26.0)
 RING_DIRECTIONS = 36
 """Rings and directions on which the picture about a candidate is read: at most 3.8 px apart."""
 
@@ -66,6 +68,16 @@ LEVEL_NOISE = 3.0
 MERGE_PX = 12.0
 """Of candidates nearer to each other than this only the likeliest is kept (px)."""
 
+SIFT_LEAST = 0.01
+"""Candidates to which the small perceptron gives less than this are not looked at again: see ``learn_bursts`` for the
+share of bursts that this costs."""
+
+FIRST_REACH, SECOND_REACH, SECOND_STEP = 2, 1, 2
+"""The net's first layer sees this many directions to either side, the second so many of the first's, at every other."""
+
+FARTHEST_PX = 14.0
+"""The net moves a candidate by no more than this either way (px)."""
+
 LEAST_ENDS = 2
 """Within the outermost ring at least so many ends of pieces lie, one line: a lone bright spot is a hot pixel."""
 
@@ -78,33 +90,44 @@ BLOB_MARGIN = 3
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Apexes:
-    """Bursts of one picture: ``at`` float64 (M, 2) px; ``sure`` float64 (M,), probability after the perceptron."""
+    """Bursts of one picture, arrays of length M: ``at`` float64 (M, 2) px; ``sure`` float64, probability of being one;
+    ``late`` float64, probability that it went off before the exposure.
+    """
 
     at: NDArray[np.float64]
     sure: NDArray[np.float64]
+    late: NDArray[np.float64]
 
-    def surer_than(self, least_sure: float) -> Apexes:
-        """Those of at least this probability."""
-        keep = self.sure >= least_sure
-        return Apexes(at=self.at[keep], sure=self.sure[keep])
+    def take(self, rows: NDArray[np.bool_] | NDArray[np.int64]) -> Apexes:
+        """Some of them."""
+        return Apexes(at=self.at[rows], sure=self.sure[rows], late=self.late[rows])
 
 
 def find_apexes(pieces: Segments, ridges: Ridges, contact_px: tuple[float, float], least_sure: float) -> Apexes:
     """Bursts of one picture: candidates of at least the probability ``least_sure``."""
     at = find_candidates(pieces, ridges)
     at = at[np.hypot(at[:, 0] - contact_px[0], at[:, 1] - contact_px[1]) > CONTACT_PX]  # its own glow is no burst
-    sure = judge_patches(read_patches(at, ridges.blurred, ridges.threshold_noise, contact_px))
-    likely = sure >= least_sure
-    at, sure = at[likely], sure[likely]
+    patches = read_patches(at, ridges.blurred, ridges.threshold_noise, contact_px)
+    likely = np.flatnonzero(sift_patches(patches) >= SIFT_LEAST)
+    at = at[likely]
+    sure, shift, late = judge_patches(patches[likely])
+    likely = np.flatnonzero(sure >= least_sure)
+    at, sure, shift, late = at[likely], sure[likely], shift[likely], late[likely]
+    ahead = _directions(at, contact_px)
+    at = at + shift[:, :1] * ahead + shift[:, 1:] * np.stack([-ahead[:, 1], ahead[:, 0]], axis=1)
     ends = np.concatenate([pieces.begin, pieces.end])
     near = np.hypot(at[:, None, 0] - ends[None, :, 0], at[:, None, 1] - ends[None, :, 1]) < RING_RADII_PX[-1]
-    backed = near.sum(axis=1) >= LEAST_ENDS
-    at, sure = at[backed], sure[backed]
     gap = np.hypot(at[:, None, 0] - at[None, :, 0], at[:, None, 1] - at[None, :, 1])
     order = np.arange(sure.size)
     better = (sure[None] > sure[:, None]) | ((sure[None] == sure[:, None]) & (order[None] < order[:, None]))
-    keep = ~((gap < MERGE_PX) & better).any(axis=1)
-    return Apexes(at=at[keep], sure=sure[keep])
+    keep = (near.sum(axis=1) >= LEAST_ENDS) & ~((gap < MERGE_PX) & better).any(axis=1)
+    return Apexes(at=at, sure=sure, late=late).take(keep)
+
+
+def _directions(at: NDArray[np.float64], contact_px: tuple[float, float]) -> NDArray[np.float64]:
+    """Unit vectors (M, 2) from the contact point to points (M, 2): the way the stream flies there."""
+    away = at - np.asarray(contact_px)
+    return np.asarray(away / np.maximum(np.hypot(away[:, 0], away[:, 1]), 1e-6)[:, None])
 
 
 def find_candidates(pieces: Segments, ridges: Ridges) -> NDArray[np.float64]:
@@ -179,19 +202,54 @@ def read_patches(
     size = len(RING_RADII_PX) * RING_DIRECTIONS
     if not count:
         return np.zeros((0, size), np.float32)
-    away = at - np.asarray(contact_px)
-    away /= np.maximum(np.hypot(away[:, 0], away[:, 1]), 1e-6)[:, None]
-    place, ahead = at.astype(np.float32), away.astype(np.float32)
+    place, ahead = at.astype(np.float32), _directions(at, contact_px).astype(np.float32)
     x = place[:, :1] + ahead[:, :1] * _ALONG - ahead[:, 1:] * _ACROSS
     y = place[:, 1:] + ahead[:, 1:] * _ALONG + ahead[:, :1] * _ACROSS
     level = _cv.remap(blurred, x, y, cv2.INTER_LINEAR, borderMode=cv2.BORDER_CONSTANT)
     return np.asarray(np.log1p(np.maximum(level, 0.0) * np.float32(1.0 / (LEVEL_NOISE * noise))))
 
 
-def judge_patches(patches: NDArray[np.float32]) -> NDArray[np.float64]:
-    """Probability (M,) that each description (M, F) is a burst."""
-    if not len(patches):
-        return np.zeros(0)
-    # OpenCV's product: for so small a one a threaded library spends more on waking its threads
-    hidden = np.maximum(_cv.gemm(patches, HIDDEN, 1.0, None, 0.0) + HIDDEN_BIAS, 0.0)
-    return np.asarray(1.0 / (1.0 + np.exp(-np.clip(hidden @ OUTPUT + OUTPUT_BIAS, -30.0, 30.0))), dtype=np.float64)
+def sift_patches(patches: NDArray[np.float32]) -> NDArray[np.float64]:
+    """Rough probability (M,) that each description (M, F) is a burst."""
+    hidden = _layer(patches, learnt.SIFT, learnt.SIFT_BIAS)
+    return _probability((hidden @ learnt.SIFTED + learnt.SIFTED_BIAS)[:, 0])
+
+
+def judge_patches(
+    patches: NDArray[np.float32],
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+    """Of each description (M, F): probability (M,) that a burst is there; where, (M, 2) px along the stream and across
+    it from the candidate; probability (M,) that it went off before the exposure.
+    """
+    count = len(patches)
+    if not count:
+        return np.zeros(0), np.zeros((0, 2)), np.zeros(0)
+    rings = patches.reshape(count, len(RING_RADII_PX), RING_DIRECTIONS).transpose(0, 2, 1)
+    first = _layer(windows(rings, FIRST_REACH, 1), learnt.FIRST, learnt.FIRST_BIAS)
+    first = first.reshape(count, RING_DIRECTIONS, -1)
+    second = _layer(windows(first, SECOND_REACH, SECOND_STEP), learnt.SECOND, learnt.SECOND_BIAS)
+    hidden = _layer(second.reshape(count, -1), learnt.HIDDEN, learnt.HIDDEN_BIAS)
+    out = (hidden @ learnt.OUTPUT + learnt.OUTPUT_BIAS).astype(np.float64)
+    return _probability(out[:, 0]), np.clip(out[:, 1:3], -FARTHEST_PX, FARTHEST_PX), _probability(out[:, 3])
+
+
+def windows(values: NDArray[np.float32], reach: int, step: int) -> NDArray[np.float32]:
+    """Each direction with its neighbours: (M, D, C) -> (M * D / step, (2 * reach + 1) * C), closed to a ring."""
+    count, directions, channels = values.shape
+    closed = np.ascontiguousarray(np.concatenate([values[:, -reach:], values, values[:, :reach]], axis=1))
+    size = (2 * reach + 1) * channels
+    strides = (closed.strides[0], step * closed.strides[1], closed.strides[2])
+    view = np.lib.stride_tricks.as_strided(closed, (count, directions // step, size), strides)
+    return np.asarray(view.reshape(-1, size))
+
+
+def _layer(inputs: NDArray[np.float32], weights: NDArray[np.float32], bias: NDArray[np.float32]) -> NDArray[np.float32]:
+    if not len(inputs):
+        return np.zeros((0, weights.shape[1]), np.float32)
+    product: NDArray[np.float32] = inputs @ weights
+    product += bias
+    return np.asarray(np.maximum(product, 0.0, out=product))
+
+
+def _probability(logit: NDArray[np.floating]) -> NDArray[np.float64]:
+    return np.asarray(1.0 / (1.0 + np.exp(-np.clip(logit, -30.0, 30.0))), dtype=np.float64)

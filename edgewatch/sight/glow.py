@@ -1,8 +1,8 @@
 """What belongs to bursts: their arms, which are no streaks, and the glow that outlasts an exposure.
 
 An arm is a line that runs out from a burst of this picture or of one before that may still glow, and is not the stem,
-the streak that led to the burst. A burst is listed in the picture where it first shows; one without a stem went off
-while the shutter was closed (late).
+the streak that led to the burst. A burst is listed in the picture where it first shows. A late one went off while the
+shutter was closed: the outer parts of its arms show, without the streak that led to it.
 
 Burst-rate without bias: a burst gets listed when it goes off during the exposure, but for the last part of it, in which
 its arms cannot be drawn long enough; and when it goes off so shortly before that enough of its arms is left to see.
@@ -20,11 +20,12 @@ from numpy.typing import NDArray
 from edgewatch.sight.bursts import Apexes
 from edgewatch.sight.lengths import Lengths
 from edgewatch.sight.optics import Optics
-from edgewatch.sight.reading import read_levels
-from edgewatch.sight.ridges import Ridges
 
 SAME_PX = 8.0
 """A burst nearer than this to one seen before is the same (px)."""
+
+LATE_SURE = 0.5
+"""A burst is late from this probability on."""
 
 DRIFT_SHARE = 0.6
 DRIFT_S = 0.001
@@ -34,7 +35,9 @@ ARM_SIDE_PX = 3.0
 """The line of an arm passes within this of its burst (px)."""
 
 ARM_GAP_PX = 6.0
-"""An arm of a burst in this picture begins within this of it (px); ridges end where arms overlap."""
+LATE_GAP_PX = 16.0
+"""An arm of a burst in this picture begins within this of it (px); ridges end where arms overlap. Of a late burst only
+the outer parts of arms are seen."""
 
 SHORT_SHARE = 0.5
 """A line shorter than this share of the typical length is short."""
@@ -48,13 +51,6 @@ ACROSS_SHARE = 1.2
 
 STEM_LEAST_PX = 6.0
 """A stem is seen from this length on (px)."""
-
-STEM_FROM_PX, STEM_TO_PX = 2.5, 10.0
-STEM_ASIDE_PX, STEM_FLANK_PX = 2.0, 2.0
-STEM_NOISE = 3.0
-STEM_SHARE = 0.75
-"""A stem is looked for on this way back from the burst, so far to either side: along most of it the picture is brighter
-than at the flanks, and than so many noise deviations."""
 
 LIMIT_POWER = 4.0
 """No burst is listed twice, so the time in which it gets listed stays below the period; softly, because near the limit
@@ -94,7 +90,11 @@ class Glow:
         return np.asarray(DRIFT_SHARE * speed * np.minimum(age, DRIFT_S))
 
     def take(self, apexes: Apexes, lengths: Lengths) -> NDArray[np.int64]:
-        """Indices of the bursts that are new; remembers all of them."""
+        """Indices of the bursts that are new; remembers all of them.
+
+        What went off during this exposure is new even where an earlier burst may still glow: sparks of one kind burst
+        again and again, and follow each other.
+        """
         old, drift = self.remembered(), self._drift(lengths)
         gx = apexes.at[:, None, 0] - old[None, :, 0]
         gy = apexes.at[:, None, 1] - old[None, :, 1]
@@ -103,26 +103,10 @@ class Glow:
         # The cloud of arms drifts on along the flight: the nearest point of the way it may have come counts.
         on = np.clip(gx * away[:, 0] + gy * away[:, 1], 0.0, drift)
         gap = np.hypot(gx - on * away[:, 0], gy - on * away[:, 1])
-        fresh = np.flatnonzero(~(gap < SAME_PX).any(axis=1))
+        seen_before = (gap < SAME_PX).any(axis=1) & (apexes.late > LATE_SURE)
+        fresh = np.flatnonzero(~seen_before)
         self.recent = [*self.recent, apexes.at][-self._pictures :] if self._pictures else []
         return fresh
-
-
-def find_stems(apexes: Apexes, ridges: Ridges, contact_px: tuple[float, float]) -> NDArray[np.bool_]:
-    """Whether a streak leads from the contact point's side to each burst: a ridge on the way back from it."""
-    back = np.asarray(contact_px) - apexes.at
-    back /= np.maximum(np.hypot(back[:, 0], back[:, 1]), 1e-6)[:, None]
-    along = np.arange(STEM_FROM_PX, STEM_TO_PX)
-    aside = np.arange(-STEM_ASIDE_PX - STEM_FLANK_PX, STEM_ASIDE_PX + STEM_FLANK_PX + 0.5)
-    x = apexes.at[:, 0, None, None] + along * back[:, 0, None, None] - aside[:, None] * back[:, 1, None, None]
-    y = apexes.at[:, 1, None, None] + along * back[:, 1, None, None] + aside[:, None] * back[:, 0, None, None]
-    level = read_levels(ridges.blurred, x.ravel(), y.ravel()).reshape(x.shape)
-    flank = int(STEM_FLANK_PX)
-    middle = level[:, flank:-flank]
-    ridge = (middle >= level[:, : -2 * flank]) & (middle >= level[:, 2 * flank :])
-    ridge &= middle > STEM_NOISE * ridges.threshold_noise
-    stem: NDArray[np.bool_] = ridge.mean(axis=2).max(axis=1, initial=0.0) >= STEM_SHARE
-    return stem
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -148,9 +132,9 @@ def sort_lines(
     """Tell streaks from arms. ``begin``, ``end`` (N, 2) px, the first nearer the wheel; ``whole``: both ends seen."""
     contact = np.asarray(glow.optics.contact_px)
     end = end.copy()
-    gap = end - begin
-    length = np.maximum(np.hypot(gap[:, 0], gap[:, 1]), 1e-6)
-    unit = gap / length[:, None]
+    run = end - begin
+    length = np.maximum(np.hypot(run[:, 0], run[:, 1]), 1e-6)
+    unit = run / length[:, None]
     middle = 0.5 * (begin + end)
     away = middle - contact
     away /= np.maximum(np.hypot(away[:, 0], away[:, 1]), 1e-6)[:, None]
@@ -179,7 +163,8 @@ def sort_lines(
         only = np.arange(len(begin))[:, None] == nearest
         ends_here &= only
         runs_on &= only
-    begins_here = on & (np.abs(along) <= ARM_GAP_PX) & (short[:, None] | ~straight)
+    gap = np.where(apexes.late > LATE_SURE, LATE_GAP_PX, ARM_GAP_PX)
+    begins_here = on & (along <= ARM_GAP_PX) & (along >= -gap) & (short[:, None] | ~straight)
     across = on & ~straight & (along > -ARM_GAP_PX) & (left > -ARM_GAP_PX) & short[:, None]
     streak &= ~(begins_here | across).any(axis=1)
     cut = np.flatnonzero(runs_on.any(axis=1))

@@ -86,33 +86,32 @@ def label_components(i: NDArray[np.int64], j: NDArray[np.int64], count: int) -> 
 
 def fit_segments(ridges: Ridges, label: NDArray[np.int64]) -> Segments:
     """One straight line through the points of each label (total least squares); labels with few points are dropped."""
-    count = int(label.max()) + 1 if label.size else 0
-    n = np.bincount(label, minlength=count)
-    x, y = ridges.x.astype(np.float64), ridges.y.astype(np.float64)
-    safe = np.maximum(n, 1)
-    mx, my = np.bincount(label, x, count) / safe, np.bincount(label, y, count) / safe
-    u, v = x - mx[label], y - my[label]
-    sxx, syy = np.bincount(label, u * u, count), np.bincount(label, v * v, count)
-    sxy = np.bincount(label, u * v, count)
+    # numpy sorts 16-bit integers by radix, several times faster
+    order = np.argsort(label.astype(np.uint16) if label.size < 65536 else label, kind="stable")
+    n = np.bincount(label)
+    # only points of labels with enough of them, each label's together
+    order = order[np.repeat(n >= LEAST_POINTS, n)]
+    n = n[n >= LEAST_POINTS]
+    first = np.cumsum(n) - n
+    x, y = ridges.x.take(order).astype(np.float64), ridges.y.take(order).astype(np.float64)
+    columns = (x, y, x * x, y * y, x * y, ridges.height.take(order), ridges.bend.take(order))
+    sums = np.add.reduceat(np.stack(columns), first, axis=1) if n.size else np.zeros((len(columns), 0))
+    mx, my, sxx, syy, sxy, height, bend = sums / n
+    sxx, syy, sxy = sxx - mx * mx, syy - my * my, sxy - mx * my
     angle = 0.5 * np.arctan2(2.0 * sxy, sxx - syy)
     c, s = np.cos(angle), np.sin(angle)
-    along = u * c[label] + v * s[label]
-    # numpy sorts 16-bit integers by radix, several times faster
-    order = np.argsort(label.astype(np.uint16) if count < 65536 else label, kind="stable")
-    starts = np.concatenate(([0], np.cumsum(n)[:-1])) if count else np.zeros(0, np.int64)
-    low = np.minimum.reduceat(along[order], starts) if count else np.zeros(0)
-    high = np.maximum.reduceat(along[order], starts) if count else np.zeros(0)
+    along = x * np.repeat(c, n) + y * np.repeat(s, n)
+    middle = mx * c + my * s
+    low = (np.minimum.reduceat(along, first) if n.size else np.zeros(0)) - middle
+    high = (np.maximum.reduceat(along, first) if n.size else np.zeros(0)) - middle
     across = np.maximum(0.0, 0.5 * (sxx + syy) - np.hypot(0.5 * (sxx - syy), sxy))
-    keep = n >= LEAST_POINTS
-    axis = np.stack([c, s], axis=1)
-    middle = np.stack([mx, my], axis=1)
     return Segments(
-        begin=(middle + axis * low[:, None])[keep],
-        end=(middle + axis * high[:, None])[keep],
-        axis=axis[keep],
-        length=(high - low)[keep],
-        height=(np.bincount(label, ridges.height, count) / safe)[keep],
-        bend=(np.bincount(label, ridges.bend, count) / safe)[keep],
-        points=n[keep],
-        spread=np.sqrt(across / safe)[keep],
+        begin=np.stack([mx + c * low, my + s * low], axis=1),
+        end=np.stack([mx + c * high, my + s * high], axis=1),
+        axis=np.stack([c, s], axis=1),
+        length=high - low,
+        height=height,
+        bend=bend,
+        points=n,
+        spread=np.sqrt(across),
     )

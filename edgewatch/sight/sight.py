@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from edgewatch.sight.background import Background
 from edgewatch.sight.bursts import find_apexes
 from edgewatch.sight.detections import BurstFlag, Detections, StreakFlag
-from edgewatch.sight.glow import Glow, find_stems, sort_lines
+from edgewatch.sight.glow import LATE_SURE, Glow, sort_lines
 from edgewatch.sight.lengths import Lengths
 from edgewatch.sight.light import LightMeter
 from edgewatch.sight.optics import Optics
@@ -37,7 +37,7 @@ class SightTuning:
     rate_sure: float = 0.65
     longest_glow_s: float = 0.0035
     arm_draw_s: float = 0.00035
-    late_listed_s: float = 0.0005
+    late_listed_s: float = 0.0008
 
     def __post_init__(self) -> None:
         """Check ranges once."""
@@ -101,9 +101,8 @@ class Sight:
         snr = found.level / self._background.noise_dn * self._meter.line_gain
         keep = sorted_.streak & (snr >= s.least_snr) & (length > s.least_length_px)
         lines = np.concatenate([begin, end], axis=1)[keep]
-        late = ~find_stems(apexes, ridges, o.contact_px)
         fresh = self._glow.take(apexes, self._lengths)
-        at, late = apexes.at[fresh], late[fresh]
+        at, late = apexes.at[fresh], apexes.late[fresh] > LATE_SURE
         track_px = float(length[keep].sum())
         snr = snr[keep]
         origin_offset_px, origin_error_px = read_origin(lines, o)
@@ -115,7 +114,7 @@ class Sight:
             burst_arms=sorted_.arms[fresh].astype(np.int16),
             burst_flags=np.where(late, BurstFlag.LATE, 0).astype(np.uint8) | self._edge_flags(at),
             light=self._meter.read(picture, self._background, lines, snr),
-            rate_bursts=int(self._rate_glow.take(apexes.surer_than(s.rate_sure), self._lengths).size),
+            rate_bursts=int(self._rate_glow.take(apexes.take(apexes.sure >= s.rate_sure), self._lengths).size),
             rate_exposure_px=track_px * self._glow.gain,
             origin_offset_px=origin_offset_px,
             origin_error_px=origin_error_px,

@@ -58,8 +58,9 @@ RATIO_MOST = 2.5
 PATH_SHARE = 0.35
 """Between its steps a streak is brighter than this share of the lower one."""
 
-DARK_MOST_PX = 1.5
-"""Pixels along a streak that may be darker."""
+DARK_MOST = 1
+LONG_PX = 48.0
+"""Points along a streak that may be darker; they lie a pixel apart, on streaks longer than this two."""
 
 LENGTH_COST_FULL = 4.0
 LENGTH_COST_MOST = 16.0
@@ -148,16 +149,16 @@ def find_steps(pieces: Segments, blurred: NDArray[np.float32], noise: float, axi
     size = np.ceil(length).astype(np.int64) + 1 + 2 * margin
     first = np.cumsum(size) - size
     owner = np.repeat(np.arange(long.size), size)
-    place = (np.arange(owner.size) - first[owner] - margin).astype(np.float64)
-    x = start[owner, 0] + heading[owner, 0] * place
-    y = start[owner, 1] + heading[owner, 1] * place
+    place = np.arange(owner.size) - np.repeat(first + float(margin), size)
+    x = np.repeat(start[:, 0], size) + np.repeat(heading[:, 0], size) * place
+    y = np.repeat(start[:, 1], size) + np.repeat(heading[:, 1], size) * place
     total = np.concatenate([np.zeros(1), np.cumsum(read_levels(blurred, x, y), dtype=np.float64)])
     ahead, behind = np.zeros(owner.size), np.zeros(owner.size)
     ahead[: -BOX_PX - 1] = (total[BOX_PX + 1 : -1] - total[1 : -BOX_PX - 1]) / BOX_PX
     behind[BOX_PX:] = (total[BOX_PX:-1] - total[: -BOX_PX - 1]) / BOX_PX
     rise = ahead - behind
     height, high = np.abs(rise), np.maximum(ahead, behind)
-    inside = (place >= -BEYOND_PX) & (place <= length[owner] + BEYOND_PX)
+    inside = (place >= -BEYOND_PX) & (place <= np.repeat(length + BEYOND_PX, size))
     found = np.flatnonzero(inside & (height > np.maximum(STEP_NOISE * STEP_NOISE_GAIN * noise, STEP_SHARE * high)))
     peak = np.ones(found.size, np.bool_)
     for aside in (-3, -2, -1, 1, 2, 3):  # margins keep the neighbours within the same piece
@@ -216,16 +217,17 @@ def pair_steps(steps: Steps, blurred: NDArray[np.float32], lengths: Lengths) -> 
 def _stay_lit(
     a: NDArray[np.float64], b: NDArray[np.float64], level: NDArray[np.float64], blurred: NDArray[np.float32]
 ) -> NDArray[np.bool_]:
-    """Whether the line from each a to its b is brighter than ``level`` all the way, but for a pixel."""
+    """Whether the line from each a to its b is brighter than ``level`` all the way, but for a point."""
     gap = b - a
     length = np.hypot(gap[:, 0], gap[:, 1])
-    size = np.maximum(np.ceil(length - 4.0), 1.0).astype(np.int64)
-    owner = np.repeat(np.arange(size.size), size)
-    place = (np.arange(owner.size) - (np.cumsum(size) - size)[owner] + 0.5) / size[owner]
-    inner = np.minimum(2.0 / length, 0.4)[owner]  # near its ends a line is half lit by its own blur
-    place = inner + (1.0 - 2.0 * inner) * place
-    seen = read_levels(blurred, a[owner, 0] + place * gap[owner, 0], a[owner, 1] + place * gap[owner, 1])
-    return np.asarray(np.bincount(owner, seen < level[owner], size.size) <= DARK_MOST_PX)
+    size = np.maximum(np.ceil((length - 4.0) / np.where(length > LONG_PX, 2.0, 1.0)), 1.0).astype(np.int64)
+    inner = np.minimum(2.0 / length, 0.4)  # near its ends a line is half lit by its own blur
+    apart, first = (1.0 - 2.0 * inner) / size, np.cumsum(size) - size
+    place = np.arange(int(size.sum())) * np.repeat(apart, size) + np.repeat(inner + (0.5 - first) * apart, size)
+    x = np.repeat(a[:, 0], size) + place * np.repeat(gap[:, 0], size)
+    y = np.repeat(a[:, 1], size) + place * np.repeat(gap[:, 1], size)
+    dark = read_levels(blurred, x, y) < np.repeat(level, size)
+    return np.asarray(np.add.reduceat(dark, first, dtype=np.int64) <= DARK_MOST) if size.size else dark
 
 
 def _cheapest(i: NDArray[np.int64], j: NDArray[np.int64], cost: NDArray[np.float64], count: int) -> NDArray[np.int64]:
@@ -257,13 +259,14 @@ def _complete(
     at, inward = steps.at[k], steps.inward[k]
     size = lengths.typical_px(at)
     size = lengths.typical_px(at + 0.5 * size[:, None] * inward)
-    number = np.maximum(np.ceil(size).astype(np.int64), 2)
+    apart = np.where(size > LONG_PX, 2.0, 1.0)
+    number = np.maximum(np.ceil(size / apart).astype(np.int64), 2)
     first = np.cumsum(number) - number
-    owner = np.repeat(np.arange(k.size), number)
-    place = np.arange(owner.size) - first[owner] + 1.0
-    seen = read_levels(blurred, at[owner, 0] + place * inward[owner, 0], at[owner, 1] + place * inward[owner, 1])
+    place = (np.arange(int(number.sum())) - np.repeat(first - 1.0, number)) * np.repeat(apart, number)
+    x = np.repeat(at[:, 0], number) + place * np.repeat(inward[:, 0], number)
+    y = np.repeat(at[:, 1], number) + place * np.repeat(inward[:, 1], number)
     level = np.maximum(DARK_NOISE * noise, DARK_SHARE * steps.height[k])
-    dark = (seen < level[owner]) & (place > 2.0)
+    dark = (read_levels(blurred, x, y) < np.repeat(level, number)) & (place > 2.0)
     run = np.minimum(np.minimum.reduceat(np.where(dark, place, np.inf), first), size)
     end = at + inward * run[:, None]
     begins = steps.begins[k, None]

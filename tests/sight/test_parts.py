@@ -12,9 +12,18 @@ from numpy.typing import NDArray
 from scipy.sparse import coo_matrix
 from scipy.sparse.csgraph import connected_components
 
-from edgewatch.sight import burst_weights
 from edgewatch.sight.background import LEARN_AT, LEAST_NOISE_DN, Background
-from edgewatch.sight.bursts import RING_DIRECTIONS, RING_RADII_PX, Apexes, find_candidates, judge_patches, read_patches
+from edgewatch.sight.bursts import (
+    RING_DIRECTIONS,
+    RING_RADII_PX,
+    Apexes,
+    find_apexes,
+    find_candidates,
+    judge_patches,
+    read_patches,
+    sift_patches,
+    windows,
+)
 from edgewatch.sight.glow import Glow
 from edgewatch.sight.lengths import LEAST_KEPT, Lengths
 from edgewatch.sight.optics import Optics
@@ -210,12 +219,35 @@ def test_descriptions_turn_with_the_stream() -> None:
 
 def test_weights_fit_the_descriptions() -> None:
     """The weights in the package belong to the rings and directions that are read."""
-    assert burst_weights.HIDDEN.shape[0] == len(RING_RADII_PX) * RING_DIRECTIONS
-    assert np.isfinite(burst_weights.HIDDEN).all()
-    sure = judge_patches(np.zeros((2, burst_weights.HIDDEN.shape[0]), np.float32))
-    assert sure.shape == (2,)
-    assert (sure < 0.5).all(), "nothing at all is no burst"
-    assert judge_patches(np.zeros((0, burst_weights.HIDDEN.shape[0]), np.float32)).shape == (0,)
+    size = len(RING_RADII_PX) * RING_DIRECTIONS
+    nothing = np.zeros((2, size), np.float32)
+    assert ((sift_patches(nothing) >= 0.0) & (sift_patches(nothing) <= 1.0)).all()
+    sure, shift, late = judge_patches(nothing)
+    assert sure.shape == late.shape == (2,)
+    assert shift.shape == (2, 2)
+    assert ((sure >= 0.0) & (sure <= 1.0)).all()
+    assert [part.shape[0] for part in judge_patches(nothing[:0])] == [0, 0, 0]
+    assert sift_patches(nothing[:0]).shape == (0,)
+
+
+def test_the_net_sees_the_ring_as_closed() -> None:
+    """A layer's windows are those of a circular correlation, whatever the memory layout of what it is handed."""
+    values = np.random.default_rng(SEED).random((3, 4, RING_DIRECTIONS)).astype(np.float32).transpose(0, 2, 1)
+    for reach, step in ((2, 1), (1, 2)):
+        found = windows(values, reach, step).reshape(3, RING_DIRECTIONS // step, 2 * reach + 1, 4)
+        for place in range(0, RING_DIRECTIONS, step):
+            for k in range(2 * reach + 1):
+                assert np.array_equal(found[:, place // step, k], values[:, (place + k - reach) % RING_DIRECTIONS])
+
+
+def test_a_star_is_found_where_it_is() -> None:
+    """A star at the end of a streak, in the middle of nowhere, is listed within two pixels, and not as late."""
+    lines = [(60.0, 100.0, 160.0, 100.0, 60.0), *star(160.0, 100.0, 6, 14.0)]
+    ridges, pieces = trace(draw(lines))  # type: ignore[arg-type]
+    found = find_apexes(pieces, ridges, (0.0, 100.0), 0.4)
+    assert found.sure.size == 1
+    assert np.hypot(*(found.at[0] - (160.0, 100.0))) < 2.0
+    assert found.late[0] < 0.5
 
 
 def _glow(**changes: object) -> Glow:
@@ -234,9 +266,9 @@ def test_gain_is_the_time_in_which_bursts_get_listed(fps: float, exposure_ms: fl
     assert gain == pytest.approx((listed_ms**-4 + period_ms**-4) ** -0.25 / exposure_ms)
 
 
-def _apexes(*points: tuple[float, float]) -> Apexes:
+def _apexes(*points: tuple[float, float], late: float = 1.0) -> Apexes:
     at = np.array(points, dtype=np.float64).reshape(-1, 2)
-    return Apexes(at=at, sure=np.ones(len(at)))
+    return Apexes(at=at, sure=np.ones(len(at)), late=np.full(len(at), late))
 
 
 def test_glow_remembers_as_long_as_arms_may_glow() -> None:
@@ -252,6 +284,8 @@ def test_glow_remembers_as_long_as_arms_may_glow() -> None:
     for _ in range(4):
         assert glow.take(_apexes(), lengths).size == 0
     assert glow.take(_apexes((150.0, 100.0)), lengths).tolist() == [0]
+    assert glow.take(_apexes((150.0, 100.0)), lengths).size == 0
+    assert glow.take(_apexes((150.0, 100.0), late=0.0), lengths).tolist() == [0], "it went off in this exposure"
 
 
 def test_optics_of_any_size_are_looked_at_alike() -> None:

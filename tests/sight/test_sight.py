@@ -72,6 +72,13 @@ def star(
     return [(x, y, x + length * math.cos(a), y + length * math.sin(a), height) for a in angles]
 
 
+def embers(x: float, y: float, arms: int = 6) -> list[tuple[float, float, float, float, float]]:
+    """Outer parts of arms round an empty middle."""
+    angles = 0.3 + np.arange(arms) * 2 * math.pi / arms
+    c, s = np.cos(angles), np.sin(angles)
+    return [(x + 7 * u, y + 7 * v, x + 14 * u, y + 14 * v, 60.0) for u, v in zip(c.tolist(), s.tolist(), strict=True)]
+
+
 def same(a: Detections, b: Detections) -> bool:
     """Whether two detections agree to the last bit."""
     names = ("streaks", "streak_snr", "streak_flags", "bursts", "burst_arms", "burst_flags")
@@ -120,21 +127,37 @@ def test_star_is_one_burst_and_its_arms_are_no_streaks() -> None:
     assert seen.burst_arms[0] >= 3
     assert not seen.burst_flags[0] & BurstFlag.LATE
     assert seen.rate_bursts == 1
-    again = sight.look(draw(star(131.0, 100.0, 5, 18.0), seed=SEED + 1))  # type: ignore[arg-type]
+    again = sight.look(draw(embers(131.0, 100.0), seed=SEED + 1))
     assert len(again.bursts) == 0
 
 
+def test_embers_are_late_and_news_only_once() -> None:
+    """The outer parts of arms round an empty middle: a burst that went off before the exposure; listed once."""
+    sight = Sight(make_optics())
+    seen = sight.look(draw(embers(130.0, 100.0)))
+    assert len(seen.bursts) == 1
+    assert seen.burst_flags[0] & BurstFlag.LATE
+    assert len(sight.look(draw(embers(130.0, 100.0), seed=SEED + 1)).bursts) == 0
+
+
 def test_memory_of_bursts_ends_and_reset_forgets() -> None:
-    """A burst at the same place is news once nothing of the old one can glow, and at once after a reset."""
+    """Embers at the place of a burst are news once nothing of it can glow, and at once after a reset."""
     picture = draw([(70.0, 100.0, 130.0, 100.0, 60.0), *star(130.0, 100.0, 5, 18.0)])  # type: ignore[list-item]
-    empty = draw([], seed=SEED + 2)
+    glowing, empty = draw(embers(130.0, 100.0), seed=SEED + 3), draw([], seed=SEED + 2)
     sight = Sight(make_optics())
     assert len(sight.look(picture).bursts) == 1
-    assert len(sight.look(picture).bursts) == 0
+    assert len(sight.look(glowing).bursts) == 0
     sight.look(empty)
-    assert len(sight.look(picture).bursts) == 1
+    assert len(sight.look(glowing).bursts) == 1
     sight.reset()
-    assert len(sight.look(picture).bursts) == 1
+    assert len(sight.look(glowing).bursts) == 1
+
+
+def test_a_second_spark_may_burst_where_one_did() -> None:
+    """A streak that ends in a star is a burst of this exposure, whatever went off there before."""
+    picture = draw([(70.0, 100.0, 130.0, 100.0, 60.0), *star(130.0, 100.0, 5, 18.0)])  # type: ignore[list-item]
+    sight = Sight(make_optics())
+    assert [len(sight.look(picture).bursts) for _ in range(2)] == [1, 1]
 
 
 def test_slow_camera_remembers_nothing() -> None:
