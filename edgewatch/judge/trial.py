@@ -21,6 +21,9 @@ INCONCLUSIVE = "inconclusive"
 FOREIGN_RATIO = 4.0
 """Where no other grade is taught that could be told apart, a foreign bar is one whose hazard is this many times above
 or below the band: `conforming` is said only if the evidence would have shown such a bar."""
+FEW_FRAMES = 0.5
+"""A window with less than this share of the frames of the bar's fullest window gives no reach."""
+
 RATE = "burst_rate"
 REACH = "reach"
 
@@ -119,6 +122,7 @@ class Trial:
         self._speed_sum = 0.0
         self._speed_track_m = 0.0
         self._looks = 0
+        self._most_frames = 0
         self._last: Figures | None = None
         self._begin_s = math.nan
         self._end_s = math.nan
@@ -182,10 +186,15 @@ class Trial:
         return self._standing
 
     def _take_settled_reach(self, window: Figures) -> None:
-        """Use the reach of the window before this one, unless it is the bar's first: the stream was filling."""
+        """Use the reach of the window before this one. Not of the first: the stream was filling. Not of one of few
+        frames: it scatters more than its track says, because a spark is in several frames that follow each other.
+        """
         before, self._last = self._last, window
         self._looks += 1
+        self._most_frames = max(self._most_frames, window.frames_seen)
         if before is None or self._looks <= 2 or not before.reach_mm > 0.0 or before.reach_truncated:
+            return
+        if before.frames_seen < FEW_FRAMES * self._most_frames:
             return
         factor = self._reach_factor(before) if self._reach_factor else 1.0
         if not (math.isfinite(factor) and factor > 0.0):

@@ -65,7 +65,7 @@ _ACROSS = np.outer(RING_RADII_PX, np.sin(_TURN)).ravel().astype(np.float32)
 LEVEL_NOISE = 3.0
 """Levels enter as log(1 + level / (this many noise deviations))."""
 
-MERGE_PX = 12.0
+MERGE_PX = 10.0
 """Of candidates nearer to each other than this only the likeliest is kept (px)."""
 
 SIFT_LEAST = 0.01

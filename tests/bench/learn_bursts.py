@@ -109,7 +109,11 @@ def _scene(kind: str, seed: int) -> Iterator[Shot]:
     )
     if kind in "xd":
         for _ in range(FRAMES):
-            picture = (crossing_lines if kind == "x" else loose_dashes)(optics, look, rng)
+            if kind == "d":
+                picture = loose_dashes(optics, look, rng)
+            else:  # at random; all turned by one angle; three at 60 degrees make a star of six even arms, the hardest
+                angle = (math.nan, float(rng.uniform(5, 90)), float(rng.normal(60, 6)))[int(rng.integers(3))]
+                picture = crossing_lines(optics, look, rng, angle_deg=angle)
             none = np.zeros(0)
             yield Shot(picture=picture, at=np.zeros((0, 2)), drew_s=none, late=none.astype(np.bool_), optics=optics)
         return
@@ -410,8 +414,8 @@ def judge(weights: list[Floats], patches: NDArray[np.float16]) -> tuple[Floats, 
 def main() -> None:
     """Collect, learn, report, write."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0] if __doc__ else None)
-    parser.add_argument("--scenes", type=int, default=1200, help="scenes of each simulation to learn from")
-    parser.add_argument("--rounds", type=int, default=8, help="rounds through all candidates")
+    parser.add_argument("--scenes", type=int, default=3000, help="scenes of each simulation to learn from")
+    parser.add_argument("--rounds", type=int, default=7, help="rounds through all candidates")
     parser.add_argument("--out", type=Path, default=Path("edgewatch/sight/burst_weights.py"))
     args = parser.parse_args()
     cv2.setNumThreads(1)
