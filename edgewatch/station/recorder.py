@@ -129,7 +129,7 @@ class Recorder:
                     return
                 stop.wait(self._backoff.next_s())
                 continue
-            except Exception:
+            except Exception:  # a bug, not the world: counted, and raised again for the supervisor to tell
                 self._tries = self._tries + 1 if batch is self._tried else 1
                 self._tried = batch
                 if stop.is_set() and self._tries <= MOST_TRIES:
