@@ -64,8 +64,12 @@ make_venv() { # a usable .venv, made anew when the Python that it was made from 
 
 fingerprint() { # of everything that an installation is made from but the sources, which it refers to
     printf '%s ' "$top"
-    (cd "$top" && find pyproject.toml edgewatch/__init__.py deploy/station.toml calib -type f -exec cksum {} + |
-        LC_ALL=C sort) | cksum
+    (cd "$top" && find pyproject.toml edgewatch/__init__.py deploy/build_sight.py deploy/build_hook.py \
+        deploy/station.toml calib edgewatch/sight/native/*.[ch] -type f -exec cksum {} + | LC_ALL=C sort) | cksum
+}
+
+compiled() { # the sight is, or cannot be
+    [ -e "$top/edgewatch/sight/native/compiled.so" ] || ! command -v cc >/dev/null 2>&1
 }
 
 install_edgewatch() { # EXTRAS: '' or '[test,desk]'; nothing to do when nothing has changed since the last time
@@ -76,7 +80,7 @@ install_edgewatch() { # EXTRAS: '' or '[test,desk]'; nothing to do when nothing 
     esac
     now=$(fingerprint)
     for mark in $marks; do last=$mark; done
-    if [ "$(cat "$venv/installed-$last" 2>/dev/null)" = "$now" ]; then
+    if [ "$(cat "$venv/installed-$last" 2>/dev/null)" = "$now" ] && compiled; then
         return 0
     fi
     say "installing edgewatch$1 into $venv (once; a minute or so)"

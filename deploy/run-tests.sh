@@ -9,9 +9,9 @@ top=$(CDPATH='' cd -- "$(dirname -- "$0")/.." && pwd -P)
 PATH=$PATH:/usr/sbin:/sbin # Debian keeps mosquitto there, and an ordinary user's PATH does not
 export PATH
 
-missing_packages() { # the Debian packages whose program is not on this machine
-    while read -r program package; do
-        command -v "$program" >/dev/null 2>&1 || printf '%s ' "$package"
+missing_packages() { # the Debian packages whose program, the first word, is not on this machine
+    while read -r program packages; do
+        command -v "$program" >/dev/null 2>&1 || printf '%s ' "$packages"
     done <<'LIST'
 mosquitto mosquitto
 mosquitto_sub mosquitto-clients
@@ -19,6 +19,7 @@ ffmpeg ffmpeg
 openssl openssl
 git git
 systemd-analyze systemd
+cc gcc libc6-dev
 LIST
 }
 

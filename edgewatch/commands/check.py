@@ -31,6 +31,7 @@ from edgewatch.record.rows import DamagedError, check_whole
 from edgewatch.relay.port import open_relay
 from edgewatch.relay.serialport import SerialPort
 from edgewatch.settings import Settings
+from edgewatch.sight import native
 from edgewatch.sight.detections import PictureFlag
 from edgewatch.sight.picture import reduce_picture
 from edgewatch.sight.sight import Sight
@@ -92,7 +93,7 @@ def run(args: argparse.Namespace) -> int:
         ("disk", _disk),
         ("clock", _clock),
     )
-    findings = [Finding(check="configuration", result=GOOD, detail="all keys are understood")]
+    findings = [Finding(check="configuration", result=GOOD, detail="all keys are understood"), _sight()]
     for name, check in checks:
         print(f"edgewatch: checking {name} …", file=sys.stderr)
         findings += _tried(name, check, settings, folder)
@@ -122,6 +123,14 @@ def _tried(
     except DeviceError as error:
         found.append(Finding(check=name, result=MISSING, detail=str(error)))
     return found
+
+
+def _sight() -> Finding:
+    """Whether the steps that cost most are compiled."""
+    if native.LIBRARY is None:
+        detail = f"runs its Python forms, several times slower: {native.WHY_NOT}"
+        return Finding(check="sight", result=NOTE, detail=detail)
+    return Finding(check="sight", result=GOOD, detail="its costly steps are compiled")
 
 
 def _source(settings: Settings, folder: Path) -> Iterator[Finding]:

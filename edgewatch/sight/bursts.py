@@ -22,6 +22,7 @@ from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
 from edgewatch.sight import burst_weights as learnt
+from edgewatch.sight import native
 from edgewatch.sight.ridges import Ridges
 from edgewatch.sight.segments import Segments
 
@@ -139,6 +140,8 @@ def _meeting_points(pieces: Segments, shape: tuple[int, ...]) -> NDArray[np.floa
     count = pieces.length.size
     if count < 2:
         return np.zeros((0, 2))
+    if native.LIBRARY:
+        return _meeting_points_compiled(pieces, shape)
     ends = np.concatenate([pieces.begin, pieces.end])
     inward = np.concatenate([pieces.axis, -pieces.axis])
     pairs = cKDTree(ends).query_pairs(GAP_PX, output_type="ndarray")
@@ -159,6 +162,27 @@ def _meeting_points(pieces: Segments, shape: tuple[int, ...]) -> NDArray[np.floa
     return _densest(x[inside], y[inside], shape)
 
 
+_NEAR = float(cv2.getGaussianKernel(3, CELL_BLUR)[0, 0])
+
+
+def _meeting_points_compiled(pieces: Segments, shape: tuple[int, ...]) -> NDArray[np.float64]:
+    room = 4 * pieces.length.size + 64
+    while True:
+        at = np.empty((room, 2))
+        found = native.LIBRARY.edgewatch_meetings(
+            pieces.length.size,
+            *(native.place(column) for column in (pieces.begin, pieces.end, pieces.axis, pieces.length)),
+            shape[0],
+            shape[1],
+            *map(native.double, (GAP_PX, INNER_PX, GAP_LENGTHS, LEAST_SIN, CELL_PX, _NEAR, LEAST_VOTES)),
+            native.place(at),
+            room,
+        )
+        if native.enough(found, room):
+            return at[:found]
+        room = found
+
+
 def _densest(x: NDArray[np.float64], y: NDArray[np.float64], shape: tuple[int, ...]) -> NDArray[np.float64]:
     """Places (M, 2) where votes at ``x``, ``y`` are dense: maxima of a blurred count, mean of the votes there."""
     high, wide = int(shape[0] / CELL_PX) + 1, int(shape[1] / CELL_PX) + 1
@@ -176,6 +200,8 @@ def _blobs(ridges: Ridges) -> NDArray[np.float64]:
 
     Looked for in a picture of half the size, which is soft enough and costs a quarter.
     """
+    if native.LIBRARY:
+        return _blobs_compiled(ridges)
     height, width = (size // 2 for size in ridges.excess.shape)
     half = _cv.resize(ridges.excess[: 2 * height, : 2 * width], (width, height), interpolation=_cv.INTER_AREA)
     soft = _cv.GaussianBlur(half, (3, 3), 0)
@@ -194,6 +220,30 @@ def _blobs(ridges: Ridges) -> NDArray[np.float64]:
     return np.stack([2.0 * column + 0.5, 2.0 * row + 0.5], axis=1)
 
 
+_BLOB_STEPS = np.asarray(BLOB_STEPS, np.int32)
+
+
+def _blobs_compiled(ridges: Ridges) -> NDArray[np.float64]:
+    excess = np.ascontiguousarray(ridges.excess)
+    room = 1024
+    while True:
+        at = np.empty((room, 2))
+        found = native.LIBRARY.edgewatch_blobs(
+            native.place(excess),
+            *excess.shape,
+            min(255, max(2, int(BLOB_NOISE * ridges.threshold_noise))),
+            BLOB_MARGIN,
+            len(BLOB_STEPS),
+            native.place(_BLOB_STEPS),
+            native.double(BLOB_FALL),
+            native.place(at),
+            room,
+        )
+        if native.enough(found, room):
+            return at[:found]
+        room = found
+
+
 def read_patches(
     at: NDArray[np.float64], blurred: NDArray[np.float32], noise: float, contact_px: tuple[float, float]
 ) -> NDArray[np.float32]:
@@ -203,10 +253,28 @@ def read_patches(
     if not count:
         return np.zeros((0, size), np.float32)
     place, ahead = at.astype(np.float32), _directions(at, contact_px).astype(np.float32)
+    scale = 1.0 / (LEVEL_NOISE * noise)
+    if native.LIBRARY:
+        patches = np.empty((count, size), np.float32)
+        done = native.LIBRARY.edgewatch_patches(
+            native.place(blurred),
+            *blurred.shape,
+            count,
+            native.place(place),
+            native.place(ahead),
+            size,
+            native.place(_ALONG),
+            native.place(_ACROSS),
+            native.single(RING_RADII_PX[-1] + 1.0),
+            native.single(scale),
+            native.place(patches),
+        )
+        native.enough(done, 0)
+        return patches
     x = place[:, :1] + ahead[:, :1] * _ALONG - ahead[:, 1:] * _ACROSS
     y = place[:, 1:] + ahead[:, 1:] * _ALONG + ahead[:, :1] * _ACROSS
     level = _cv.remap(blurred, x, y, cv2.INTER_LINEAR, borderMode=cv2.BORDER_CONSTANT)
-    return np.asarray(np.log1p(np.maximum(level, 0.0) * np.float32(1.0 / (LEVEL_NOISE * noise))))
+    return np.asarray(np.log1p(np.maximum(level, 0.0) * np.float32(scale)))
 
 
 def sift_patches(patches: NDArray[np.float32]) -> NDArray[np.float64]:

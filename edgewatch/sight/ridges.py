@@ -17,6 +17,8 @@ import cv2
 import numpy as np
 from numpy.typing import NDArray
 
+from edgewatch.sight import native
+
 _cv: Any = cv2  # its own type hints differ between versions and forbid what it takes
 
 BLUR_PX = 0.6
@@ -37,6 +39,9 @@ LEAST_BEND = 0.06
 """Curvature across a ridge, as a share of its height: that of a streak nine pixels wide. The flank of a streak, where
 noise makes maxima along it, bends less or the other way."""
 
+ROOM = 8192
+"""The compiled form makes room for so many points to begin with: twice what a full stream has."""
+
 MARGIN_PX = 3
 """Ridge points nearer to the edge than this are not looked for (px)."""
 
@@ -45,14 +50,14 @@ MARGIN_PX = 3
 class Ridges:
     """Ridge points of one picture, all arrays of length N.
 
-    ``index``: int64, flat pixel index. ``x``, ``y``: float32, crest (px). ``cos``, ``sin``: float32, unit vector along
-    the ridge. ``height``: float32, blurred picture at the pixel (DN). ``bend``: float32, minus the second derivative
+    ``index``: int64 or int32, flat pixel index, rising. ``x``, ``y``: float32, crest (px). ``cos``, ``sin``: float32,
+    unit vector along the ridge. ``height``: float32, blurred picture at the pixel (DN). ``bend``: float32, minus the second derivative
     across (DN/px²). ``offset``: float32, crest from the pixel's centre, across (px). ``threshold_noise``: noise of the
     blurred picture (DN). ``blurred``: float32 (H, W), the blurred picture. ``excess``: uint8 (H, W), what it was
     made from.
     """
 
-    index: NDArray[np.int64]
+    index: NDArray[np.int64] | NDArray[np.int32]
     x: NDArray[np.float32]
     y: NDArray[np.float32]
     cos: NDArray[np.float32]
@@ -68,6 +73,8 @@ class Ridges:
 def find_ridges(excess: NDArray[np.uint8], noise_dn: float) -> Ridges:
     """Ridge points of a picture less its background, uint8 (H, W); ``noise_dn``: its noise (DN)."""
     blurred: NDArray[np.float32] = _cv.sepFilter2D(excess, cv2.CV_32F, _TAPS, _TAPS)
+    if native.LIBRARY:
+        return _find_compiled(excess, blurred, noise_dn)
     width = excess.shape[1]
     index = _candidates(blurred, THRESHOLD_NOISE * NOISE_GAIN * noise_dn)
     flat = blurred.ravel()
@@ -101,6 +108,42 @@ def find_ridges(excess: NDArray[np.uint8], noise_dn: float) -> Ridges:
         height=centre[kept],
         bend=-across[kept],
         offset=step,
+        threshold_noise=NOISE_GAIN * noise_dn,
+        blurred=blurred,
+        excess=excess,
+    )
+
+
+def _find_compiled(excess: NDArray[np.uint8], blurred: NDArray[np.float32], noise_dn: float) -> Ridges:
+    height, width = blurred.shape
+    room = ROOM
+    while True:
+        index, values = np.empty(room, np.int32), np.empty((7, room), np.float32)
+        count = native.LIBRARY.edgewatch_ridges(
+            native.place(blurred),
+            height,
+            width,
+            native.single(THRESHOLD_NOISE * NOISE_GAIN * noise_dn),
+            native.single(CREST_PX),
+            native.single(LEAST_BEND),
+            MARGIN_PX,
+            native.place(index),
+            *(native.place(values, k * room) for k in range(7)),
+            room,
+        )
+        if native.enough(count, room):
+            break
+        room = count
+    x, y, cos, sin, level, bend, offset = values[:, :count]
+    return Ridges(
+        index=index[:count],
+        x=x,
+        y=y,
+        cos=cos,
+        sin=sin,
+        height=level,
+        bend=bend,
+        offset=offset,
         threshold_noise=NOISE_GAIN * noise_dn,
         blurred=blurred,
         excess=excess,

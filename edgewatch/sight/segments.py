@@ -11,6 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from edgewatch.sight import native
 from edgewatch.sight.ridges import Ridges
 
 LINK_OFFSETS = ((1, 0), (-1, 1), (0, 1), (1, 1), (2, 0), (-2, 1), (2, 1), (-1, 2), (0, 2), (1, 2))
@@ -42,6 +43,50 @@ class Segments:
     bend: NDArray[np.float64]
     points: NDArray[np.int64]
     spread: NDArray[np.float64]
+
+
+def find_segments(ridges: Ridges, scratch: NDArray[np.int32]) -> Segments:
+    """Straight pieces of ridge. ``scratch``: int32 (H*W,), all -1; returned so."""
+    if native.LIBRARY and ridges.index.dtype == np.int32:
+        return _find_compiled(ridges)
+    return fit_segments(ridges, link_ridges(ridges, scratch))
+
+
+_ALONG = np.asarray([max(dx for dx, dy in LINK_OFFSETS if dy == row) for row in (0, 1, 2)], np.int32)
+
+
+def _find_compiled(ridges: Ridges) -> Segments:
+    count = ridges.index.size
+    room = count // LEAST_POINTS + 1
+    work, numbers = np.empty((3, max(1, count)), np.int32), np.empty(room, np.int64)
+    ends, values = np.empty((3, room, 2)), np.empty((4, room))
+    points = (ridges.index, ridges.x, ridges.y, ridges.cos, ridges.sin, ridges.height, ridges.bend)
+    found = native.LIBRARY.edgewatch_segments(
+        count,
+        *(native.place(column) for column in points),
+        ridges.blurred.shape[1],
+        native.place(_ALONG),
+        native.single(LINK_COS),
+        native.single(LINK_OFFSET_PX),
+        LEAST_POINTS,
+        native.place(work),
+        *(native.place(ends, 2 * room * k) for k in range(3)),
+        *(native.place(values, room * k) for k in range(3)),
+        native.place(numbers),
+        native.place(values, room * 3),
+    )
+    native.enough(found, room)
+    length, height, bend, spread = values[:, :found]
+    return Segments(
+        begin=ends[0, :found],
+        end=ends[1, :found],
+        axis=ends[2, :found],
+        length=length,
+        height=height,
+        bend=bend,
+        points=numbers[:found],
+        spread=spread,
+    )
 
 
 def link_ridges(ridges: Ridges, scratch: NDArray[np.int32]) -> NDArray[np.int64]:

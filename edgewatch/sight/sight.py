@@ -15,7 +15,7 @@ from edgewatch.sight.lengths import Lengths
 from edgewatch.sight.light import LightMeter
 from edgewatch.sight.optics import Optics
 from edgewatch.sight.ridges import MARGIN_PX, NOISE_GAIN, find_ridges
-from edgewatch.sight.segments import fit_segments, link_ridges
+from edgewatch.sight.segments import find_segments
 from edgewatch.sight.steadiness import read_origin
 from edgewatch.sight.streaks import find_streaks
 
@@ -91,7 +91,7 @@ class Sight:
             self._lengths, self._meter = Lengths(o.contact_px), LightMeter()
         ridges = find_ridges(excess, self._background.noise_dn)
         noise = self._background.noise_dn * NOISE_GAIN
-        pieces = fit_segments(ridges, link_ridges(ridges, self._scratch))
+        pieces = find_segments(ridges, self._scratch)
         found = find_streaks(pieces, ridges.blurred, noise, self._lengths, o.axis)
         self._meter.measure_width(found.begin, found.end, ridges)
         apexes = find_apexes(pieces, ridges, o.contact_px, s.least_sure)

@@ -1,0 +1,108 @@
+/* Ridge points of a picture: see ridges.py. */
+#include "kernels.h"
+
+enum { BATCH = 256, BLOCK = 16 };
+
+typedef struct {
+    int32_t *index;
+    float *x, *y, *cos, *sin, *height, *bend, *offset;
+    int count, most; /* found so far; room */
+} Points;
+
+WIDE static int any_above(const float *values, float threshold)
+{
+    int any = 0;
+    for (int k = 0; k < BLOCK; k++)
+        any |= values[k] > threshold;
+    return any;
+}
+
+/* Steger's test of a batch of pixels; those whose crest lies within them are added. */
+WIDE static void add_crests(const float *blurred, int width, const int32_t *pixel, int number, float crest_px,
+                            float least_bend, Points *points)
+{
+    float bxx[BATCH], byy[BATCH], bxy[BATCH], gx[BATCH], gy[BATCH], centre[BATCH];
+    float cosine[BATCH], sine[BATCH], bend[BATCH], step[BATCH];
+    uint8_t keep[BATCH];
+    for (int k = 0; k < number; k++) {
+        const float *at = blurred + pixel[k];
+        float here = at[0], left = at[-1], right = at[1], above = at[-width], below = at[width];
+        centre[k] = here;
+        bxx[k] = left + right - 2.0f * here;
+        byy[k] = above + below - 2.0f * here;
+        bxy[k] = 0.25f * (at[-width - 1] + at[width + 1] - at[-width + 1] - at[width - 1]);
+        gx[k] = 0.5f * (right - left);
+        gy[k] = 0.5f * (below - above);
+    }
+    for (int k = 0; k < number; k++) {
+        /* the eigenvector of the most negative second derivative points across the line, the other one along it;
+         * sine and cosine come from those of twice the angle */
+        float p = bxx[k] - byy[k], q = 2.0f * bxy[k];
+        float r = sqrtf(p * p + q * q);
+        float safe = r > 0.0f ? r : 1.0f;
+        float c2 = r > 0.0f ? p / safe : 1.0f, s2 = q / safe;
+        float large = sqrtf(0.5f * (1.0f + fabsf(c2)));
+        float small = 0.5f * fabsf(s2) / large;
+        float c = c2 >= 0.0f ? large : small, s = c2 >= 0.0f ? small : large;
+        s = copysignf(s, s2);
+        float across = bxx[k] * s * s - 2.0f * bxy[k] * s * c + byy[k] * c * c;
+        float slope = gy[k] * c - gx[k] * s;
+        float other = bxx[k] + byy[k] - across, least = least_bend * centre[k];
+        int crest = (-across > least) & (-across > other);
+        float away = crest ? -slope / across : INFINITY;
+        cosine[k] = c;
+        sine[k] = s;
+        bend[k] = -across;
+        step[k] = away;
+        keep[k] = (uint8_t)(crest & (fabsf(away * s) <= crest_px) & (fabsf(away * c) <= crest_px));
+    }
+    for (int k = 0; k < number; k++) {
+        if (!keep[k])
+            continue;
+        int n = points->count++;
+        if (n >= points->most)
+            continue; /* counted all the same: the caller comes back with room */
+        int row = pixel[k] / width, column = pixel[k] % width;
+        points->index[n] = pixel[k];
+        points->x[n] = (float)column - step[k] * sine[k];
+        points->y[n] = (float)row + step[k] * cosine[k];
+        points->cos[n] = cosine[k];
+        points->sin[n] = sine[k];
+        points->height[n] = centre[k];
+        points->bend[n] = bend[k];
+        points->offset[n] = step[k];
+    }
+}
+
+/* Ridge points of blurred (height x width), nowhere nearer to its edge than margin (at least 1), at most `most` of them:
+ * Steger's test of the pixels above the threshold that are a local maximum along their row or their column. Returns their
+ * number, which may be more than there was room for. */
+EXPORT int edgewatch_ridges(const float *blurred, int height, int width, float threshold, float crest_px,
+                            float least_bend, int margin, int32_t *index, float *x, float *y, float *cosine,
+                            float *sine, float *level, float *bend, float *offset, int most)
+{
+    Points points = {index, x, y, cosine, sine, level, bend, offset, 0, most};
+    int32_t pixel[BATCH + BLOCK];
+    int number = 0;
+    for (int row = margin; row < height - margin; row++) {
+        const float *at = blurred + (size_t)row * width;
+        for (int from = margin; from < width - margin; from += BLOCK) {
+            int stop = from + BLOCK < width - margin ? from + BLOCK : width - margin;
+            if (stop - from == BLOCK && !any_above(at + from, threshold))
+                continue;
+            for (int column = from; column < stop; column++) {
+                const float *here = at + column;
+                if (*here > threshold && ((*here >= here[-1] && *here > here[1]) ||
+                                          (*here >= here[-width] && *here > here[width])))
+                    pixel[number++] = row * width + column;
+            }
+            if (number >= BATCH) {
+                add_crests(blurred, width, pixel, BATCH, crest_px, least_bend, &points);
+                number -= BATCH;
+                memcpy(pixel, pixel + BATCH, sizeof(int32_t) * (size_t)number);
+            }
+        }
+    }
+    add_crests(blurred, width, pixel, number, crest_px, least_bend, &points);
+    return points.count;
+}
