@@ -13,7 +13,7 @@ import sys
 from pathlib import Path
 
 FOLDER = Path(__file__).resolve().parents[1] / "edgewatch" / "sight" / "native"
-NAME = "compiled.so"
+NAME = "compiled.bin"
 FLAGS = ("-std=gnu11", "-O3", "-fPIC", "-shared", "-fno-math-errno", "-fno-trapping-math", "-fvisibility=hidden")
 """Errors of square roots set no flag and no comparison traps, so loops become vector code; nothing is reordered."""
 

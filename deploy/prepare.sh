@@ -69,7 +69,7 @@ fingerprint() { # of everything that an installation is made from but the source
 }
 
 compiled() { # the sight is, or cannot be
-    [ -e "$top/edgewatch/sight/native/compiled.so" ] || ! command -v cc >/dev/null 2>&1
+    [ -e "$top/edgewatch/sight/native/compiled.bin" ] || ! command -v cc >/dev/null 2>&1
 }
 
 install_edgewatch() { # EXTRAS: '' or '[test,desk]'; nothing to do when nothing has changed since the last time

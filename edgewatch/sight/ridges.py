@@ -51,10 +51,10 @@ class Ridges:
     """Ridge points of one picture, all arrays of length N.
 
     ``index``: int64 or int32, flat pixel index, rising. ``x``, ``y``: float32, crest (px). ``cos``, ``sin``: float32,
-    unit vector along the ridge. ``height``: float32, blurred picture at the pixel (DN). ``bend``: float32, minus the second derivative
-    across (DN/px²). ``offset``: float32, crest from the pixel's centre, across (px). ``threshold_noise``: noise of the
-    blurred picture (DN). ``blurred``: float32 (H, W), the blurred picture. ``excess``: uint8 (H, W), what it was
-    made from.
+    unit vector along the ridge. ``height``: float32, blurred picture at the pixel (DN). ``bend``: float32, minus the
+    second derivative across (DN/px²). ``offset``: float32, crest from the pixel's centre, across (px).
+    ``threshold_noise``: noise of the blurred picture (DN). ``blurred``: float32 (H, W), the blurred picture.
+    ``excess``: uint8 (H, W), what it was made from.
     """
 
     index: NDArray[np.int64] | NDArray[np.int32]

@@ -60,6 +60,7 @@ def test_a_sound_station(check: Check) -> None:
     assert list(found) == [
         *(
             "configuration",
+            "sight",
             "source",
             "pictures",
             "bands",
@@ -80,7 +81,7 @@ def test_table_for_people(tmp_path: Path, capsys: pytest.CaptureFixture[str]) ->
     """Without --json: a line a finding."""
     assert main(["check", "--source", str(dark_clip(tmp_path / "clip.mkv")), "--journal", str(tmp_path / "j")]) == 0
     out = capsys.readouterr().out
-    assert [line.split()[0] for line in out.splitlines()][:3] == ["configuration", "source", "pictures"]
+    assert [line.split()[0] for line in out.splitlines()][:4] == ["configuration", "sight", "source", "pictures"]
 
 
 @pytest.mark.parametrize(

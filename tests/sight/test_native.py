@@ -226,7 +226,7 @@ def test_no_compiler_and_broken_sources(sources: Path) -> None:
     done = build(sources)
     assert done.returncode == 1
     assert "ridges.c" in done.stderr
-    assert not list(sources.glob("*.so*"))
+    assert not list(sources.glob("*.bin*"))
 
 
 def test_both_know_the_same_mark() -> None:

@@ -15,7 +15,7 @@ from typing import Any
 from numpy.typing import NDArray
 
 FOLDER = Path(__file__).parent
-FILE = FOLDER / "compiled.so"
+FILE = FOLDER / "compiled.bin"  # not .so, which Python would take for a module
 
 
 def source_mark(folder: Path = FOLDER) -> str:
