@@ -9,6 +9,9 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from edgewatch.sight import native
+from edgewatch.sight.native import records
+
 KEPT = 400
 """Streaks remembered: several pictures' worth, so that a change of wheel speed is followed within a second."""
 
@@ -76,6 +79,17 @@ class Lengths:
         expected = np.interp(self._distance(at), self._places, self._typical)
         return np.asarray((np.log(length_px) - expected) / self.spread)
 
+    def record(self) -> records.Lengths:
+        """The same for the compiled steps, good until the next streaks are learnt from."""
+        return records.Lengths(
+            native.place(self._places),
+            native.place(self._typical),
+            *self._contact.tolist(),
+            self.longest_px,
+            self.spread,
+            self._places.size,
+        )
+
     def learn(self, begin: NDArray[np.float64], end: NDArray[np.float64]) -> None:
         """Add streaks from ``begin`` to ``end`` (N, 2) px."""
         gap, middle = end - begin, 0.5 * (begin + end)
@@ -105,7 +119,7 @@ class Lengths:
         typical = log[ranked][np.minimum(half, count - 1)]
         # Air only slows sparks down: nearer the wheel they are no shorter, whatever fragments say.
         typical = np.maximum.accumulate(typical[::-1])[::-1]
-        self._places, self._typical = away[(cuts[:-1] + cuts[1:]) // 2], typical
+        self._places, self._typical = away[(cuts[:-1] + cuts[1:]) // 2], np.ascontiguousarray(typical)
         # Bursts shorten streaks, nothing makes them longer: the deviation is that of the longer ones.
         above = log[log > typical[part]] - typical[part][log > typical[part]]
         off = float(np.median(above)) if above.size else 0.0

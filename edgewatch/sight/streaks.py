@@ -15,7 +15,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from edgewatch.sight import native
 from edgewatch.sight.lengths import Lengths
+from edgewatch.sight.native import records
 from edgewatch.sight.reading import read_levels
 from edgewatch.sight.segments import Segments
 
@@ -99,6 +101,17 @@ class Steps:
     begins: NDArray[np.bool_]
     full: NDArray[np.bool_]
 
+    def first(self, count: int) -> Steps:
+        """So many of them."""
+        return Steps(
+            at=self.at[:count],
+            inward=self.inward[:count],
+            height=self.height[:count],
+            size=self.size[:count],
+            begins=self.begins[:count],
+            full=self.full[:count],
+        )
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Lines:
@@ -129,6 +142,15 @@ def find_streaks(
     lengths.learn(steps.at[pairs[full, 0]], steps.at[pairs[full, 1]])
     if first and lengths.known:  # what was just learnt helps the first picture too
         pairs = pair_steps(steps, blurred, lengths)
+    return make_lines(steps, pairs, blurred, noise, lengths)
+
+
+def make_lines(
+    steps: Steps, pairs: NDArray[np.int64], blurred: NDArray[np.float32], noise: float, lengths: Lengths
+) -> Lines:
+    """Streaks from pairs of steps (begin, end), int64 (N, 2), and from the steps left alone."""
+    if native.LIBRARY:
+        return _make_lines_compiled(steps, pairs, blurred, noise, lengths)
     alone_begin, alone_end = _complete(steps, pairs, blurred, noise, lengths)
     begin = np.concatenate([steps.at[pairs[:, 0]], alone_begin])
     end = np.concatenate([steps.at[pairs[:, 1]], alone_end])
@@ -140,6 +162,8 @@ def find_streaks(
 
 def find_steps(pieces: Segments, blurred: NDArray[np.float32], noise: float, axis: tuple[float, float]) -> Steps:
     """Steps along every piece. All pieces are laid end to end into one row, so that sums run over them together."""
+    if native.LIBRARY:
+        return _find_steps_compiled(pieces, blurred, noise, axis)
     long = np.flatnonzero(pieces.points >= STREAK_POINTS)
     along_axis = pieces.axis[long] @ np.asarray(axis)
     heading = np.where(along_axis < 0.0, -1.0, 1.0)[:, None] * pieces.axis[long]
@@ -179,8 +203,45 @@ def find_steps(pieces: Segments, blurred: NDArray[np.float32], noise: float, axi
     )
 
 
+def _find_steps_compiled(
+    pieces: Segments, blurred: NDArray[np.float32], noise: float, axis: tuple[float, float]
+) -> Steps:
+    rules = records.StepRules(
+        least_height=STEP_NOISE * STEP_NOISE_GAIN * noise,
+        share=STEP_SHARE,
+        full_share=FULL_SHARE,
+        least_points=STREAK_POINTS,
+        beyond_px=BEYOND_PX,
+        box_px=BOX_PX,
+    )
+    columns = (pieces.begin, pieces.end, pieces.axis, pieces.length, pieces.points)
+    room = 4 * pieces.length.size + 16
+    while True:
+        places, values, flags = np.empty((2, room, 2)), np.empty((2, room)), np.empty((2, room), np.bool_)
+        steps = Steps(at=places[0], inward=places[1], height=values[0], size=values[1], begins=flags[0], full=flags[1])
+        found = native.LIBRARY.edgewatch_steps(
+            pieces.length.size,
+            *map(native.place, columns),
+            *map(native.double, axis),
+            native.reference(records.picture(blurred)),
+            native.reference(rules),
+            native.reference(_record(steps)),
+            room,
+        )
+        if native.enough(found, room):
+            return steps.first(found)
+        room = found
+
+
+def _record(steps: Steps) -> records.Steps:
+    columns = (steps.at, steps.inward, steps.height, steps.size, steps.begins, steps.full)
+    return records.Steps(*map(native.place, columns))
+
+
 def pair_steps(steps: Steps, blurred: NDArray[np.float32], lengths: Lengths) -> NDArray[np.int64]:
     """Pairs (begin, end) of steps that make a streak, int64 (N, 2)."""
+    if native.LIBRARY:
+        return _pair_steps_compiled(steps, blurred, lengths)
     begins, ends = np.flatnonzero(steps.begins), np.flatnonzero(~steps.begins)
     none = np.zeros((0, 2), np.int64)
     if not begins.size or not ends.size:
@@ -214,6 +275,68 @@ def pair_steps(steps: Steps, blurred: NDArray[np.float32], lengths: Lengths) -> 
     return np.stack([b[chosen], e[chosen]], axis=1)
 
 
+_PAIR_RULES = records.PairRules(
+    side_px=SIDE_PX,
+    side_tan=SIDE_TAN,
+    least_run_px=LEAST_RUN_PX,
+    ratio_log=RATIO_LOG,
+    fade_px=FADE_PX,
+    ratio_most=RATIO_MOST,
+    path_share=PATH_SHARE,
+    long_px=LONG_PX,
+    cost_full=LENGTH_COST_FULL,
+    cost_most=LENGTH_COST_MOST,
+    pair_most=COST_MOST,
+    dark_most=DARK_MOST,
+)
+
+
+def _pair_steps_compiled(steps: Steps, blurred: NDArray[np.float32], lengths: Lengths) -> NDArray[np.int64]:
+    pairs = np.empty((steps.height.size // 2, 2), np.int64)
+    found = native.LIBRARY.edgewatch_pairs(
+        steps.height.size,
+        native.reference(_record(steps)),
+        native.reference(records.picture(blurred)),
+        native.reference(lengths.record()),
+        native.reference(_PAIR_RULES),
+        native.place(pairs),
+    )
+    native.enough(found, len(pairs))
+    return pairs[:found]
+
+
+def _make_lines_compiled(
+    steps: Steps, pairs: NDArray[np.int64], blurred: NDArray[np.float32], noise: float, lengths: Lengths
+) -> Lines:
+    rules = records.LineRules(
+        dark_dn=DARK_NOISE * noise,
+        dark_share=DARK_SHARE,
+        long_px=LONG_PX,
+        alone_least_px=ALONE_LEAST_PX,
+        same_side_px=SAME_SIDE_PX,
+        same_cos=SAME_COS,
+        same_overlap=SAME_OVERLAP,
+        level_samples=LEVEL_SAMPLES,
+    )
+    room = steps.height.size
+    ends, level, whole = np.empty((2, room, 2)), np.empty(room), np.empty(room, np.bool_)
+    found = native.LIBRARY.edgewatch_lines(
+        room,
+        native.reference(_record(steps)),
+        len(pairs),
+        native.place(pairs),
+        native.reference(records.picture(blurred)),
+        native.reference(lengths.record()),
+        native.reference(rules),
+        native.place(ends),
+        native.place(ends, 2 * room),
+        native.place(level),
+        native.place(whole),
+    )
+    native.enough(found, room)
+    return Lines(begin=ends[0, :found], end=ends[1, :found], level=level[:found], whole=whole[:found])
+
+
 def _stay_lit(
     a: NDArray[np.float64], b: NDArray[np.float64], level: NDArray[np.float64], blurred: NDArray[np.float32]
 ) -> NDArray[np.bool_]:
@@ -244,7 +367,7 @@ def _cheapest(i: NDArray[np.int64], j: NDArray[np.int64], cost: NDArray[np.float
         used = np.zeros(count, np.bool_)
         used[i[taken]] = used[j[taken]] = True
         alive = alive[~(used[i[alive]] | used[j[alive]])]
-    return np.concatenate(chosen)
+    return np.sort(np.concatenate(chosen))
 
 
 def _complete(

@@ -20,10 +20,12 @@ from numpy.typing import NDArray
 from edgewatch.sight import native
 from edgewatch.sight.background import Background
 from edgewatch.sight.bursts import find_candidates, read_patches
+from edgewatch.sight.lengths import Lengths
 from edgewatch.sight.optics import Optics
-from edgewatch.sight.ridges import Ridges, find_ridges
+from edgewatch.sight.ridges import NOISE_GAIN, Ridges, find_ridges
 from edgewatch.sight.segments import Segments, find_segments
 from edgewatch.sight.sight import Sight
+from edgewatch.sight.streaks import find_steps, make_lines, pair_steps
 from tests.scenes import Look, Scene, Stream, crossing_lines
 from tests.sight.test_sight import make_optics
 
@@ -73,7 +75,7 @@ LOOKS = [Look(), Look(spread_px=0.7, noise_dn=4.0), Look(shake_px=1.5, hot_pixel
 def test_ridge_points_and_pieces_are_the_same(look: Look) -> None:
     """Point for point, piece for piece, on full streams: what differs is rounding."""
     for excess, noise in pictures(make_optics(), look, SEED):
-        (ridges, pieces), (own, found) = both(lambda excess=excess, noise=noise: trace(excess, noise))  # type: ignore[misc]
+        (ridges, pieces), (own, found) = both(lambda excess=excess, noise=noise: trace(excess, noise))
         assert ridges.index.size > 300
         assert np.array_equal(ridges.index, own.index)
         for name in ("x", "y", "cos", "sin", "height", "bend", "offset"):
@@ -88,16 +90,36 @@ def test_candidates_and_what_is_read_about_them_are_the_same(look: Look) -> None
     edge = np.array([[0.0, 0.0], [optics.width_px - 1.0, 3.3], [7.9, optics.height_px - 1.0], [-3.0, 50.0]])
     for excess, noise in pictures(optics, look, SEED + 1):
         ridges, pieces = trace(excess, noise)
-        plain, compiled = both(lambda r=ridges, p=pieces: find_candidates(p, r))  # type: ignore[misc]
+        plain, compiled = both(lambda r=ridges, p=pieces: find_candidates(p, r))
         assert len(plain) > 20
         assert plain.shape == compiled.shape
         assert np.allclose(plain, compiled, atol=1e-3)
         at = np.concatenate([compiled, edge])
-        mine, own = both(
-            lambda r=ridges, a=at: read_patches(a, r.blurred, r.threshold_noise, optics.contact_px)  # type: ignore[misc]
-        )
+        mine, own = both(lambda r=ridges, a=at: read_patches(a, r.blurred, r.threshold_noise, optics.contact_px))
         # remap may place a point to 1/32 px only, in some versions of OpenCV
         assert np.abs(mine - own).mean() < 0.01
+
+
+@pytest.mark.parametrize("look", LOOKS)
+def test_steps_pairs_and_lines_are_the_same(look: Look) -> None:
+    """Step for step and streak for streak, before lengths are known and after."""
+    optics = make_optics()
+    lengths = Lengths(optics.contact_px)
+    for excess, noise in pictures(optics, look, SEED + 3):
+        ridges, pieces = trace(excess, noise)
+        ground = noise * NOISE_GAIN
+        plain, own = both(lambda r=ridges, p=pieces, n=ground: find_steps(p, r.blurred, n, optics.axis))
+        assert plain.height.size > 30
+        for name in ("at", "inward", "height", "size", "begins", "full"):
+            assert np.allclose(getattr(plain, name), getattr(own, name), atol=1e-3), name
+        pairs, same = both(lambda s=plain, r=ridges: pair_steps(s, r.blurred, lengths))
+        assert np.array_equal(pairs, same)
+        lines, found = both(lambda s=plain, p=pairs, r=ridges, n=ground: make_lines(s, p, r.blurred, n, lengths))
+        for name in ("begin", "end", "level", "whole"):
+            assert np.allclose(getattr(lines, name), getattr(found, name), atol=1e-2), name
+        lengths.learn(lines.begin[lines.whole], lines.end[lines.whole])
+    assert lengths.known
+    assert len(lines.whole) > lines.whole.sum() > 10, "some of which one end is seen, some whole"
 
 
 @given(arrays(np.uint8, st.tuples(st.integers(8, 40), st.integers(8, 40))), st.floats(0.5, 30.0))
@@ -163,7 +185,7 @@ def test_crossing_lines_are_seen_the_same() -> None:
     optics, rng = make_optics(), np.random.default_rng(SEED)
     for angle in (10.0, 45.0, 90.0):
         picture = crossing_lines(optics, Look(), rng, angle_deg=angle)
-        plain, own = both(lambda p=picture: Sight(optics).look(p))  # type: ignore[misc]
+        plain, own = both(lambda p=picture: Sight(optics).look(p))
         assert np.allclose(plain.streaks, own.streaks, atol=0.01)
         assert np.allclose(plain.bursts, own.bursts, atol=0.01)
 

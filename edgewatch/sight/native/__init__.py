@@ -47,6 +47,9 @@ LIBRARY, WHY_NOT = load()
 single, double = ctypes.c_float, ctypes.c_double
 """Numbers as the compiled steps take them."""
 
+reference = ctypes.byref
+"""A record as they take it."""
+
 
 def place(array: NDArray[Any], skipped: int = 0) -> ctypes.c_void_p:
     """Where a contiguous array begins in memory, or the value after so many of it. The caller keeps the array alive."""

@@ -1,0 +1,72 @@
+"""Records that the compiled steps take, field by field as the C sources declare them."""
+
+from __future__ import annotations
+
+import ctypes
+from ctypes import c_double, c_float, c_int32, c_void_p
+
+import numpy as np
+from numpy.typing import NDArray
+
+from edgewatch.sight import native
+
+
+class Picture(ctypes.Structure):
+    """A blurred picture."""
+
+    _fields_ = (("blurred", c_void_p), ("height", c_int32), ("width", c_int32))
+
+
+class Steps(ctypes.Structure):
+    """Where the columns of steps lie."""
+
+    _fields_ = tuple((name, c_void_p) for name in ("at", "inward", "height", "size", "begins", "full"))
+
+
+class Lengths(ctypes.Structure):
+    """How long streaks are at a distance from the contact point; ``number`` of places 0: not known."""
+
+    _fields_ = (
+        ("places", c_void_p),
+        ("typical", c_void_p),
+        ("contact_x", c_double),
+        ("contact_y", c_double),
+        ("longest_px", c_double),
+        ("spread", c_double),
+        ("number", c_int32),
+    )
+
+
+class StepRules(ctypes.Structure):
+    """What makes a step."""
+
+    _fields_ = (
+        *((name, c_double) for name in ("least_height", "share", "full_share")),
+        *((name, c_int32) for name in ("least_points", "beyond_px", "box_px")),
+    )
+
+
+class PairRules(ctypes.Structure):
+    """What makes a pair of steps, and its cost."""
+
+    _fields_ = (
+        *((name, c_float) for name in ("side_px", "side_tan", "least_run_px", "ratio_log", "fade_px")),
+        *((name, c_double) for name in ("ratio_most", "path_share", "long_px")),
+        *((name, c_double) for name in ("cost_full", "cost_most", "pair_most")),
+        ("dark_most", c_int32),
+    )
+
+
+class LineRules(ctypes.Structure):
+    """How far a step left alone leads, and which lines are the same."""
+
+    _fields_ = (
+        *((name, c_double) for name in ("dark_dn", "dark_share", "long_px", "alone_least_px")),
+        *((name, c_float) for name in ("same_side_px", "same_cos", "same_overlap")),
+        ("level_samples", c_int32),
+    )
+
+
+def picture(blurred: NDArray[np.float32]) -> Picture:
+    """The record of a picture, float32 (H, W)."""
+    return Picture(native.place(blurred), *blurred.shape)
