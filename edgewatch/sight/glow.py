@@ -17,8 +17,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from edgewatch.sight import native
 from edgewatch.sight.bursts import Apexes
 from edgewatch.sight.lengths import Lengths
+from edgewatch.sight.native import records
 from edgewatch.sight.optics import Optics
 
 SAME_PX = 8.0
@@ -51,6 +53,11 @@ ACROSS_SHARE = 1.2
 
 STEM_LEAST_PX = 6.0
 """A stem is seen from this length on (px)."""
+
+OLD_REACH = 1.5
+"""Arms of a burst of an earlier picture are within this many typical lengths of it."""
+
+LEAST_ARMS = 3
 
 LIMIT_POWER = 4.0
 """No burst is listed twice, so the time in which it gets listed stays below the period; softly, because near the limit
@@ -130,6 +137,8 @@ def sort_lines(
     lengths: Lengths,
 ) -> Sorted:
     """Tell streaks from arms. ``begin``, ``end`` (N, 2) px, the first nearer the wheel; ``whole``: both ends seen."""
+    if native.LIBRARY:
+        return _sort_compiled(begin, end, whole, apexes, glow, lengths)
     contact = np.asarray(glow.optics.contact_px)
     end = end.copy()
     run = end - begin
@@ -178,7 +187,7 @@ def sort_lines(
         ox, oy = old[None, :, 0] - begin[:, None, 0], old[None, :, 1] - begin[:, None, 1]
         beside = np.abs(ox * unit[:, None, 1] - oy * unit[:, None, 0]) < ARM_SIDE_PX
         before = ox * unit[:, None, 0] + oy * unit[:, None, 1]
-        reach = np.where(np.isfinite(typical), typical, 0.0)[:, None] * 1.5
+        reach = np.where(np.isfinite(typical), typical, 0.0)[:, None] * OLD_REACH
         arm = beside & (before > -reach) & (before < length[:, None] + reach) & (short[:, None] & ~straight)
         arm |= beside & (np.abs(before) <= ARM_GAP_PX) & short[:, None]
         streak &= ~arm.any(axis=1)
@@ -187,5 +196,45 @@ def sort_lines(
         begin=begin,
         end=end,
         streak=streak,
-        arms=np.maximum(arms, 3).astype(np.int64),
+        arms=np.maximum(arms, LEAST_ARMS).astype(np.int64),
     )
+
+
+def _sort_compiled(
+    begin: NDArray[np.float64],
+    end: NDArray[np.float64],
+    whole: NDArray[np.bool_],
+    apexes: Apexes,
+    glow: Glow,
+    lengths: Lengths,
+) -> Sorted:
+    end, old = end.copy(), np.ascontiguousarray(glow.remembered())
+    begin, whole, at, late = map(np.ascontiguousarray, (begin, whole, apexes.at, apexes.late))
+    streak, arms = np.empty(len(begin), np.bool_), np.empty(len(at), np.int64)
+    rules = records.ArmRules(
+        late_sure=LATE_SURE,
+        arm_side_px=ARM_SIDE_PX,
+        arm_gap_px=ARM_GAP_PX,
+        late_gap_px=LATE_GAP_PX,
+        short_share=SHORT_SHARE,
+        radial_cos=RADIAL_COS,
+        across_cos=ACROSS_COS,
+        across_share=ACROSS_SHARE,
+        stem_least_px=STEM_LEAST_PX,
+        old_reach=OLD_REACH,
+        from_contact=lengths.from_contact,
+        least_arms=LEAST_ARMS,
+    )
+    done = native.LIBRARY.edgewatch_sort(
+        len(begin),
+        *map(native.place, (begin, end, whole)),
+        len(at),
+        *map(native.place, (at, late)),
+        len(old),
+        native.place(old),
+        native.reference(lengths.record()),
+        native.reference(rules),
+        *map(native.place, (streak, arms)),
+    )
+    native.enough(done, 0)
+    return Sorted(begin=begin, end=end, streak=streak, arms=arms)

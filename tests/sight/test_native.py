@@ -20,6 +20,7 @@ from numpy.typing import NDArray
 from edgewatch.sight import native
 from edgewatch.sight.background import Background
 from edgewatch.sight.bursts import find_candidates, read_patches
+from edgewatch.sight.glow import Sorted, sort_lines
 from edgewatch.sight.lengths import Lengths
 from edgewatch.sight.optics import Optics
 from edgewatch.sight.ridges import NOISE_GAIN, Ridges, find_ridges
@@ -120,6 +121,29 @@ def test_steps_pairs_and_lines_are_the_same(look: Look) -> None:
         lengths.learn(lines.begin[lines.whole], lines.end[lines.whole])
     assert lengths.known
     assert len(lines.whole) > lines.whole.sum() > 10, "some of which one end is seen, some whole"
+
+
+def test_arms_are_told_from_streaks_the_same(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Within a running stream, where bursts of earlier pictures still glow."""
+    seen = {"arms": 0, "cut": 0, "streaks": 0}
+
+    def compared(begin: NDArray[np.float64], end: NDArray[np.float64], *others: Any) -> Sorted:
+        plain, own = both(lambda: sort_lines(begin, end, *others))
+        for name in ("begin", "end", "streak", "arms"):
+            mine, other = getattr(plain, name), getattr(own, name)
+            assert mine.dtype == other.dtype
+            assert np.allclose(mine, other, atol=1e-6), name
+        seen["arms"] += int((~own.streak).sum())
+        seen["cut"] += int((own.end != end).any(axis=1).sum())
+        seen["streaks"] += int(own.streak.sum())
+        return own
+
+    monkeypatch.setattr("edgewatch.sight.sight.sort_lines", compared)
+    optics = make_optics()
+    sight = Sight(optics)
+    for picture, _ in Scene(optics, Stream(hazard_per_m=3.0), Look(), SEED + 4, 20.5 / optics.fps):
+        sight.look(picture)
+    assert min(seen.values()) > 3, f"every kind of line has been there: {seen}"
 
 
 @given(arrays(np.uint8, st.tuples(st.integers(8, 40), st.integers(8, 40))), st.floats(0.5, 30.0))

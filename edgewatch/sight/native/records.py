@@ -67,6 +67,16 @@ class LineRules(ctypes.Structure):
     )
 
 
+class ArmRules(ctypes.Structure):
+    """What makes a line an arm."""
+
+    _fields_ = (
+        *((name, c_double) for name in ("late_sure", "arm_side_px", "arm_gap_px", "late_gap_px", "short_share")),
+        *((name, c_double) for name in ("radial_cos", "across_cos", "across_share", "stem_least_px", "old_reach")),
+        *((name, c_int32) for name in ("from_contact", "least_arms")),
+    )
+
+
 def picture(blurred: NDArray[np.float32]) -> Picture:
     """The record of a picture, float32 (H, W)."""
     return Picture(native.place(blurred), *blurred.shape)

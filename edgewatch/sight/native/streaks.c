@@ -1,6 +1,6 @@
 /* Streaks from steps of brightness along straight pieces: see streaks.py. Every number that the method knows comes from
  * there. */
-#include "kernels.h"
+#include "lengths.h"
 
 typedef struct {
     const float *blurred;
@@ -12,13 +12,6 @@ typedef struct {
     double *at, *inward, *height, *size;
     uint8_t *begins, *full;
 } Steps;
-
-/* How long streaks are at a distance from the contact point, as lengths.py has it: number 0 means not known. */
-typedef struct {
-    const double *places, *typical;
-    double contact_x, contact_y, longest_px, spread;
-    int32_t number;
-} Lengths;
 
 typedef struct {
     double least_height, share, full_share;
@@ -40,21 +33,6 @@ typedef struct {
 static float read(const Picture *picture, double x, double y)
 {
     return read_level(picture->blurred, picture->height, picture->width, (float)x, (float)y);
-}
-
-/* Logarithm of the typical length at a point: between the places as np.interp has it. */
-static double expected(const Lengths *lengths, double x, double y)
-{
-    double away = hypot(x - lengths->contact_x, y - lengths->contact_y);
-    int n = lengths->number, k = 0;
-    if (away <= lengths->places[0])
-        return lengths->typical[0];
-    if (away >= lengths->places[n - 1])
-        return lengths->typical[n - 1];
-    while (lengths->places[k + 1] <= away)
-        k++;
-    double slope = (lengths->typical[k + 1] - lengths->typical[k]) / (lengths->places[k + 1] - lengths->places[k]);
-    return slope * (away - lengths->places[k]) + lengths->typical[k];
 }
 
 /* Steps along n pieces, for streams along (ax, ay). Returns their number, which may be more than `most`, or -1 without
