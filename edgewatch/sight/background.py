@@ -17,6 +17,8 @@ import cv2
 import numpy as np
 from numpy.typing import NDArray
 
+from edgewatch.sight import native
+
 _cv: Any = cv2  # its own type hints differ between versions and forbid scalars that it takes
 
 CELL_PX = 8
@@ -99,7 +101,7 @@ class Background:
         """Picture less its background (DN, clipped at 0), uint8 (H, W); learns from the picture."""
         height, width = picture.shape
         small = (max(2, width // CELL_PX), max(2, height // CELL_PX))
-        cells = _cv.resize(picture, small, interpolation=_cv.INTER_AREA).astype(np.float32)
+        cells = _cells(picture, small)
         if self._cells is not None:
             change = cells - self._cells
             if _middle(np.abs(change - _middle(change))) > OTHER_SCENE_DN:
@@ -113,12 +115,11 @@ class Background:
         # Whole grey levels from here on: 8-bit arithmetic is several times faster, and the picture has no finer ones.
         opened: NDArray[np.uint8] | None = None
         if self._pattern is None:
-            opened = _enlarge(drift, picture.shape)
+            opened = _add_drift(np.zeros_like(picture), drift)
             ground = _median(picture) if self._seen == 0 else opened
+            over = None
         else:
-            ground = _cv.add(self._pattern, _enlarge(drift, picture.shape))
-            if float(drift.min()) < -0.5:
-                ground = _cv.subtract(ground, _enlarge(-drift, picture.shape))
+            ground, over = _take_ground(picture, self._pattern, drift)
         rows, columns = NOISE_STRIDE
         here = np.ascontiguousarray(ground[::rows, ::columns])
         level, uneven = _cv.meanStdDev(here)
@@ -128,7 +129,7 @@ class Background:
         self._learn(picture, opened, small)
         if self._seen == 1:
             ground = self._over_texture(picture, ground, small)
-        return np.asarray(_cv.subtract(picture, ground))
+        return np.asarray(_cv.subtract(picture, ground) if over is None else over)
 
     def _measure_noise(self, picture: NDArray[np.uint8], ground: NDArray[np.uint8]) -> None:
         left = picture.ravel().astype(np.float32) - ground.ravel()
@@ -173,7 +174,7 @@ class Background:
                 self._pattern = _cv.add(self._pattern, up)
         else:
             return
-        self._pattern_cells = _cv.resize(self._pattern, small, interpolation=_cv.INTER_AREA).astype(np.float32)
+        self._pattern_cells = _cells(self._pattern, small)
 
 
 def _middle(values: NDArray[np.float32]) -> float:
@@ -182,10 +183,39 @@ def _middle(values: NDArray[np.float32]) -> float:
     return float(np.partition(values.ravel(), half)[half])
 
 
-def _enlarge(cells: NDArray[np.float32], shape: tuple[int, ...]) -> NDArray[np.uint8]:
-    """Cells (DN) as a picture of ``shape``, what is below 0 as 0."""
-    whole = np.clip(np.rint(cells), 0.0, 255.0).astype(np.uint8)
-    return np.asarray(_cv.resize(whole, shape[::-1], interpolation=_cv.INTER_LINEAR))
+def _cells(picture: NDArray[np.uint8], small: tuple[int, int]) -> NDArray[np.float32]:
+    """Means in cells (DN, whole), float32 in (columns, rows) as ``small`` has them."""
+    if native.LIBRARY and _divides(picture.shape):
+        picture, cells = np.ascontiguousarray(picture), np.empty(small[::-1], np.float32)
+        native.enough(native.LIBRARY.edgewatch_cells(native.place(picture), *picture.shape, native.place(cells)), 0)
+        return cells
+    return np.asarray(_cv.resize(picture, small, interpolation=_cv.INTER_AREA).astype(np.float32))
+
+
+def _divides(shape: tuple[int, ...]) -> bool:
+    """Whether a picture consists of whole cells, which the compiled steps ask for."""
+    return all(size >= 2 * CELL_PX and size % CELL_PX == 0 for size in shape)
+
+
+def _take_ground(
+    picture: NDArray[np.uint8], pattern: NDArray[np.uint8], drift: NDArray[np.float32]
+) -> tuple[NDArray[np.uint8], NDArray[np.uint8]]:
+    """Ground from a pattern and a drift in cells, and what the picture has above it, uint8 (H, W)."""
+    if native.LIBRARY and _divides(picture.shape):
+        picture, cells = np.ascontiguousarray(picture), np.rint(drift).astype(np.int32)
+        ground, over = np.empty((2, *picture.shape), np.uint8)
+        places = [native.place(one) for one in (picture, pattern, cells)]
+        done = native.LIBRARY.edgewatch_excess(*places, *picture.shape, native.place(ground), native.place(over))
+        native.enough(done, 0)
+        return ground, over
+    ground = _add_drift(pattern, drift)
+    return ground, np.asarray(_cv.subtract(picture, ground))
+
+
+def _add_drift(pattern: NDArray[np.uint8], drift: NDArray[np.float32]) -> NDArray[np.uint8]:
+    """A pattern and a drift in cells (DN, taken as whole), the latter drawn between the cells' centres."""
+    whole = _cv.resize(np.rint(drift), pattern.shape[::-1], interpolation=_cv.INTER_LINEAR)
+    return np.asarray(np.clip(np.floor(whole + np.float32(0.5)) + pattern, 0.0, 255.0), np.uint8)
 
 
 def _median(picture: NDArray[np.uint8]) -> NDArray[np.uint8]:

@@ -209,7 +209,7 @@ def _sort_compiled(
     lengths: Lengths,
 ) -> Sorted:
     end, old = end.copy(), np.ascontiguousarray(glow.remembered())
-    begin, whole, at, late = map(np.ascontiguousarray, (begin, whole, apexes.at, apexes.late))
+    at, late = np.ascontiguousarray(apexes.at), np.ascontiguousarray(apexes.late)
     streak, arms = np.empty(len(begin), np.bool_), np.empty(len(at), np.int64)
     rules = records.ArmRules(
         late_sure=LATE_SURE,
@@ -227,14 +227,18 @@ def _sort_compiled(
     )
     done = native.LIBRARY.edgewatch_sort(
         len(begin),
-        *map(native.place, (begin, end, whole)),
+        native.place(begin),
+        native.place(end),
+        native.place(whole),
         len(at),
-        *map(native.place, (at, late)),
+        native.place(at),
+        native.place(late),
         len(old),
         native.place(old),
         native.reference(lengths.record()),
         native.reference(rules),
-        *map(native.place, (streak, arms)),
+        native.place(streak),
+        native.place(arms),
     )
     native.enough(done, 0)
     return Sorted(begin=begin, end=end, streak=streak, arms=arms)
