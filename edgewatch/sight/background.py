@@ -18,6 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from edgewatch.sight import native
+from edgewatch.sight.ranks import middle
 
 _cv: Any = cv2  # its own type hints differ between versions and forbid scalars that it takes
 
@@ -104,13 +105,13 @@ class Background:
         cells = _cells(picture, small)
         if self._cells is not None:
             change = cells - self._cells
-            if _middle(np.abs(change - _middle(change))) > OTHER_SCENE_DN:
+            if middle(np.abs(change - middle(change))) > OTHER_SCENE_DN:
                 self.reset()
         self._cells = cells
         if self._pattern_cells is not None:
             cells = cells - self._pattern_cells
             # where a glow that the pattern has learnt goes out, the opening would carry the hole to its surroundings
-            cells = np.maximum(cells, _middle(cells) - DEEPEST_HOLE_DN)
+            cells = np.maximum(cells, middle(cells) - DEEPEST_HOLE_DN)
         drift = _open(cells)
         # Whole grey levels from here on: 8-bit arithmetic is several times faster, and the picture has no finer ones.
         opened: NDArray[np.uint8] | None = None
@@ -135,8 +136,8 @@ class Background:
         left = picture.ravel().astype(np.float32) - ground.ravel()
         # Median absolute deviation finds the scale, clipping the sparks away; the clipped deviation then refines it
         # below one grey level, which a median of integers cannot do (0.9871: a Gaussian clipped at 3 deviations).
-        centre = _middle(left)
-        scale = max(LEAST_NOISE_DN, 1.4826 * _middle(np.abs(left - centre)))
+        centre = middle(left)
+        scale = max(LEAST_NOISE_DN, 1.4826 * middle(np.abs(left - centre)))
         quiet = left[np.abs(left - centre) <= 3.0 * scale]
         deviation = float(quiet.std()) / 0.9871 if quiet.size else 0.0
         self.raw_noise_dn = deviation
@@ -175,12 +176,6 @@ class Background:
         else:
             return
         self._pattern_cells = _cells(self._pattern, small)
-
-
-def _middle(values: NDArray[np.float32]) -> float:
-    """Median, without the care that ``numpy.median`` takes of axes and gaps, which costs more than the work."""
-    half = values.size // 2
-    return float(np.partition(values.ravel(), half)[half])
 
 
 def _cells(picture: NDArray[np.uint8], small: tuple[int, int]) -> NDArray[np.float32]:

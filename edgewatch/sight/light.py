@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from edgewatch.sight.background import Background
 from edgewatch.sight.detections import Light, PictureFlag
+from edgewatch.sight.ranks import middle
 from edgewatch.sight.reading import read_levels
 from edgewatch.sight.ridges import BLUR_PX, Ridges
 
@@ -115,8 +116,10 @@ class LightMeter:
     ) -> Light:
         """State of this picture. ``lines`` (N, 4) and ``snr`` (N,): its streaks."""
         full = picture[::SAMPLE_STEP_PX, ::SAMPLE_STEP_PX] >= FULL_DN
-        patches = full[1:, 1:] & full[:-1, 1:] & full[1:, :-1] & full[:-1, :-1]
-        share = float(np.count_nonzero(patches)) / patches.size
+        share = 0.0
+        if full.any():
+            patches = full[1:, 1:] & full[:-1, 1:] & full[1:, :-1] & full[:-1, :-1]
+            share = float(np.count_nonzero(patches)) / max(1, patches.size)
         width = WIDTH_PER_SIGMA * math.sqrt(self._variance) if math.isfinite(self._variance) else math.nan
         flags = PictureFlag.NONE
         if background.level_dn < NO_LIGHT_LEVEL_DN and background.raw_noise_dn < NO_LIGHT_NOISE_DN and not len(lines):
@@ -134,6 +137,6 @@ class LightMeter:
             noise_dn=background.noise_dn,
             saturated_share=share,
             streak_width_px=width if len(lines) else math.nan,
-            streak_peak_dn=float(np.median(snr)) * background.noise_dn if snr.size else math.nan,
+            streak_peak_dn=middle(snr) * background.noise_dn if snr.size else math.nan,
             flags=flags,
         )

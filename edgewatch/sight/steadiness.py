@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from edgewatch.sight.optics import Optics
+from edgewatch.sight.ranks import middle
 
 NEAREST_LINES = 24
 """The origin is told from so many lines nearest to the contact: direction errors grow with the distance."""
@@ -49,7 +50,6 @@ def read_origin(lines: NDArray[np.float64], optics: Optics) -> tuple[float, floa
         straight = straight[np.argpartition(place[straight], NEAREST_LINES)[:NEAREST_LINES]]
     begin, run = begin[straight], run[straight]
     offset = (run[:, 0] * begin[:, 1] - run[:, 1] * begin[:, 0]) / (length * cosine)[straight]
-    half = offset.size // 2
-    middle = float(np.partition(offset, half)[half])
-    spread = MAD_TO_SIGMA * float(np.partition(np.abs(offset - middle), half)[half])
-    return middle, MEDIAN_ERROR * spread / math.sqrt(offset.size)
+    centre = middle(offset)
+    spread = MAD_TO_SIGMA * middle(np.abs(offset - centre))
+    return centre, MEDIAN_ERROR * spread / math.sqrt(offset.size)
