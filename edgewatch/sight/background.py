@@ -18,6 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from edgewatch.sight import native
+from edgewatch.sight.native import records
 from edgewatch.sight.ranks import middle
 
 _cv: Any = cv2  # its own type hints differ between versions and forbid scalars that it takes
@@ -26,7 +27,8 @@ CELL_PX = 8
 """Side of the cells in which the drift is averaged (px): several streak widths."""
 
 OPENING_CELLS = 5
-"""Side of the opening in cells: bundles of streaks narrower than 40 px do not enter the drift."""
+"""Side of the opening in cells: bundles of streaks narrower than 40 px do not enter the drift. The compiled form has it
+as a constant, like the side of a cell."""
 
 DEEPEST_HOLE_DN = 1.0
 """A cell further below the pattern than the picture as a whole is not drift, which is smooth (DN)."""
@@ -62,6 +64,8 @@ LEAST_NOISE_DN = 1.0
 NOISE_STRIDE = (5, 7)
 """Rows and columns between the pixels that noise is estimated from; coprime with compression blocks of 8 and 16."""
 
+NOISE_CLIP, CLIPPED_SHARE = 3.0, 0.9871
+"""Noise is the deviation of what lies within so many deviations, which for a Gaussian is this share of the whole."""
 
 NOISE_EVERY = 4
 """After the first pictures noise is measured in one of so many: gain and light do not change faster."""
@@ -102,6 +106,11 @@ class Background:
         """Picture less its background (DN, clipped at 0), uint8 (H, W); learns from the picture."""
         height, width = picture.shape
         small = (max(2, width // CELL_PX), max(2, height // CELL_PX))
+        if native.LIBRARY and self._pattern is not None and _divides(picture.shape):
+            over = self._excess_compiled(np.ascontiguousarray(picture))
+            if over is not None:
+                self._learn(picture, None, small)
+                return over
         cells = _cells(picture, small)
         if self._cells is not None:
             change = cells - self._cells
@@ -118,28 +127,66 @@ class Background:
         if self._pattern is None:
             opened = _add_drift(np.zeros_like(picture), drift)
             ground = _median(picture) if self._seen == 0 else opened
-            over = None
         else:
-            ground, over = _take_ground(picture, self._pattern, drift)
+            ground = _add_drift(self._pattern, drift)
         rows, columns = NOISE_STRIDE
         here = np.ascontiguousarray(ground[::rows, ::columns])
         level, uneven = _cv.meanStdDev(here)
         self.level_dn, self.uneven_dn = float(level[0, 0]), float(uneven[0, 0])
-        if self._seen < NOISE_EVERY or self._seen % NOISE_EVERY == 0:
+        if self._noise_is_due:
             self._measure_noise(picture[::rows, ::columns], here)
         self._learn(picture, opened, small)
         if self._seen == 1:
             ground = self._over_texture(picture, ground, small)
-        return np.asarray(_cv.subtract(picture, ground) if over is None else over)
+        return np.asarray(_cv.subtract(picture, ground))
+
+    @property
+    def _noise_is_due(self) -> bool:
+        return self._seen < NOISE_EVERY or self._seen % NOISE_EVERY == 0
+
+    def _excess_compiled(self, picture: NDArray[np.uint8]) -> NDArray[np.uint8] | None:
+        """Excess over pattern and drift; ``None`` when the picture shows another scene."""
+        assert self._pattern is not None
+        assert self._pattern_cells is not None
+        assert self._cells is not None
+        due = self._noise_is_due
+        rules = records.GroundRules(
+            deepest_dn=DEEPEST_HOLE_DN,
+            other_scene_dn=OTHER_SCENE_DN,
+            noise_clip=NOISE_CLIP,
+            least_noise_dn=LEAST_NOISE_DN,
+            row_stride=NOISE_STRIDE[0],
+            column_stride=NOISE_STRIDE[1],
+            measure_noise=due,
+        )
+        over, state = np.empty(picture.shape, np.uint8), records.GroundState()
+        other_scene = native.LIBRARY.edgewatch_excess(
+            native.place(picture),
+            native.place(self._pattern),
+            native.place(self._pattern_cells),
+            native.place(self._cells),
+            *picture.shape,
+            native.reference(rules),
+            native.place(over),
+            native.reference(state),
+        )
+        native.enough(other_scene, 1)
+        if other_scene:
+            return None
+        self.level_dn, self.uneven_dn = state.level_dn, state.uneven_dn
+        if due:
+            self.raw_noise_dn = state.raw_noise_dn / CLIPPED_SHARE
+            self.noise_dn = max(LEAST_NOISE_DN, self.raw_noise_dn)
+        return over
 
     def _measure_noise(self, picture: NDArray[np.uint8], ground: NDArray[np.uint8]) -> None:
         left = picture.ravel().astype(np.float32) - ground.ravel()
         # Median absolute deviation finds the scale, clipping the sparks away; the clipped deviation then refines it
-        # below one grey level, which a median of integers cannot do (0.9871: a Gaussian clipped at 3 deviations).
+        # below one grey level, which a median of integers cannot do.
         centre = middle(left)
         scale = max(LEAST_NOISE_DN, 1.4826 * middle(np.abs(left - centre)))
-        quiet = left[np.abs(left - centre) <= 3.0 * scale]
-        deviation = float(quiet.std()) / 0.9871 if quiet.size else 0.0
+        quiet = left[np.abs(left - centre) <= NOISE_CLIP * scale]
+        deviation = float(quiet.std()) / CLIPPED_SHARE if quiet.size else 0.0
         self.raw_noise_dn = deviation
         self.noise_dn = max(LEAST_NOISE_DN, deviation)
 
@@ -188,23 +235,8 @@ def _cells(picture: NDArray[np.uint8], small: tuple[int, int]) -> NDArray[np.flo
 
 
 def _divides(shape: tuple[int, ...]) -> bool:
-    """Whether a picture consists of whole cells, which the compiled steps ask for."""
-    return all(size >= 2 * CELL_PX and size % CELL_PX == 0 for size in shape)
-
-
-def _take_ground(
-    picture: NDArray[np.uint8], pattern: NDArray[np.uint8], drift: NDArray[np.float32]
-) -> tuple[NDArray[np.uint8], NDArray[np.uint8]]:
-    """Ground from a pattern and a drift in cells, and what the picture has above it, uint8 (H, W)."""
-    if native.LIBRARY and _divides(picture.shape):
-        picture, cells = np.ascontiguousarray(picture), np.rint(drift).astype(np.int32)
-        ground, over = np.empty((2, *picture.shape), np.uint8)
-        places = [native.place(one) for one in (picture, pattern, cells)]
-        done = native.LIBRARY.edgewatch_excess(*places, *picture.shape, native.place(ground), native.place(over))
-        native.enough(done, 0)
-        return ground, over
-    ground = _add_drift(pattern, drift)
-    return ground, np.asarray(_cv.subtract(picture, ground))
+    """Whether a picture consists of whole cells, and of some, which the compiled steps ask for."""
+    return all(size >= 4 * CELL_PX and size % CELL_PX == 0 for size in shape)
 
 
 def _add_drift(pattern: NDArray[np.uint8], drift: NDArray[np.float32]) -> NDArray[np.uint8]:

@@ -17,6 +17,21 @@ class Picture(ctypes.Structure):
     _fields_ = (("blurred", c_void_p), ("height", c_int32), ("width", c_int32))
 
 
+class GroundRules(ctypes.Structure):
+    """How drift and noise are taken from a picture."""
+
+    _fields_ = (
+        *((name, c_double) for name in ("deepest_dn", "other_scene_dn", "noise_clip", "least_noise_dn")),
+        *((name, c_int32) for name in ("row_stride", "column_stride", "measure_noise")),
+    )
+
+
+class GroundState(ctypes.Structure):
+    """What they were found to be."""
+
+    _fields_ = tuple((name, c_double) for name in ("level_dn", "uneven_dn", "raw_noise_dn"))
+
+
 class Steps(ctypes.Structure):
     """Where the columns of steps lie."""
 

@@ -1,7 +1,7 @@
 /* Ridge points of a picture: see ridges.py. */
 #include "kernels.h"
 
-enum { BATCH = 256, BLOCK = 16 };
+enum { BATCH = 256, BLOCK = 32 };
 
 typedef struct {
     int32_t *index;
@@ -9,12 +9,40 @@ typedef struct {
     int count, most; /* found so far; room */
 } Points;
 
-WIDE static int any_above(const float *values, float threshold)
+static inline int is_top(const float *at, int width, float threshold)
 {
-    int any = 0;
-    for (int k = 0; k < BLOCK; k++)
-        any |= values[k] > threshold;
-    return any;
+    return (at[0] > threshold) & (((at[0] >= at[-1]) & (at[0] > at[1])) | ((at[0] >= at[-width]) & (at[0] > at[width])));
+}
+
+/* Pixels between columns `from` and `to` of a row that are above the threshold and a local maximum along their row or
+ * their column; first: number of the row's first pixel. Returns how many. */
+WIDE static int find_tops(const float *row, int width, int from, int to, float threshold, int first, int32_t *pixel)
+{
+    int found = 0, column = from;
+    for (; column + BLOCK <= to; column += BLOCK) {
+        const float *at = row + column;
+        uint8_t top[BLOCK];
+        int any = 0;
+        for (int k = 0; k < BLOCK; k++)
+            any |= at[k] > threshold;
+        if (!any)
+            continue;
+        for (int k = 0; k < BLOCK; k++)
+            top[k] = (uint8_t)is_top(at + k, width, threshold);
+        for (int k = 0; k < BLOCK; k += 8) {
+            uint64_t eight;
+            memcpy(&eight, top + k, 8);
+            for (int i = k; eight; i++, eight >>= 8) {
+                pixel[found] = first + column + i;
+                found += eight & 1;
+            }
+        }
+    }
+    for (; column < to; column++) {
+        pixel[found] = first + column;
+        found += is_top(row + column, width, threshold);
+    }
+    return found;
 }
 
 /* Steger's test of a batch of pixels; those whose crest lies within them are added. */
@@ -76,33 +104,26 @@ WIDE static void add_crests(const float *blurred, int width, const int32_t *pixe
 
 /* Ridge points of blurred (height x width), nowhere nearer to its edge than margin (at least 1), at most `most` of them:
  * Steger's test of the pixels above the threshold that are a local maximum along their row or their column. Returns their
- * number, which may be more than there was room for. */
+ * number, which may be more than there was room for, or -1 without memory. */
 EXPORT int edgewatch_ridges(const float *blurred, int height, int width, float threshold, float crest_px,
                             float least_bend, int margin, int32_t *index, float *x, float *y, float *cosine,
                             float *sine, float *level, float *bend, float *offset, int most)
 {
     Points points = {index, x, y, cosine, sine, level, bend, offset, 0, most};
-    int32_t pixel[BATCH + BLOCK];
+    int32_t *pixel = malloc(sizeof(int32_t) * ((size_t)width + BATCH));
     int number = 0;
+    if (!pixel)
+        return -1;
     for (int row = margin; row < height - margin; row++) {
-        const float *at = blurred + (size_t)row * width;
-        for (int from = margin; from < width - margin; from += BLOCK) {
-            int stop = from + BLOCK < width - margin ? from + BLOCK : width - margin;
-            if (stop - from == BLOCK && !any_above(at + from, threshold))
-                continue;
-            for (int column = from; column < stop; column++) {
-                const float *here = at + column;
-                if (*here > threshold && ((*here >= here[-1] && *here > here[1]) ||
-                                          (*here >= here[-width] && *here > here[width])))
-                    pixel[number++] = row * width + column;
-            }
-            if (number >= BATCH) {
-                add_crests(blurred, width, pixel, BATCH, crest_px, least_bend, &points);
-                number -= BATCH;
-                memcpy(pixel, pixel + BATCH, sizeof(int32_t) * (size_t)number);
-            }
-        }
+        int done = 0;
+        number += find_tops(blurred + (size_t)row * width, width, margin, width - margin, threshold, row * width,
+                            pixel + number);
+        for (; number - done >= BATCH; done += BATCH)
+            add_crests(blurred, width, pixel + done, BATCH, crest_px, least_bend, &points);
+        number -= done;
+        memmove(pixel, pixel + done, sizeof(int32_t) * (size_t)number);
     }
     add_crests(blurred, width, pixel, number, crest_px, least_bend, &points);
+    free(pixel);
     return points.count;
 }
