@@ -116,13 +116,33 @@ def find_apexes(pieces: Segments, ridges: Ridges, contact_px: tuple[float, float
     at, sure, shift, late = at[likely], sure[likely], shift[likely], late[likely]
     ahead = _directions(at, contact_px)
     at = at + shift[:, :1] * ahead + shift[:, 1:] * np.stack([-ahead[:, 1], ahead[:, 0]], axis=1)
+    keep = _likeliest(at, sure, pieces)
+    return Apexes(at=at, sure=sure, late=late).take(keep)
+
+
+def _likeliest(at: NDArray[np.float64], sure: NDArray[np.float64], pieces: Segments) -> NDArray[np.bool_]:
+    """Which of bursts (M, 2), with their probabilities (M,), stay: of some near to each other one."""
+    if native.LIBRARY:
+        keep = np.empty(len(at), np.bool_)
+        native.LIBRARY.edgewatch_merge(
+            len(at),
+            native.place(at),
+            native.place(sure),
+            pieces.length.size,
+            native.place(pieces.begin),
+            native.place(pieces.end),
+            native.double(RING_RADII_PX[-1]),
+            LEAST_ENDS,
+            native.double(MERGE_PX),
+            native.place(keep),
+        )
+        return keep
     ends = np.concatenate([pieces.begin, pieces.end])
     near = np.hypot(at[:, None, 0] - ends[None, :, 0], at[:, None, 1] - ends[None, :, 1]) < RING_RADII_PX[-1]
     gap = np.hypot(at[:, None, 0] - at[None, :, 0], at[:, None, 1] - at[None, :, 1])
     order = np.arange(sure.size)
     better = (sure[None] > sure[:, None]) | ((sure[None] == sure[:, None]) & (order[None] < order[:, None]))
-    keep = (near.sum(axis=1) >= LEAST_ENDS) & ~((gap < MERGE_PX) & better).any(axis=1)
-    return Apexes(at=at, sure=sure, late=late).take(keep)
+    return np.asarray((near.sum(axis=1) >= LEAST_ENDS) & ~((gap < MERGE_PX) & better).any(axis=1))
 
 
 def _directions(at: NDArray[np.float64], contact_px: tuple[float, float]) -> NDArray[np.float64]:

@@ -368,3 +368,37 @@ EXPORT int edgewatch_patches(const float *blurred, int height, int width, int n,
     free(work);
     return 0;
 }
+
+/* Which of m bursts stay: within radius of each lie at least `least_ends` ends of the n pieces, and none nearer than
+ * merge_px is likelier, or as likely and before it. */
+EXPORT void edgewatch_merge(int m, const double *at, const double *sure, int n, const double *begin, const double *end,
+                            double radius, int least_ends, double merge_px, uint8_t *keep)
+{
+    for (int i = 0; i < m; i++) {
+        double x = at[2 * i], y = at[2 * i + 1];
+        int ends = 0, better = 0;
+        for (int k = 0; k < 2 * n && ends < least_ends; k++) {
+            const double *p = k < n ? begin + 2 * k : end + 2 * (k - n);
+            ends += (p[0] - x) * (p[0] - x) + (p[1] - y) * (p[1] - y) < radius * radius;
+        }
+        for (int j = 0; j < m && !better; j++) {
+            double dx = at[2 * j] - x, dy = at[2 * j + 1] - y;
+            better = dx * dx + dy * dy < merge_px * merge_px && (sure[j] > sure[i] || (sure[j] == sure[i] && j < i));
+        }
+        keep[i] = ends >= least_ends && !better;
+    }
+}
+
+/* How many ends of the n pieces lie within radius of each of m points. */
+EXPORT void edgewatch_crowd(int m, const double *at, int n, const double *begin, const double *end, double radius,
+                            int32_t *crowd)
+{
+    for (int i = 0; i < m; i++) {
+        double x = at[2 * i], y = at[2 * i + 1];
+        crowd[i] = 0;
+        for (int k = 0; k < 2 * n; k++) {
+            const double *p = k < n ? begin + 2 * k : end + 2 * (k - n);
+            crowd[i] += (p[0] - x) * (p[0] - x) + (p[1] - y) * (p[1] - y) < radius * radius;
+        }
+    }
+}
