@@ -19,7 +19,7 @@ from edgewatch.figures.meter import BarMeter
 from edgewatch.rehearsal.scene import Stream
 from edgewatch.rehearsal.steel import find_steel
 from edgewatch.settings import Settings
-from edgewatch.sight import Sight
+from edgewatch.sight import Sight, native
 from edgewatch.sight.optics import Optics
 
 EXAMPLE = "edgewatch pace --station station.toml --sparks 500,4000,7000"
@@ -144,6 +144,8 @@ def advise(worst: Cell, optics: Optics) -> tuple[str, ...]:
     if 2 <= binning <= 8 and min(width, height) // binning >= LEAST_SIDE_PX:
         finer = optics.mm_per_px * binning
         remedies.append(f"binning: set source.binning to {binning}; pixels then are {finer:g} mm")
+    if native.LIBRARY is None:
+        remedies.append(f"compiler: the sight runs its Python forms, several times slower: {native.WHY_NOT}")
     return tuple(remedies)
 
 

@@ -109,3 +109,10 @@ def test_bad_options_are_one_line(
     error = capsys.readouterr().err
     assert named in error
     assert error.count("\n") == 1
+
+
+def test_what_a_board_without_compiled_steps_is_told(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Compiling them is the first thing to change, and no station that keeps up hears of it."""
+    monkeypatch.setattr("edgewatch.sight.native.LIBRARY", None)
+    assert "compiler: " in advise(_cell(100.0, 200.0), _optics(200.0))[-1]
+    assert len(advise(_cell(400.0, 200.0), _optics(200.0))) == 1
