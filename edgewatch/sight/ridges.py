@@ -54,7 +54,8 @@ class Ridges:
     unit vector along the ridge. ``height``: float32, blurred picture at the pixel (DN). ``bend``: float32, minus the
     second derivative across (DN/px²). ``offset``: float32, crest from the pixel's centre, across (px).
     ``threshold_noise``: noise of the blurred picture (DN). ``blurred``: float32 (H, W), the blurred picture.
-    ``excess``: uint8 (H, W), what it was made from.
+    ``excess``: uint8 (H, W), what it was made from. ``columns``: the values above as one array (7, at least N),
+    where the compiled form made them.
     """
 
     index: NDArray[np.int64] | NDArray[np.int32]
@@ -68,6 +69,7 @@ class Ridges:
     threshold_noise: float
     blurred: NDArray[np.float32]
     excess: NDArray[np.uint8]
+    columns: NDArray[np.float32] | None = None
 
 
 def find_ridges(excess: NDArray[np.uint8], noise_dn: float) -> Ridges:
@@ -118,7 +120,7 @@ def _find_compiled(excess: NDArray[np.uint8], blurred: NDArray[np.float32], nois
     height, width = blurred.shape
     room = ROOM
     while True:
-        index, values = np.empty(room, np.int32), np.empty((7, room), np.float32)
+        index, columns = np.empty(room, np.int32), np.empty((7, room), np.float32)
         count = native.LIBRARY.edgewatch_ridges(
             native.place(blurred),
             height,
@@ -128,13 +130,13 @@ def _find_compiled(excess: NDArray[np.uint8], blurred: NDArray[np.float32], nois
             native.single(LEAST_BEND),
             MARGIN_PX,
             native.place(index),
-            *(native.place(values, k * room) for k in range(7)),
+            native.place(columns),
             room,
         )
         if native.enough(count, room):
             break
         room = count
-    x, y, cos, sin, level, bend, offset = values[:, :count]
+    x, y, cos, sin, level, bend, offset = columns[:, :count]
     return Ridges(
         index=index[:count],
         x=x,
@@ -147,6 +149,7 @@ def _find_compiled(excess: NDArray[np.uint8], blurred: NDArray[np.float32], nois
         threshold_noise=NOISE_GAIN * noise_dn,
         blurred=blurred,
         excess=excess,
+        columns=columns,
     )
 
 

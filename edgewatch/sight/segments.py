@@ -47,33 +47,37 @@ class Segments:
 
 def find_segments(ridges: Ridges, scratch: NDArray[np.int32]) -> Segments:
     """Straight pieces of ridge. ``scratch``: int32 (H*W,), all -1; returned so."""
-    if native.LIBRARY and ridges.index.dtype == np.int32:
-        return _find_compiled(ridges)
+    if native.LIBRARY and ridges.columns is not None:
+        return _find_compiled(ridges, ridges.columns)
     return fit_segments(ridges, link_ridges(ridges, scratch))
 
 
 _ALONG = np.asarray([max(dx for dx, dy in LINK_OFFSETS if dy == row) for row in (0, 1, 2)], np.int32)
 
 
-def _find_compiled(ridges: Ridges) -> Segments:
+_ALONG_PLACE = native.place(_ALONG)
+
+
+def _find_compiled(ridges: Ridges, columns: NDArray[np.float32]) -> Segments:
     count = ridges.index.size
     room = count // LEAST_POINTS + 1
     work, numbers = np.empty((3, max(1, count)), np.int32), np.empty(room, np.int64)
     ends, values = np.empty((3, room, 2)), np.empty((4, room))
-    points = (ridges.index, ridges.x, ridges.y, ridges.cos, ridges.sin, ridges.height, ridges.bend)
     found = native.LIBRARY.edgewatch_segments(
         count,
-        *(native.place(column) for column in points),
+        native.place(ridges.index),
+        native.place(columns),
+        columns.shape[1],
         ridges.blurred.shape[1],
-        native.place(_ALONG),
+        _ALONG_PLACE,
         native.single(LINK_COS),
         native.single(LINK_OFFSET_PX),
         LEAST_POINTS,
         native.place(work),
-        *(native.place(ends, 2 * room * k) for k in range(3)),
-        *(native.place(values, room * k) for k in range(3)),
+        native.place(ends),
+        native.place(values),
         native.place(numbers),
-        native.place(values, room * 3),
+        room,
     )
     native.enough(found, room)
     length, height, bend, spread = values[:, :found]

@@ -19,7 +19,7 @@ from numpy.typing import NDArray
 
 from edgewatch.sight import native
 from edgewatch.sight.background import Background
-from edgewatch.sight.bursts import find_candidates, read_patches
+from edgewatch.sight.bursts import _likeliest, find_candidates, read_patches
 from edgewatch.sight.glow import Sorted, sort_lines
 from edgewatch.sight.lengths import Lengths
 from edgewatch.sight.optics import Optics
@@ -121,6 +121,18 @@ def test_steps_pairs_and_lines_are_the_same(look: Look) -> None:
         lengths.learn(lines.begin[lines.whole], lines.end[lines.whole])
     assert lengths.known
     assert len(lines.whole) > lines.whole.sum() > 10, "some of which one end is seen, some whole"
+
+
+def test_the_likeliest_of_neighbours_is_the_same() -> None:
+    """Of bursts near to each other and near to ends of pieces or not, equal probabilities among them."""
+    optics, rng = make_optics(), np.random.default_rng(SEED)
+    for excess, noise in pictures(optics, Look(), SEED + 5):
+        _, pieces = trace(excess, noise)
+        at = pieces.end[rng.integers(0, len(pieces.end), 60)] + rng.normal(0, 12, (60, 2))
+        sure = np.round(rng.uniform(0, 1, 60), 1)
+        plain, own = both(lambda a=at, s=sure, p=pieces: _likeliest(a, s, p))
+        assert np.array_equal(plain, own)
+        assert 0 < own.sum() < 60
 
 
 def test_arms_are_told_from_streaks_the_same(monkeypatch: pytest.MonkeyPatch) -> None:

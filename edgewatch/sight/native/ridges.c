@@ -103,13 +103,16 @@ WIDE static void add_crests(const float *blurred, int width, const int32_t *pixe
 }
 
 /* Ridge points of blurred (height x width), nowhere nearer to its edge than margin (at least 1), at most `most` of them:
- * Steger's test of the pixels above the threshold that are a local maximum along their row or their column. Returns their
- * number, which may be more than there was room for, or -1 without memory. */
+ * Steger's test of the pixels above the threshold that are a local maximum along their row or their column. columns (7,
+ * most): x, y, cosine, sine, level, bend, offset. Returns their number, which may be more than there was room for, or -1
+ * without memory. */
 EXPORT int edgewatch_ridges(const float *blurred, int height, int width, float threshold, float crest_px,
-                            float least_bend, int margin, int32_t *index, float *x, float *y, float *cosine,
-                            float *sine, float *level, float *bend, float *offset, int most)
+                            float least_bend, int margin, int32_t *index, float *columns, int most)
 {
-    Points points = {index, x, y, cosine, sine, level, bend, offset, 0, most};
+    float *column[7];
+    for (int k = 0; k < 7; k++)
+        column[k] = columns + (size_t)k * most;
+    Points points = {index, column[0], column[1], column[2], column[3], column[4], column[5], column[6], 0, most};
     int32_t *pixel = malloc(sizeof(int32_t) * ((size_t)width + BATCH));
     int number = 0;
     if (!pixel)

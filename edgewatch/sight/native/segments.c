@@ -24,15 +24,18 @@ static void link_pair(const float *x, const float *y, const float *cosine, const
         parent[b] = a;
 }
 
-/* Straight pieces of `count` ridge points, whose pixels rise. A point is linked to those up to along[k] columns from it in
- * the k-th row below. work: 3 * count. Out: begin, end, axis (n, 2) and five values of each piece; room for
- * count / least_points of them. Returns n, or -1 without memory. */
-EXPORT int edgewatch_segments(int count, const int32_t *index, const float *x, const float *y, const float *cosine,
-                              const float *sine, const float *level, const float *bend, int width, const int32_t *along,
-                              float least_cos, float most_off, int least_points, int32_t *work, double *begin,
-                              double *end, double *axis, double *length, double *height, double *curve,
-                              int64_t *points, double *spread)
+/* Straight pieces of `count` ridge points, whose pixels rise; columns as edgewatch_ridges left them, `stride` apart. A point
+ * is linked to those up to along[k] columns from it in the k-th row below. work: 3 * count. Out, with room for
+ * count / least_points: ends (3, room, 2), begin, end and axis; values (4, room), length, height, bend and spread. Returns
+ * how many, or -1 without memory. */
+EXPORT int edgewatch_segments(int count, const int32_t *index, const float *columns, int stride, int width,
+                              const int32_t *along, float least_cos, float most_off, int least_points, int32_t *work,
+                              double *ends, double *values, int64_t *points, int room)
 {
+    const float *x = columns, *y = x + stride, *cosine = y + stride, *sine = cosine + stride, *level = sine + stride;
+    const float *bend = level + stride;
+    double *begin = ends, *end = begin + 2 * (size_t)room, *axis = end + 2 * (size_t)room;
+    double *length = values, *height = length + room, *curve = height + room, *spread = curve + room;
     int32_t *parent = work, *piece = work + count, *size = work + 2 * (size_t)count;
     for (int i = 0; i < count; i++) {
         parent[i] = i;
