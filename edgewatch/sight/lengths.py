@@ -69,17 +69,22 @@ class Lengths:
 
     def typical_px(self, at: NDArray[np.float64]) -> NDArray[np.float64]:
         """Typical length (px) of streaks whose middle is at points (N, 2) px."""
-        return np.asarray(np.exp(np.interp(self._distance(at), self._places, self._typical)))
+        return np.asarray(np.exp(np.interp(self.away_px(at), self._places, self._typical)))
 
     def deviation(self, at: NDArray[np.float64], length_px: NDArray[np.floating]) -> NDArray[np.float64]:
         """How unusual lengths are at points (N, 2), in standard deviations of the logarithm."""
-        expected = np.interp(self._distance(at), self._places, self._typical)
+        expected = np.interp(self.away_px(at), self._places, self._typical)
         return np.asarray((np.log(length_px) - expected) / self.spread)
+
+    def angle(self, at: NDArray[np.float64], unit: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Sine of the angle between unit vectors (N, 2) and the way from the contact point to points (N, 2) px."""
+        away = at - self._contact
+        return np.asarray((away[:, 0] * unit[:, 1] - away[:, 1] * unit[:, 0]) / np.maximum(self.away_px(at), 1e-6))
 
     def learn(self, begin: NDArray[np.float64], end: NDArray[np.float64]) -> None:
         """Add streaks from ``begin`` to ``end`` (N, 2) px."""
         gap, middle = end - begin, 0.5 * (begin + end)
-        length, away = np.maximum(np.hypot(gap[:, 0], gap[:, 1]), 1.0), self._distance(middle)
+        length, away = np.maximum(np.hypot(gap[:, 0], gap[:, 1]), 1.0), self.away_px(middle)
         along = np.abs((gap * (middle - self._contact)).sum(axis=1))
         straight = along > RADIAL_COS * length * away
         total, kept = float(length.sum()), float(length[straight].sum())
@@ -111,5 +116,6 @@ class Lengths:
         off = float(np.median(above)) if above.size else 0.0
         self.spread = float(np.clip(1.4826 * off, SPREAD_LEAST, SPREAD_MOST))
 
-    def _distance(self, at: NDArray[np.float64]) -> NDArray[np.float64]:
+    def away_px(self, at: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Distance (px) of points (N, 2) px from the contact point."""
         return np.asarray(np.hypot(at[:, 0] - self._contact[0], at[:, 1] - self._contact[1]))
