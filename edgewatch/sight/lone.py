@@ -43,6 +43,11 @@ ANGLE_UNKNOWN = 0.05
 """Angle to the ray from the contact point that the error of a direction makes (rad); and what is taken for it while
 streaks do not come from the contact point as given: the middle of what is seen otherwise."""
 
+FAR_FROM, FAR_TO = 0.85, 1.15
+FAR_BOX = 2
+BESIDE_PX = 2.0
+BESIDE_ALONG_PX = np.asarray((1.5, 2.5, 3.5))
+
 MOST = 4.0
 """Ratios of brightness and of lengths count no further than this."""
 
@@ -80,19 +85,27 @@ def follow_steps(
     at, inward = steps.at[alone], steps.inward[alone]
     size = lengths.typical_px(at)
     size = lengths.typical_px(at + 0.5 * size[:, None] * inward)
+    if lengths.from_contact:  # nothing glows before it has left the wheel
+        size = np.where(steps.begins[alone], size, np.minimum(size, np.maximum(lengths.away_px(at), LEAST_PX)))
     apart = np.where(size > LONG_PX, 2.0, 1.0)
-    number = np.maximum(np.ceil(size / apart).astype(np.int64), 2)
+    number = np.maximum(np.ceil(FAR_TO * size / apart).astype(np.int64), 2) + 2 * FAR_BOX
     first = np.cumsum(number) - number
     place = (np.arange(int(number.sum())) - np.repeat(first - 1.0, number)) * np.repeat(apart, number)
     x = np.repeat(at[:, 0], number) + place * np.repeat(inward[:, 0], number)
     y = np.repeat(at[:, 1], number) + place * np.repeat(inward[:, 1], number)
     height = steps.height[alone]
     level = read_levels(blurred, x, y)
-    inner = place > 2.0
+    part = place / np.repeat(size, number)
+    inner = (place > 2.0) & (part <= 1.0)
     dark = (level < np.repeat(np.maximum(DARK_NOISE * noise, DARK_SHARE * height), number)) & inner
     run = np.minimum(np.minimum.reduceat(np.where(dark, place, np.inf), first), size)
-    mean = np.add.reduceat(level, first) / number
+    mean = np.add.reduceat(level * inner, first) / np.maximum(np.add.reduceat(inner, first, dtype=np.int64), 1)
     least = np.minimum.reduceat(np.where(inner, level, np.inf), first)
+    total = np.concatenate([np.zeros(1), np.cumsum(level, dtype=np.float64)])
+    fall = np.zeros(level.size)
+    fall[FAR_BOX:-FAR_BOX] = 2.0 * total[FAR_BOX:-FAR_BOX - 1] - total[: -2 * FAR_BOX - 1] - total[2 * FAR_BOX :-1]
+    far = np.maximum.reduceat(np.where((part > FAR_FROM) & (part < FAR_TO), fall, 0.0), first) / FAR_BOX
+    beside = _beside(at, inward, blurred)
     good = np.flatnonzero(run >= np.minimum(LEAST_PX, LEAST_SHARE * size))
     alone, at, inward, run, size, height = (v[good] for v in (alone, at, inward, run, size, height))
     end = at + inward * run[:, None]
@@ -111,12 +124,29 @@ def follow_steps(
         np.minimum(lengths.away_px(0.5 * (at + end)) / size, MOST),
         common,
         end_gap,
+        np.minimum(far[good] / height, MOST),
+        np.clip(beside[0][good] / height, -1.0, MOST),
+        np.clip(beside[1][good] / height, -1.0, MOST),
         begins,
     )
     own = begins[:, None]
     return Lone(
         begin=np.where(own, at, end), end=np.where(own, end, at), marks=np.stack(marks, axis=1).astype(np.float32)
     )
+
+
+def _beside(
+    at: NDArray[np.float64], inward: NDArray[np.float64], blurred: NDArray[np.float32]
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Heights (N,) of the steps beside steps: the greater and the lesser of left and right."""
+    along = np.concatenate([BESIDE_ALONG_PX, -BESIDE_ALONG_PX])
+    side = np.repeat((-BESIDE_PX, BESIDE_PX), along.size)
+    along = np.tile(along, 2)
+    x = at[:, :1] + along * inward[:, :1] - side * inward[:, 1:]
+    y = at[:, 1:] + along * inward[:, 1:] + side * inward[:, :1]
+    level = read_levels(blurred, x.ravel(), y.ravel()).reshape(len(at), 2, 2, -1).mean(axis=3)
+    rise = level[:, :, 0] - level[:, :, 1]
+    return rise.max(axis=1), rise.min(axis=1)
 
 
 def _compare(
