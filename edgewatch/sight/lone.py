@@ -75,6 +75,7 @@ def follow_steps(
     alone: NDArray[np.int64],
     whole_begin: NDArray[np.float64],
     whole_end: NDArray[np.float64],
+    whole_height: NDArray[np.float64],
     blurred: NDArray[np.float32],
     noise: float,
     lengths: Lengths,
@@ -110,7 +111,8 @@ def follow_steps(
     alone, at, inward, run, size, height = (v[good] for v in (alone, at, inward, run, size, height))
     end = at + inward * run[:, None]
     begins = steps.begins[alone]
-    common, end_gap = _compare(at, inward * np.where(begins, 1.0, -1.0)[:, None], run, begins, whole_begin, whole_end)
+    way = inward * np.where(begins, 1.0, -1.0)[:, None]
+    common, crowd, cover, end_gap = _compare(at, way, run, begins, whole_begin, whole_end, whole_height)
     angle = np.full(alone.size, ANGLE_UNKNOWN)
     if lengths.from_contact:
         angle = np.hypot(lengths.angle(at, inward), ANGLE_LEAST)
@@ -123,6 +125,8 @@ def follow_steps(
         np.minimum(mean[good] / height, MOST),
         np.minimum(lengths.away_px(0.5 * (at + end)) / size, MOST),
         common,
+        np.minimum(crowd, MOST),
+        np.minimum(cover / height, MOST),
         end_gap,
         np.minimum(far[good] / height, MOST),
         np.clip(beside[0][good] / height, -1.0, MOST),
@@ -156,7 +160,8 @@ def _compare(
     begins: NDArray[np.bool_],
     begin: NDArray[np.float64],
     end: NDArray[np.float64],
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    height: NDArray[np.float64],
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
     """Of lines from ``at`` (N, 2), along ``way`` or against it for ``run``: greatest share in common with one of M other
     lines, intersection over union, and how far along the nearest of their same ends is (1: END_FAR_PX or more).
     """
@@ -167,12 +172,14 @@ def _compare(
     along = [(p[:, 0] - ax) * ux + (p[:, 1] - ay) * uy for p in (begin, end)]
     own = run[:, None]
     low, high = np.minimum(*along), np.maximum(*along)
-    share = (np.minimum(high, own) - np.maximum(low, 0.0)) / (np.maximum(high, own) - np.minimum(low, 0.0))
+    common = np.maximum(np.minimum(high, own) - np.maximum(low, 0.0), 0.0)
     skew = np.abs(side[1] - side[0]) > np.sqrt(1.0 - SAME_COS**2) / SAME_COS * (high - low)
-    share[(np.abs(side[0] + side[1]) > 2.0 * SAME_SIDE_PX) | skew] = 0.0
+    common[(np.abs(side[0] + side[1]) > 2.0 * SAME_SIDE_PX) | skew] = 0.0
+    share = common / (np.maximum(high, own) - np.minimum(low, 0.0))
+    cover = (common @ height) / run
     gap = np.where(begins[:, None], np.abs(along[0]), np.abs(along[1] - own))
     gap[np.where(begins[:, None], np.abs(side[0]), np.abs(side[1])) > END_SIDE_PX] = END_FAR_PX
-    return share.max(axis=1, initial=0.0), gap.min(axis=1, initial=END_FAR_PX) / END_FAR_PX
+    return share.max(axis=1, initial=0.0), share.sum(axis=1), cover, gap.min(axis=1, initial=END_FAR_PX) / END_FAR_PX
 
 
 def judge_marks(marks: NDArray[np.float32]) -> NDArray[np.float64]:

@@ -87,7 +87,7 @@ def find_streaks(
     alone[pairs.ravel()] = False
     left = np.flatnonzero(alone)
     if lengths.known and left.size:
-        lone = follow_steps(steps, left, begin, end, blurred, noise, lengths)
+        lone = follow_steps(steps, left, begin, end, steps.height[pairs].min(axis=1), blurred, noise, lengths)
         listed = pick_lines(lone)
         begin, end = np.concatenate([begin, lone.begin[listed]]), np.concatenate([end, lone.end[listed]])
     whole = np.arange(len(begin)) < len(pairs)

@@ -32,7 +32,7 @@ from tests.scenes import Look, Scene, Stream
 from tests.scoring import LEAST_LENGTH_PX, LEAST_SNR, far, match_streaks, middles
 
 FRAMES = 8
-UNITS = 8
+UNITS = 12
 END_PX, END_SHARE, SIDE_PX = 6.0, 0.08, 3.5
 """A step is a streak's end when it lies this near along it, or this share of its length, and this near beside it."""
 
