@@ -76,10 +76,13 @@ class Lengths:
         expected = np.interp(self.away_px(at), self._places, self._typical)
         return np.asarray((np.log(length_px) - expected) / self.spread)
 
-    def angle(self, at: NDArray[np.float64], unit: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Sine of the angle between unit vectors (N, 2) and the way from the contact point to points (N, 2) px."""
+    def turn(self, at: NDArray[np.float64], unit: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Sine of the angle by which each unit vector (N, 2) at a point (N, 2) px is turned, x towards y, from the line
+        that joins the point with the contact point.
+        """
         away = at - self._contact
-        return np.asarray((away[:, 0] * unit[:, 1] - away[:, 1] * unit[:, 0]) / np.maximum(self.away_px(at), 1e-6))
+        sine = (away[:, 0] * unit[:, 1] - away[:, 1] * unit[:, 0]) / np.maximum(self.away_px(at), 1e-6)
+        return np.asarray(np.where((away * unit).sum(axis=1) < 0.0, -sine, sine))
 
     def learn(self, begin: NDArray[np.float64], end: NDArray[np.float64]) -> None:
         """Add streaks from ``begin`` to ``end`` (N, 2) px."""

@@ -9,6 +9,7 @@ Its weights were learnt from both simulations with varied rendering by ``tests/b
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -19,16 +20,42 @@ from edgewatch.sight.lengths import Lengths
 from edgewatch.sight.reading import read_levels
 from edgewatch.sight.steps import Steps
 
+TURN_MOST = 0.28
+"""While streaks come from the contact point, a step whose line passes it by more than this sine (16 degrees) is no end
+of one."""
+
+TURN_ERROR_MOST = 0.12
+TURN_ERRORS = 2.0
+TURN_SPREAD = 0.02
+"""Error of a piece's direction: half a pixel at either end over its length, at most the first. A line within so many
+errors of the ray from the contact point is turned towards it, the more the greater its error is against the streaks' own
+spread (rad) about the ray."""
+
+TURN_UNKNOWN = 0.05
+"""Taken for the angle to the ray while streaks do not come from the contact point as given (rad)."""
+
 DARK_NOISE = 2.5
 DARK_SHARE = 0.15
-"""A streak with one end seen runs until it is darker than these noise deviations and this share of its step."""
+"""A line runs until it is darker than these noise deviations and this share of its step."""
+
+INNER_PX = 2.0
+"""So near to its step a line is half lit by its own blur (px)."""
 
 LEAST_PX = 8.0
-LEAST_SHARE = 0.6
-"""It is at least this long, or this share of what is typical."""
+LEAST_SHARE, LEAST_LIT = 0.6, 0.35
+"""A line is at least this long, where streaks are short this share of what is typical; and stays lit over the last share
+of it. Of shorter ones one in a hundred is a streak."""
 
 LONG_PX = 48.0
 """Points along a line lie a pixel apart, on lines longer than this two."""
+
+FAR_FROM, FAR_TO = 0.85, 1.15
+FAR_BOX = 2
+"""The other end is looked for between these shares of the typical length, by boxes of so many points."""
+
+BESIDE_PX = 2.0
+BESIDE_ALONG_PX = np.asarray((1.5, 2.5, 3.5))
+"""The steps beside a step are read so far to the left and right, at these distances before and behind (px)."""
 
 SAME_SIDE_PX = 2.0
 SAME_COS = 0.97
@@ -36,107 +63,120 @@ SAME_COS = 0.97
 
 END_SIDE_PX = 3.5
 END_FAR_PX = 12.0
-"""The same end of another line explains a step when it lies this near beside its line; and not at all so far along it."""
-
-ANGLE_LEAST = 0.02
-ANGLE_UNKNOWN = 0.05
-"""Angle to the ray from the contact point that the error of a direction makes (rad); and what is taken for it while
-streaks do not come from the contact point as given: the middle of what is seen otherwise."""
-
-FAR_FROM, FAR_TO = 0.85, 1.15
-FAR_BOX = 2
-BESIDE_PX = 2.0
-BESIDE_ALONG_PX = np.asarray((1.5, 2.5, 3.5))
+"""The same end of another line explains a step when it lies this near beside its line, and not at all so far along it."""
 
 MOST = 4.0
 """Ratios of brightness and of lengths count no further than this."""
 
-ODDS_LEAST = -0.4
-"""Logarithm of the odds from which a streak is listed: four in ten, half of the F1 that is reached, where F1 is largest
-(Lipton, Elkan & Naryanaswamy, ECML 2014)."""
+ODDS_LEAST = -0.9
+"""Logarithm of the odds from which a line is listed. F1 is largest where that is half of the F1 that is reached (Lipton,
+Elkan & Naryanaswamy, ECML 2014); here lower, because of lines that claim one streak only one was right in the learning."""
 
-SAME_WEIGHT = 2.0
-"""What a line has in common with a likelier one counts so much against it."""
+SAME_WEIGHT = 1.0
+"""What a line has in common with a likelier one, as a share of both, counts so much against it."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Lone:
-    """Lines of which one end is seen, arrays of length N: ``begin``, ``end`` (N, 2) px; ``marks`` float32 (N, F), what
-    speaks for each being a streak.
+    """Lines of which one end is seen, arrays of length N: ``begin``, ``end`` (N, 2) px; ``begins``: the begin is
+    seen, not the end; ``marks`` float32 (N, F), what speaks for each being a streak.
     """
 
     begin: NDArray[np.float64]
     end: NDArray[np.float64]
+    begins: NDArray[np.bool_]
     marks: NDArray[np.float32]
 
 
 def follow_steps(
     steps: Steps,
     alone: NDArray[np.int64],
-    whole_begin: NDArray[np.float64],
-    whole_end: NDArray[np.float64],
-    whole_height: NDArray[np.float64],
+    whole: tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]],
     blurred: NDArray[np.float32],
     noise: float,
     lengths: Lengths,
 ) -> Lone:
-    """Lines from the steps ``alone`` int64 (K,), as long as is typical there, or until it is dark. ``whole_begin``,
-    ``whole_end`` (M, 2) px: streaks of which both ends are seen; ``lengths`` must be known.
+    """Lines from the steps ``alone`` int64 (K,), as long as is typical there, or until it is dark. ``whole``: begins and
+    ends (M, 2) px and heights (M,) DN of the streaks of which both ends are seen; ``lengths`` must be known.
     """
     at, inward = steps.at[alone], steps.inward[alone]
+    angle = np.full(alone.size, TURN_UNKNOWN)
+    if lengths.from_contact:
+        sine = lengths.turn(at, inward)
+        radial = np.flatnonzero(np.abs(sine) < TURN_MOST)
+        alone, at, sine = alone[radial], at[radial], sine[radial]
+        inward, angle = _turn_to_ray(inward[radial], sine, steps.size[alone]), np.hypot(sine, TURN_SPREAD)
+    begins, height = steps.begins[alone], steps.height[alone]
     size = lengths.typical_px(at)
     size = lengths.typical_px(at + 0.5 * size[:, None] * inward)
     if lengths.from_contact:  # nothing glows before it has left the wheel
-        size = np.where(steps.begins[alone], size, np.minimum(size, np.maximum(lengths.away_px(at), LEAST_PX)))
+        size = np.where(begins, size, np.minimum(size, np.maximum(lengths.away_px(at), LEAST_PX)))
+    run, least, mean, far = _read_along(at, inward, size, np.maximum(DARK_NOISE * noise, DARK_SHARE * height), blurred)
+    good = np.flatnonzero(run >= np.maximum(np.minimum(LEAST_PX, LEAST_SHARE * size), LEAST_LIT * size))
+    at, inward, begins, height, angle = at[good], inward[good], begins[good], height[good], angle[good]
+    size, run = size[good], run[good]
+    end = at + inward * run[:, None]
+    own = begins[:, None]
+    begin, end = np.where(own, at, end), np.where(own, end, at)
+    common, crowd, cover, end_gap = _compare(begin, end, begins, *whole)
+    side_most, side_least = _beside(at, inward, blurred)
+    marks = (
+        np.log(height / noise),
+        steps.share[alone[good]],
+        np.log(angle),
+        run / size,
+        np.minimum(least[good] / height, MOST),
+        np.minimum(mean[good] / height, MOST),
+        np.minimum(lengths.away_px(0.5 * (begin + end)) / size, MOST),
+        common,
+        np.minimum(crowd, MOST),
+        np.minimum(cover / height, MOST),
+        end_gap,
+        np.minimum(far[good] / height, MOST),
+        np.clip(side_most / height, -1.0, MOST),
+        np.clip(side_least / height, -1.0, MOST),
+        begins,
+    )
+    return Lone(begin=begin, end=end, begins=begins, marks=np.stack(marks, axis=1).astype(np.float32))
+
+
+def _turn_to_ray(
+    inward: NDArray[np.float64], sine: NDArray[np.float64], size: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Unit vectors (N, 2), turned towards the ray from the contact point, from which they are off by ``sine``."""
+    error = np.minimum(TURN_ERROR_MOST, 1.0 / np.maximum(size, 1.0))
+    turn = np.where(np.abs(sine) < TURN_ERRORS * error, sine / (1.0 + (TURN_SPREAD / error) ** 2), 0.0)
+    inward = inward - turn[:, None] * np.stack([-inward[:, 1], inward[:, 0]], axis=1)
+    return np.asarray(inward / np.hypot(inward[:, 0], inward[:, 1])[:, None])
+
+
+def _read_along(
+    at: NDArray[np.float64],
+    inward: NDArray[np.float64],
+    size: NDArray[np.float64],
+    dark: NDArray[np.float64],
+    blurred: NDArray[np.float32],
+) -> tuple[NDArray[np.float64], ...]:
+    """Of lines from ``at`` along ``inward`` (N, 2) for ``size``: where they fall below ``dark``, or their size; least and
+    mean brightness; greatest fall where the other end must be.
+    """
     apart = np.where(size > LONG_PX, 2.0, 1.0)
     number = np.maximum(np.ceil(FAR_TO * size / apart).astype(np.int64), 2) + 2 * FAR_BOX
     first = np.cumsum(number) - number
     place = (np.arange(int(number.sum())) - np.repeat(first - 1.0, number)) * np.repeat(apart, number)
     x = np.repeat(at[:, 0], number) + place * np.repeat(inward[:, 0], number)
     y = np.repeat(at[:, 1], number) + place * np.repeat(inward[:, 1], number)
-    height = steps.height[alone]
     level = read_levels(blurred, x, y)
     part = place / np.repeat(size, number)
-    inner = (place > 2.0) & (part <= 1.0)
-    dark = (level < np.repeat(np.maximum(DARK_NOISE * noise, DARK_SHARE * height), number)) & inner
-    run = np.minimum(np.minimum.reduceat(np.where(dark, place, np.inf), first), size)
-    mean = np.add.reduceat(level * inner, first) / np.maximum(np.add.reduceat(inner, first, dtype=np.int64), 1)
+    inner = (place > INNER_PX) & (part <= 1.0)
+    run = np.minimum.reduceat(np.where(inner & (level < np.repeat(dark, number)), place, np.inf), first)
     least = np.minimum.reduceat(np.where(inner, level, np.inf), first)
+    mean = np.add.reduceat(level * inner, first) / np.maximum(np.add.reduceat(inner, first, dtype=np.int64), 1)
     total = np.concatenate([np.zeros(1), np.cumsum(level, dtype=np.float64)])
-    fall = np.zeros(level.size)
-    fall[FAR_BOX:-FAR_BOX] = 2.0 * total[FAR_BOX:-FAR_BOX - 1] - total[: -2 * FAR_BOX - 1] - total[2 * FAR_BOX :-1]
+    fall = np.zeros(level.size)  # boxes stay within a line: each ends FAR_BOX points beyond FAR_TO
+    fall[FAR_BOX:-FAR_BOX] = 2.0 * total[FAR_BOX : -FAR_BOX - 1] - total[: -2 * FAR_BOX - 1] - total[2 * FAR_BOX : -1]
     far = np.maximum.reduceat(np.where((part > FAR_FROM) & (part < FAR_TO), fall, 0.0), first) / FAR_BOX
-    beside = _beside(at, inward, blurred)
-    good = np.flatnonzero(run >= np.minimum(LEAST_PX, LEAST_SHARE * size))
-    alone, at, inward, run, size, height = (v[good] for v in (alone, at, inward, run, size, height))
-    end = at + inward * run[:, None]
-    begins = steps.begins[alone]
-    way = inward * np.where(begins, 1.0, -1.0)[:, None]
-    common, crowd, cover, end_gap = _compare(at, way, run, begins, whole_begin, whole_end, whole_height)
-    angle = np.full(alone.size, ANGLE_UNKNOWN)
-    if lengths.from_contact:
-        angle = np.hypot(lengths.angle(at, inward), ANGLE_LEAST)
-    marks = (
-        np.log(height / noise),
-        steps.share[alone],
-        np.log(angle),
-        run / size,
-        np.minimum(least[good] / height, MOST),
-        np.minimum(mean[good] / height, MOST),
-        np.minimum(lengths.away_px(0.5 * (at + end)) / size, MOST),
-        common,
-        np.minimum(crowd, MOST),
-        np.minimum(cover / height, MOST),
-        end_gap,
-        np.minimum(far[good] / height, MOST),
-        np.clip(beside[0][good] / height, -1.0, MOST),
-        np.clip(beside[1][good] / height, -1.0, MOST),
-        begins,
-    )
-    own = begins[:, None]
-    return Lone(
-        begin=np.where(own, at, end), end=np.where(own, end, at), marks=np.stack(marks, axis=1).astype(np.float32)
-    )
+    return np.minimum(run, size), least, mean, far
 
 
 def _beside(
@@ -148,37 +188,40 @@ def _beside(
     along = np.tile(along, 2)
     x = at[:, :1] + along * inward[:, :1] - side * inward[:, 1:]
     y = at[:, 1:] + along * inward[:, 1:] + side * inward[:, :1]
-    level = read_levels(blurred, x.ravel(), y.ravel()).reshape(len(at), 2, 2, -1).mean(axis=3)
+    level = read_levels(blurred, x.ravel(), y.ravel()).reshape(len(at), 2, 2, BESIDE_ALONG_PX.size).mean(axis=3)
     rise = level[:, :, 0] - level[:, :, 1]
     return rise.max(axis=1), rise.min(axis=1)
 
 
 def _compare(
-    at: NDArray[np.float64],
-    way: NDArray[np.float64],
-    run: NDArray[np.float64],
+    own_begin: NDArray[np.float64],
+    own_end: NDArray[np.float64],
     begins: NDArray[np.bool_],
     begin: NDArray[np.float64],
     end: NDArray[np.float64],
     height: NDArray[np.float64],
-) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
-    """Of lines from ``at`` (N, 2), along ``way`` or against it for ``run``: greatest share in common with one of M other
-    lines, intersection over union, and how far along the nearest of their same ends is (1: END_FAR_PX or more).
+) -> tuple[NDArray[np.floating], ...]:
+    """Of N lines, of which the step is the begin where ``begins``, against M others: greatest and summed intersection
+    over union along the line; height of the others that covers it on average; and how far along the nearest of their
+    same ends is from the step (1: END_FAR_PX or more).
     """
+    own_begin, own_end, begin, end, height = (v.astype(np.float32) for v in (own_begin, own_end, begin, end, height))
+    way = own_end - own_begin
+    own = np.maximum(np.hypot(way[:, 0], way[:, 1]), np.float32(1e-6))[:, None]
+    way /= own
     ux, uy = way[:, :1], way[:, 1:]
-    ax = np.where(begins, at[:, 0], at[:, 0] - run * way[:, 0])[:, None]
-    ay = np.where(begins, at[:, 1], at[:, 1] - run * way[:, 1])[:, None]
+    ax, ay = own_begin[:, :1], own_begin[:, 1:]
     side = [(p[:, 0] - ax) * uy - (p[:, 1] - ay) * ux for p in (begin, end)]
     along = [(p[:, 0] - ax) * ux + (p[:, 1] - ay) * uy for p in (begin, end)]
-    own = run[:, None]
     low, high = np.minimum(*along), np.maximum(*along)
     common = np.maximum(np.minimum(high, own) - np.maximum(low, 0.0), 0.0)
-    skew = np.abs(side[1] - side[0]) > np.sqrt(1.0 - SAME_COS**2) / SAME_COS * (high - low)
+    skew = np.abs(side[1] - side[0]) > math.sqrt(1.0 - SAME_COS**2) / SAME_COS * (high - low)
     common[(np.abs(side[0] + side[1]) > 2.0 * SAME_SIDE_PX) | skew] = 0.0
     share = common / (np.maximum(high, own) - np.minimum(low, 0.0))
-    cover = (common @ height) / run
-    gap = np.where(begins[:, None], np.abs(along[0]), np.abs(along[1] - own))
-    gap[np.where(begins[:, None], np.abs(side[0]), np.abs(side[1])) > END_SIDE_PX] = END_FAR_PX
+    cover = (common * height).sum(axis=1) / own[:, 0]
+    first = begins[:, None]
+    gap = np.where(first, np.abs(along[0]), np.abs(along[1] - own))
+    gap[np.where(first, np.abs(side[0]), np.abs(side[1])) > END_SIDE_PX] = END_FAR_PX
     return share.max(axis=1, initial=0.0), share.sum(axis=1), cover, gap.min(axis=1, initial=END_FAR_PX) / END_FAR_PX
 
 

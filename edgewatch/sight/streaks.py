@@ -1,11 +1,9 @@
 """Streaks: a beginning and an end on one line that stays lit between them.
 
-Along each piece of ridge the brightness is read beyond both its ends, and its steps are found by differences of boxes
-(Rosenfeld & Thurston, IEEE Trans. Computers C-20, 1971). A step up is where a streak begins, a step down where one
-ends; where streaks overlap, brightness adds up and the steps remain. Beginnings and ends are then paired, cheapest
-first: on one line, of like height, with the line lit all the way, and about as long as its neighbours (``Lengths``). A
-step left alone, because the other end is hidden or fades out, makes a streak as long as is typical there. So a streak
-is found whole although others cross it, hide part of it, or run on from its end.
+Beginnings and ends (``steps``) are paired, cheapest first: on one line, of like height, with the line lit all the way,
+and about as long as its neighbours (``Lengths``). A step left alone, because the other end is hidden or fades out, may
+still be the end of a streak as long as is typical there (``lone``). So a streak is found whole although others cross it,
+hide part of it, or run on from its end.
 """
 
 from __future__ import annotations
@@ -87,7 +85,7 @@ def find_streaks(
     alone[pairs.ravel()] = False
     left = np.flatnonzero(alone)
     if lengths.known and left.size:
-        lone = follow_steps(steps, left, begin, end, steps.height[pairs].min(axis=1), blurred, noise, lengths)
+        lone = follow_steps(steps, left, (begin, end, steps.height[pairs].min(axis=1)), blurred, noise, lengths)
         listed = pick_lines(lone)
         begin, end = np.concatenate([begin, lone.begin[listed]]), np.concatenate([end, lone.end[listed]])
     whole = np.arange(len(begin)) < len(pairs)

@@ -139,7 +139,7 @@ def collect(kind: str, seeds: range) -> tuple[Floats, NDArray[np.bool_]]:
 
 def _owners(truth: Array, lines: Array, lone: Lone, live: NDArray[np.bool_]) -> NDArray[np.bool_]:
     right = np.zeros(len(lines), np.bool_)
-    begins = lone.marks[:, -1] > 0.5
+    begins = lone.begins
     step = np.where(begins[:, None], lone.begin, lone.end)
     for streak in truth:
         way = streak[2:] - streak[:2]
