@@ -28,8 +28,8 @@ TURN_ERROR_MOST = 0.12
 TURN_ERRORS = 2.0
 TURN_SPREAD = 0.02
 """Error of a piece's direction: half a pixel at either end over its length, at most the first. A line within so many
-errors of the ray from the contact point is turned towards it, the more the greater its error is against the streaks' own
-spread (rad) about the ray."""
+errors of the ray from the contact point is turned towards it, the more the greater its error is against the spread
+(rad) of streaks about the ray."""
 
 TURN_UNKNOWN = 0.05
 """Taken for the angle to the ray while streaks do not come from the contact point as given (rad)."""
@@ -43,8 +43,8 @@ INNER_PX = 2.0
 
 LEAST_PX = 8.0
 LEAST_SHARE, LEAST_LIT = 0.6, 0.35
-"""A line is at least this long, where streaks are short this share of what is typical; and stays lit over the last share
-of it. Of shorter ones one in a hundred is a streak."""
+"""A line is at least this long, where streaks are short this share of what is typical; and it stays lit over the last
+share of that. Of shorter ones one in a hundred is a streak."""
 
 LONG_PX = 48.0
 """Points along a line lie a pixel apart, on lines longer than this two."""
@@ -63,14 +63,15 @@ SAME_COS = 0.97
 
 END_SIDE_PX = 3.5
 END_FAR_PX = 12.0
-"""The same end of another line explains a step when it lies this near beside its line, and not at all so far along it."""
+"""The same end of another line explains a step when it lies this near beside its line, and not at all so far along."""
 
 MOST = 4.0
 """Ratios of brightness and of lengths count no further than this."""
 
 ODDS_LEAST = -0.9
-"""Logarithm of the odds from which a line is listed. F1 is largest where that is half of the F1 that is reached (Lipton,
-Elkan & Naryanaswamy, ECML 2014); here lower, because of lines that claim one streak only one was right in the learning."""
+"""Logarithm of the odds from which a line is listed: where F1 is largest on tuning scenes. Theory says half of the F1
+that is reached (Lipton, Elkan & Naryanaswamy, ECML 2014), -0.3; but of the lines that claim one streak the learning
+takes one for right, and those that share with a likelier one are dropped here."""
 
 SAME_WEIGHT = 1.0
 """What a line has in common with a likelier one, as a share of both, counts so much against it."""
@@ -96,8 +97,8 @@ def follow_steps(
     noise: float,
     lengths: Lengths,
 ) -> Lone:
-    """Lines from the steps ``alone`` int64 (K,), as long as is typical there, or until it is dark. ``whole``: begins and
-    ends (M, 2) px and heights (M,) DN of the streaks of which both ends are seen; ``lengths`` must be known.
+    """Lines from the steps ``alone`` int64 (K,), as long as is typical there, or until it is dark. ``whole``: begins
+    and ends (M, 2) px and heights (M,) DN of the streaks of which both ends are seen; ``lengths`` must be known.
     """
     at, inward = steps.at[alone], steps.inward[alone]
     angle = np.full(alone.size, TURN_UNKNOWN)
@@ -157,8 +158,8 @@ def _read_along(
     dark: NDArray[np.float64],
     blurred: NDArray[np.float32],
 ) -> tuple[NDArray[np.float64], ...]:
-    """Of lines from ``at`` along ``inward`` (N, 2) for ``size``: where they fall below ``dark``, or their size; least and
-    mean brightness; greatest fall where the other end must be.
+    """Of lines from ``at`` along ``inward`` (N, 2) for ``size``: where they fall below ``dark``, or their size; least
+    and mean brightness; greatest fall where the other end must be.
     """
     apart = np.where(size > LONG_PX, 2.0, 1.0)
     number = np.maximum(np.ceil(FAR_TO * size / apart).astype(np.int64), 2) + 2 * FAR_BOX
@@ -205,20 +206,20 @@ def _compare(
     over union along the line; height of the others that covers it on average; and how far along the nearest of their
     same ends is from the step (1: END_FAR_PX or more).
     """
-    own_begin, own_end, begin, end, height = (v.astype(np.float32) for v in (own_begin, own_end, begin, end, height))
-    way = own_end - own_begin
+    a, b, begin32, end32 = (v.astype(np.float32) for v in (own_begin, own_end, begin, end))
+    way = b - a
     own = np.maximum(np.hypot(way[:, 0], way[:, 1]), np.float32(1e-6))[:, None]
     way /= own
     ux, uy = way[:, :1], way[:, 1:]
-    ax, ay = own_begin[:, :1], own_begin[:, 1:]
-    side = [(p[:, 0] - ax) * uy - (p[:, 1] - ay) * ux for p in (begin, end)]
-    along = [(p[:, 0] - ax) * ux + (p[:, 1] - ay) * uy for p in (begin, end)]
+    ax, ay = a[:, :1], a[:, 1:]
+    side = [(p[:, 0] - ax) * uy - (p[:, 1] - ay) * ux for p in (begin32, end32)]
+    along = [(p[:, 0] - ax) * ux + (p[:, 1] - ay) * uy for p in (begin32, end32)]
     low, high = np.minimum(*along), np.maximum(*along)
     common = np.maximum(np.minimum(high, own) - np.maximum(low, 0.0), 0.0)
     skew = np.abs(side[1] - side[0]) > math.sqrt(1.0 - SAME_COS**2) / SAME_COS * (high - low)
     common[(np.abs(side[0] + side[1]) > 2.0 * SAME_SIDE_PX) | skew] = 0.0
     share = common / (np.maximum(high, own) - np.minimum(low, 0.0))
-    cover = (common * height).sum(axis=1) / own[:, 0]
+    cover = (common * height.astype(np.float32)).sum(axis=1) / own[:, 0]
     first = begins[:, None]
     gap = np.where(first, np.abs(along[0]), np.abs(along[1] - own))
     gap[np.where(first, np.abs(side[0]), np.abs(side[1])) > END_SIDE_PX] = END_FAR_PX

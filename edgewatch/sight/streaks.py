@@ -2,8 +2,8 @@
 
 Beginnings and ends (``steps``) are paired, cheapest first: on one line, of like height, with the line lit all the way,
 and about as long as its neighbours (``Lengths``). A step left alone, because the other end is hidden or fades out, may
-still be the end of a streak as long as is typical there (``lone``). So a streak is found whole although others cross it,
-hide part of it, or run on from its end.
+still be the end of a streak as long as is typical there (``lone``). So a streak is found whole although others cross
+it, hide part of it, or run on from its end.
 """
 
 from __future__ import annotations

@@ -88,7 +88,8 @@ def _shots(kind: str, seed: int) -> Iterator[tuple[Optics, NDArray[np.uint8], Ar
 
 def _scored(lines: Array, snr: NDArray[np.floating[Any]]) -> Array:
     length = np.hypot(*(lines[:, 2:] - lines[:, :2]).T)
-    return lines[(snr >= LEAST_SNR) & (length > LEAST_LENGTH_PX)]
+    kept: Array = lines[(snr >= LEAST_SNR) & (length > LEAST_LENGTH_PX)]
+    return kept
 
 
 @dataclass
@@ -171,32 +172,28 @@ def learn(marks: Floats, right: NDArray[np.bool_], rounds: int, seed: int = 3) -
     return [weights, p[1] - mean @ weights, p[2][:, 0], p[3]]
 
 
-TEMPLATE = '''"""Weights by which steps left alone are judged. Written by ``tests/bench/learn_streaks.py``; not edited by hand."""
+TEMPLATE = '''"""Weights for steps left alone. Written by ``tests/bench/learn_streaks.py``; not edited by hand."""
 
 import numpy as np
 
-HIDDEN = np.asarray(
-    (
-{hidden}
-    ),
+'''
+ARRAY = """{name} = np.asarray(
+    {values},
     np.float32,
 )
-HIDDEN_BIAS = np.asarray(({hidden_bias}), np.float32)
-OUTPUT = np.asarray(({output}), np.float32)
-OUTPUT_BIAS = np.float32({output_bias})
-'''
+"""
 
 
 def write(weights: list[Floats], path: Path) -> None:
     """Write the module that holds the weights."""
 
     def row(values: Floats) -> str:
-        return ", ".join(f"{v:.4g}" for v in values)
+        return "(" + ", ".join(f"{v:.3g}" for v in values) + ",)"[len(values) > 1 :]
 
-    hidden = "\n".join(f"        ({row(values)})," for values in weights[0])
-    text = TEMPLATE.format(
-        hidden=hidden, hidden_bias=row(weights[1]), output=row(weights[2]), output_bias=row(weights[3])
-    )
+    text = TEMPLATE
+    for name, values in zip(("HIDDEN", "HIDDEN_BIAS", "OUTPUT", "OUTPUT_BIAS"), weights, strict=True):
+        rows = "(\n" + "".join(f"        {row(one)},\n" for one in values) + "    )" if values.ndim > 1 else row(values)
+        text += ARRAY.format(name=name, values=rows)
     path.write_text(text, encoding="ascii")
 
 
@@ -217,7 +214,7 @@ def main() -> None:
         marks, right = collect(kind, range(20_000, 20_000 + max(2, args.scenes // 10)))
         p = probability(np.maximum(marks @ weights[0] + weights[1], 0) @ weights[2] + weights[3])
         f1, threshold = best_f1(p, right)
-        print(f"{kind}: {len(p)} lines apart, {right.sum()} streaks; F1 of lines {f1:.3f} at {threshold:.2f}", flush=True)
+        print(f"{kind}: {len(p)} lines apart, {right.sum()} streaks; F1 {f1:.3f} at {threshold:.2f}", flush=True)
 
 
 if __name__ == "__main__":
