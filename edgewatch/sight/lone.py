@@ -76,6 +76,9 @@ takes one for right, and those that share with a likelier one are dropped here."
 SAME_WEIGHT = 1.0
 """What a line has in common with a likelier one, as a share of both, counts so much against it."""
 
+ARMS_SHARE = 0.4
+"""An arm shares less than this with a longer one."""
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Lone:
@@ -237,7 +240,32 @@ def pick_lines(lone: Lone) -> NDArray[np.int64]:
     odds = judge_marks(lone.marks)
     k = np.flatnonzero(odds > ODDS_LEAST)
     k = k[np.argsort(-odds[k], kind="stable")]
-    begin, gap = lone.begin[k], lone.end[k] - lone.begin[k]
+    return np.sort(k[odds[k] - SAME_WEIGHT * _shared(lone.begin[k], lone.end[k]) > ODDS_LEAST])
+
+
+def follow_arms(
+    steps: Steps, alone: NDArray[np.int64], blurred: NDArray[np.float32], noise: float, lengths: Lengths
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Begins and ends (N, 2) px of lines that pass the contact point by, no streaks but perhaps arms of bursts: from
+    the steps ``alone`` until it is dark. None while streaks do not come from the contact point as given.
+    """
+    across = alone[:0]
+    if lengths.from_contact:
+        across = alone[np.abs(lengths.turn(steps.at[alone], steps.inward[alone])) >= TURN_MOST]
+    at, inward, height = steps.at[across], steps.inward[across], steps.height[across]
+    size = lengths.typical_px(at)
+    run = _read_along(at, inward, size, np.maximum(DARK_NOISE * noise, DARK_SHARE * height), blurred)[0]
+    good = np.flatnonzero(run >= np.minimum(LEAST_PX, LEAST_SHARE * size))
+    good = good[np.argsort(-run[good], kind="stable")]
+    at, end, begins = at[good], at[good] + inward[good] * run[good, None], steps.begins[across[good], None]
+    begin, end = np.where(begins, at, end), np.where(begins, end, at)
+    apart = _shared(begin, end) < ARMS_SHARE
+    return begin[apart], end[apart]
+
+
+def _shared(begin: NDArray[np.float64], end: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Of each line (N,): greatest intersection over union with one before it in the list."""
+    gap = end - begin
     length = np.maximum(np.hypot(gap[:, 0], gap[:, 1]), 1e-6)
     unit = gap / length[:, None]
     ux, uy, own = unit[:, :1], unit[:, 1:], length[:, None]
@@ -248,5 +276,4 @@ def pick_lines(lone: Lone) -> NDArray[np.int64]:
     share = (np.minimum(high, own) - np.maximum(low, 0.0)) / (np.maximum(high, own) - np.minimum(low, 0.0))
     side = (bx + 0.5 * gap[:, 0]) * uy - (by + 0.5 * gap[:, 1]) * ux
     share[(np.abs(side) > SAME_SIDE_PX) | (cosine < SAME_COS)] = 0.0
-    most = np.tril(share, -1).max(axis=1, initial=0.0)
-    return np.sort(k[odds[k] - SAME_WEIGHT * most > ODDS_LEAST])
+    return np.asarray(np.tril(share, -1).max(axis=1, initial=0.0))

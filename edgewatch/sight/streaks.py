@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from edgewatch.sight.lengths import Lengths
-from edgewatch.sight.lone import follow_steps, pick_lines
+from edgewatch.sight.lone import follow_arms, follow_steps, pick_lines
 from edgewatch.sight.reading import read_levels
 from edgewatch.sight.segments import Segments
 from edgewatch.sight.steps import Steps, find_steps
@@ -54,7 +54,8 @@ LEVEL_SAMPLES = 12
 @dataclass(frozen=True, slots=True, eq=False)
 class Lines:
     """Streaks, arrays of length N: ``begin``, ``end`` (N, 2) px, the first nearer the wheel along the axis;
-    ``level`` DN, height in the blurred picture over the darker third; ``whole``: both ends seen.
+    ``level`` DN, height in the blurred picture over the darker third; ``whole``: both ends seen. Lines
+    across the stream are among them: arms of bursts, which ``glow`` tells from streaks.
     """
 
     begin: NDArray[np.float64]
@@ -87,7 +88,9 @@ def find_streaks(
     if lengths.known and left.size:
         lone = follow_steps(steps, left, (begin, end, steps.height[pairs].min(axis=1)), blurred, noise, lengths)
         listed = pick_lines(lone)
-        begin, end = np.concatenate([begin, lone.begin[listed]]), np.concatenate([end, lone.end[listed]])
+        arm_begin, arm_end = follow_arms(steps, left, blurred, noise, lengths)
+        begin = np.concatenate([begin, lone.begin[listed], arm_begin])
+        end = np.concatenate([end, lone.end[listed], arm_end])
     whole = np.arange(len(begin)) < len(pairs)
     return Lines(begin=begin, end=end, level=_line_levels(begin, end, blurred), whole=whole)
 

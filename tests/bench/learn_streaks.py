@@ -98,12 +98,14 @@ class _Listener:
 
     lone: list[Lone] = field(default_factory=list)
     sorted: list[Sorted] = field(default_factory=list)
+    whole: int = 0
 
     def pick(self, lone: Lone) -> NDArray[np.int64]:
         self.lone.append(lone)
         return np.arange(len(lone.begin))
 
     def sort(self, *args: Any) -> Sorted:
+        self.whole = int(args[2].sum())
         self.sorted.append(sort_lines(*args))
         return self.sorted[-1]
 
@@ -127,10 +129,10 @@ def collect(kind: str, seeds: range) -> tuple[Floats, NDArray[np.bool_]]:
                 continue
             lone, made = heard.lone[0], heard.sorted[0]
             lines = np.concatenate([made.begin, made.end], axis=1)
-            count = len(lines) - len(lone.begin)
+            count, last = heard.whole, heard.whole + len(lone.begin)
             found = {k for k, _ in match_streaks(truth, lines[:count][made.streak[:count]])}
             rest = truth[[k for k in range(len(truth)) if k not in found]]
-            own, live = lines[count:], made.streak[count:]
+            own, live = lines[count:last], made.streak[count:last]
             right = _owners(rest, own, lone, live)
             kept = live & far(middles(own), optics.contact_px)
             marks.append(lone.marks[kept])
