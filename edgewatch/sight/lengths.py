@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from edgewatch.sight import native
 from edgewatch.sight.native import records
+from edgewatch.sight.ranks import middle
 
 KEPT = 400
 """Streaks remembered: several pictures' worth, so that a change of wheel speed is followed within a second."""
@@ -54,6 +55,7 @@ class Lengths:
         self._all_px = 0.0
         self._straight_px = 0.0
         self.spread = SPREAD_MOST
+        self._record: records.Lengths | None = None
 
     @property
     def known(self) -> bool:
@@ -72,29 +74,39 @@ class Lengths:
 
     def typical_px(self, at: NDArray[np.float64]) -> NDArray[np.float64]:
         """Typical length (px) of streaks whose middle is at points (N, 2) px."""
-        return np.asarray(np.exp(np.interp(self._distance(at), self._places, self._typical)))
+        return np.asarray(np.exp(np.interp(self.away_px(at), self._places, self._typical)))
 
     def deviation(self, at: NDArray[np.float64], length_px: NDArray[np.floating]) -> NDArray[np.float64]:
         """How unusual lengths are at points (N, 2), in standard deviations of the logarithm."""
-        expected = np.interp(self._distance(at), self._places, self._typical)
+        expected = np.interp(self.away_px(at), self._places, self._typical)
         return np.asarray((np.log(length_px) - expected) / self.spread)
 
     def record(self) -> records.Lengths:
         """The same for the compiled steps, good until the next streaks are learnt from."""
-        return records.Lengths(
-            native.place(self._places),
-            native.place(self._typical),
-            *self._contact.tolist(),
-            self.longest_px,
-            self.spread,
-            self._places.size,
-        )
+        if self._record is None:
+            self._record = records.Lengths(
+                native.place(self._places),
+                native.place(self._typical),
+                *self._contact.tolist(),
+                self.longest_px,
+                self.spread,
+                self._places.size,
+            )
+        return self._record
+
+    def turn(self, at: NDArray[np.float64], unit: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Sine of the angle by which each unit vector (N, 2) at a point (N, 2) px is turned, x towards y, from the line
+        that joins the point with the contact point.
+        """
+        away = at - self._contact
+        sine = (away[:, 0] * unit[:, 1] - away[:, 1] * unit[:, 0]) / np.maximum(self.away_px(at), 1e-6)
+        return np.asarray(np.where((away * unit).sum(axis=1) < 0.0, -sine, sine))
 
     def learn(self, begin: NDArray[np.float64], end: NDArray[np.float64]) -> None:
         """Add streaks from ``begin`` to ``end`` (N, 2) px."""
-        gap, middle = end - begin, 0.5 * (begin + end)
-        length, away = np.maximum(np.hypot(gap[:, 0], gap[:, 1]), 1.0), self._distance(middle)
-        along = np.abs((gap * (middle - self._contact)).sum(axis=1))
+        gap, centre = end - begin, 0.5 * (begin + end)
+        length, away = np.maximum(np.hypot(gap[:, 0], gap[:, 1]), 1.0), self.away_px(centre)
+        along = np.abs((gap * (centre - self._contact)).sum(axis=1))
         straight = along > RADIAL_COS * length * away
         total, kept = float(length.sum()), float(length[straight].sum())
         self._all_px = SHARE_KEEP * self._all_px + total
@@ -108,8 +120,8 @@ class Lengths:
         self._new = 0
         order = np.argsort(self._away, kind="stable")
         away, log = self._away[order], self._log[order]
-        parts = int(np.clip(count // PART_LEAST, 1, PARTS))
-        cuts = np.linspace(0, count, parts + 1).astype(np.int64)
+        parts = min(max(count // PART_LEAST, 1), PARTS)
+        cuts = np.arange(parts + 1) * count // parts
         part = np.repeat(np.arange(parts), np.diff(cuts))
         # Medians weighted by length: a streak cut short by a burst says less than one drawn in full.
         ranked = np.lexsort((log, part))
@@ -121,9 +133,12 @@ class Lengths:
         typical = np.maximum.accumulate(typical[::-1])[::-1]
         self._places, self._typical = away[(cuts[:-1] + cuts[1:]) // 2], np.ascontiguousarray(typical)
         # Bursts shorten streaks, nothing makes them longer: the deviation is that of the longer ones.
-        above = log[log > typical[part]] - typical[part][log > typical[part]]
-        off = float(np.median(above)) if above.size else 0.0
-        self.spread = float(np.clip(1.4826 * off, SPREAD_LEAST, SPREAD_MOST))
+        above = log - typical[part]
+        above = above[above > 0.0]
+        off = middle(above) if above.size else 0.0
+        self.spread = min(max(1.4826 * off, SPREAD_LEAST), SPREAD_MOST)
+        self._record = None
 
-    def _distance(self, at: NDArray[np.float64]) -> NDArray[np.float64]:
+    def away_px(self, at: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Distance (px) of points (N, 2) px from the contact point."""
         return np.asarray(np.hypot(at[:, 0] - self._contact[0], at[:, 1] - self._contact[1]))

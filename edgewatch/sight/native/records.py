@@ -35,7 +35,7 @@ class GroundState(ctypes.Structure):
 class Steps(ctypes.Structure):
     """Where the columns of steps lie."""
 
-    _fields_ = tuple((name, c_void_p) for name in ("at", "inward", "height", "size", "begins", "full"))
+    _fields_ = tuple((name, c_void_p) for name in ("at", "inward", "height", "size", "share", "begins"))
 
 
 class Lengths(ctypes.Structure):
@@ -56,7 +56,7 @@ class StepRules(ctypes.Structure):
     """What makes a step."""
 
     _fields_ = (
-        *((name, c_double) for name in ("least_height", "share", "full_share")),
+        *((name, c_double) for name in ("least_height", "share")),
         *((name, c_int32) for name in ("least_points", "beyond_px", "box_px")),
     )
 
@@ -67,18 +67,32 @@ class PairRules(ctypes.Structure):
     _fields_ = (
         *((name, c_float) for name in ("side_px", "side_tan", "least_run_px", "ratio_log", "fade_px")),
         *((name, c_double) for name in ("ratio_most", "path_share", "long_px")),
-        *((name, c_double) for name in ("cost_full", "cost_most", "pair_most")),
+        *((name, c_double) for name in ("cost_full", "cost_most", "pair_most", "full_share")),
         ("dark_most", c_int32),
     )
 
 
-class LineRules(ctypes.Structure):
-    """How far a step left alone leads, and which lines are the same."""
+class LoneRules(ctypes.Structure):
+    """What is read about a step left alone, and which lines are the same."""
 
     _fields_ = (
-        *((name, c_double) for name in ("dark_dn", "dark_share", "long_px", "alone_least_px")),
-        *((name, c_float) for name in ("same_side_px", "same_cos", "same_overlap")),
-        ("level_samples", c_int32),
+        *((name, c_double) for name in ("turn_most", "turn_error_most", "turn_errors", "turn_spread", "turn_unknown")),
+        *((name, c_double) for name in ("dark_dn", "dark_share", "inner_px", "least_px", "least_share", "least_lit")),
+        *((name, c_double) for name in ("long_px", "far_from", "far_to", "beside_px", "most", "odds_least")),
+        *((name, c_double) for name in ("same_weight", "arms_share", "noise_dn")),
+        ("beside_along_px", c_void_p),
+        *((name, c_float) for name in ("same_side_px", "same_cos", "skew_most", "end_side_px", "end_far_px")),
+        *((name, c_int32) for name in ("far_box", "beside_count", "from_contact")),
+    )
+
+
+class LoneNet(ctypes.Structure):
+    """Where the weights lie by which it is judged."""
+
+    _fields_ = (
+        *((name, c_void_p) for name in ("hidden", "hidden_bias", "output")),
+        ("output_bias", c_float),
+        ("units", c_int32),
     )
 
 

@@ -1,101 +1,12 @@
-/* Streaks from steps of brightness along straight pieces: see streaks.py. Every number that the method knows comes from
- * there. */
-#include "lengths.h"
-
-typedef struct {
-    const float *blurred;
-    int32_t height, width;
-} Picture;
-
-/* Steps, as streaks.py has them, one array a column. */
-typedef struct {
-    double *at, *inward, *height, *size;
-    uint8_t *begins, *full;
-} Steps;
-
-typedef struct {
-    double least_height, share, full_share;
-    int32_t least_points, beyond_px, box_px;
-} StepRules;
+/* Pairs of steps that make a streak, and the height of lines: see streaks.py. Every number that the method knows comes
+ * from there. */
+#include "steps.h"
 
 typedef struct {
     float side_px, side_tan, least_run_px, ratio_log, fade_px;
-    double ratio_most, path_share, long_px, cost_full, cost_most, pair_most;
+    double ratio_most, path_share, long_px, cost_full, cost_most, pair_most, full_share;
     int32_t dark_most;
 } PairRules;
-
-typedef struct {
-    double dark_dn, dark_share, long_px, alone_least_px;
-    float same_side_px, same_cos, same_overlap;
-    int32_t level_samples;
-} LineRules;
-
-static float read(const Picture *picture, double x, double y)
-{
-    return read_level(picture->blurred, picture->height, picture->width, (float)x, (float)y);
-}
-
-/* Steps along n pieces, for streams along (ax, ay). Returns their number, which may be more than `most`, or -1 without
- * memory. */
-EXPORT int edgewatch_steps(int n, const double *begin, const double *end, const double *axis, const double *length,
-                           const int64_t *points, double ax, double ay, const Picture *picture, const StepRules *rules,
-                           Steps *steps, int most)
-{
-    int margin = rules->beyond_px + 2 * rules->box_px, box = rules->box_px, longest = 0, found = 0;
-    for (int i = 0; i < n; i++)
-        longest = ceil(length[i]) > longest ? (int)ceil(length[i]) : longest;
-    size_t room = (size_t)longest + 2 + 2 * (size_t)margin;
-    double *total = malloc(sizeof(double) * (2 * room + 1));
-    if (!total)
-        return -1;
-    double *rise = total + room + 1;
-    for (int i = 0; i < n; i++) {
-        if (points[i] < rules->least_points)
-            continue;
-        int back = axis[2 * i] * ax + axis[2 * i + 1] * ay < 0.0;
-        double ux = back ? -axis[2 * i] : axis[2 * i], uy = back ? -axis[2 * i + 1] : axis[2 * i + 1];
-        const double *start = back ? end + 2 * i : begin + 2 * i;
-        int size = (int)ceil(length[i]) + 1 + 2 * margin;
-        total[0] = 0.0;
-        for (int k = 0; k < size; k++) {
-            double place = (double)(k - margin);
-            total[k + 1] = total[k] + read(picture, start[0] + ux * place, start[1] + uy * place);
-        }
-        for (int k = box; k < size - box; k++)
-            rise[k] = (total[k + box + 1] - total[k + 1] - total[k] + total[k - box]) / box;
-        int last = margin + (int)floor(length[i] + rules->beyond_px);
-        for (int k = margin - rules->beyond_px; k <= last; k++) {
-            double ahead = (total[k + box + 1] - total[k + 1]) / box, behind = (total[k] - total[k - box]) / box;
-            double high = ahead > behind ? ahead : behind, height = fabs(rise[k]);
-            double least = rules->share * high > rules->least_height ? rules->share * high : rules->least_height;
-            if (!(height > least))
-                continue;
-            double sign = rise[k] > 0.0 ? 1.0 : -1.0;
-            int peak = 1;
-            for (int aside = 1; aside <= 3; aside++)
-                peak &= height >= rise[k + aside] * sign && height >= rise[k - aside] * sign;
-            if (!peak)
-                continue;
-            if (found < most) {
-                double before = fabs(rise[k - 1]), after = fabs(rise[k + 1]);
-                double curve = fmin(before - 2.0 * height + after, -1e-9);
-                double shift = fmax(-0.5, fmin(0.5, 0.5 * (before - after) / curve));
-                double place = (double)(k - margin) + shift;
-                steps->at[2 * found] = start[0] + ux * place;
-                steps->at[2 * found + 1] = start[1] + uy * place;
-                steps->inward[2 * found] = ux * sign;
-                steps->inward[2 * found + 1] = uy * sign;
-                steps->height[found] = height;
-                steps->size[found] = length[i];
-                steps->begins[found] = rise[k] > 0.0;
-                steps->full[found] = height > rules->full_share * high;
-            }
-            found++;
-        }
-    }
-    free(total);
-    return found;
-}
 
 /* Whether the line from a to b is brighter than `level` all the way, but for a few points. */
 static int stays_lit(const Picture *picture, const double *a, const double *b, double level, const PairRules *rules)
@@ -163,7 +74,7 @@ static double cost_of(const Steps *steps, const Mark *b, const Mark *e, const Le
     if (lengths->number) {
         const double *p = steps->at + 2 * b->step, *q = steps->at + 2 * e->step;
         double off = (logf(run) - expected(lengths, 0.5 * (p[0] + q[0]), 0.5 * (p[1] + q[1]))) / lengths->spread;
-        double most = steps->full[b->step] && steps->full[e->step] ? rules->cost_full : rules->cost_most;
+        double most = steps->share[b->step] > rules->full_share && steps->share[e->step] > rules->full_share ? rules->cost_full : rules->cost_most;
         cost += off * off < most ? off * off : most;
     }
     return cost < rules->pair_most ? cost : INFINITY;
@@ -229,51 +140,6 @@ failed:
     return -1;
 }
 
-/* The streak of a step left alone: as long as is typical there, or until it is dark. Returns whether it is one. */
-static int complete(const Steps *steps, int k, const Picture *picture, const Lengths *lengths, const LineRules *rules,
-                    double *far)
-{
-    double x = steps->at[2 * k], y = steps->at[2 * k + 1];
-    double ux = steps->inward[2 * k], uy = steps->inward[2 * k + 1];
-    double size = exp(expected(lengths, x, y));
-    size = exp(expected(lengths, x + 0.5 * size * ux, y + 0.5 * size * uy));
-    double apart = size > rules->long_px ? 2.0 : 1.0, run = size;
-    double level = fmax(rules->dark_dn, rules->dark_share * steps->height[k]);
-    int number = (int)ceil(size / apart);
-    number = number < 2 ? 2 : number;
-    for (int i = 1; i <= number; i++) {
-        double place = i * apart;
-        if (place > 2.0 && read(picture, x + place * ux, y + place * uy) < level) {
-            run = fmin(place, size);
-            break;
-        }
-    }
-    far[0] = x + run * ux;
-    far[1] = y + run * uy;
-    return run >= fmin(rules->alone_least_px, 0.6 * size);
-}
-
-/* Of two lines that run within each other the one seen whole stays, or the longer; two seen whole both stay. */
-static int within_another(const float *lines, const uint8_t *whole, int n, int i, const LineRules *rules)
-{
-    const float *own = lines + 7 * (size_t)i; /* begin, unit, length, middle */
-    for (int j = 0; j < n; j++) {
-        const float *other = lines + 7 * (size_t)j;
-        if (!(fabsf((other[5] - own[0]) * own[3] - (other[6] - own[1]) * own[2]) < rules->same_side_px))
-            continue;
-        float ex = other[0] + other[4] * other[2], ey = other[1] + other[4] * other[3];
-        float a = (other[0] - own[0]) * own[2] + (other[1] - own[1]) * own[3];
-        float b = (ex - own[0]) * own[2] + (ey - own[1]) * own[3];
-        float low = a < b ? a : b, high = a < b ? b : a, least = own[4] < other[4] ? own[4] : other[4];
-        float common = (high < own[4] ? high : own[4]) - (low > 0.0f ? low : 0.0f);
-        if (!(common > rules->same_overlap * least && fabsf(own[2] * other[2] + own[3] * other[3]) > rules->same_cos))
-            continue;
-        if (whole[j] || other[4] > own[4] || (other[4] == own[4] && j < i))
-            return 1;
-    }
-    return 0;
-}
-
 /* Height along a line, the darker third of samples left out. */
 static double level_of(const Picture *picture, const double *begin, const double *end, int samples)
 {
@@ -289,58 +155,10 @@ static double level_of(const Picture *picture, const double *begin, const double
     return sorted[samples / 3];
 }
 
-/* Streaks: the pairs, then what the steps left alone make, less those within another. Out: begin, end (number, 2), level,
- * whole; room for n. Returns their number, or -1 without memory. */
-EXPORT int edgewatch_lines(int n, const Steps *steps, int pairs, const int64_t *pair, const Picture *picture,
-                           const Lengths *lengths, const LineRules *rules, double *begin, double *end, double *level,
-                           uint8_t *whole)
+/* Height along n lines from begin to end (n, 2). */
+EXPORT void edgewatch_levels(int n, const double *begin, const double *end, const Picture *picture, int samples,
+                             double *level)
 {
-    float *lines = malloc(sizeof(float) * 7 * ((size_t)n + 1));
-    uint8_t *used = calloc((size_t)n + 1, 1);
-    if (!lines || !used) {
-        free(lines);
-        free(used);
-        return -1;
-    }
-    int number = 0, kept = 0;
-    for (; number < pairs; number++) {
-        const int64_t *own = pair + 2 * number;
-        for (int k = 0; k < 2; k++) {
-            begin[2 * number + k] = steps->at[2 * own[0] + k];
-            end[2 * number + k] = steps->at[2 * own[1] + k];
-        }
-        used[own[0]] = used[own[1]] = whole[number] = 1;
-    }
-    for (int k = 0; k < n && lengths->number; k++) {
-        double far[2];
-        if (used[k] || !complete(steps, k, picture, lengths, rules, far))
-            continue;
-        double *near_end = steps->begins[k] ? begin : end, *far_end = steps->begins[k] ? end : begin;
-        near_end[2 * number] = steps->at[2 * k];
-        near_end[2 * number + 1] = steps->at[2 * k + 1];
-        far_end[2 * number] = far[0];
-        far_end[2 * number + 1] = far[1];
-        whole[number++] = 0;
-    }
-    for (int i = 0; i < number; i++) {
-        float bx = (float)begin[2 * i], by = (float)begin[2 * i + 1];
-        float ex = (float)end[2 * i], ey = (float)end[2 * i + 1], gx = ex - bx, gy = ey - by;
-        float length = fmaxf(hypotf(gx, gy), 1e-6f);
-        float line[7] = {bx, by, gx / length, gy / length, length, 0.5f * (bx + ex), 0.5f * (by + ey)};
-        memcpy(lines + 7 * (size_t)i, line, sizeof line);
-    }
-    for (int i = 0; i < number; i++)
-        used[i] = whole[i] || !within_another(lines, whole, number, i, rules);
-    for (int i = 0; i < number; i++) {
-        if (!used[i])
-            continue;
-        memmove(begin + 2 * kept, begin + 2 * i, 2 * sizeof(double));
-        memmove(end + 2 * kept, end + 2 * i, 2 * sizeof(double));
-        whole[kept] = whole[i];
-        level[kept] = level_of(picture, begin + 2 * kept, end + 2 * kept, rules->level_samples);
-        kept++;
-    }
-    free(lines);
-    free(used);
-    return kept;
+    for (int i = 0; i < n; i++)
+        level[i] = level_of(picture, begin + 2 * i, end + 2 * i, samples);
 }
