@@ -24,6 +24,9 @@ from edgewatch.sight.optics import Optics
 SAME_PX = 8.0
 """A burst nearer than this to one seen before is the same (px)."""
 
+FRESH_LEAST = 0.5
+"""A burst of which an earlier picture probably showed as much is no news, though it was not listed."""
+
 LATE_SURE = 0.5
 """A burst is late from this probability on."""
 
@@ -104,6 +107,7 @@ class Glow:
         on = np.clip(gx * away[:, 0] + gy * away[:, 1], 0.0, drift)
         gap = np.hypot(gx - on * away[:, 0], gy - on * away[:, 1])
         seen_before = (gap < SAME_PX).any(axis=1) & (apexes.late > LATE_SURE)
+        seen_before |= apexes.fresh < FRESH_LEAST
         fresh = np.flatnonzero(~seen_before)
         self.recent = [*self.recent, apexes.at][-self._pictures :] if self._pictures else []
         return fresh
