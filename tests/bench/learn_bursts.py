@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import argparse
 import base64
+import functools
 import math
 import tempfile
 import zlib
@@ -135,7 +136,7 @@ def _scene(kind: str, seed: int) -> Iterator[Shot]:
             yield Shot(
                 picture=picture,
                 at=truth.bursts.astype(np.float64).reshape(-1, 2),
-                drew_s=truth.drew_ms * 1e-3,
+                drew_s=truth.drew_ms.astype(np.float64) * 1e-3,
                 late=truth.late,
                 fresh=fresh,
                 optics=optics,
@@ -221,7 +222,7 @@ def collect_chunk(number: int, sieve: list[Floats]) -> Lessons:
 
 
 def _packed(levels: Floats) -> NDArray[np.uint8]:
-    return np.minimum(np.rint(levels * STEPS), 255.0).astype(np.uint8)
+    return np.asarray(np.minimum(np.rint(levels * STEPS), 255.0), dtype=np.uint8)
 
 
 def collect(kind: str, seeds: range, sieve: list[Floats] | None = None, *, every: bool = False) -> Lessons:
@@ -295,7 +296,7 @@ def mirrored(patches: NDArray[np.uint8]) -> NDArray[np.uint8]:
 
 def levels(packed: NDArray[np.uint8]) -> Floats:
     """Levels as they were read."""
-    return packed.astype(np.float32) * (np.float32(1.0) / STEPS)
+    return np.asarray(packed.astype(np.float32) * (np.float32(1.0) / STEPS))
 
 
 class Adam:
@@ -341,7 +342,7 @@ def batches(
             yield np.sort(order[k * size : (k + 1) * size]), rate
 
 
-def probability(logit: Floats) -> Floats:
+def probability(logit: NDArray[np.floating]) -> Floats:
     """Logistic function."""
     return np.asarray(1.0 / (1.0 + np.exp(-np.clip(logit, -30, 30))), np.float32)
 
@@ -535,34 +536,38 @@ def main() -> None:
     args = parser.parse_args()
     cv2.setNumThreads(1)
     with tempfile.TemporaryDirectory() as place:
-        cache = args.cache or Path(place)
-        first = load(cache / "sift.npz", lambda: joined([collect(kind, range(n)) for kind, n in SIFT_SCENES.items()]))
-        sieve = learn_sieve(first, SIFT_ROUNDS)
-        del first
-        own = joined(
-            [load(cache / f"chunk_{k:03d}.npz", lambda k=k: collect_chunk(k, sieve)) for k in range(args.chunks)]
+        learn(args.cache or Path(place), args.chunks, args.rounds, args.out)
+
+
+def learn(cache: Path, chunks: int, rounds: int, out: Path) -> None:
+    """Everything, candidates kept in the directory ``cache``."""
+    first = load(cache / "sift.npz", lambda: joined([collect(kind, range(n)) for kind, n in SIFT_SCENES.items()]))
+    sieve = learn_sieve(first, SIFT_ROUNDS)
+    del first
+    own = joined(
+        [load(cache / f"chunk_{k:03d}.npz", functools.partial(collect_chunk, k, sieve)) for k in range(chunks)]
+    )
+    print(f"{len(own.right)} candidates pass the sieve, {int(own.right.sum())} bursts", flush=True)
+    weights = sieve + learn_net(own, rounds)
+    del own
+    shares = load(
+        cache / "share.npz",
+        lambda: joined([collect(kind, range(30_000, 30_000 + n), sieve, every=True) for kind, n in SHARE_SCENES]),
+    )
+    weights += learn_share(shares.context, judge(weights, shares)[1])
+    write(weights, out)
+    for kind, number in APART_SCENES.items():
+        seeds = range(20_000, 20_000 + number)
+        apart = load(cache / f"apart_{kind}.npz", functools.partial(collect, kind, seeds))
+        rough, net = judge(weights, apart)
+        passed = rough >= SIFT_LEAST
+        f1, threshold = best_f1(np.where(passed, net, np.float32(0)), apart.right)
+        print(
+            f"{kind}: {len(net)} candidates apart, {passed.mean():.3f} pass the sieve and with them "
+            f"{passed[apart.right].sum()} of {apart.right.sum()} bursts; F1 of candidates {f1:.3f} at "
+            f"{threshold:.2f}; {(net[~apart.right & passed] > 0.4).sum()} others taken for bursts",
+            flush=True,
         )
-        print(f"{len(own.right)} candidates pass the sieve, {int(own.right.sum())} bursts", flush=True)
-        weights = sieve + learn_net(own, args.rounds)
-        del own
-        shares = load(
-            cache / "share.npz",
-            lambda: joined([collect(kind, range(30_000, 30_000 + n), sieve, every=True) for kind, n in SHARE_SCENES]),
-        )
-        weights += learn_share(shares.context, judge(weights, shares)[1])
-        write(weights, args.out)
-        for kind, number in APART_SCENES.items():
-            seeds = range(20_000, 20_000 + number)
-            apart = load(cache / f"apart_{kind}.npz", lambda kind=kind, seeds=seeds: collect(kind, seeds))
-            passed, net = judge(weights, apart)
-            passed = passed >= SIFT_LEAST
-            f1, threshold = best_f1(np.where(passed, net, 0), apart.right)
-            print(
-                f"{kind}: {len(net)} candidates apart, {passed.mean():.3f} pass the sieve and with them "
-                f"{passed[apart.right].sum()} of {apart.right.sum()} bursts; F1 of candidates {f1:.3f} at "
-                f"{threshold:.2f}; {(net[~apart.right & passed] > 0.4).sum()} others taken for bursts",
-                flush=True,
-            )
 
 
 if __name__ == "__main__":
