@@ -77,7 +77,7 @@ _OFFSETS = np.stack([np.outer(RING_RADII_PX, part) for part in (np.cos(_TURN), n
 LEVEL_NOISE = 3.0
 """Levels enter as log(1 + level / (this many noise deviations))."""
 
-MERGE_PX = 10.0
+MERGE_PX = 13.0
 """Of candidates nearer to each other than this only the likeliest is kept (px)."""
 
 SIFT_LEAST = 0.01

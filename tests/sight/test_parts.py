@@ -299,7 +299,7 @@ def test_gain_is_the_time_in_which_bursts_get_listed(fps: float, exposure_ms: fl
     assert gain == pytest.approx((listed_ms**-4 + period_ms**-4) ** -0.25 / exposure_ms)
 
 
-def _apexes(*points: tuple[float, float], late: float = 1.0, fresh: float = 1.0) -> Apexes:
+def _apexes(*points: tuple[float, float], late: float = 1.0, fresh: float = 0.7) -> Apexes:
     at = np.array(points, dtype=np.float64).reshape(-1, 2)
     return Apexes(at=at, sure=np.ones(len(at)), late=np.full(len(at), late), fresh=np.full(len(at), fresh))
 
@@ -319,6 +319,7 @@ def test_glow_remembers_as_long_as_arms_may_glow() -> None:
     assert glow.take(_apexes((150.0, 100.0)), lengths).tolist() == [0]
     assert glow.take(_apexes((150.0, 100.0)), lengths).size == 0
     assert glow.take(_apexes((150.0, 100.0), late=0.0), lengths).tolist() == [0], "it went off in this exposure"
+    assert glow.take(_apexes((150.0, 100.0), fresh=0.95), lengths).tolist() == [0], "the net is sure that it is news"
     assert glow.take(_apexes((90.0, 100.0), fresh=0.1), lengths).size == 0, "the picture before showed it"
 
 
