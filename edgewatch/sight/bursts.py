@@ -6,12 +6,14 @@ the picture is read on rings, turned so that the stream's own direction there co
 Belongie et al. 2002). A small perceptron sifts out what is clearly none (a cascade, Viola & Jones 2001). On the rest a
 net that shares its weights over directions (convolution, LeCun et al. 1989, here round the ring) tells a burst from a
 crossing, an end beside another streak, or two streaks that overlap; it also says where the burst is, since what is
-seen of a late one lies further down the stream, and whether it went off before the exposure. Weights were learnt from
-both simulations with varied rendering by ``tests/bench/learn_bursts.py``.
+seen of a late one lies further down the stream, whether it went off before the exposure, and whether an earlier picture
+showed it. For that it also sees the picture before at the same place, and is told what no ring shows: exposure, scale,
+noise, crowd. Weights were learnt from both simulations with varied rendering by ``tests/bench/learn_bursts.py``.
 """
 
 from __future__ import annotations
 
+import functools
 import math
 from dataclasses import dataclass
 from typing import Any
@@ -23,8 +25,10 @@ from scipy.spatial import cKDTree
 
 from edgewatch.sight import burst_weights as learnt
 from edgewatch.sight import native
+from edgewatch.sight.optics import Optics
 from edgewatch.sight.ridges import Ridges
 from edgewatch.sight.segments import Segments
+from edgewatch.sight.share import BurstShare
 
 _cv: Any = cv2
 
@@ -59,14 +63,23 @@ RING_RADII_PX = (0.0, 1.5, 3.0, 4.5, 6.0, 7.5, 9.0, 11.0, 13.0, 15.5, 18.5, 22.0
 RING_DIRECTIONS = 36
 """Rings and directions on which the picture about a candidate is read: at most 3.8 px apart."""
 
+BEFORE_RINGS = (0, 2, 4, 6, 8, 10, 12)
+"""Of these rings the net sees the picture before, too: arms that were there already, or the streak that led there."""
+
+CROWD_PX = 40.0
+"""Ends of pieces within this of a candidate are counted for the net, which cannot see so far (px)."""
+
+CONTEXT_SIZE = 6
+EXPOSURE_S, LEAST_CLOSED_S = 2.5e-3, 5e-5
+"""Times enter as logarithms of their ratio to an ordinary exposure; a shutter closed for less is all but open (s)."""
+
 _TURN = np.arange(RING_DIRECTIONS) * (2.0 * math.pi / RING_DIRECTIONS)
-_ALONG = np.outer(RING_RADII_PX, np.cos(_TURN)).ravel().astype(np.float32)
-_ACROSS = np.outer(RING_RADII_PX, np.sin(_TURN)).ravel().astype(np.float32)
+_OFFSETS = np.stack([np.outer(RING_RADII_PX, part) for part in (np.cos(_TURN), np.sin(_TURN))]).astype(np.float32)
 
 LEVEL_NOISE = 3.0
 """Levels enter as log(1 + level / (this many noise deviations))."""
 
-MERGE_PX = 10.0
+MERGE_PX = 13.0
 """Of candidates nearer to each other than this only the likeliest is kept (px)."""
 
 SIFT_LEAST = 0.01
@@ -91,33 +104,50 @@ BLOB_MARGIN = 3
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Apexes:
-    """Bursts of one picture, arrays of length M: ``at`` float64 (M, 2) px; ``sure`` float64, probability of being one;
-    ``late`` float64, probability that it went off before the exposure.
+    """Bursts of one picture, arrays of length M: ``at`` float64 (M, 2) px; float64 probabilities: ``sure`` of being
+    one, ``late`` that it went off before the exposure, ``fresh`` that no earlier picture showed it.
     """
 
     at: NDArray[np.float64]
     sure: NDArray[np.float64]
     late: NDArray[np.float64]
+    fresh: NDArray[np.float64]
 
     def take(self, rows: NDArray[np.bool_] | NDArray[np.int64]) -> Apexes:
         """Some of them."""
-        return Apexes(at=self.at[rows], sure=self.sure[rows], late=self.late[rows])
+        return Apexes(at=self.at[rows], sure=self.sure[rows], late=self.late[rows], fresh=self.fresh[rows])
 
 
-def find_apexes(pieces: Segments, ridges: Ridges, contact_px: tuple[float, float], least_sure: float) -> Apexes:
-    """Bursts of one picture: candidates of at least the probability ``least_sure``."""
+def find_apexes(
+    pieces: Segments,
+    ridges: Ridges,
+    optics: Optics,
+    least_sure: float,
+    before: Ridges | None = None,
+    share: BurstShare | None = None,
+) -> Apexes:
+    """Bursts of one picture: candidates of at least the probability ``least_sure``. ``before``: ridges of the picture
+    before; ``share``: of bursts among the candidates of this stream, which learns from this picture.
+    """
+    contact_px, noise = optics.contact_px, ridges.threshold_noise
     at = find_candidates(pieces, ridges)
     at = at[np.hypot(at[:, 0] - contact_px[0], at[:, 1] - contact_px[1]) > CONTACT_PX]  # its own glow is no burst
-    patches = read_patches(at, ridges.blurred, ridges.threshold_noise, contact_px)
+    patches = read_patches(at, ridges.blurred, noise, contact_px)
     likely = np.flatnonzero(sift_patches(patches) >= SIFT_LEAST)
     at = at[likely]
-    sure, shift, late = judge_patches(patches[likely])
+    context = read_context(at, pieces, noise, optics, has_before=before is not None)
+    answers = judge_patches(patches[likely], read_before(at, before, contact_px), context)
+    if share is None:
+        sure = _probability(answers[:, 0])
+    else:
+        sure = _probability(answers[:, 0] + share.shift)
+        share.learn(sure, _probability((context @ learnt.SHARE + learnt.SHARE_BIAS)[:, 0]))
     likely = np.flatnonzero(sure >= least_sure)
-    at, sure, shift, late = at[likely], sure[likely], shift[likely], late[likely]
-    ahead = _directions(at, contact_px)
+    at, sure, answers = at[likely], sure[likely], answers[likely]
+    ahead, shift = _directions(at, contact_px), np.clip(answers[:, 1:3], -FARTHEST_PX, FARTHEST_PX)
     at = at + shift[:, :1] * ahead + shift[:, 1:] * np.stack([-ahead[:, 1], ahead[:, 0]], axis=1)
     keep = _likeliest(at, sure, pieces)
-    return Apexes(at=at, sure=sure, late=late).take(keep)
+    return Apexes(at=at, sure=sure, late=_probability(answers[:, 3]), fresh=_probability(answers[:, 4])).take(keep)
 
 
 def _likeliest(at: NDArray[np.float64], sure: NDArray[np.float64], pieces: Segments) -> NDArray[np.bool_]:
@@ -138,11 +168,22 @@ def _likeliest(at: NDArray[np.float64], sure: NDArray[np.float64], pieces: Segme
         )
         return keep
     ends = np.concatenate([pieces.begin, pieces.end])
-    near = np.hypot(at[:, None, 0] - ends[None, :, 0], at[:, None, 1] - ends[None, :, 1]) < RING_RADII_PX[-1]
-    gap = np.hypot(at[:, None, 0] - at[None, :, 0], at[:, None, 1] - at[None, :, 1])
+    near = np.count_nonzero(_squared_gaps(at, ends) < RING_RADII_PX[-1] ** 2, axis=1)
     order = np.arange(sure.size)
     better = (sure[None] > sure[:, None]) | ((sure[None] == sure[:, None]) & (order[None] < order[:, None]))
-    return np.asarray((near.sum(axis=1) >= LEAST_ENDS) & ~((gap < MERGE_PX) & better).any(axis=1))
+    better &= _squared_gaps(at, at) < MERGE_PX**2
+    return np.asarray((near >= LEAST_ENDS) & ~better.any(axis=1))
+
+
+def _squared_gaps(one: NDArray[np.float64], other: NDArray[np.float64]) -> NDArray[np.float32]:
+    """Squared distances (M, N) between points (M, 2) and (N, 2)."""
+    a, b = one.astype(np.float32), other.astype(np.float32)
+    x = a[:, None, 0] - b[None, :, 0]
+    y = a[:, None, 1] - b[None, :, 1]
+    x *= x
+    y *= y
+    x += y
+    return np.asarray(x)
 
 
 def _directions(at: NDArray[np.float64], contact_px: tuple[float, float]) -> NDArray[np.float64]:
@@ -264,37 +305,91 @@ def _blobs_compiled(ridges: Ridges) -> NDArray[np.float64]:
         room = found
 
 
+@functools.cache
+def _places(rings: tuple[int, ...]) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
+    """Where rings are read, along the stream and across it (px)."""
+    along, across = (np.ascontiguousarray(part[list(rings)].ravel()) for part in _OFFSETS)
+    return along, across
+
+
 def read_patches(
-    at: NDArray[np.float64], blurred: NDArray[np.float32], noise: float, contact_px: tuple[float, float]
+    at: NDArray[np.float64],
+    blurred: NDArray[np.float32],
+    noise: float,
+    contact_px: tuple[float, float],
+    rings: tuple[int, ...] = tuple(range(len(RING_RADII_PX))),
 ) -> NDArray[np.float32]:
     """Description of each point (M, 2), float32 (M, rings x directions); the first direction leads from the contact."""
     count = len(at)
-    size = len(RING_RADII_PX) * RING_DIRECTIONS
     if not count:
-        return np.zeros((0, size), np.float32)
+        return np.zeros((0, len(rings) * RING_DIRECTIONS), np.float32)
+    along, across = _places(rings)
     place, ahead = at.astype(np.float32), _directions(at, contact_px).astype(np.float32)
     scale = 1.0 / (LEVEL_NOISE * noise)
     if native.LIBRARY:
-        patches = np.empty((count, size), np.float32)
+        patches = np.empty((count, along.size), np.float32)
         done = native.LIBRARY.edgewatch_patches(
             native.place(blurred),
             *blurred.shape,
             count,
             native.place(place),
             native.place(ahead),
-            size,
-            native.place(_ALONG),
-            native.place(_ACROSS),
+            along.size,
+            native.place(along),
+            native.place(across),
             native.single(RING_RADII_PX[-1] + 1.0),
             native.single(scale),
             native.place(patches),
         )
         native.enough(done, 0)
         return patches
-    x = place[:, :1] + ahead[:, :1] * _ALONG - ahead[:, 1:] * _ACROSS
-    y = place[:, 1:] + ahead[:, 1:] * _ALONG + ahead[:, :1] * _ACROSS
+    x = place[:, :1] + ahead[:, :1] * along - ahead[:, 1:] * across
+    y = place[:, 1:] + ahead[:, 1:] * along + ahead[:, :1] * across
     level = _cv.remap(blurred, x, y, cv2.INTER_LINEAR, borderMode=cv2.BORDER_CONSTANT)
     return np.asarray(np.log1p(np.maximum(level, 0.0) * np.float32(scale)))
+
+
+def read_before(at: NDArray[np.float64], before: Ridges | None, contact_px: tuple[float, float]) -> NDArray[np.float32]:
+    """The same of the picture before, zeros without one: float32 (M, ``BEFORE_RINGS`` x directions)."""
+    if before is None:
+        return np.zeros((len(at), len(BEFORE_RINGS) * RING_DIRECTIONS), np.float32)
+    return read_patches(at, before.blurred, before.threshold_noise, contact_px, BEFORE_RINGS)
+
+
+def read_context(
+    at: NDArray[np.float64], pieces: Segments, noise: float, optics: Optics, *, has_before: bool
+) -> NDArray[np.float32]:
+    """What the rings do not tell of points (M, 2), float32 (M, CONTEXT_SIZE): logarithms of exposure, of the time that
+    the shutter was closed, of the scale, of the noise, of the ends of pieces within ``CROWD_PX``; whether there is a
+    picture before.
+    """
+    crowd = _count_ends(at, pieces)
+    context = np.empty((len(at), CONTEXT_SIZE), np.float32)
+    context[:, 0] = math.log(optics.exposure_s / EXPOSURE_S)
+    context[:, 1] = math.log(max(optics.period_s - optics.exposure_s, LEAST_CLOSED_S) / EXPOSURE_S)
+    context[:, 2] = math.log(optics.mm_per_px)
+    context[:, 3] = math.log(noise)
+    context[:, 4] = np.log1p(crowd) - 2.0
+    context[:, 5] = has_before
+    return context
+
+
+def _count_ends(at: NDArray[np.float64], pieces: Segments) -> NDArray[np.integer]:
+    """How many ends of pieces lie within ``CROWD_PX`` of points (M, 2)."""
+    if native.LIBRARY:
+        at, crowd = np.ascontiguousarray(at), np.empty(len(at), np.int32)
+        native.LIBRARY.edgewatch_crowd(
+            len(at),
+            native.place(at),
+            pieces.length.size,
+            native.place(pieces.begin),
+            native.place(pieces.end),
+            native.double(CROWD_PX),
+            native.place(crowd),
+        )
+        return crowd
+    ends = np.concatenate([pieces.begin, pieces.end])
+    return np.asarray(np.count_nonzero(_squared_gaps(at, ends) < CROWD_PX**2, axis=1))
 
 
 def sift_patches(patches: NDArray[np.float32]) -> NDArray[np.float64]:
@@ -304,21 +399,23 @@ def sift_patches(patches: NDArray[np.float32]) -> NDArray[np.float64]:
 
 
 def judge_patches(
-    patches: NDArray[np.float32],
-) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
-    """Of each description (M, F): probability (M,) that a burst is there; where, (M, 2) px along the stream and across
-    it from the candidate; probability (M,) that it went off before the exposure.
+    patches: NDArray[np.float32], before: NDArray[np.float32], context: NDArray[np.float32]
+) -> NDArray[np.float64]:
+    """What the net says of descriptions (M, F) with those of the picture before (M, G) and context (M, C): (M, 5).
+
+    Log odds that a burst is there; where, px along the stream and across it from the candidate; log odds that it went
+    off before the exposure, and that no earlier picture showed it.
     """
     count = len(patches)
     if not count:
-        return np.zeros(0), np.zeros((0, 2)), np.zeros(0)
-    rings = patches.reshape(count, len(RING_RADII_PX), RING_DIRECTIONS).transpose(0, 2, 1)
-    first = _layer(windows(rings, FIRST_REACH, 1), learnt.FIRST, learnt.FIRST_BIAS)
+        return np.zeros((0, learnt.OUTPUT.shape[1]))
+    rings = np.concatenate([part.reshape(count, -1, RING_DIRECTIONS) for part in (patches, before)], axis=1)
+    first = _layer(windows(rings.transpose(0, 2, 1), FIRST_REACH, 1), learnt.FIRST, learnt.FIRST_BIAS)
     first = first.reshape(count, RING_DIRECTIONS, -1)
     second = _layer(windows(first, SECOND_REACH, SECOND_STEP), learnt.SECOND, learnt.SECOND_BIAS)
-    hidden = _layer(second.reshape(count, -1), learnt.HIDDEN, learnt.HIDDEN_BIAS)
-    out = (hidden @ learnt.OUTPUT + learnt.OUTPUT_BIAS).astype(np.float64)
-    return _probability(out[:, 0]), np.clip(out[:, 1:3], -FARTHEST_PX, FARTHEST_PX), _probability(out[:, 3])
+    joint = np.concatenate([second.reshape(count, -1), context], axis=1)
+    hidden = _layer(joint, learnt.HIDDEN, learnt.HIDDEN_BIAS)
+    return np.asarray(hidden @ learnt.OUTPUT + learnt.OUTPUT_BIAS, dtype=np.float64)
 
 
 def windows(values: NDArray[np.float32], reach: int, step: int) -> NDArray[np.float32]:

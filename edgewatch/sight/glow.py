@@ -26,6 +26,10 @@ from edgewatch.sight.optics import Optics
 SAME_PX = 8.0
 """A burst nearer than this to one seen before is the same (px)."""
 
+FRESH_LEAST, FRESH_NEAR = 0.5, 0.8
+"""A burst is news from this probability on; a late one near a burst seen before from the second, since it is more
+likely to be that one."""
+
 LATE_SURE = 0.5
 """A burst is late from this probability on."""
 
@@ -100,7 +104,7 @@ class Glow:
         """Indices of the bursts that are new; remembers all of them.
 
         What went off during this exposure is new even where an earlier burst may still glow: sparks of one kind burst
-        again and again, and follow each other.
+        again and again, and follow each other. So is what the net, which sees the picture before, takes for new.
         """
         old, drift = self.remembered(), self._drift(lengths)
         gx = apexes.at[:, None, 0] - old[None, :, 0]
@@ -110,7 +114,8 @@ class Glow:
         # The cloud of arms drifts on along the flight: the nearest point of the way it may have come counts.
         on = np.clip(gx * away[:, 0] + gy * away[:, 1], 0.0, drift)
         gap = np.hypot(gx - on * away[:, 0], gy - on * away[:, 1])
-        seen_before = (gap < SAME_PX).any(axis=1) & (apexes.late > LATE_SURE)
+        near = (gap < SAME_PX).any(axis=1) & (apexes.late > LATE_SURE)
+        seen_before = apexes.fresh < np.where(near, FRESH_NEAR, FRESH_LEAST)
         fresh = np.flatnonzero(~seen_before)
         self.recent = [*self.recent, apexes.at][-self._pictures :] if self._pictures else []
         return fresh

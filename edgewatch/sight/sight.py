@@ -14,8 +14,9 @@ from edgewatch.sight.glow import LATE_SURE, Glow, sort_lines
 from edgewatch.sight.lengths import Lengths
 from edgewatch.sight.light import LightMeter
 from edgewatch.sight.optics import Optics
-from edgewatch.sight.ridges import MARGIN_PX, NOISE_GAIN, find_ridges
+from edgewatch.sight.ridges import MARGIN_PX, NOISE_GAIN, Ridges, find_ridges
 from edgewatch.sight.segments import find_segments
+from edgewatch.sight.share import BurstShare
 from edgewatch.sight.steadiness import read_origin
 from edgewatch.sight.streaks import find_streaks
 
@@ -66,6 +67,8 @@ class Sight:
         self._background = Background(period_s=o.period_s)
         self._lengths = Lengths(o.contact_px)
         self._meter = LightMeter()
+        self._before: Ridges | None = None
+        self._share = BurstShare(period_s=o.period_s)
         self._glow, self._rate_glow = (
             Glow(o, longest_glow_s=s.longest_glow_s, arm_draw_s=s.arm_draw_s, late_listed_s=s.late_listed_s)
             for _ in range(2)
@@ -94,7 +97,8 @@ class Sight:
         pieces = find_segments(ridges, self._scratch)
         found = find_streaks(pieces, ridges.blurred, noise, self._lengths, o.axis)
         self._meter.measure_width(found.begin, found.end, ridges)
-        apexes = find_apexes(pieces, ridges, o.contact_px, s.least_sure)
+        apexes = find_apexes(pieces, ridges, o, s.least_sure, self._before, self._share)
+        self._before = ridges
         sorted_ = sort_lines(found.begin, found.end, found.whole, apexes, self._glow, self._lengths)
         begin, end = sorted_.begin, sorted_.end
         length = np.hypot(end[:, 0] - begin[:, 0], end[:, 1] - begin[:, 1])

@@ -14,12 +14,16 @@ from scipy.sparse.csgraph import connected_components
 
 from edgewatch.sight.background import LEARN_AT, LEAST_NOISE_DN, Background
 from edgewatch.sight.bursts import (
+    BEFORE_RINGS,
+    CONTEXT_SIZE,
     RING_DIRECTIONS,
     RING_RADII_PX,
     Apexes,
     find_apexes,
     find_candidates,
     judge_patches,
+    read_before,
+    read_context,
     read_patches,
     sift_patches,
     windows,
@@ -217,16 +221,45 @@ def test_descriptions_turn_with_the_stream() -> None:
     assert np.allclose(one, two, atol=0.15)
 
 
+def test_the_picture_before_is_read_at_the_same_place() -> None:
+    """The rings of the picture before are those of a picture, in the same order; without one they are dark."""
+    ridges, _ = trace(draw([(100.0, 100.0, 160.0, 100.0, 60.0), *star(160.0, 100.0, 3, 16.0)]))  # type: ignore[list-item]
+    at, contact_px = np.array([[160.0, 100.0], [20.0, 30.0]]), (0.0, 100.0)
+    whole = read_patches(at, ridges.blurred, ridges.threshold_noise, contact_px)
+    whole = whole.reshape(2, len(RING_RADII_PX), RING_DIRECTIONS)[:, list(BEFORE_RINGS)]
+    assert np.array_equal(read_before(at, ridges, contact_px), whole.reshape(2, -1))
+    assert not read_before(at, None, contact_px).any()
+    assert read_before(at, None, contact_px).shape == (2, whole[0].size)
+
+
+def test_context_tells_camera_and_crowd() -> None:
+    """Each of the camera's numbers moves its own entry, and a candidate among more ends has more of a crowd."""
+    _, pieces = trace(draw([(100.0, 100.0, 160.0, 100.0, 60.0), *star(160.0, 100.0, 5, 16.0)]))  # type: ignore[list-item]
+    at = np.array([[160.0, 100.0], [20.0, 30.0]])
+    plain = read_context(at, pieces, 1.0, make_optics(), has_before=False)
+    assert plain.shape == (2, CONTEXT_SIZE)
+    assert plain[0, 4] > plain[1, 4]
+    for column, other in (
+        (0, read_context(at, pieces, 1.0, make_optics(exposure_ms=2.0, fps=1000.0 / 4.5), has_before=False)),
+        (1, read_context(at, pieces, 1.0, make_optics(fps=150.0), has_before=False)),
+        (2, read_context(at, pieces, 1.0, make_optics(mm_per_px=2.0), has_before=False)),
+        (3, read_context(at, pieces, 2.0, make_optics(), has_before=False)),
+        (5, read_context(at, pieces, 1.0, make_optics(), has_before=True)),
+    ):
+        assert np.flatnonzero(~np.isclose(plain, other).all(axis=0)).tolist() == [column]
+
+
 def test_weights_fit_the_descriptions() -> None:
     """The weights in the package belong to the rings and directions that are read."""
     size = len(RING_RADII_PX) * RING_DIRECTIONS
     nothing = np.zeros((2, size), np.float32)
+    before = np.zeros((2, len(BEFORE_RINGS) * RING_DIRECTIONS), np.float32)
+    context = np.zeros((2, CONTEXT_SIZE), np.float32)
     assert ((sift_patches(nothing) >= 0.0) & (sift_patches(nothing) <= 1.0)).all()
-    sure, shift, late = judge_patches(nothing)
-    assert sure.shape == late.shape == (2,)
-    assert shift.shape == (2, 2)
-    assert ((sure >= 0.0) & (sure <= 1.0)).all()
-    assert [part.shape[0] for part in judge_patches(nothing[:0])] == [0, 0, 0]
+    answers = judge_patches(nothing, before, context)
+    assert answers.shape == (2, 5)
+    assert np.isfinite(answers).all()
+    assert judge_patches(nothing[:0], before[:0], context[:0]).shape == (0, 5)
     assert sift_patches(nothing[:0]).shape == (0,)
 
 
@@ -244,7 +277,7 @@ def test_a_star_is_found_where_it_is() -> None:
     """A star at the end of a streak, in the middle of nowhere, is listed within two pixels, and not as late."""
     lines = [(60.0, 100.0, 160.0, 100.0, 60.0), *star(160.0, 100.0, 6, 14.0)]
     ridges, pieces = trace(draw(lines))  # type: ignore[arg-type]
-    found = find_apexes(pieces, ridges, (0.0, 100.0), 0.4)
+    found = find_apexes(pieces, ridges, make_optics(contact_px=(0.0, 100.0)), 0.4)
     assert found.sure.size == 1
     assert np.hypot(*(found.at[0] - (160.0, 100.0))) < 2.0
     assert found.late[0] < 0.5
@@ -266,9 +299,9 @@ def test_gain_is_the_time_in_which_bursts_get_listed(fps: float, exposure_ms: fl
     assert gain == pytest.approx((listed_ms**-4 + period_ms**-4) ** -0.25 / exposure_ms)
 
 
-def _apexes(*points: tuple[float, float], late: float = 1.0) -> Apexes:
+def _apexes(*points: tuple[float, float], late: float = 1.0, fresh: float = 0.7) -> Apexes:
     at = np.array(points, dtype=np.float64).reshape(-1, 2)
-    return Apexes(at=at, sure=np.ones(len(at)), late=np.full(len(at), late))
+    return Apexes(at=at, sure=np.ones(len(at)), late=np.full(len(at), late), fresh=np.full(len(at), fresh))
 
 
 def test_glow_remembers_as_long_as_arms_may_glow() -> None:
@@ -286,6 +319,8 @@ def test_glow_remembers_as_long_as_arms_may_glow() -> None:
     assert glow.take(_apexes((150.0, 100.0)), lengths).tolist() == [0]
     assert glow.take(_apexes((150.0, 100.0)), lengths).size == 0
     assert glow.take(_apexes((150.0, 100.0), late=0.0), lengths).tolist() == [0], "it went off in this exposure"
+    assert glow.take(_apexes((150.0, 100.0), fresh=0.95), lengths).tolist() == [0], "the net is sure that it is news"
+    assert glow.take(_apexes((90.0, 100.0), fresh=0.1), lengths).size == 0, "the picture before showed it"
 
 
 def test_optics_of_any_size_are_looked_at_alike() -> None:

@@ -119,7 +119,7 @@ def test_crossing_and_touching_streaks_stay_whole() -> None:
 
 def test_star_is_one_burst_and_its_arms_are_no_streaks() -> None:
     """A streak that ends in a star: one burst at its end, one streak, listed in this picture and never again."""
-    sight = Sight(make_optics())
+    sight = Sight(make_optics(fps=1000.0, exposure_ms=0.9))
     lines = [(70.0, 100.0, 130.0, 100.0, 60.0), *star(130.0, 100.0, 5, 18.0)]
     seen = sight.look(draw(lines))  # type: ignore[arg-type]
     assert len(seen.bursts) == 1
@@ -133,7 +133,7 @@ def test_star_is_one_burst_and_its_arms_are_no_streaks() -> None:
 
 def test_embers_are_late_and_news_only_once() -> None:
     """The outer parts of arms round an empty middle: a burst that went off before the exposure; listed once."""
-    sight = Sight(make_optics())
+    sight = Sight(make_optics(fps=1000.0, exposure_ms=0.9))
     seen = sight.look(draw(embers(130.0, 100.0)))
     assert len(seen.bursts) == 1
     assert seen.burst_flags[0] & BurstFlag.LATE
@@ -144,10 +144,11 @@ def test_memory_of_bursts_ends_and_reset_forgets() -> None:
     """Embers at the place of a burst are news once nothing of it can glow, and at once after a reset."""
     picture = draw([(70.0, 100.0, 130.0, 100.0, 60.0), *star(130.0, 100.0, 5, 18.0)])  # type: ignore[list-item]
     glowing, empty = draw(embers(130.0, 100.0), seed=SEED + 3), draw([], seed=SEED + 2)
-    sight = Sight(make_optics())
+    sight = Sight(make_optics(fps=1000.0, exposure_ms=0.9))
     assert len(sight.look(picture).bursts) == 1
     assert len(sight.look(glowing).bursts) == 0
-    sight.look(empty)
+    for _ in range(4):
+        sight.look(empty)
     assert len(sight.look(glowing).bursts) == 1
     sight.reset()
     assert len(sight.look(glowing).bursts) == 1
