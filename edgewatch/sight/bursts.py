@@ -409,8 +409,7 @@ def judge_patches(
     count = len(patches)
     if not count:
         return np.zeros((0, learnt.OUTPUT.shape[1]))
-    rings = np.concatenate([part.reshape(count, -1, RING_DIRECTIONS) for part in (patches, before)], axis=1)
-    first = _layer(windows(rings.transpose(0, 2, 1), FIRST_REACH, 1), learnt.FIRST, learnt.FIRST_BIAS)
+    first = _layer(windows(_channels(patches, before), FIRST_REACH, 1), learnt.FIRST, learnt.FIRST_BIAS)
     first = first.reshape(count, RING_DIRECTIONS, -1)
     second = _layer(windows(first, SECOND_REACH, SECOND_STEP), learnt.SECOND, learnt.SECOND_BIAS)
     joint = np.concatenate([second.reshape(count, -1), context], axis=1)
@@ -418,9 +417,32 @@ def judge_patches(
     return np.asarray(hidden @ learnt.OUTPUT + learnt.OUTPUT_BIAS, dtype=np.float64)
 
 
+def _channels(patches: NDArray[np.float32], before: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Rings of a picture (M, F) and of the one before (M, G) as (M, directions, rings)."""
+    count = len(patches)
+    if native.LIBRARY:
+        first, second = (part.shape[1] // RING_DIRECTIONS for part in (patches, before))
+        patches, before = np.ascontiguousarray(patches), np.ascontiguousarray(before)
+        out = np.empty((count, RING_DIRECTIONS, first + second), np.float32)
+        places = [native.place(part) for part in (patches, before, out)]
+        native.LIBRARY.edgewatch_channels(count, places[0], first, places[1], second, RING_DIRECTIONS, places[2])
+        return out
+    rings = np.concatenate([part.reshape(count, -1, RING_DIRECTIONS) for part in (patches, before)], axis=1)
+    return np.asarray(rings.transpose(0, 2, 1))
+
+
 def windows(values: NDArray[np.float32], reach: int, step: int) -> NDArray[np.float32]:
     """Each direction with its neighbours: (M, D, C) -> (M * D / step, (2 * reach + 1) * C), closed to a ring."""
     count, directions, channels = values.shape
+    if native.LIBRARY:
+        values, out = (
+            np.ascontiguousarray(values),
+            np.empty((count * directions // step, (2 * reach + 1) * channels), np.float32),
+        )
+        native.LIBRARY.edgewatch_windows(
+            count, native.place(values), directions, channels, reach, step, native.place(out)
+        )
+        return out
     closed = np.ascontiguousarray(np.concatenate([values[:, -reach:], values, values[:, :reach]], axis=1))
     size = (2 * reach + 1) * channels
     strides = (closed.strides[0], step * closed.strides[1], closed.strides[2])

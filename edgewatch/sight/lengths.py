@@ -118,27 +118,44 @@ class Lengths:
         if count < LEAST_KEPT or (self.known and self._new < count // NEW_PART):
             return
         self._new = 0
-        order = np.argsort(self._away, kind="stable")
-        away, log = self._away[order], self._log[order]
         parts = min(max(count // PART_LEAST, 1), PARTS)
-        cuts = np.arange(parts + 1) * count // parts
-        part = np.repeat(np.arange(parts), np.diff(cuts))
-        # Medians weighted by length: a streak cut short by a burst says less than one drawn in full.
-        ranked = np.lexsort((log, part))
-        weight = np.cumsum(np.exp(log[ranked]))
-        before = np.concatenate(([0.0], weight))[cuts]
-        half = np.searchsorted(weight, 0.5 * (before[:-1] + before[1:]))
-        typical = log[ranked][np.minimum(half, count - 1)]
-        # Air only slows sparks down: nearer the wheel they are no shorter, whatever fragments say.
-        typical = np.maximum.accumulate(typical[::-1])[::-1]
-        self._places, self._typical = away[(cuts[:-1] + cuts[1:]) // 2], np.ascontiguousarray(typical)
-        # Bursts shorten streaks, nothing makes them longer: the deviation is that of the longer ones.
-        above = log - typical[part]
-        above = above[above > 0.0]
-        off = middle(above) if above.size else 0.0
+        self._places, self._typical, off = _find_typical(self._away, self._log, parts)
         self.spread = min(max(1.4826 * off, SPREAD_LEAST), SPREAD_MOST)
         self._record = None
 
     def away_px(self, at: NDArray[np.float64]) -> NDArray[np.float64]:
         """Distance (px) of points (N, 2) px from the contact point."""
         return np.asarray(np.hypot(at[:, 0] - self._contact[0], at[:, 1] - self._contact[1]))
+
+
+def _find_typical(
+    away: NDArray[np.float64], log: NDArray[np.float64], parts: int
+) -> tuple[NDArray[np.float64], NDArray[np.float64], float]:
+    """Of streaks at distances ``away`` (N,) px with logarithms of length ``log`` (N,), cut into parts: distance of each
+    part, typical logarithm there, and the middle of what longer ones have more than that.
+    """
+    count = away.size
+    if native.LIBRARY:
+        found, off = np.empty((2, parts)), np.empty(1)
+        places = [native.place(one) for one in (away, log, found, off)]
+        done = native.LIBRARY.edgewatch_typical(
+            count, *places[:2], parts, places[2], native.place(found, parts), places[3]
+        )
+        native.enough(done, 0)
+        return found[0], found[1], float(off[0])
+    order = np.argsort(away, kind="stable")
+    away, log = away[order], log[order]
+    cuts = np.arange(parts + 1) * count // parts
+    part = np.repeat(np.arange(parts), np.diff(cuts))
+    # Medians weighted by length: a streak cut short by a burst says less than one drawn in full.
+    ranked = np.lexsort((log, part))
+    weight = np.cumsum(np.exp(log[ranked]))
+    before = np.concatenate(([0.0], weight))[cuts]
+    half = np.searchsorted(weight, 0.5 * (before[:-1] + before[1:]))
+    typical = log[ranked][np.minimum(half, count - 1)]
+    # Air only slows sparks down: nearer the wheel they are no shorter, whatever fragments say.
+    typical = np.ascontiguousarray(np.maximum.accumulate(typical[::-1])[::-1])
+    # Bursts shorten streaks, nothing makes them longer: the deviation is that of the longer ones.
+    above = log - typical[part]
+    above = above[above > 0.0]
+    return away[(cuts[:-1] + cuts[1:]) // 2], typical, middle(above) if above.size else 0.0

@@ -19,9 +19,18 @@ from numpy.typing import NDArray
 
 from edgewatch.sight import native
 from edgewatch.sight.background import Background
-from edgewatch.sight.bursts import _likeliest, find_candidates, read_patches
+from edgewatch.sight.bursts import (
+    BEFORE_RINGS,
+    CONTEXT_SIZE,
+    RING_DIRECTIONS,
+    RING_RADII_PX,
+    _likeliest,
+    find_candidates,
+    judge_patches,
+    read_patches,
+)
 from edgewatch.sight.glow import Sorted, sort_lines
-from edgewatch.sight.lengths import Lengths
+from edgewatch.sight.lengths import Lengths, _find_typical
 from edgewatch.sight.lone import find_lone
 from edgewatch.sight.optics import Optics
 from edgewatch.sight.ridges import NOISE_GAIN, Ridges, find_ridges
@@ -134,6 +143,29 @@ def _apart(one: tuple[NDArray[np.float64], ...], other: tuple[NDArray[np.float64
     """How many lines are in one list and not in the other."""
     rounded = [{tuple(line) for line in np.rint(4.0 * np.concatenate(ends, axis=1)).tolist()} for ends in (one, other)]
     return len(rounded[0] ^ rounded[1])
+
+
+@given(st.integers(8, 400), st.integers(1, 8), st.integers(0, 2**32 - 1))
+def test_typical_lengths_are_the_same(count: int, parts: int, seed: int) -> None:
+    """Of few and of many streaks, some of one length or at one distance."""
+    rng = np.random.default_rng(seed)
+    away, log = rng.integers(0, 300, count).astype(np.float64), np.round(rng.normal(3.5, 0.4, count), 1)
+    (places, typical, off), (own_places, own_typical, own_off) = both(lambda: _find_typical(away, log, parts))
+    assert np.array_equal(places, own_places)
+    assert np.allclose(typical, own_typical)
+    assert off == pytest.approx(own_off)
+
+
+def test_the_net_says_the_same() -> None:
+    """Whatever is read about candidates, in this picture and the one before."""
+    rng = np.random.default_rng(SEED)
+    for count in (0, 1, 7, 40):
+        sizes = (len(RING_RADII_PX), len(BEFORE_RINGS))
+        rings, before = (np.log1p(rng.exponential(2.0, (count, RING_DIRECTIONS * n))).astype(np.float32) for n in sizes)
+        context = rng.normal(0.0, 1.0, (count, CONTEXT_SIZE)).astype(np.float32)
+        plain, own = both(lambda r=rings, b=before, c=context: judge_patches(r, b, c))
+        assert plain.shape == own.shape
+        assert np.allclose(plain, own, atol=1e-4)
 
 
 def test_the_likeliest_of_neighbours_is_the_same() -> None:

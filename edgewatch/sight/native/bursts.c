@@ -402,3 +402,32 @@ EXPORT void edgewatch_crowd(int m, const double *at, int n, const double *begin,
         }
     }
 }
+
+/* Each of `directions` values of `channels` with its neighbours up to `reach` away, for every `step`-th of them: out
+ * (n * directions / step, (2 reach + 1) channels). The values go round a ring: in (n, directions, channels). */
+EXPORT void edgewatch_windows(int n, const float *in, int directions, int channels, int reach, int step, float *out)
+{
+    size_t ring = (size_t)directions * channels;
+    for (int i = 0; i < n; i++, in += ring) {
+        for (int d = 0; d < directions; d += step) {
+            for (int k = d - reach; k <= d + reach; k++, out += channels)
+                memcpy(out, in + (size_t)((k + directions) % directions) * channels, sizeof(float) * (size_t)channels);
+        }
+    }
+}
+
+/* Rings of one picture and of the one before, (n, first, directions) and (n, second, directions), as (n, directions, first
+ * + second). */
+EXPORT void edgewatch_channels(int n, const float *rings, int first, const float *before, int second, int directions,
+                               float *out)
+{
+    int channels = first + second;
+    for (int i = 0; i < n; i++, out += (size_t)directions * channels) {
+        for (int c = 0; c < channels; c++) {
+            const float *in = c < first ? rings + ((size_t)i * first + c) * directions
+                                        : before + ((size_t)i * second + c - first) * directions;
+            for (int d = 0; d < directions; d++)
+                out[d * channels + c] = in[d];
+        }
+    }
+}
