@@ -13,7 +13,6 @@ noise, crowd. Weights were learnt from both simulations with varied rendering by
 
 from __future__ import annotations
 
-import functools
 import math
 from dataclasses import dataclass
 from typing import Any
@@ -75,6 +74,9 @@ EXPOSURE_S, LEAST_CLOSED_S = 2.5e-3, 5e-5
 
 _TURN = np.arange(RING_DIRECTIONS) * (2.0 * math.pi / RING_DIRECTIONS)
 _OFFSETS = np.stack([np.outer(RING_RADII_PX, part) for part in (np.cos(_TURN), np.sin(_TURN))]).astype(np.float32)
+_RINGS = _OFFSETS.reshape(2, -1)
+_RINGS_BEFORE = np.ascontiguousarray(_OFFSETS[:, list(BEFORE_RINGS)]).reshape(2, -1)
+"""Along the stream and across it, (2, rings x directions) px."""
 
 LEVEL_NOISE = 3.0
 """Levels enter as log(1 + level / (this many noise deviations))."""
@@ -305,25 +307,20 @@ def _blobs_compiled(ridges: Ridges) -> NDArray[np.float64]:
         room = found
 
 
-@functools.cache
-def _places(rings: tuple[int, ...]) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
-    """Where rings are read, along the stream and across it (px)."""
-    along, across = (np.ascontiguousarray(part[list(rings)].ravel()) for part in _OFFSETS)
-    return along, across
-
-
 def read_patches(
     at: NDArray[np.float64],
     blurred: NDArray[np.float32],
     noise: float,
     contact_px: tuple[float, float],
-    rings: tuple[int, ...] = tuple(range(len(RING_RADII_PX))),
+    offsets: NDArray[np.float32] = _RINGS,
 ) -> NDArray[np.float32]:
-    """Description of each point (M, 2), float32 (M, rings x directions); the first direction leads from the contact."""
+    """Description of each point (M, 2), float32 (M, rings x directions); the first direction leads from the contact.
+    ``offsets``: float32 (2, rings x directions), of what is read, along the stream and across it (px).
+    """
     count = len(at)
     if not count:
-        return np.zeros((0, len(rings) * RING_DIRECTIONS), np.float32)
-    along, across = _places(rings)
+        return np.zeros((0, offsets.shape[1]), np.float32)
+    along, across = offsets
     place, ahead = at.astype(np.float32), _directions(at, contact_px).astype(np.float32)
     scale = 1.0 / (LEVEL_NOISE * noise)
     if native.LIBRARY:
@@ -352,8 +349,8 @@ def read_patches(
 def read_before(at: NDArray[np.float64], before: Ridges | None, contact_px: tuple[float, float]) -> NDArray[np.float32]:
     """The same of the picture before, zeros without one: float32 (M, ``BEFORE_RINGS`` x directions)."""
     if before is None:
-        return np.zeros((len(at), len(BEFORE_RINGS) * RING_DIRECTIONS), np.float32)
-    return read_patches(at, before.blurred, before.threshold_noise, contact_px, BEFORE_RINGS)
+        return np.zeros((len(at), _RINGS_BEFORE.shape[1]), np.float32)
+    return read_patches(at, before.blurred, before.threshold_noise, contact_px, _RINGS_BEFORE)
 
 
 def read_context(

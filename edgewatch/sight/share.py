@@ -20,7 +20,7 @@ MEMORY_S = 0.5
 DOUBT = 200.0
 """The share starts as expected, as if so many candidates had been seen."""
 
-MOST_SHIFT = 1.0
+MOST_SHIFT = 0.5
 """Log odds are lowered by no more than this, so that a bar of another steel shows in the first pictures; and never
 raised: where sparks burst often that lets in more false bursts than true ones."""
 
