@@ -71,7 +71,9 @@ def test_the_contract(line: tuple[Path, list], tmp_path: Path, capsys: pytest.Ca
 def test_options_override_the_station_file(
     line: tuple[Path, list], tmp_path: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:
-    """Half the scale is half the track; what is not overridden stays."""
+    """Half the scale is half the track, but for a line or two: the burst net is told the scale, and what it takes for a
+    burst has arms, which are no track. What is not overridden stays.
+    """
     clip, _ = line
     station = tmp_path / "station.toml"
     station.write_text(
@@ -79,7 +81,7 @@ def test_options_override_the_station_file(
     )
     whole = measured(capsys, str(clip), "--station", str(station))
     half = measured(capsys, str(clip), "--station", str(station), "--mm-per-px", "1")
-    assert half["track_m"] == pytest.approx(whole["track_m"] / 2.0)
+    assert half["track_m"] == pytest.approx(whole["track_m"] / 2.0, rel=0.005)
     assert half["contacts"][0]["begin_s"] == whole["contacts"][0]["begin_s"]
 
 
