@@ -25,6 +25,8 @@ static inline float read_level(const float *picture, int height, int width, floa
     if (!(x > -1.0f && y > -1.0f && x < (float)width && y < (float)height))
         return 0.0f;
     int column = (int)(x + 1.0f) - 1, row = (int)(y + 1.0f) - 1;
+    if (column >= width || row >= height) /* a hair before the edge, and rounded onto it */
+        return 0.0f;
     float right = x - (float)column, down = y - (float)row;
     const float *at = picture + (ptrdiff_t)row * width + column;
     if (column >= 0 && row >= 0 && column + 1 < width && row + 1 < height) {
