@@ -136,9 +136,8 @@ def main() -> int:
     print(f"{platform.machine()}, Python {platform.python_version()}, OpenCV {cv2.__version__}, numpy {np.__version__}")
     with tempfile.TemporaryDirectory() as name:
         readings, received, missing, longest_s = soak(Path(name), args.hours, args.fps)
-    print(
-        f"{'hours':>6} {'resident MB':>12} {'anonymous':>10} {'file':>6} {'files':>6} {'threads':>8} {'journal MB':>11} {'times real time':>16}"
-    )
+    widths = {"hours": 6, "resident MB": 12, "anonymous": 10, "file": 6, "files": 6, "threads": 8, "journal MB": 11}
+    print(" ".join(f"{name:>{width}}" for name, width in {**widths, "times real time": 16}.items()))
     for one in readings[:: max(1, len(readings) // 12)]:
         print(
             f"{one.hours:6.2f} {one.resident_mb:12.1f} {one.anonymous_mb:10.1f} {one.file_mb:6.1f} {one.files:6} "
