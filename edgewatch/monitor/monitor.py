@@ -404,7 +404,7 @@ class Monitor:
                 effects += self._keep_drift()
                 effects += self.complain(dict.fromkeys(DRIFT_CAUSES, False), stamp)
         else:
-            taught = lesson.finish(self._optics, wheel_speed_m_s=self._wheel.told_m_s, utc_s=stamp.utc_s)
+            taught = lesson.finish(self._optics, wheel_speed_m_s=self._wheel.told_m_s, stamp=stamp)
             accepted, sentence = taught.band is not None, taught.sentence
             if taught.band is not None:
                 self._bands[grade] = taught.band

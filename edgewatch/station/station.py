@@ -456,6 +456,16 @@ class Station:
         self._inbox.put(complain)
         self._on_notice(f"journal: set aside as {said}")
 
+    def _records_aside(self, files: int, size: int) -> None:
+        """So many files hold undelivered records and have no bound: each is the only copy; whoever looks must know."""
+        detail = f"{files} file{'s' if files > 1 else ''}, {size / 1e6:.1f} MB"
+
+        def complain(monitor: Monitor, stamp: messages.Stamp) -> list[Effect]:
+            ended = monitor.complain({"records_aside": False}, stamp)  # another number is an alert of its own
+            return ended + (monitor.complain({"records_aside": True}, stamp, detail=detail) if files else [])
+
+        self._inbox.put(complain)
+
     def _part_fault(self, name: str, error: BaseException) -> None:
         what = " ".join(f"{name}: {type(error).__name__}: {error}".split())[:300]
         self._tell({"part_restarted": True}, what)
@@ -465,10 +475,12 @@ class Station:
         self._fault_s[name] = now_s
 
     def _count_backlog(self, stop: threading.Event) -> None:
-        """Unsent and thinned messages, and whether they fill the journal; the work of a supervised thread.
+        """Unsent and thinned messages, whether they fill the journal, and what lies beside it; the work of a supervised
+        thread.
 
         Not of the judging: the journal may be busy with a slow card, or be locked by another process for a second.
         """
+        aside = (0, 0)
         while not stop.is_set():
             try:
                 status = self._journal.status()
@@ -479,6 +491,9 @@ class Station:
                     room_bytes=status.room_bytes,
                 )
                 self._backlog = (status.unsent, status.windows_thinned, filling)
+                if (status.aside, status.aside_bytes) != aside:
+                    aside = status.aside, status.aside_bytes
+                    self._records_aside(*aside)
             except DeviceError:
                 pass  # the recorder tells of it
             stop.wait(BACKLOG_S)
