@@ -49,6 +49,7 @@ from edgewatch.station.clock import Clock
 from edgewatch.station.pictures import PictureDesk
 from edgewatch.station.recorder import Batch, Recorder
 from edgewatch.station.supervise import Part
+from edgewatch.station.teller import Teller
 from edgewatch.station.watchdog import Watchdog
 from edgewatch.wire import messages
 from edgewatch.wire.orders import Order, OrderGate, Refusal
@@ -91,8 +92,8 @@ class Station:
 
     ``folder``: where relative paths of the settings start. ``live``: sources that can be either run at their own pace
     and the newest frame wins; without it they wait for the judging. ``paced``: a clip is played at its own frame rate.
-    ``named``: grade named on the command line. ``on_told``: called with one line a bar. ``bands``: use these instead
-    of the band files.
+    ``named``: grade named on the command line. ``on_told``: called with one line a bar; it may block, and what it
+    raises ends the run.
 
     Raises ``SettingsError`` and ``DeviceError`` when something needed from the start is wrong or not there.
     """
@@ -110,7 +111,8 @@ class Station:
     ) -> None:
         self._live, self._paced = live, paced
         self._folder = folder
-        self._on_told, self._on_notice = on_told, on_notice
+        self._on_notice = on_notice
+        self._teller = Teller(on_told, on_failure=self.request_stop)
         self._stopping = threading.Event()
         self._inbox: queue.SimpleQueue[Input] = queue.SimpleQueue()
         self._clock = Clock()
@@ -199,6 +201,7 @@ class Station:
             on_state=lambda trouble: self._tell({"evidence_lost": bool(trouble)}, trouble),
         )
         self._add("pictures", self._pictures.work)
+        self._add("told", self._teller.work)
         if settings.relay.kind != "none":
             self._relay = RelayKeeper(lambda: open_relay(settings.relay), self._relay_report, chance=random.random)
             self._add("relay", self._relay.run)
@@ -247,6 +250,8 @@ class Station:
             self._carry_out(self.monitor.end(self._clock.now()))
         finally:
             self._close()
+        if self._teller.failure is not None:
+            raise self._teller.failure
         return Outcome(
             frames=self._frames,
             skipped=self._skipped,
@@ -386,7 +391,7 @@ class Station:
             elif isinstance(effect, SaveBand):
                 self._save_band(effect)
             elif isinstance(effect, Told):
-                self._on_told(effect.line)
+                self._teller.put(effect.line, wait=self._waits_for_us and not self._paced)
         if entries or state:
             batch = Batch(entries=tuple(entries), state=state, stamp=stamp or self._clock.now())
             if self._waits_for_us and not self._paced:
@@ -511,6 +516,7 @@ class Station:
         if not self._recorder.flush(FLUSH_S):
             self._on_notice(f"journal: {self._recorder.waiting} records could not be written before the end")
         self._pictures.flush(FLUSH_S)
+        self._teller.flush(None if self._waits_for_us else FLUSH_S)
         if self._link is not None:
             self._link.wake()
             self._link.stop(FLUSH_S if self._link.state.state == "online" else 1.0)
