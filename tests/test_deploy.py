@@ -188,6 +188,7 @@ def test_the_unit_is_watched_and_confined() -> None:
     assert service["RestartPreventExitStatus"] == "2"
     assert set(service["SupplementaryGroups"].split()) == {"dialout", "video"}
     assert service["StateDirectory"] == "edgewatch"
+    assert int(service["CPUWeight"]) > 100  # systemd.resource-control(5): what every other service has
     assert service["WorkingDirectory"] == f"/var/lib/{service['StateDirectory']}"
     for key in ("NoNewPrivileges", "ProtectHome", "PrivateTmp", "LockPersonality", "RestrictRealtime"):
         assert service[key] == "yes", key

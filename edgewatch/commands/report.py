@@ -63,13 +63,14 @@ def write_report(path: Path, band: Band) -> None:
         if band.has_reach
         else "<p>The band holds no reach.</p>"
     )
+    doubt = " by a clock that was not synchronised" if band.clock_synced is False else ""
     text = f"""<!DOCTYPE html>
 <html lang="en"><head><meta charset="utf-8"><title>{html.escape(band.grade)}: what was taught</title>
 <style>body{{font-family:sans-serif;max-width:60em;margin:2em auto}}table{{border-collapse:collapse}}
 td,th{{padding:.2em .7em;border-bottom:1px solid #ccc;text-align:right}}</style></head><body>
 <h1>{html.escape(band.grade)}</h1>
 <p>{band.bars_used} reference bars, {band.bursts} bursts on {band.track_m:.1f} m of track, taught
-{html.escape(band.taught)}. The band is meant to hold {100 * band.content:g} % of bars, with a confidence of
+{html.escape(band.taught)}{doubt}. The band is meant to hold {100 * band.content:g} % of bars, with a confidence of
 {100 * band.confidence:g} %.</p>
 <p>Burst-rate {band.burst_rate_low_per_m:.3f} to {band.burst_rate_high_per_m:.3f} per metre; scatter from bar to bar
 {100 * band.rate_scatter:.1f} %, dispersion within a bar {band.rate_dispersion:.2f}.</p>{reach}

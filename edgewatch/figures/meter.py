@@ -19,10 +19,11 @@ from edgewatch.sight.optics import Optics
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class WindowDone:
-    """One window of the contact under way: its own figures, and the bar's so far."""
+    """One window of the contact under way. The bar's own figures so far: ``BarMeter.bar_so_far``; nothing that a
+    decision waits for needs them.
+    """
 
     window: Figures
-    bar: Figures
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -139,7 +140,7 @@ class BarMeter:
         self._bar.merge(self._window)
         self._window.reset()
         self._windows.append(window)
-        return [WindowDone(window=window, bar=self._bar.figures())]
+        return [WindowDone(window=window)]
 
     def _finish(self, end: End) -> list[Begin | WindowDone | BarDone]:
         done = self._end_window(end.t_s)

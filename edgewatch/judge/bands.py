@@ -70,7 +70,8 @@ class Band:
     streams taught were cut off by the picture's edge. ``streak_peak_dn``, ``streak_width_px``: typical height (DN) and
     width (px) of streaks, with the standard deviation of the logarithm from bar to bar; ``None``: not known, so the
     lens is not judged by this band. Optics, exposure and frame rate are those of the teaching; NaN is
-    not known. ``taught``: date (RFC 3339). ``bars`` include those left out.
+    not known. ``taught``: date (RFC 3339); ``clock_synced``: whether the clock that gave it was synchronised, ``None``:
+    not known. ``bars`` include those left out.
     """
 
     grade: str
@@ -104,6 +105,7 @@ class Band:
     spark_speed_m_s: float = math.nan
     streaks_per_frame: float = math.nan
     taught: str = ""
+    clock_synced: bool | None = None
     bars: tuple[ReferenceBar, ...] = ()
 
     def __post_init__(self) -> None:
@@ -232,6 +234,7 @@ _SECTIONS: dict[str, dict[str, str]] = {
         "spark_speed_m_s": "spark_speed_m_s",
         "streaks_per_frame": "streaks_per_frame",
         "taught": "taught",
+        "clock_synced": "clock_synced",
     },
     "optics": {
         "mm_per_px": "mm_per_px",
@@ -249,7 +252,7 @@ _KINDS: dict[str, Any] = {
     **dict.fromkeys(("bars_used", "bursts", "width_px", "height_px", "number", "frames", "streaks"), int),
     **dict.fromkeys(("rate_freedom", "reach_freedom"), int),
     **dict.fromkeys(("grade", "taught", "clip"), str),
-    "left_out": bool,
+    **dict.fromkeys(("left_out", "clock_synced"), bool),
     "contact_px": tuple,
 }
 _ALLOWED = {int: "a whole number of at least 0", str: "text", bool: "true or false", float: "a number"}

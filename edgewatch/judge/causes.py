@@ -79,6 +79,9 @@ CAUSES = MappingProxyType(
         "records_shed": Cause("The journal was away too long; records were given up, and counted.", FAILURE),
         "records_refused": Cause("Records that cannot be written were left out and counted.", MAINTENANCE, alerts=True),
         "journal_damaged": Cause("A damaged journal was set aside whole; a new one began.", MAINTENANCE, alerts=True),
+        "records_aside": Cause(
+            "Undelivered records lie in damaged journals and could not be taken over yet.", MAINTENANCE, alerts=True
+        ),
         "outbox_filling": Cause("Unsent messages have nearly filled journal or disk.", MAINTENANCE, alerts=True),
         "windows_thinned": Cause("Unsent window messages were thinned to save space.", MAINTENANCE),
         "evidence_lost": Cause("Evidence pictures cannot be kept.", MAINTENANCE),

@@ -9,6 +9,7 @@ from edgewatch.figures.meter import BarDone
 from edgewatch.judge.bands import Band, ReferenceBar
 from edgewatch.judge.teaching import find_outliers, reference_bar, teach
 from edgewatch.sight.optics import Optics
+from edgewatch.wire.messages import Stamp
 from edgewatch.wire.orders import Order
 from edgewatch.wire.times import write_time
 
@@ -46,17 +47,26 @@ class Lesson:
             return False
         return True
 
-    def finish(self, optics: Optics, *, wheel_speed_m_s: float, utc_s: float) -> Taught:
-        """Make the band. An outlying bar among the references makes none: the classic mistake is a wrong bar."""
+    def finish(self, optics: Optics, *, wheel_speed_m_s: float, stamp: Stamp) -> Taught:
+        """Make the band. An outlying bar among the references makes none: the classic mistake is a wrong bar. One that
+        is taught by a clock that is not synchronised is good, and marked: its date may be wrong.
+        """
         outliers = find_outliers(self._bars)
         if outliers:
             named = ", ".join(f"bar {one.number} by {one.figure}" for one in outliers)
             return Taught(band=None, sentence=f"not taught: {named} does not fit the others")
         try:
             band = teach(
-                self.order.grade, self._bars, optics=optics, wheel_speed_m_s=wheel_speed_m_s, taught=write_time(utc_s)
+                self.order.grade,
+                self._bars,
+                optics=optics,
+                wheel_speed_m_s=wheel_speed_m_s,
+                taught=write_time(stamp.utc_s),
             )
         except SettingsError as error:
             return Taught(band=None, sentence=f"not taught: {error}")
         low, high = band.burst_rate_low_per_m, band.burst_rate_high_per_m
-        return Taught(band=band, sentence=f"taught from {band.bars_used} bars: burst-rate {low:.3g} to {high:.3g} /m")
+        sentence = f"taught from {band.bars_used} bars: burst-rate {low:.3g} to {high:.3g} /m"
+        if not stamp.synced:
+            sentence += "; the clock is not synchronised: the date of the teaching may be wrong"
+        return Taught(band=dataclasses.replace(band, clock_synced=stamp.synced), sentence=sentence)

@@ -104,7 +104,7 @@ class Monitor:
         self._summary_s = -math.inf
         self._frames_seen = 0
         self._frames_skipped = 0
-        self._rolling: messages.Body | None = None
+        self._last_bar: messages.Body | None = None
         self._last_t_s = 0.0
         self._unsent = 0
         self._thinned = 0
@@ -301,7 +301,6 @@ class Monitor:
         lens = self._look_at_lens(event.window, stamp)
         bar.note(self._complaints.withholding)
         self._wheel.update(event.window)
-        self._rolling = messages.figures(event.bar)
         effects: list[Effect] = [
             *lens,
             Record(kind="window", payload=messages.window(values=event.window, bar=bar.number)),
@@ -339,7 +338,7 @@ class Monitor:
         if judgement.verdict == NONCONFORMING and not bar.condemned:
             effects += self._condemn(bar, "when the contact ended")
         self._counts[judgement.verdict] += 1
-        self._rolling = messages.figures(event.bar)
+        self._last_bar = messages.figures(event.bar)
         pictures = bar.pictures(event, judgement) if self._settings.evidence.folder else []
         body = bar.body(event, judgement, [picture.file for picture in pictures])
         effects += pictures
@@ -405,7 +404,7 @@ class Monitor:
                 effects += self._keep_drift()
                 effects += self.complain(dict.fromkeys(DRIFT_CAUSES, False), stamp)
         else:
-            taught = lesson.finish(self._optics, wheel_speed_m_s=self._wheel.told_m_s, utc_s=stamp.utc_s)
+            taught = lesson.finish(self._optics, wheel_speed_m_s=self._wheel.told_m_s, stamp=stamp)
             accepted, sentence = taught.band is not None, taught.sentence
             if taught.band is not None:
                 self._bands[grade] = taught.band
@@ -580,8 +579,14 @@ class Monitor:
             relay="" if self._settings.relay.kind == "none" else "run" if self._stop is StopState.RUN else "stop",
             alerts=[alert_name(alert) for alert in self._alerts.open],
         )
-        body["figures"] = self._rolling
+        body["figures"] = self._rolling()
         return [Publish(kind="summary", payload=body)]
+
+    def _rolling(self) -> messages.Body | None:
+        """Figures of the bar at the wheel up to its last full window; before that, those of the last bar."""
+        if self._bar is not None and (so_far := self._meter.bar_so_far()).frames_seen:
+            return messages.figures(so_far)
+        return self._last_bar
 
     def _view(self, order: Order, frame: Frame, detections: Detections) -> SendView:
         bar = "no bar at the wheel" if self._bar is None else f"bar {self._bar.number}"

@@ -1,8 +1,8 @@
 """Damaged journals beside the journal: ``FILE.damaged-TIME``, with their logs; the newest stay, older ones give way.
 
 ``-unsent`` behind the name: what it holds was not taken over yet (killed meanwhile, no room for a new file). Such a
-file is never deleted, however many there are, because it may hold the only copy of undelivered records; the next start
-takes over and gives it its final name, or tells that it still waits.
+file is never deleted, however many there are, because it may hold the only copy of undelivered records; taking over is
+tried at every start and once a minute, and gives it its final name. How many wait, and how large they are, is told.
 """
 
 from __future__ import annotations
@@ -39,6 +39,14 @@ class Aside:
         """Files that were not taken over yet, oldest first."""
         found = [path for _, paths in sorted(self._found().items()) for path in paths]
         return [path for path in found if path.name.endswith(UNSENT)]
+
+    def size(self, aside: Path) -> int:
+        """Bytes that a file takes with its logs."""
+        size = 0
+        for ending in ("", *_LOGS):
+            with contextlib.suppress(OSError):
+                size += Path(f"{aside}{ending}").stat().st_size
+        return size
 
     def done(self, aside: Path) -> Path:
         """Give a file that was taken over its final name. Raises ``OSError``."""

@@ -44,6 +44,8 @@ PRUNE_RUN = 256
 """Records that give way in one step."""
 RESERVE = 10_000
 """How far ahead ``FILE.seq`` is written; so many numbers at most are skipped when a damaged file is replaced."""
+TAKE_OVER_S = 60.0
+"""What could not be taken over from a damaged file is tried again this often (s): room may have been made."""
 MOST_BOOTS = 1000
 """Each time so many more starts have been recorded, those of which no record is left are forgotten."""
 SPARE_PAGES = 64
@@ -92,6 +94,8 @@ class Journal:
         self._floor = 0
         self._prune_after = 0
         self._told: set[Path] = set()
+        self._waiting: tuple[Path, ...] = ()
+        self._take_over_s = 0.0
         self._outbox = Outbox(thin_windows_mb * 1e6)
         try:
             with self._lock:
@@ -206,7 +210,9 @@ class Journal:
         if self._db is not None:
             with contextlib.suppress(OSError):
                 if self.path.stat().st_ino == self._inode:
-                    return self._db
+                    if self._waiting and time.monotonic() >= self._take_over_s:
+                        self._take_over("found waiting")
+                    return self._db or self._opened()
             self._drop()  # the file was deleted or replaced under us
         try:
             self._opened()
@@ -325,6 +331,8 @@ class Journal:
             deleted = self._aside.clear(kept)
             if self._on_set_aside is not None:
                 self._on_set_aside(kept, "; ".join([reason, saved, *deleted]))
+        self._waiting = tuple(self._aside.waiting())
+        self._take_over_s = time.monotonic() + TAKE_OVER_S
 
     # ------------------------------------------------------------------ transactions
 
@@ -416,6 +424,8 @@ class Journal:
             next_seq=max(table.newest(db) or 0, self._floor) + 1,
             unsent_room_bytes=self._outbox.unsent_room,
             room_bytes=int(room),
+            aside=len(self._waiting),
+            aside_bytes=sum(self._aside.size(path) for path in self._waiting),
         )
 
 

@@ -77,7 +77,8 @@ class JournalStatus:
     """Size and backlog. ``unsent`` messages and their ``unsent_bytes``; ``windows_thinned``: window messages that gave
     way since the journal began; ``used_bytes``: pages in use; ``next_seq``: what the next record will get;
     ``unsent_room_bytes``: room in the file that the unsent ones take, about; ``room_bytes``: what they may take, as the
-    size limit and the disk have it.
+    size limit and the disk have it. ``aside``: damaged files whose unsent records could not be taken over yet, of
+    ``aside_bytes`` together.
     """
 
     unsent: int
@@ -87,6 +88,8 @@ class JournalStatus:
     next_seq: int
     unsent_room_bytes: int = 0
     room_bytes: int = 0
+    aside: int = 0
+    aside_bytes: int = 0
 
 
 _COLUMNS_BYTES = 47

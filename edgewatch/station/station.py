@@ -49,6 +49,7 @@ from edgewatch.station.clock import Clock
 from edgewatch.station.pictures import PictureDesk
 from edgewatch.station.recorder import Batch, Recorder
 from edgewatch.station.supervise import Part
+from edgewatch.station.teller import Teller
 from edgewatch.station.watchdog import Watchdog
 from edgewatch.wire import messages
 from edgewatch.wire.orders import Order, OrderGate, Refusal
@@ -91,8 +92,8 @@ class Station:
 
     ``folder``: where relative paths of the settings start. ``live``: sources that can be either run at their own pace
     and the newest frame wins; without it they wait for the judging. ``paced``: a clip is played at its own frame rate.
-    ``named``: grade named on the command line. ``on_told``: called with one line a bar. ``bands``: use these instead
-    of the band files.
+    ``named``: grade named on the command line. ``on_told``: called with one line a bar; it may block, and what it
+    raises ends the run.
 
     Raises ``SettingsError`` and ``DeviceError`` when something needed from the start is wrong or not there.
     """
@@ -110,7 +111,8 @@ class Station:
     ) -> None:
         self._live, self._paced = live, paced
         self._folder = folder
-        self._on_told, self._on_notice = on_told, on_notice
+        self._on_notice = on_notice
+        self._teller = Teller(on_told, on_failure=self.request_stop)
         self._stopping = threading.Event()
         self._inbox: queue.SimpleQueue[Input] = queue.SimpleQueue()
         self._clock = Clock()
@@ -199,6 +201,7 @@ class Station:
             on_state=lambda trouble: self._tell({"evidence_lost": bool(trouble)}, trouble),
         )
         self._add("pictures", self._pictures.work)
+        self._add("told", self._teller.work)
         if settings.relay.kind != "none":
             self._relay = RelayKeeper(lambda: open_relay(settings.relay), self._relay_report, chance=random.random)
             self._add("relay", self._relay.run)
@@ -247,6 +250,8 @@ class Station:
             self._carry_out(self.monitor.end(self._clock.now()))
         finally:
             self._close()
+        if self._teller.failure is not None:
+            raise self._teller.failure
         return Outcome(
             frames=self._frames,
             skipped=self._skipped,
@@ -386,7 +391,7 @@ class Station:
             elif isinstance(effect, SaveBand):
                 self._save_band(effect)
             elif isinstance(effect, Told):
-                self._on_told(effect.line)
+                self._teller.put(effect.line, wait=self._waits_for_us and not self._paced)
         if entries or state:
             batch = Batch(entries=tuple(entries), state=state, stamp=stamp or self._clock.now())
             if self._waits_for_us and not self._paced:
@@ -456,6 +461,16 @@ class Station:
         self._inbox.put(complain)
         self._on_notice(f"journal: set aside as {said}")
 
+    def _records_aside(self, files: int, size: int) -> None:
+        """So many files hold undelivered records and have no bound: each is the only copy; whoever looks must know."""
+        detail = f"{files} file{'s' if files > 1 else ''}, {size / 1e6:.1f} MB"
+
+        def complain(monitor: Monitor, stamp: messages.Stamp) -> list[Effect]:
+            ended = monitor.complain({"records_aside": False}, stamp)  # another number is an alert of its own
+            return ended + (monitor.complain({"records_aside": True}, stamp, detail=detail) if files else [])
+
+        self._inbox.put(complain)
+
     def _part_fault(self, name: str, error: BaseException) -> None:
         what = " ".join(f"{name}: {type(error).__name__}: {error}".split())[:300]
         self._tell({"part_restarted": True}, what)
@@ -465,10 +480,12 @@ class Station:
         self._fault_s[name] = now_s
 
     def _count_backlog(self, stop: threading.Event) -> None:
-        """Unsent and thinned messages, and whether they fill the journal; the work of a supervised thread.
+        """Unsent and thinned messages, whether they fill the journal, and what lies beside it; the work of a supervised
+        thread.
 
         Not of the judging: the journal may be busy with a slow card, or be locked by another process for a second.
         """
+        aside = (0, 0)
         while not stop.is_set():
             try:
                 status = self._journal.status()
@@ -479,6 +496,9 @@ class Station:
                     room_bytes=status.room_bytes,
                 )
                 self._backlog = (status.unsent, status.windows_thinned, filling)
+                if (status.aside, status.aside_bytes) != aside:
+                    aside = status.aside, status.aside_bytes
+                    self._records_aside(*aside)
             except DeviceError:
                 pass  # the recorder tells of it
             stop.wait(BACKLOG_S)
@@ -496,6 +516,7 @@ class Station:
         if not self._recorder.flush(FLUSH_S):
             self._on_notice(f"journal: {self._recorder.waiting} records could not be written before the end")
         self._pictures.flush(FLUSH_S)
+        self._teller.flush(None if self._waits_for_us else FLUSH_S)
         if self._link is not None:
             self._link.wake()
             self._link.stop(FLUSH_S if self._link.state.state == "online" else 1.0)

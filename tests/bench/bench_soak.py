@@ -3,9 +3,12 @@
 ``python -m tests.bench.bench_soak [--hours H] [--fps F]``: the real ``edgewatch watch`` reads raw pictures from a FIFO
 as fast as it judges them, with a real Mosquitto and a reader beside it, a bar every two seconds. Memory, open files,
 threads and the journal's size are read from outside, every simulated quarter of an hour; the first hour is the warm-up
-that the others are held against. The longest time for which the station took no picture is the longest standstill of
-its judging: a camera's pictures would have waited as long (``bench_latency`` has it at a camera's own pace). Exit
-status 1 when anything has grown by more than 2 %, or a message is missing.
+that the others are held against. Resident memory is split as the kernel does: *anonymous* is what the station itself
+holds, and what a leak would be in; *file* is pages of programs and libraries, which the kernel takes and gives back.
+
+The longest time for which the station took no picture is the longest standstill of its judging: a camera's pictures
+would have waited as long (``bench_latency`` has it at a camera's own pace). Exit status 1 when anything has grown by
+more than 2 %, or a message is missing.
 """
 
 from __future__ import annotations
@@ -52,6 +55,8 @@ class Reading:
 
     hours: float
     resident_mb: float
+    anonymous_mb: float
+    file_mb: float
     files: int
     threads: int
     journal_mb: float
@@ -66,6 +71,8 @@ def read(pid: int, folder: Path, *, hours: float, speed: float) -> Reading:
     return Reading(
         hours=hours,
         resident_mb=int(value["VmRSS"]) / 1000,
+        anonymous_mb=int(value["RssAnon"]) / 1000,
+        file_mb=(int(value["RssFile"]) + int(value["RssShmem"])) / 1000,
         files=len(list(Path(f"/proc/{pid}/fd").iterdir())),
         threads=int(value["Threads"]),
         journal_mb=size / 1e6,
@@ -129,22 +136,24 @@ def main() -> int:
     print(f"{platform.machine()}, Python {platform.python_version()}, OpenCV {cv2.__version__}, numpy {np.__version__}")
     with tempfile.TemporaryDirectory() as name:
         readings, received, missing, longest_s = soak(Path(name), args.hours, args.fps)
-    print(f"{'hours':>6} {'resident MB':>12} {'files':>6} {'threads':>8} {'journal MB':>11} {'times real time':>16}")
+    widths = {"hours": 6, "resident MB": 12, "anonymous": 10, "file": 6, "files": 6, "threads": 8, "journal MB": 11}
+    print(" ".join(f"{name:>{width}}" for name, width in {**widths, "times real time": 16}.items()))
     for one in readings[:: max(1, len(readings) // 12)]:
         print(
-            f"{one.hours:6.2f} {one.resident_mb:12.1f} {one.files:6} {one.threads:8} {one.journal_mb:11.2f} "
-            f"{one.speed:16.1f}"
+            f"{one.hours:6.2f} {one.resident_mb:12.1f} {one.anonymous_mb:10.1f} {one.file_mb:6.1f} {one.files:6} "
+            f"{one.threads:8} {one.journal_mb:11.2f} {one.speed:16.1f}"
         )
     half = readings[len(readings) // 2 :]
     early, late = readings[min(3, len(readings) - 1)], half[-1]
     growth = {
         "resident memory": late.resident_mb / early.resident_mb - 1,
+        "anonymous memory": late.anonymous_mb / early.anonymous_mb - 1,
         "open files": late.files / early.files - 1,
         "threads": late.threads / early.threads - 1,
         "journal": max(one.journal_mb for one in half) / max(one.journal_mb for one in readings[: len(half)]) - 1,
     }
     for what, share in growth.items():
-        print(f"{what}: {100 * share:+.1f} % from hour {early.hours:g} to hour {late.hours:g}")
+        print(f"{what}: {100 * share:+.2f} % from hour {early.hours:g} to hour {late.hours:g}")
     print(f"longest standstill of the judging: {longest_s:.2f} s")
     print(f"{received} journalled messages received, {len(missing)} missing")
     return 1 if missing or max(growth.values()) > LARGEST_GROWTH else 0

@@ -67,7 +67,7 @@ def test_nothing_unsent_is_never_nearly_full() -> None:
     assert Filling().update(0.0, unsent=0, used_bytes=0.0, room_bytes=0.0) == ""
 
 
-@pytest.mark.parametrize("cause", ["outbox_filling", "journal_damaged"])
+@pytest.mark.parametrize("cause", ["outbox_filling", "journal_damaged", "records_aside"])
 def test_what_threatens_records_is_an_alert(cause: str) -> None:
     """Condition and alert both name it, with the detail, and both end with it."""
     assert CAUSES[cause].condition == MAINTENANCE

@@ -9,8 +9,8 @@ from typing import Any
 import numpy as np
 import pytest
 
-from edgewatch.judge.bands import Band
-from edgewatch.monitor.effects import Effect, KeepPicture, Publish, Record, Remember, SendView, SetRelay, Told
+from edgewatch.judge.bands import Band, band_toml
+from edgewatch.monitor.effects import Effect, KeepPicture, Publish, Record, Remember, SaveBand, SendView, SetRelay, Told
 from edgewatch.monitor.memory import Memory, read_memory
 from edgewatch.monitor.monitor import Monitor
 from edgewatch.settings import read_settings
@@ -251,6 +251,37 @@ def test_summary_comes_on_time_and_not_more() -> None:
     station.begin(stamp(0.0))
     times = [t / 10 for t in range(1, 160) if any(isinstance(e, Publish) for e in station.tick(stamp(t / 10)))]
     assert times == pytest.approx([5.0, 10.0, 15.0])
+
+
+def test_a_summary_has_the_figures_of_the_bar_at_the_wheel() -> None:
+    """Up to its last full window while it touches, of the whole contact when it has ended."""
+    station = monitor()
+    station.begin(stamp(0.0))
+    seen: list[Any] = []
+    for frame in line_of_bars(np.random.default_rng(5), bars=2, contact_s=1.5):
+        effects = station.see(frame, stamp(frame.t_s))
+        seen += [e.payload["figures"] for e in effects if isinstance(e, Publish)]
+    assert [(one["frames_seen"], round(one["begin_s"], 2)) for one in seen] == [
+        (75, 0.4),
+        (150, 0.4),
+        (75, 2.3),
+        (150, 2.3),
+    ]
+
+
+@pytest.mark.parametrize("synced", [True, False])
+def test_a_band_taught_by_order_says_whether_its_date_can_be_trusted(synced: bool) -> None:
+    """A board without a battery clock has woken in the wrong year: the band is good, its date is marked."""
+    station = monitor("C15")
+    station.begin(stamp(0.0, synced=synced))
+    station.order(order("teach", grade="X1", bars=5), stamp(0.0, synced=synced))
+    effects: list[Effect] = []
+    for frame in line_of_bars(np.random.default_rng(5), bars=5):
+        effects += station.see(frame, stamp(frame.t_s, synced=synced))
+    (saved,) = [effect.band for effect in effects if isinstance(effect, SaveBand)]
+    assert saved.clock_synced is synced
+    assert ("date" in records(effects, "order")[-1]["reason"]) is not synced
+    assert (f"clock_synced = {str(synced).lower()}" in band_toml(saved)) and saved.taught.startswith("2026-")
 
 
 def test_the_same_input_gives_the_same_effects() -> None:

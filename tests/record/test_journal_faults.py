@@ -11,6 +11,7 @@ import signal
 import sqlite3
 import subprocess
 import tempfile
+import time
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -525,6 +526,39 @@ def test_what_could_not_be_taken_over_is_kept_and_taken_over_later(file: Path):
     number = len(told)
     opened().close()
     assert len(told) == number
+
+
+def test_what_waits_aside_is_counted_and_taken_over_without_a_new_start(file: Path, monkeypatch: pytest.MonkeyPatch):
+    """A disk too full for the unsent records: number and size of the files that hold them are known, and once there is
+    room the running station takes them over; not sooner than a minute after the last try.
+    """
+    journal = Journal(file)
+    journal.append([bar(number) for number in range(60)], stamp=stamp())
+    waiting = [message.payload for message in journal.pending(100)]
+    journal.close()
+    with sqlite3.connect(file) as db:
+        db.execute("DROP TABLE finding")
+    db.close()
+    told: list[tuple[Path, str]] = []
+    with _largest_file(60_000):
+        journal = Journal(file, on_set_aside=lambda path, reason: told.append((path, reason)))
+        (held,) = _asides(file)
+        status = journal.status()
+        assert status.aside == 1
+        assert status.aside_bytes >= held.stat().st_size > 60_000
+        monkeypatch.setattr("edgewatch.record.journal.TAKE_OVER_S", 0.0)
+        journal._take_over_s = 0.0
+        assert journal.status().aside == 1  # tried again in vain
+        assert len(told) == 1  # and not told again
+        monkeypatch.undo()
+        journal._take_over_s = time.monotonic() + 60.0
+    assert journal.status().aside == 1
+    journal._take_over_s = time.monotonic()
+    status = journal.status()
+    assert (status.aside, status.aside_bytes, status.unsent) == (0, 0, 60)
+    assert [message.payload for message in journal.pending(100)] == waiting
+    assert "taken over: 60 unsent records" in told[-1][1]
+    journal.close()
 
 
 def test_a_kill_between_setting_aside_and_taking_over_loses_nothing(file: Path):

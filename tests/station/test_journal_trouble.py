@@ -80,6 +80,32 @@ def test_each_damaged_journal_is_an_alert_and_old_ones_are_deleted(place: Path) 
     assert errors.count("deleted to make room: edgewatch.sqlite.damaged-") == 2
 
 
+def test_records_that_lie_aside_are_an_alert_with_number_and_size(place: Path) -> None:
+    """Two damaged journals that cannot be read at all: never deleted; the alert says how many, and ends with them."""
+    file = place / "edgewatch.sqlite"
+    asides = [Path(f"{file}.damaged-2026010{day}T000000Z-unsent") for day in (1, 2)]
+    for aside in asides:
+        aside.mkdir()  # opening it fails as it does on a card with a broken sector
+    station = watching(place, "--pace", "real")
+    try:
+        wait_until(lambda: raised(file, "records_aside"), "the alert is on the journal")
+    finally:
+        station.send_signal(signal.SIGTERM)
+        _, errors = station.communicate(timeout=60)
+    assert station.returncode == 0, errors
+    (text,) = raised(file, "records_aside")
+    assert "2 files, 0.0 MB" in text
+    assert all(aside.exists() for aside in asides)
+    asides[0].rmdir()
+    asides[1].rmdir()
+    station = watching(place, "--pace", "real")
+    try:
+        wait_until(lambda: alerts(file, "records_aside")[-1]["state"] == "cleared", "the alert has ended")
+    finally:
+        station.send_signal(signal.SIGTERM)
+        station.communicate(timeout=60)
+
+
 def test_an_outbox_that_fills_is_said_before_it_is_full(place: Path) -> None:
     """The broker stayed away: 0.9 of 1 MB is unsent. The condition names it, an alert tells how much; all is kept."""
     file = place / "edgewatch.sqlite"

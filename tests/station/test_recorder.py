@@ -10,7 +10,7 @@ import pytest
 from edgewatch.backoff import Backoff
 from edgewatch.errors import DeviceError
 from edgewatch.record.journal import Entry, Journal
-from edgewatch.station.recorder import MOST_TRIES, Batch, Recorder
+from edgewatch.station.recorder import MOST_TRIES, ROOM, Batch, Recorder
 from edgewatch.station.supervise import Part
 from edgewatch.wire.messages import Stamp
 
@@ -114,6 +114,39 @@ def test_oldest_bars_go_when_there_are_no_windows_left() -> None:
         recorder.put(bar(number))
     assert recorder.waiting == 50
     assert recorder.shed == 51
+
+
+def test_a_source_that_can_wait_waits_for_a_slow_disk() -> None:
+    """A clip is judged faster than a slow disk takes records: few of them wait in memory, and none is lost."""
+    slow, waited = threading.Event(), []
+
+    class Slow(Moody):
+        def append(
+            self, entries: Sequence[Entry], *, stamp: Stamp, state: Mapping[str, Any] | None = None
+        ) -> tuple[int, ...]:
+            """Keep the entries once the disk has come round."""
+            slow.wait()
+            waited.append(recorder.waiting)
+            return super().append(entries, stamp=stamp, state=state)
+
+    journal = Slow()
+    recorder = Recorder(journal, on_state=lambda error, shed: None)
+    part = running(recorder)
+
+    def judge() -> None:
+        for number in range(3 * ROOM):
+            recorder.put_when_room(window(number))
+
+    judging = threading.Thread(target=judge)
+    judging.start()
+    judging.join(0.2)
+    assert judging.is_alive()
+    slow.set()
+    judging.join(10.0)
+    assert recorder.flush(10.0)
+    part.stop(5.0)
+    assert max(waited) == ROOM
+    assert journal.kept == [("window", number) for number in range(3 * ROOM)]
 
 
 def test_stop_with_a_broken_disk_ends() -> None:
