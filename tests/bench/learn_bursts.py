@@ -529,7 +529,7 @@ def judge(weights: list[Floats], lessons: Lessons) -> tuple[Floats, Floats]:
 def main() -> None:
     """Collect, learn, report, write."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0] if __doc__ else None)
-    parser.add_argument("--chunks", type=int, default=21, help="hundreds of scenes of each simulation to learn from")
+    parser.add_argument("--chunks", type=int, default=31, help="hundreds of scenes of each simulation to learn from")
     parser.add_argument("--rounds", type=int, default=12, help="rounds through all candidates")
     parser.add_argument("--out", type=Path, default=Path("edgewatch/sight/burst_weights.py"))
     parser.add_argument("--cache", type=Path, help="keep candidates in this directory, and take those that are there")
