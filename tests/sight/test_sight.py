@@ -72,11 +72,12 @@ def star(
     return [(x, y, x + length * math.cos(a), y + length * math.sin(a), height) for a in angles]
 
 
-def embers(x: float, y: float, arms: int = 6) -> list[tuple[float, float, float, float, float]]:
-    """Outer parts of arms round an empty middle."""
+def embers(x: float, y: float, arms: int = 6, flown: float = 0.0) -> list[tuple[float, float, float, float, float]]:
+    """Outer parts of arms round an empty middle; ``flown`` px further out they have faded by a tenth for each."""
     angles = 0.3 + np.arange(arms) * 2 * math.pi / arms
-    c, s = np.cos(angles), np.sin(angles)
-    return [(x + 7 * u, y + 7 * v, x + 14 * u, y + 14 * v, 60.0) for u, v in zip(c.tolist(), s.tolist(), strict=True)]
+    near, far, level = 7.0 + flown, 14.0 + flown, 60.0 * (1.0 - 0.1 * flown)
+    ways = zip(np.cos(angles).tolist(), np.sin(angles).tolist(), strict=True)
+    return [(x + near * u, y + near * v, x + far * u, y + far * v, level) for u, v in ways]
 
 
 def same(a: Detections, b: Detections) -> bool:
@@ -137,7 +138,7 @@ def test_embers_are_late_and_news_only_once() -> None:
     seen = sight.look(draw(embers(130.0, 100.0)))
     assert len(seen.bursts) == 1
     assert seen.burst_flags[0] & BurstFlag.LATE
-    assert len(sight.look(draw(embers(130.0, 100.0), seed=SEED + 1)).bursts) == 0
+    assert len(sight.look(draw(embers(131.0, 100.0, flown=3.0), seed=SEED + 1)).bursts) == 0
 
 
 def test_memory_of_bursts_ends_and_reset_forgets() -> None:
