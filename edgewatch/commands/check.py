@@ -128,7 +128,7 @@ def _tried(
 def _sight() -> Finding:
     """Whether the steps that cost most are compiled."""
     if native.LIBRARY is None:
-        detail = f"runs its Python forms, several times slower: {native.WHY_NOT}"
+        detail = f"runs its Python forms, at half the speed: {native.WHY_NOT}"
         return Finding(check="sight", result=NOTE, detail=detail)
     return Finding(check="sight", result=GOOD, detail="its costly steps are compiled")
 

@@ -145,7 +145,7 @@ def advise(worst: Cell, optics: Optics) -> tuple[str, ...]:
         finer = optics.mm_per_px * binning
         remedies.append(f"binning: set source.binning to {binning}; pixels then are {finer:g} mm")
     if native.LIBRARY is None:
-        remedies.append(f"compiler: the sight runs its Python forms, several times slower: {native.WHY_NOT}")
+        remedies.append(f"compiler: the sight runs its Python forms, at half the speed: {native.WHY_NOT}")
     return tuple(remedies)
 
 
