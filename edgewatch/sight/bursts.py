@@ -78,6 +78,10 @@ _RINGS = _OFFSETS.reshape(2, -1)
 _RINGS_BEFORE = np.ascontiguousarray(_OFFSETS[:, list(BEFORE_RINGS)]).reshape(2, -1)
 """Along the stream and across it, (2, rings x directions) px."""
 
+UNMOVED_LEAST, UNMOVED_MOST = 0.9, 0.6
+"""What looked the same in the picture before, by this cosine, is news by no more than the second probability: arms fly on
+and fade, the net knows, and takes for news what does neither."""
+
 LEVEL_NOISE = 3.0
 """Levels enter as log(1 + level / (this many noise deviations))."""
 
@@ -138,18 +142,22 @@ def find_apexes(
     likely = np.flatnonzero(sift_patches(patches) >= SIFT_LEAST)
     at = at[likely]
     context = read_context(at, pieces, noise, optics, has_before=before is not None)
-    answers = judge_patches(patches[likely], read_before(at, before, contact_px), context)
+    patches, earlier = patches[likely], read_before(at, before, contact_px)
+    answers = judge_patches(patches, earlier, context)
+    unmoved = likeness(patches, earlier) > UNMOVED_LEAST
     if share is None:
         sure = _probability(answers[:, 0])
     else:
         sure = _probability(answers[:, 0] + share.shift)
         share.learn(sure, _probability((context @ learnt.SHARE + learnt.SHARE_BIAS)[:, 0]))
     likely = np.flatnonzero(sure >= least_sure)
-    at, sure, answers = at[likely], sure[likely], answers[likely]
+    at, sure, answers, unmoved = at[likely], sure[likely], answers[likely], unmoved[likely]
     ahead, shift = _directions(at, contact_px), np.clip(answers[:, 1:3], -FARTHEST_PX, FARTHEST_PX)
     at = at + shift[:, :1] * ahead + shift[:, 1:] * np.stack([-ahead[:, 1], ahead[:, 0]], axis=1)
     keep = _likeliest(at, sure, pieces)
-    return Apexes(at=at, sure=sure, late=_probability(answers[:, 3]), fresh=_probability(answers[:, 4])).take(keep)
+    fresh = _probability(answers[:, 4])
+    fresh = np.where(unmoved, np.minimum(fresh, UNMOVED_MOST), fresh)
+    return Apexes(at=at, sure=sure, late=_probability(answers[:, 3]), fresh=fresh).take(keep)
 
 
 def _likeliest(at: NDArray[np.float64], sure: NDArray[np.float64], pieces: Segments) -> NDArray[np.bool_]:
@@ -351,6 +359,14 @@ def read_before(at: NDArray[np.float64], before: Ridges | None, contact_px: tupl
     if before is None:
         return np.zeros((len(at), _RINGS_BEFORE.shape[1]), np.float32)
     return read_patches(at, before.blurred, before.threshold_noise, contact_px, _RINGS_BEFORE)
+
+
+def likeness(patches: NDArray[np.float32], before: NDArray[np.float32]) -> NDArray[np.float64]:
+    """Cosine (M,) between what is seen about points now, (M, F), and what was before, (M, G), on the rings of both."""
+    now = patches.reshape(len(patches), len(RING_RADII_PX), RING_DIRECTIONS)[:, list(BEFORE_RINGS)]
+    now = now.reshape(len(patches), len(BEFORE_RINGS) * RING_DIRECTIONS)
+    norm = np.sqrt(np.einsum("ij,ij->i", now, now) * np.einsum("ij,ij->i", before, before))
+    return np.asarray(np.einsum("ij,ij->i", now, before) / np.maximum(norm, 1e-6), dtype=np.float64)
 
 
 def read_context(

@@ -132,13 +132,17 @@ def test_star_is_one_burst_and_its_arms_are_no_streaks() -> None:
     assert len(again.bursts) == 0
 
 
-def test_embers_are_late_and_news_only_once() -> None:
-    """The outer parts of arms round an empty middle: a burst that went off before the exposure; listed once."""
-    sight = Sight(make_optics(fps=1000.0, exposure_ms=0.9))
+@pytest.mark.parametrize(("fps", "exposure_ms"), [(200.0, 2.5), (1000.0, 0.9)])
+@pytest.mark.parametrize("flown", [0.0, 1.0, 3.0])
+def test_embers_are_late_and_news_only_once(fps: float, exposure_ms: float, flown: float) -> None:
+    """The outer parts of arms round an empty middle: a burst that went off before the exposure; listed once, whether
+    they fly on and fade, as arms do, or stay where they are.
+    """
+    sight = Sight(make_optics(fps=fps, exposure_ms=exposure_ms))
     seen = sight.look(draw(embers(130.0, 100.0)))
     assert len(seen.bursts) == 1
     assert seen.burst_flags[0] & BurstFlag.LATE
-    assert len(sight.look(draw(embers(131.0, 100.0, flown=3.0), seed=SEED + 1)).bursts) == 0
+    assert len(sight.look(draw(embers(130.0 + 0.5 * flown, 100.0, flown=flown), seed=SEED + 1)).bursts) == 0
 
 
 def test_memory_of_bursts_ends_and_reset_forgets() -> None:
