@@ -79,8 +79,8 @@ _RINGS_BEFORE = np.ascontiguousarray(_OFFSETS[:, list(BEFORE_RINGS)]).reshape(2,
 """Along the stream and across it, (2, rings x directions) px."""
 
 UNMOVED_LEAST, UNMOVED_MOST = 0.9, 0.6
-"""What looked the same in the picture before, by this cosine, is news by no more than the second probability: arms fly on
-and fade, the net knows, and takes for news what does neither."""
+"""What looked the same in the picture before, by this cosine, is news by no more than the second probability: arms fly
+on and fade, the net knows, and takes for news what does neither."""
 
 LEVEL_NOISE = 3.0
 """Levels enter as log(1 + level / (this many noise deviations))."""
