@@ -18,6 +18,7 @@ from typing import Any
 
 MOSQUITTO = shutil.which("mosquitto") or "/usr/sbin/mosquitto"
 MARK = "tests/reader"
+PATIENCE_S = 5.0
 WAIT_S = 20.0
 """Longest wait for something that takes milliseconds on an idle machine."""
 
@@ -275,9 +276,17 @@ class Reader:
         return self
 
     def stop(self) -> None:
-        """End it; a second call does nothing."""
+        """End it; a second call does nothing.
+
+        mosquitto_sub disconnects in its signal handler, which waits for ever when the signal comes while the library
+        holds the lock that this takes. What it has read is out by then, so it is killed.
+        """
         self._process.terminate()
-        self._process.wait(WAIT_S)
+        try:
+            self._process.wait(PATIENCE_S)
+        except subprocess.TimeoutExpired:
+            self._process.kill()
+            self._process.wait(WAIT_S)
         self._thread.join(WAIT_S)
         if self._process.stdout is not None:
             self._process.stdout.close()
