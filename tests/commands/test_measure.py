@@ -71,18 +71,27 @@ def test_the_contract(line: tuple[Path, list], tmp_path: Path, capsys: pytest.Ca
 def test_options_override_the_station_file(
     line: tuple[Path, list], tmp_path: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:
-    """Half the scale is half the track, but for a line or two: the burst net is told the scale, and what it takes for a
-    burst has arms, which are no track. What is not overridden stays.
+    """Half the scale is half the track, where no burst is: the burst net is told the scale, and what it takes for one
+    has arms, which are no track. What is not overridden stays.
     """
-    clip, _ = line
+    plain = np.random.default_rng(3).normal(9.0, 1.5, (40, 160, 240)).clip(0, 255).astype(np.uint8)
+    for picture in plain:
+        for y in range(30, 140, 16):
+            cv2.line(picture, (60, (80 + y) // 2), (110, y), 90, 1, cv2.LINE_AA)
+    clips = [write_pictures(tmp_path / "plain", plain), line[0]]
     station = tmp_path / "station.toml"
     station.write_text(
         "[optics]\nmm_per_px = 2.0\ncontact_px = [10, 80]\ndirection_deg = 0\nexposure_ms = 2.5\nfps = 200\n"
     )
-    whole = measured(capsys, str(clip), "--station", str(station))
-    half = measured(capsys, str(clip), "--station", str(station), "--mm-per-px", "1")
-    assert half["track_m"] == pytest.approx(whole["track_m"] / 2.0, rel=0.005)
-    assert half["contacts"][0]["begin_s"] == whole["contacts"][0]["begin_s"]
+    whole, half = (
+        [measured(capsys, str(clip), "--station", str(station), *options) for clip in clips]
+        for options in ((), ("--mm-per-px", "1"))
+    )
+    assert whole[0]["bursts"] == half[0]["bursts"] == 0
+    assert whole[0]["track_m"] > 0.0
+    assert half[0]["track_m"] == pytest.approx(whole[0]["track_m"] / 2.0)
+    assert half[1]["track_m"] == pytest.approx(whole[1]["track_m"] / 2.0, rel=0.005)
+    assert half[1]["contacts"][0]["begin_s"] == whole[1]["contacts"][0]["begin_s"]
 
 
 def test_a_dark_clip_is_measured_as_nothing(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
