@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.optimize import linear_sum_assignment
 
 ANGLE_DEG, OFFSET_PX, OVERLAP = 8.0, 4.0, 0.5
 BURST_PX = 12.0
@@ -45,7 +46,7 @@ class Score:
 
 
 def match_streaks(truth: NDArray[np.floating], seen: NDArray[np.floating]) -> list[tuple[int, int]]:
-    """Pairs (truth, seen), each used once, best overlap first."""
+    """Pairs (truth, seen), each used once."""
     if not len(truth) or not len(seen):
         return []
     t, s = np.asarray(truth, float), np.asarray(seen, float)
@@ -62,28 +63,21 @@ def match_streaks(truth: NDArray[np.floating], seen: NDArray[np.floating]) -> li
     gap = 0.5 * (s[None, :, :2] + s[None, :, 2:]) - t[:, None, :2]
     offset = np.abs(gap[..., 0] * tu[:, None, 1] - gap[..., 1] * tu[:, None, 0])
     good = (cosine >= np.cos(np.radians(ANGLE_DEG))) & (offset <= OFFSET_PX) & (overlap > OVERLAP)
-    return _greedy(np.where(good, overlap, 0))
+    return _assign(np.where(good, overlap, 0))
 
 
 def match_bursts(truth: NDArray[np.floating], seen: NDArray[np.floating]) -> list[tuple[int, int]]:
-    """Pairs (truth, seen), each used once, nearest first."""
+    """Pairs (truth, seen), each used once."""
     if not len(truth) or not len(seen):
         return []
     gap = np.hypot(*(np.asarray(truth, float)[:, None] - np.asarray(seen, float)[None]).transpose(2, 0, 1))
-    return _greedy(np.where(gap <= BURST_PX, 1.0 / (1.0 + gap), 0))
+    return _assign(np.where(gap <= BURST_PX, 1.0 / (1.0 + gap), 0))
 
 
-def _greedy(worth: NDArray[np.float64]) -> list[tuple[int, int]]:
-    pairs: list[tuple[int, int]] = []
-    rows, columns = np.nonzero(worth > 0)
-    used_rows, used_columns = set(), set()
-    for k in np.argsort(-worth[rows, columns], kind="stable"):
-        r, c = int(rows[k]), int(columns[k])
-        if r not in used_rows and c not in used_columns:
-            used_rows.add(r)
-            used_columns.add(c)
-            pairs.append((r, c))
-    return pairs
+def _assign(worth: NDArray[np.float64]) -> list[tuple[int, int]]:
+    """Of all one-to-one pairs of positive worth as many as there can be, and of these the worthiest (Kuhn 1955)."""
+    rows, columns = linear_sum_assignment(np.where(worth > 0, 1e3 + worth, 0.0), maximize=True)
+    return [(int(r), int(c)) for r, c in zip(rows, columns, strict=True) if worth[r, c] > 0]
 
 
 def far(points: NDArray[np.floating], contact: tuple[float, float]) -> NDArray[np.bool_]:
