@@ -63,7 +63,7 @@ class Truth:
     """What a picture shows: ``streaks`` (N, 4) px with their height in noise deviations ``snr`` (N,); ``bursts``
     (M, 2) in the picture where three arms first drew long enough; ``late`` (M,): went off before this exposure began;
     ``glowing`` (K, 2), ``drew_s`` and ``glowing_late`` (K,): every burst with an arm drawn here, for how long its third
-    arm was, and whether it went off before;
+    arm was, and whether it went off before; ``light`` (K, 2) px: middle of what its arms drew here;
     ``track_px``: streak length within the picture, faint ones too; ``struck``: bursts that went off in this exposure.
     """
 
@@ -74,6 +74,7 @@ class Truth:
     glowing: NDArray[np.float64]
     drew_s: NDArray[np.float64]
     glowing_late: NDArray[np.bool_]
+    light: NDArray[np.float64]
     track_px: float
     struck: int
 
@@ -260,6 +261,9 @@ class Scene:
         within = (px >= 0).all(axis=1) & (px[:, 0] < o.width_px) & (px[:, 1] < o.height_px)
         shown = np.flatnonzero((third >= LEAST_DRAW_S) & ~listed & within)
         glowing = np.flatnonzero((third > 0) & within)
+        middle, drawn_s = 0.5 * (ends[~spark, 0] + ends[~spark, 1]), (b - a)[~spark]
+        whole_s = np.maximum(np.bincount(f.burst[rows[~spark]], drawn_s, len(px)), 1e-9)
+        light = [np.bincount(f.burst[rows[~spark]], drawn_s * middle[:, k], len(px)) / whole_s for k in (0, 1)]
         listed[shown] = True
         time = self._bursts[:, 0]
         return Truth(
@@ -270,6 +274,7 @@ class Scene:
             glowing=px[glowing],
             drew_s=third[glowing],
             glowing_late=time[glowing] < begin,
+            light=np.stack(light, axis=1)[glowing],
             track_px=track,
             struck=int(((time >= begin) & (time < end) & within).sum()),
         )

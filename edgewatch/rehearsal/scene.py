@@ -211,7 +211,8 @@ class Scene:
         y = arms["y"][alive][owner] + vy[owner] * stop[owner] * (1.0 - fade) + shift[1]
         e_s = np.exp(arms["log_e_s"][alive])[owner] * (1.0 - age / life[owner])
         open_ = self._in_rows(y, birth[owner] + age, t0, t1) if self._row_s else np.ones(len(x), bool)
-        light.append((x[open_], y[open_], (e_s * dwell[owner])[open_]))
+        shone = e_s * dwell[owner] * open_
+        light.append((x[open_], y[open_], shone[open_]))
         snr = self._height(e_s / np.maximum(np.hypot(vx, vy)[owner] * fade, 1.0))
         drawn = open_ & (snr >= VISIBLE_SNR)
         drew = np.add.reduceat(np.where(drawn, dwell[owner], 0.0), starts)
@@ -221,8 +222,9 @@ class Scene:
         rows, third_drew = _third(row, drew)
         _, third_height = _third(row, height)
         bx, by = known["x"][rows] + shift[0], known["y"][rows] + shift[1]
-        longest = np.zeros(len(rows))
-        np.maximum.at(longest, np.searchsorted(rows, row), drew)
+        longest, of = np.zeros(len(rows)), np.searchsorted(rows, row)
+        np.maximum.at(longest, of, drew)
+        middle = np.stack([_middle(of[owner], shone, along, len(rows)) for along in (x, y)], axis=1)
         inside = (bx > -0.5) & (bx < optics.width_px - 0.5) & (by > -0.5) & (by < optics.height_px - 0.5)
         listed = inside & (longest > 0.0)
         rows, third_drew, third_height = rows[listed], third_drew[listed], third_height[listed]
@@ -231,6 +233,7 @@ class Scene:
         row_delay = by[listed] * self._row_s
         return {
             "bursts": np.stack([bx[listed], by[listed]], axis=1).astype(np.float32),
+            "burst_light": middle[listed].astype(np.float32),
             "arms": known["arms"][rows].astype(np.int16),
             "drew_ms": (1e3 * third_drew).astype(np.float32),
             "burst_snr": third_height.astype(np.float32),
@@ -284,6 +287,12 @@ def _third(group: Array, values: Array) -> tuple[Array, Array]:
     groups, where = np.unique(group[order], return_index=True)
     third = np.minimum(where + 2, len(order) - 1)
     return groups, np.where(group[order][third] == groups, values[order][third], 0.0)
+
+
+def _middle(group: NDArray[np.int64], weight: Array, values: Array, count: int) -> Array:
+    """Weighted mean of the values of each of ``count`` groups."""
+    whole = np.maximum(np.bincount(group, weight, count), np.finfo(np.float64).tiny)
+    return np.bincount(group, weight * values, count) / whole
 
 
 class Stream(Scene):

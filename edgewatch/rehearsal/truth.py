@@ -23,10 +23,11 @@ class Truth:
     ``track_m``: way of all particles above 1000 K inside the picture; ``track_exposed_m``: the part on which the burst
     hazard acts; ``track_seen_m``: the part five noise deviations above the ground.
 
-    ``bursts``: float32 (M, 2), every burst inside the picture some of whose arms were drawn in this exposure; ``arms``:
-    int16, thrown; ``drew_ms``: float32, time for which at least three of its arms were drawn (above one noise
-    deviation) in this exposure; ``burst_snr``: float32, greatest height reached by at least three arms; ``late``: went
-    off before this exposure began; ``first``: first exposure that shows it; ``burst_id``: int64, one for each physical
+    ``bursts``: float32 (M, 2), every burst inside the picture some of whose arms were drawn in this exposure;
+    ``burst_light``: float32 (M, 2) px, middle of the light that its arms gave in this exposure; ``arms``: int16,
+    thrown; ``drew_ms``: float32, time for which at least three of its arms were drawn (above one noise deviation)
+    in this exposure; ``burst_snr``: float32, greatest height reached by at least three arms; ``late``: went off
+    before this exposure began; ``first``: first exposure that shows it; ``burst_id``: int64, one for each physical
     burst; ``burst_t_s``: time it went off; ``fork``; ``burst_flight``: the particle that burst.
     """
 
@@ -39,6 +40,7 @@ class Truth:
     track_exposed_m: float
     track_seen_m: float
     bursts: NDArray[np.float32]
+    burst_light: NDArray[np.float32]
     arms: NDArray[np.int16]
     drew_ms: NDArray[np.float32]
     burst_snr: NDArray[np.float32]
@@ -67,6 +69,7 @@ def no_bursts() -> dict[str, Any]:
     """Fields of ``Truth`` for a picture without bursts."""
     return {
         "bursts": np.zeros((0, 2), np.float32),
+        "burst_light": np.zeros((0, 2), np.float32),
         "arms": np.zeros(0, np.int16),
         "drew_ms": np.zeros(0, np.float32),
         "burst_snr": np.zeros(0, np.float32),

@@ -203,6 +203,24 @@ def test_arms_are_bright_round_a_burst() -> None:
     assert np.percentile(near, 10) > 60
 
 
+def test_the_light_of_a_burst_flies_on_from_where_it_burst() -> None:
+    """Its middle lies down the stream, farther for a late burst, and the picture is bright there."""
+    source = stream("C45", seed=11, sparks_per_s=1000.0)
+    flown: dict[bool, list[float]] = {False: [], True: []}
+    bright = []
+    for _ in range(150):
+        picture, truth = source.frame()
+        for row in np.flatnonzero(truth.drew_ms > 0.35):
+            gap = truth.burst_light[row] - truth.bursts[row]
+            flown[bool(truth.late[row])].append(float(gap @ OPTICS.axis))
+            x, y = (round(float(v)) for v in truth.burst_light[row])
+            if not truth.late[row] and 10 < y < OPTICS.height_px - 10 and 10 < x < OPTICS.width_px - 10:
+                bright.append(int(picture[y - 6 : y + 7, x - 6 : x + 7].max()))
+    assert min(len(flown[False]), len(flown[True])) > 15
+    assert 0.0 < np.median(flown[False]) < np.median(flown[True]) < 40.0
+    assert np.percentile(bright, 10) > 40
+
+
 @pytest.mark.parametrize("direction", [90.0, 180.0, -135.0])
 def test_the_stream_turns_with_its_axis(direction: float) -> None:
     """In any direction the streaks run along the axis, contact end first."""
