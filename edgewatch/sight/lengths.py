@@ -113,7 +113,8 @@ class Lengths:
 
     def record(self) -> records.Lengths:
         """The same for the compiled steps."""
-        return self.memory.lengths
+        known: records.Lengths = self.memory.lengths
+        return known
 
     def _known(self) -> NDArray[np.float64]:
         """Distances and typical logarithms of length there, (2, P)."""
@@ -145,7 +146,7 @@ class Lengths:
             return
         memory.fresh = 0
         parts = min(max(count // PART_LEAST, 1), PARTS)
-        places, typical, off = _find_typical(*kept_now, parts)
+        places, typical, off = _find_typical(kept_now[0], kept_now[1], parts)
         self._table[:, :parts] = places, typical
         memory.lengths.number = parts
         memory.lengths.spread = min(max(MIDDLE_SPREAD * off, SPREAD_LEAST), SPREAD_MOST)

@@ -11,8 +11,8 @@ typedef struct {
     int32_t listed;
 } Line;
 
-/* What the lines of a picture have in common. `wholes` streaks seen whole: begin, end, height, five values each; level and
- * sums: room for the points of a line and for the units of the net. */
+/* What the lines of a picture have in common. `wholes` streaks seen whole, their begins, ends and heights in five columns, and
+ * room for those that touch a line; level and sums: room for the points of a line and for the units of the net. */
 typedef struct {
     const Picture *picture;
     const Lengths *lengths;
@@ -20,7 +20,9 @@ typedef struct {
     const LoneNet *net;
     double noise;
     int radial, wholes;
-    float *whole, *level, *sums;
+    const float *whole[5];
+    int32_t *is, *touch;
+    float *level, *sums;
 } Search;
 
 /* Sine of the angle by which a unit vector is turned from the ray that joins its point with the contact point. */
@@ -85,6 +87,33 @@ static void set_ends(Line *line, const double *at, const double *inward, int beg
     memcpy(begins ? line->end : line->begin, far, sizeof far);
 }
 
+/* Which of the lines seen whole have anything in common with a line of length `own` from (ax, ay) along (ux, uy). Returns
+ * their number. */
+WIDE static int touching(const Search *search, float ax, float ay, float ux, float uy, float own, int begins)
+{
+    const LoneRules *rules = search->rules;
+    int n = search->wholes, number = 0;
+    const float *restrict begin_x = search->whole[0], *restrict begin_y = search->whole[1];
+    const float *restrict end_x = search->whole[2], *restrict end_y = search->whole[3];
+    int32_t *restrict is = search->is, *restrict touch = search->touch;
+    float far = rules->end_far_px, beside_end = rules->end_side_px, beside = 2.0f * rules->same_side_px;
+    float end = begins ? 0.0f : own, first = begins ? 1.0f : 0.0f, second = 1.0f - first;
+    for (int j = 0; j < n; j++) {
+        float bx = begin_x[j] - ax, by = begin_y[j] - ay, ex = end_x[j] - ax, ey = end_y[j] - ay;
+        float side_b = bx * uy - by * ux, side_e = ex * uy - ey * ux;
+        float along_b = bx * ux + by * uy, along_e = ex * ux + ey * uy;
+        float along = first * along_b + second * along_e, side = first * side_b + second * side_e;
+        int near = (fabsf(along - end) < far) & (fabsf(side) <= beside_end);
+        int low = (along_b < own) | (along_e < own), high = (along_b > 0.0f) | (along_e > 0.0f);
+        is[j] = near | (low & high & (fabsf(side_b + side_e) <= beside));
+    }
+    for (int j = 0; j < n; j++) {
+        touch[number] = j;
+        number += is[j];
+    }
+    return number;
+}
+
 /* What a line has in common with lines seen whole: see _compare. */
 static void compare(const Search *search, const Line *line, int begins, float *mark)
 {
@@ -95,16 +124,17 @@ static void compare(const Search *search, const Line *line, int begins, float *m
     own = own > 1e-6f ? own : 1e-6f;
     ux /= own;
     uy /= own;
-    for (int j = 0; j < search->wholes; j++) {
-        const float *other = search->whole + 5 * (size_t)j;
-        float bx = other[0] - ax, by = other[1] - ay, ex = other[2] - ax, ey = other[3] - ay;
+    int number = touching(search, ax, ay, ux, uy, own, begins);
+    for (int i = 0; i < number; i++) {
+        int j = search->touch[i];
+        float bx = search->whole[0][j] - ax, by = search->whole[1][j] - ay;
+        float ex = search->whole[2][j] - ax, ey = search->whole[3][j] - ay;
         float side_b = bx * uy - by * ux, side_e = ex * uy - ey * ux;
         float along_b = bx * ux + by * uy, along_e = ex * ux + ey * uy;
         float low = along_b < along_e ? along_b : along_e, high = along_b < along_e ? along_e : along_b;
         float gap = begins ? fabsf(along_b) : fabsf(along_e - own);
-        if ((begins ? fabsf(side_b) : fabsf(side_e)) > rules->end_side_px)
-            gap = rules->end_far_px;
-        nearest = gap < nearest ? gap : nearest;
+        if ((begins ? fabsf(side_b) : fabsf(side_e)) <= rules->end_side_px)
+            nearest = gap < nearest ? gap : nearest;
         float common = (high < own ? high : own) - (low > 0.0f ? low : 0.0f);
         if (!(common > 0.0f) || fabsf(side_b + side_e) > 2.0f * rules->same_side_px ||
             fabsf(side_e - side_b) > rules->skew_most * (high - low))
@@ -112,7 +142,7 @@ static void compare(const Search *search, const Line *line, int begins, float *m
         float share = common / ((high > own ? high : own) - (low < 0.0f ? low : 0.0f));
         greatest = share > greatest ? share : greatest;
         crowd += share;
-        cover += common * other[4];
+        cover += common * search->whole[4][j];
     }
     mark[0] = greatest;
     mark[1] = crowd;
@@ -256,25 +286,27 @@ EXPORT int edgewatch_lone(int n, const Step *steps, int pairs, const int32_t *pa
 {
     size_t points = (size_t)(rules->far_to * lengths->longest_px) + 8 + 2 * (size_t)rules->far_box, room = (size_t)n + 1;
     Line *lines = malloc((sizeof(Line) + 3 * sizeof(Key) + 1) * room);
-    float *whole = malloc(sizeof(float) * (5 * (size_t)pairs + points + (size_t)net->units));
+    float *whole = malloc(sizeof(float) * (5 * (size_t)pairs + points + (size_t)net->units) + 2 * sizeof(int32_t) * room);
     int streaks = 0, arms = 0, number = 0;
     if (!lines || !whole) {
         number = -1;
         goto done;
     }
-    float *level = whole + 5 * (size_t)pairs;
-    const Search search = {picture, lengths, rules, net, noise, radial, pairs, whole, level, level + points};
+    float *begin_x = whole, *begin_y = begin_x + pairs, *end_x = begin_y + pairs, *end_y = end_x + pairs;
+    float *height = end_y + pairs, *level = height + pairs, *sums = level + points;
+    int32_t *is = (int32_t *)(sums + net->units), *touch = is + room;
+    const Search search = {picture, lengths, rules, net, noise, radial, pairs, {begin_x, begin_y, end_x, end_y, height},
+                           is, touch, level, sums};
     Key *odds = (Key *)(lines + room), *runs = odds + room, *spare = runs + room; /* negative, so the greatest come first */
     uint8_t *used = (uint8_t *)(spare + room);
     memset(used, 0, room);
     for (int j = 0; j < pairs; j++) {
         const Step *p = steps + pair[2 * j], *q = steps + pair[2 * j + 1];
-        float *own = whole + 5 * (size_t)j;
-        for (int i = 0; i < 2; i++) {
-            own[i] = (float)p->at[i];
-            own[2 + i] = (float)q->at[i];
-        }
-        own[4] = (float)(p->height < q->height ? p->height : q->height);
+        begin_x[j] = (float)p->at[0];
+        begin_y[j] = (float)p->at[1];
+        end_x[j] = (float)q->at[0];
+        end_y[j] = (float)q->at[1];
+        height[j] = (float)(p->height < q->height ? p->height : q->height);
         used[pair[2 * j]] = used[pair[2 * j + 1]] = 1;
     }
     for (int k = 0; k < n; k++) {

@@ -4,6 +4,8 @@
 /* So near (px) to the picture's last row or column single precision may round a point onto it. */
 static const double HAIR = 0.01;
 
+enum { BLOCK = 64 };
+
 WIDE void read_line(const Picture *picture, const double *from, const double *along, double first, double apart, int n,
                     float *level)
 {
@@ -17,27 +19,64 @@ WIDE void read_line(const Picture *picture, const double *from, const double *al
         }
         return;
     }
-    const float *blurred = picture->blurred;
+    /* All between four pixels: as read_level, without its cases, and in loops that become vector code but for the pixels. */
     int width = picture->width;
-    for (int k = 0; k < n; k++) { /* all between four pixels: as read_level, without its cases */
-        double place = first + k * apart;
-        float px = (float)(x + place * ux), py = (float)(y + place * uy);
-        int column = (int)px, row = (int)py, at = row * width + column;
-        float aside = px - (float)column, down = py - (float)row;
-        float upper = blurred[at] + aside * (blurred[at + 1] - blurred[at]);
-        float lower = blurred[at + width] + aside * (blurred[at + width + 1] - blurred[at + width]);
-        level[k] = upper + down * (lower - upper);
+    for (int from_k = 0; from_k < n; from_k += BLOCK) {
+        int size = n - from_k < BLOCK ? n - from_k : BLOCK;
+        int32_t at[BLOCK];
+        float aside[BLOCK], down[BLOCK], pixels[4][BLOCK];
+        for (int k = 0; k < size; k++) {
+            double place = first + (from_k + k) * apart;
+            float px = (float)(x + place * ux), py = (float)(y + place * uy);
+            int column = (int)px, row = (int)py;
+            at[k] = row * width + column;
+            aside[k] = px - (float)column;
+            down[k] = py - (float)row;
+        }
+        for (int k = 0; k < size; k++) {
+            const float *pixel = picture->blurred + at[k];
+            pixels[0][k] = pixel[0];
+            pixels[1][k] = pixel[1];
+            pixels[2][k] = pixel[width];
+            pixels[3][k] = pixel[width + 1];
+        }
+        for (int k = 0; k < size; k++) {
+            float upper = pixels[0][k] + aside[k] * (pixels[1][k] - pixels[0][k]);
+            float lower = pixels[2][k] + aside[k] * (pixels[3][k] - pixels[2][k]);
+            level[from_k + k] = upper + down[k] * (lower - upper);
+        }
     }
 }
 
-/* The step at sample k of a piece, whose rise and neighbours are given, or 0 when it is none. */
-static int step_at(const double *rise, double ahead, double behind, double noise_dn, const StepRules *rules, double *height,
-                   double *shift, double *share)
+/* The rise of brightness at samples from `box` on, and which from `first` to `last` rise above noise and are no less than the
+ * ones before and behind. Returns their number. total: sums before each sample. */
+WIDE static int find_peaks(const double *restrict total, int size, int box, int first, int last, double noise_dn,
+                           double *restrict rise, int32_t *restrict is, int32_t *restrict peak)
+{
+    double part = 1.0 / box;
+    for (int k = box; k < size - box; k++)
+        rise[k] = (total[k + box + 1] - total[k + 1] - total[k] + total[k - box]) * part;
+    for (int k = first; k <= last; k++) {
+        double here = rise[k], before = rise[k - 1], after = rise[k + 1];
+        is[k] = ((here > noise_dn) & (here >= before) & (here >= after)) |
+                ((-here > noise_dn) & (here <= before) & (here <= after));
+    }
+    int number = 0;
+    for (int k = first; k <= last; k++) {
+        peak[number] = k;
+        number += is[k];
+    }
+    return number;
+}
+
+/* The step at a peak of the rise, whose neighbours are given, or 0 when it is none. */
+static int step_at(const double *rise, double ahead, double behind, const StepRules *rules, double *height, double *shift,
+                   double *share)
 {
     double high = ahead > behind ? ahead : behind, sign = *rise > 0.0 ? 1.0 : -1.0, here = fabs(*rise);
-    if (!(here > rules->share * high && here > noise_dn))
+    if (!(here > rules->share * high))
         return 0;
-    for (int aside = 1; aside <= 3; aside++)
+    for (int aside = 2; aside <= 3; aside++)
         if (!(here >= rise[aside] * sign && here >= rise[-aside] * sign))
             return 0;
     double before = fabs(rise[-1]), after = fabs(rise[1]), curve = before - 2.0 * here + after;
@@ -59,11 +98,12 @@ EXPORT int edgewatch_steps(const Pieces *pieces, double ax, double ay, const Pic
     for (int i = 0; i < pieces->number; i++)
         longest = pieces->length[i] > longest ? pieces->length[i] : longest;
     size_t room = (size_t)whole_above(longest) + 2 + 2 * (size_t)margin;
-    double *total = malloc((2 * sizeof(double) + sizeof(float)) * room + sizeof(double));
+    double *total = malloc((2 * sizeof(double) + sizeof(float) + 2 * sizeof(int32_t)) * room + sizeof(double));
     if (!total)
         return -1;
     double *rise = total + room + 1;
     float *level = (float *)(rise + room);
+    int32_t *is = (int32_t *)(level + room), *peak = is + room;
     for (int i = 0; i < pieces->number; i++) {
         if (pieces->points[i] < rules->least_points)
             continue;
@@ -75,15 +115,13 @@ EXPORT int edgewatch_steps(const Pieces *pieces, double ax, double ay, const Pic
         total[0] = 0.0;
         for (int k = 0; k < size; k++)
             total[k + 1] = total[k] + level[k];
-        for (int k = box; k < size - box; k++)
-            rise[k] = (total[k + box + 1] - total[k + 1] - total[k] + total[k - box]) * part;
         int last = margin + (int)(pieces->length[i] + rules->beyond_px);
-        for (int k = margin - rules->beyond_px; k <= last; k++) {
-            if (!(fabs(rise[k]) > noise_dn))
-                continue;
+        int peaks = find_peaks(total, size, box, margin - rules->beyond_px, last, noise_dn, rise, is, peak);
+        for (int j = 0; j < peaks; j++) {
+            int k = peak[j];
             double ahead = (total[k + box + 1] - total[k + 1]) * part, behind = (total[k] - total[k - box]) * part;
             double height, shift, share;
-            if (!step_at(rise + k, ahead, behind, noise_dn, rules, &height, &shift, &share))
+            if (!step_at(rise + k, ahead, behind, rules, &height, &shift, &share))
                 continue;
             if (found < most) {
                 double place = (double)(k - margin) + shift, sign = rise[k] > 0.0 ? 1.0 : -1.0;

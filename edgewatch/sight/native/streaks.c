@@ -19,9 +19,11 @@ typedef struct {
     int32_t level_samples;
 } StreakRules;
 
-/* Whether the line from a to b is brighter than `level` all the way, but for a few points. */
-static int stays_lit(const Picture *picture, const double *a, const double *b, double level, const PairRules *rules)
+/* Whether the line between two steps is bright for the lower one all the way, but for a few points. */
+static int stays_lit(const Picture *picture, const Step *begin, const Step *stop, const PairRules *rules)
 {
+    const double *a = begin->at, *b = stop->at;
+    double level = rules->path_share * (begin->height < stop->height ? begin->height : stop->height);
     double gx = b[0] - a[0], gy = b[1] - a[1], length = sqrt(gx * gx + gy * gy);
     double wanted = (length - 4.0) / (length > rules->long_px ? 2.0 : 1.0);
     int size = wanted > 1.0 ? whole_above(wanted) : 1, dark = 0;
@@ -112,7 +114,7 @@ static int add(Candidates *found, int begin, int end, double cost)
     }
     found->pair[found->number][0] = begin;
     found->pair[found->number][1] = end;
-    found->cost[found->number] = (Key){cost + 1e-9 * found->number, found->number};
+    found->cost[found->number] = (Key){cost, found->number};
     found->number++;
     return 1;
 }
@@ -151,18 +153,16 @@ EXPORT int edgewatch_pairs(int n, const Step *steps, const Picture *picture, con
             double cost = cost_of(steps, &begin, other, lengths, rules);
             if (cost == INFINITY)
                 continue;
-            const Step *p = steps + b, *q = steps + other->step;
-            double least = rules->path_share * (p->height < q->height ? p->height : q->height);
-            if (stays_lit(picture, p->at, q->at, least, rules) && !add(&found, b, other->step, cost)) {
+            if (!add(&found, b, other->step, cost)) {
                 taken = -1;
                 goto done;
             }
         }
     }
     sort_keys(found.cost, found.number, found.cost + found.room);
-    for (int k = 0; k < found.number; k++) {
+    for (int k = 0; k < found.number; k++) { /* whether a pair is lit is asked last: it costs most */
         int32_t *pair = found.pair[found.cost[k].index];
-        if (used[pair[0]] || used[pair[1]])
+        if (used[pair[0]] || used[pair[1]] || !stays_lit(picture, steps + pair[0], steps + pair[1], rules))
             pair[0] = -1;
         else
             used[pair[0]] = used[pair[1]] = 1;
