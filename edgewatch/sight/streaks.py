@@ -130,10 +130,10 @@ def _find_compiled(
     lengths: Lengths,
     axis: tuple[float, float],
 ) -> Lines:
-    columns = [native.place(one) for one in (pieces.begin, pieces.end, pieces.axis, pieces.length, pieces.points)]
+    columns = [records.start(one) for one in (pieces.begin, pieces.end, pieces.axis, pieces.length, pieces.points)]
     room = 4 * pieces.length.size + 16
     while True:
-        ends, level, whole = np.empty((2, room, 2)), np.empty(room), np.empty(room, np.bool_)
+        (begin, end), level, whole = np.empty((2, room, 2)), np.empty(room), np.empty(room, np.bool_)
         found = native.LIBRARY.edgewatch_streaks(
             pieces.length.size,
             *columns,
@@ -144,13 +144,10 @@ def _find_compiled(
             native.reference(lengths.memory),
             _RULES,
             room,
-            native.place(ends),
-            native.place(ends, 2 * room),
-            native.place(level),
-            native.place(whole),
+            *map(records.start, (begin, end, level, whole)),
         )
         if native.enough(found, room):
-            return Lines(begin=ends[0, :found], end=ends[1, :found], level=level[:found], whole=whole[:found])
+            return Lines(begin=begin[:found], end=end[:found], level=level[:found], whole=whole[:found])
         room = found
 
 

@@ -19,22 +19,25 @@ typedef struct {
     int32_t level_samples;
 } StreakRules;
 
+enum { AT_ONCE = 32 };
+
 /* Whether the line between two steps is bright for the lower one all the way, but for a few points. */
 static int stays_lit(const Picture *picture, const Step *begin, const Step *stop, const PairRules *rules)
 {
     const double *a = begin->at, *b = stop->at;
     double level = rules->path_share * (begin->height < stop->height ? begin->height : stop->height);
-    double gx = b[0] - a[0], gy = b[1] - a[1], length = sqrt(gx * gx + gy * gy);
+    double way[2] = {b[0] - a[0], b[1] - a[1]}, length = sqrt(way[0] * way[0] + way[1] * way[1]);
+    float levels[AT_ONCE];
     double wanted = (length - 4.0) / (length > rules->long_px ? 2.0 : 1.0);
     int size = wanted > 1.0 ? whole_above(wanted) : 1, dark = 0;
     double inner = 2.0 / length < 0.4 ? 2.0 / length : 0.4, apart = (1.0 - 2.0 * inner) / size;
-    for (int k = 0; k < size; k++) {
-        double place = inner + ((double)k + 0.5) * apart;
-        dark += read(picture, a[0] + place * gx, a[1] + place * gy) < level;
-        if (dark > rules->dark_most)
-            return 0;
+    for (int k = 0; k < size && dark <= rules->dark_most; k += AT_ONCE) {
+        int number = size - k < AT_ONCE ? size - k : AT_ONCE;
+        read_line(picture, a, way, inner + ((double)k + 0.5) * apart, apart, number, levels);
+        for (int i = 0; i < number; i++)
+            dark += levels[i] < level;
     }
-    return 1;
+    return dark <= rules->dark_most;
 }
 
 /* A step as the search for pairs reads it: place, unit vector along the stream, tangent of the line's error. */
