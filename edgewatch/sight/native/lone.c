@@ -4,15 +4,15 @@
 
 enum { MARKS = 15 };
 
-/* A line from a step: where it ends, how long lines typically are there, and what was read along it; its unit vector and length
- * once it is listed. */
+/* A line from a step: where it ends, how long lines typically are there, and what was read along it; of one that may be
+ * listed, its unit vector and length. */
 typedef struct {
     double begin[2], end[2], run, size, least, mean, far, unit[2], length;
     int32_t listed;
 } Line;
 
-/* What the lines of a picture have in common. `wholes` streaks seen whole, their begins, ends and heights in five columns, and
- * room for those that touch a line; level and sums: room for the points of a line and for the units of the net. */
+/* What the lines of a picture have in common. `wholes` streaks seen whole, their begins, ends and heights in five columns,
+ * and room for those that touch a line; level and sums: room for the points of a line and for the units of the net. */
 typedef struct {
     const Picture *picture;
     const Lengths *lengths;
@@ -60,7 +60,7 @@ static void read_along(const Search *search, const Step *step, const double *inw
     while ((from + 1) * apart <= rules->inner_px)
         from++;
     line->run = size;
-    for (to = from; to < number && (to + 1) * apart / size <= 1.0; to++) {
+    for (to = from; to < number && (to + 1) * apart <= size; to++) {
         if (level[to] < dark && line->run == size)
             line->run = (to + 1) * apart;
         least = level[to] < least ? level[to] : least;
@@ -68,11 +68,10 @@ static void read_along(const Search *search, const Step *step, const double *inw
     }
     line->least = least;
     line->mean = to > from ? sum / (to - from) : 0.0;
-    int first = (int)(rules->far_from * size / apart) - 1;
-    for (int k = first > box ? first : box; k < number - box; k++) {
-        double part = (k + 1) * apart / size, fall = 0.0;
-        if (!(part > rules->far_from && part < rules->far_to))
-            continue;
+    int first = (int)(rules->far_from * size / apart); /* point beyond that share, and the last before the other */
+    int last = whole_above(rules->far_to * size / apart) - 2;
+    for (int k = first > box ? first : box; k <= last; k++) {
+        double fall = 0.0;
         for (int i = 0; i < box; i++)
             fall += (double)level[k - 1 - i] - level[k + i];
         far = fall > far ? fall : far;

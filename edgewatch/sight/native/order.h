@@ -26,13 +26,15 @@ static inline void sort_keys(Key *keys, int n, Key *room)
     for (int size = RUN; size < n; size *= 2) {
         for (int from = 0; from < n; from += 2 * size) {
             int middle = from + size < n ? from + size : n, to = from + 2 * size < n ? from + 2 * size : n;
-            int i = from, j = middle;
-            for (int k = from; k < to; k++) {
-                int second = i >= middle || (j < to && now[j].key < now[i].key);
-                next[k] = now[second ? j : i];
+            int i = from, j = middle, k = from;
+            while (i < middle && j < to) {
+                int second = now[j].key < now[i].key;
+                next[k++] = now[second ? j : i];
                 i += !second;
                 j += second;
             }
+            memcpy(next + k, now + i, sizeof(Key) * (size_t)(middle - i));
+            memcpy(next + k + middle - i, now + j, sizeof(Key) * (size_t)(to - j));
         }
         Key *done = now;
         now = next;

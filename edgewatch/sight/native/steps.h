@@ -41,7 +41,8 @@ static inline int whole_above(double value)
 
 /* Values at n points `apart` px from each other, the first at `first` px from a point along a unit vector; or all in
  * lengths of a longer vector. */
-void read_line(const Picture *picture, const double *from, const double *along, double first, double apart, int n, float *level);
+void read_line(const Picture *picture, const double *from, const double *along, double first, double apart, int n,
+               float *level);
 
 int edgewatch_steps(const Pieces *pieces, double ax, double ay, const Picture *picture, double noise, const StepRules *rules,
                     Step *steps, int most);

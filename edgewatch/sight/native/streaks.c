@@ -231,7 +231,8 @@ EXPORT int edgewatch_streaks(int pieces, const double *from, const double *to, c
     if (!steps)
         return -1;
     int32_t *pair = (int32_t *)(steps + most);
-    int first = !lengths->number, lone = 0, pairs, n = edgewatch_steps(&all, ax, ay, &picture, noise, &rules->steps, steps, most);
+    int first = !lengths->number, lone = 0, pairs;
+    int n = edgewatch_steps(&all, ax, ay, &picture, noise, &rules->steps, steps, most);
     if (n < 0 || n > most) {
         free(steps);
         return n;
