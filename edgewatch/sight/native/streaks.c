@@ -117,7 +117,7 @@ static int add(Candidates *found, int begin, int end, double cost)
     }
     found->pair[found->number][0] = begin;
     found->pair[found->number][1] = end;
-    found->cost[found->number] = (Key){cost, found->number};
+    found->cost[found->number] = (Key){cost + 1e-9 * found->number, found->number}; /* rounding decides no ties */
     found->number++;
     return 1;
 }
