@@ -26,6 +26,9 @@ PARTS = 8
 PART_LEAST = 12
 """The distance is cut into at most PARTS parts of at least PART_LEAST streaks."""
 
+MIDDLE_SPREAD = 1.4826
+"""Standard deviation of normal values per middle of their absolute values."""
+
 SPREAD_LEAST, SPREAD_MOST = 0.1, 0.6
 """Limits of the deviation of the logarithm of length."""
 
@@ -41,58 +44,81 @@ LONGEST_PX = 400.0
 """No streak is longer than this many typical lengths; before any is known, than so many px."""
 
 
+RULES = records.LengthRules(
+    radial_cos=RADIAL_COS,
+    share_keep=SHARE_KEEP,
+    from_contact_share=FROM_CONTACT_SHARE,
+    middle_spread=MIDDLE_SPREAD,
+    spread_least=SPREAD_LEAST,
+    spread_most=SPREAD_MOST,
+    longest_factor=LONGEST_FACTOR,
+    most_kept=KEPT,
+    least_kept=LEAST_KEPT,
+    new_part=NEW_PART,
+    most_parts=PARTS,
+    part_least=PART_LEAST,
+)
+"""All of this for the compiled form."""
+
+
 class Lengths:
-    """Lengths seen lately, as a function of the distance from the contact point."""
+    """Lengths seen lately, as a function of the distance from the contact point. The compiled form learns in the same
+    memory.
+    """
 
     def __init__(self, contact_px: tuple[float, float]) -> None:
         """``contact_px``: the contact point (px)."""
         self._contact = np.asarray(contact_px, dtype=np.float64)
-        self._away = np.zeros(0)
-        self._log = np.zeros(0)
-        self._places = np.zeros(0)
-        self._typical = np.zeros(0)
-        self._new = 0
-        self._all_px = 0.0
-        self._straight_px = 0.0
-        self.spread = SPREAD_MOST
-        self._record: records.Lengths | None = None
+        self._kept, self._table = np.zeros((2, KEPT)), np.zeros((2, PARTS))
+        known = records.Lengths(
+            places=native.place(self._table),
+            typical=native.place(self._table, PARTS),
+            contact_x=contact_px[0],
+            contact_y=contact_px[1],
+            longest_px=LONGEST_PX,
+            spread=SPREAD_MOST,
+        )
+        self.memory = records.LengthMemory(
+            lengths=known, away=native.place(self._kept), log=native.place(self._kept, KEPT)
+        )
 
     @property
     def known(self) -> bool:
         """Whether enough streaks have been seen."""
-        return bool(self._places.size)
+        return bool(self.memory.lengths.number)
 
     @property
     def from_contact(self) -> bool:
         """Whether streaks come from the contact point as given: most of their length lies that way."""
-        return self.known and self._straight_px > FROM_CONTACT_SHARE * self._all_px
+        return self.known and self.memory.straight_px > FROM_CONTACT_SHARE * self.memory.all_px
 
     @property
     def longest_px(self) -> float:
         """No streak is longer than this (px)."""
-        return LONGEST_FACTOR * float(np.exp(self._typical.max())) if self.known else LONGEST_PX
+        return float(self.memory.lengths.longest_px)
+
+    @property
+    def spread(self) -> float:
+        """Standard deviation of the logarithm of length."""
+        return float(self.memory.lengths.spread)
 
     def typical_px(self, at: NDArray[np.float64]) -> NDArray[np.float64]:
         """Typical length (px) of streaks whose middle is at points (N, 2) px."""
-        return np.asarray(np.exp(np.interp(self.away_px(at), self._places, self._typical)))
+        return np.asarray(np.exp(np.interp(self.away_px(at), *self._known())))
 
     def deviation(self, at: NDArray[np.float64], length_px: NDArray[np.floating]) -> NDArray[np.float64]:
         """How unusual lengths are at points (N, 2), in standard deviations of the logarithm."""
-        expected = np.interp(self.away_px(at), self._places, self._typical)
+        expected = np.interp(self.away_px(at), *self._known())
         return np.asarray((np.log(length_px) - expected) / self.spread)
 
     def record(self) -> records.Lengths:
-        """The same for the compiled steps, good until the next streaks are learnt from."""
-        if self._record is None:
-            self._record = records.Lengths(
-                native.place(self._places),
-                native.place(self._typical),
-                *self._contact.tolist(),
-                self.longest_px,
-                self.spread,
-                self._places.size,
-            )
-        return self._record
+        """The same for the compiled steps."""
+        known: records.Lengths = self.memory.lengths
+        return known
+
+    def _known(self) -> NDArray[np.float64]:
+        """Distances and typical logarithms of length there, (2, P)."""
+        return self._table[:, : self.memory.lengths.number]
 
     def turn(self, at: NDArray[np.float64], unit: NDArray[np.float64]) -> NDArray[np.float64]:
         """Sine of the angle by which each unit vector (N, 2) at a point (N, 2) px is turned, x towards y, from the line
@@ -109,19 +135,22 @@ class Lengths:
         along = np.abs((gap * (centre - self._contact)).sum(axis=1))
         straight = along > RADIAL_COS * length * away
         total, kept = float(length.sum()), float(length[straight].sum())
-        self._all_px = SHARE_KEEP * self._all_px + total
-        self._straight_px = SHARE_KEEP * self._straight_px + kept
-        self._away = np.concatenate([self._away, away[straight]])[-KEPT:]
-        self._log = np.concatenate([self._log, np.log(length[straight])])[-KEPT:]
-        self._new += int(straight.sum())
-        count = self._away.size
-        if count < LEAST_KEPT or (self.known and self._new < count // NEW_PART):
+        memory, fresh = self.memory, np.stack([away[straight], np.log(length[straight])])
+        memory.all_px = SHARE_KEEP * memory.all_px + total
+        memory.straight_px = SHARE_KEEP * memory.straight_px + kept
+        kept_now = np.concatenate([self._kept[:, : memory.kept], fresh], axis=1)[:, -KEPT:]
+        count = memory.kept = kept_now.shape[1]
+        self._kept[:, :count] = kept_now
+        memory.fresh += fresh.shape[1]
+        if count < LEAST_KEPT or (self.known and memory.fresh < count // NEW_PART):
             return
-        self._new = 0
+        memory.fresh = 0
         parts = min(max(count // PART_LEAST, 1), PARTS)
-        self._places, self._typical, off = _find_typical(self._away, self._log, parts)
-        self.spread = min(max(1.4826 * off, SPREAD_LEAST), SPREAD_MOST)
-        self._record = None
+        places, typical, off = _find_typical(kept_now[0], kept_now[1], parts)
+        self._table[:, :parts] = places, typical
+        memory.lengths.number = parts
+        memory.lengths.spread = min(max(MIDDLE_SPREAD * off, SPREAD_LEAST), SPREAD_MOST)
+        memory.lengths.longest_px = LONGEST_FACTOR * float(np.exp(typical.max()))
 
     def away_px(self, at: NDArray[np.float64]) -> NDArray[np.float64]:
         """Distance (px) of points (N, 2) px from the contact point."""
@@ -135,14 +164,6 @@ def _find_typical(
     part, typical logarithm there, and the middle of what longer ones have more than that.
     """
     count = away.size
-    if native.LIBRARY:
-        found, off = np.empty((2, parts)), np.empty(1)
-        places = [native.place(one) for one in (away, log, found, off)]
-        done = native.LIBRARY.edgewatch_typical(
-            count, *places[:2], parts, places[2], native.place(found, parts), places[3]
-        )
-        native.enough(done, 0)
-        return found[0], found[1], float(off[0])
     order = np.argsort(away, kind="stable")
     away, log = away[order], log[order]
     cuts = np.arange(parts + 1) * count // parts

@@ -83,6 +83,42 @@ ARMS_SHARE = 0.4
 """An arm shares less than this with a longer one."""
 
 
+RULES = records.LoneRules(
+    turn_most=TURN_MOST,
+    turn_error_most=TURN_ERROR_MOST,
+    turn_errors=TURN_ERRORS,
+    turn_spread=TURN_SPREAD,
+    turn_unknown=TURN_UNKNOWN,
+    dark_noise=DARK_NOISE,
+    dark_share=DARK_SHARE,
+    inner_px=INNER_PX,
+    least_px=LEAST_PX,
+    least_share=LEAST_SHARE,
+    least_lit=LEAST_LIT,
+    long_px=LONG_PX,
+    far_from=FAR_FROM,
+    far_to=FAR_TO,
+    beside_px=BESIDE_PX,
+    most=MOST,
+    odds_least=ODDS_LEAST,
+    same_weight=SAME_WEIGHT,
+    arms_share=ARMS_SHARE,
+    beside_along_px=native.place(BESIDE_ALONG_PX),
+    same_side_px=SAME_SIDE_PX,
+    same_cos=SAME_COS,
+    skew_most=SKEW_MOST,
+    end_side_px=END_SIDE_PX,
+    end_far_px=END_FAR_PX,
+    far_box=FAR_BOX,
+    beside_count=BESIDE_ALONG_PX.size,
+)
+"""All of this for the compiled form."""
+
+_WEIGHTS = [np.ascontiguousarray(part) for part in (learnt.HIDDEN, learnt.HIDDEN_BIAS, learnt.OUTPUT)]
+NET = records.LoneNet(*map(native.place, _WEIGHTS), float(learnt.OUTPUT_BIAS.item()), learnt.HIDDEN.shape[1])
+"""And the perceptron."""
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class Lone:
     """Lines of which one end is seen, arrays of length N: ``begin``, ``end`` (N, 2) px; ``begins``: the begin is
@@ -104,8 +140,6 @@ def find_lone(
     none = np.zeros((0, 2))
     if not lengths.known or steps.height.size == 2 * len(pairs):
         return none, none
-    if native.LIBRARY:
-        return _find_compiled(steps, pairs, blurred, noise, lengths)
     alone = np.ones(steps.height.size, np.bool_)
     alone[pairs.ravel()] = False
     left = np.flatnonzero(alone)
@@ -114,61 +148,6 @@ def find_lone(
     listed = pick_lines(lone)
     arm_begin, arm_end = follow_arms(steps, left, blurred, noise, lengths)
     return np.concatenate([lone.begin[listed], arm_begin]), np.concatenate([lone.end[listed], arm_end])
-
-
-_WEIGHTS = [np.ascontiguousarray(part) for part in (learnt.HIDDEN, learnt.HIDDEN_BIAS, learnt.OUTPUT)]
-_NET = records.LoneNet(*map(native.place, _WEIGHTS), float(learnt.OUTPUT_BIAS.item()), learnt.HIDDEN.shape[1])
-
-
-def _find_compiled(
-    steps: Steps, pairs: NDArray[np.int64], blurred: NDArray[np.float32], noise: float, lengths: Lengths
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    rules = records.LoneRules(
-        turn_most=TURN_MOST,
-        turn_error_most=TURN_ERROR_MOST,
-        turn_errors=TURN_ERRORS,
-        turn_spread=TURN_SPREAD,
-        turn_unknown=TURN_UNKNOWN,
-        dark_dn=DARK_NOISE * noise,
-        dark_share=DARK_SHARE,
-        inner_px=INNER_PX,
-        least_px=LEAST_PX,
-        least_share=LEAST_SHARE,
-        least_lit=LEAST_LIT,
-        long_px=LONG_PX,
-        far_from=FAR_FROM,
-        far_to=FAR_TO,
-        beside_px=BESIDE_PX,
-        most=MOST,
-        odds_least=ODDS_LEAST,
-        same_weight=SAME_WEIGHT,
-        arms_share=ARMS_SHARE,
-        noise_dn=noise,
-        beside_along_px=native.place(BESIDE_ALONG_PX),
-        same_side_px=SAME_SIDE_PX,
-        same_cos=SAME_COS,
-        skew_most=SKEW_MOST,
-        end_side_px=END_SIDE_PX,
-        end_far_px=END_FAR_PX,
-        far_box=FAR_BOX,
-        beside_count=BESIDE_ALONG_PX.size,
-        from_contact=lengths.from_contact,
-    )
-    room = steps.height.size
-    ends = np.empty((2, room, 2))
-    found = native.LIBRARY.edgewatch_lone(
-        room,
-        native.reference(steps.record()),
-        len(pairs),
-        native.place(pairs),
-        native.reference(records.picture(blurred)),
-        native.reference(lengths.record()),
-        native.reference(rules),
-        native.reference(_NET),
-        native.place(ends),
-    )
-    native.enough(found, room)
-    return ends[0, :found], ends[1, :found]
 
 
 def follow_steps(

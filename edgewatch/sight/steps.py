@@ -12,7 +12,6 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from edgewatch.sight import native
 from edgewatch.sight.native import records
 from edgewatch.sight.reading import read_levels
 from edgewatch.sight.segments import Segments
@@ -39,6 +38,16 @@ STREAK_POINTS = 4
 """A piece with fewer ridge points than this has no direction good enough to look for steps along it."""
 
 
+RULES = records.StepRules(
+    noise=STEP_NOISE * STEP_NOISE_GAIN,
+    share=STEP_SHARE,
+    least_points=STREAK_POINTS,
+    beyond_px=BEYOND_PX,
+    box_px=BOX_PX,
+)
+"""All of this for the compiled form."""
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class Steps:
     """Steps along pieces, arrays of length N: ``at`` (N, 2) px; ``inward`` (N, 2) unit vector into the streak;
@@ -53,11 +62,6 @@ class Steps:
     begins: NDArray[np.bool_]
     share: NDArray[np.float64]
 
-    def record(self) -> records.Steps:
-        """Where they lie, for the compiled steps."""
-        columns = (self.at, self.inward, self.height, self.size, self.share, self.begins)
-        return records.Steps(*(native.place(np.ascontiguousarray(column)) for column in columns))
-
     @property
     def full(self) -> NDArray[np.bool_]:
         """From darkness."""
@@ -66,8 +70,6 @@ class Steps:
 
 def find_steps(pieces: Segments, blurred: NDArray[np.float32], noise: float, axis: tuple[float, float]) -> Steps:
     """Steps along every piece. All pieces are laid end to end into one row, so that sums run over them together."""
-    if native.LIBRARY:
-        return _find_compiled(pieces, blurred, noise, axis)
     long = np.flatnonzero(pieces.points >= STREAK_POINTS)
     along_axis = pieces.axis[long] @ np.asarray(axis)
     heading = np.where(along_axis < 0.0, -1.0, 1.0)[:, None] * pieces.axis[long]
@@ -104,37 +106,4 @@ def find_steps(pieces: Segments, blurred: NDArray[np.float32], noise: float, axi
         size=length[owner[found]],
         begins=begins,
         share=height[found] / high[found],
-    )
-
-
-def _find_compiled(pieces: Segments, blurred: NDArray[np.float32], noise: float, axis: tuple[float, float]) -> Steps:
-    rules = records.StepRules(
-        least_height=STEP_NOISE * STEP_NOISE_GAIN * noise,
-        share=STEP_SHARE,
-        least_points=STREAK_POINTS,
-        beyond_px=BEYOND_PX,
-        box_px=BOX_PX,
-    )
-    columns = (pieces.begin, pieces.end, pieces.axis, pieces.length, pieces.points)
-    places = [native.place(column) for column in columns]
-    room = 4 * pieces.length.size + 16
-    while True:
-        ends, values, begins = np.empty((2, room, 2)), np.empty((3, room)), np.empty(room, np.bool_)
-        found = native.LIBRARY.edgewatch_steps(
-            pieces.length.size,
-            *places,
-            *map(native.double, axis),
-            native.reference(records.picture(blurred)),
-            native.reference(rules),
-            native.place(ends),
-            native.place(values),
-            native.place(begins),
-            room,
-        )
-        if native.enough(found, room):
-            break
-        room = found
-    height, size, share = values[:, :found]
-    return Steps(
-        at=ends[0, :found], inward=ends[1, :found], height=height, size=size, begins=begins[:found], share=share
     )

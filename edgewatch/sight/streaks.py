@@ -13,7 +13,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from edgewatch.sight import lengths as lengths_of
+from edgewatch.sight import lone as lone_of
 from edgewatch.sight import native
+from edgewatch.sight import steps as steps_of
 from edgewatch.sight.lengths import Lengths
 from edgewatch.sight.lone import find_lone
 from edgewatch.sight.native import records
@@ -52,6 +55,34 @@ COST_MOST = 9.0
 
 LEVEL_SAMPLES = 12
 
+PAIR_RULES = records.PairRules(
+    side_px=SIDE_PX,
+    side_tan=SIDE_TAN,
+    least_run_px=LEAST_RUN_PX,
+    ratio_log=RATIO_LOG,
+    fade_px=FADE_PX,
+    ratio_most=RATIO_MOST,
+    path_share=PATH_SHARE,
+    long_px=LONG_PX,
+    cost_full=LENGTH_COST_FULL,
+    cost_most=LENGTH_COST_MOST,
+    pair_most=COST_MOST,
+    full_share=FULL_SHARE,
+    dark_most=DARK_MOST,
+)
+_RULES = native.reference(
+    records.StreakRules(
+        steps=steps_of.RULES,
+        pairs=PAIR_RULES,
+        lengths=lengths_of.RULES,
+        lone=lone_of.RULES,
+        net=lone_of.NET,
+        learn_noise=LEARN_NOISE,
+        level_samples=LEVEL_SAMPLES,
+    )
+)
+"""All of this for the compiled form."""
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Lines:
@@ -76,6 +107,8 @@ def find_streaks(
     """Streaks of one picture. ``blurred``: float32 (H, W) from the ridge detector, ``noise``: its noise (DN);
     ``lengths`` learns from what is found; ``axis``: unit vector of the stream.
     """
+    if native.LIBRARY:
+        return _find_compiled(pieces, blurred, noise, lengths, axis)
     steps = find_steps(pieces, blurred, noise, axis)
     pairs = pair_steps(steps, blurred, lengths)
     first = not lengths.known
@@ -90,10 +123,36 @@ def find_streaks(
     return Lines(begin=begin, end=end, level=_line_levels(begin, end, blurred), whole=whole)
 
 
+def _find_compiled(
+    pieces: Segments,
+    blurred: NDArray[np.float32],
+    noise: float,
+    lengths: Lengths,
+    axis: tuple[float, float],
+) -> Lines:
+    columns = [records.start(one) for one in (pieces.begin, pieces.end, pieces.axis, pieces.length, pieces.points)]
+    room = 4 * pieces.length.size + 16
+    while True:
+        (begin, end), level, whole = np.empty((2, room, 2)), np.empty(room), np.empty(room, np.bool_)
+        found = native.LIBRARY.edgewatch_streaks(
+            pieces.length.size,
+            *columns,
+            native.place(blurred),
+            *blurred.shape,
+            native.double(noise),
+            *map(native.double, axis),
+            native.reference(lengths.memory),
+            _RULES,
+            room,
+            *map(records.start, (begin, end, level, whole)),
+        )
+        if native.enough(found, room):
+            return Lines(begin=begin[:found], end=end[:found], level=level[:found], whole=whole[:found])
+        room = found
+
+
 def pair_steps(steps: Steps, blurred: NDArray[np.float32], lengths: Lengths) -> NDArray[np.int64]:
     """Pairs (begin, end) of steps that make a streak, int64 (N, 2)."""
-    if native.LIBRARY:
-        return _pair_compiled(steps, blurred, lengths)
     begins, ends = np.flatnonzero(steps.begins), np.flatnonzero(~steps.begins)
     none = np.zeros((0, 2), np.int64)
     if not begins.size or not ends.size:
@@ -125,37 +184,6 @@ def pair_steps(steps: Steps, blurred: NDArray[np.float32], lengths: Lengths) -> 
     b, e, cost = b[lit], e[lit], cost[lit]
     chosen = _cheapest(b, e, cost, steps.height.size)
     return np.stack([b[chosen], e[chosen]], axis=1)
-
-
-_PAIR_RULES = records.PairRules(
-    side_px=SIDE_PX,
-    side_tan=SIDE_TAN,
-    least_run_px=LEAST_RUN_PX,
-    ratio_log=RATIO_LOG,
-    fade_px=FADE_PX,
-    ratio_most=RATIO_MOST,
-    path_share=PATH_SHARE,
-    long_px=LONG_PX,
-    cost_full=LENGTH_COST_FULL,
-    cost_most=LENGTH_COST_MOST,
-    pair_most=COST_MOST,
-    full_share=FULL_SHARE,
-    dark_most=DARK_MOST,
-)
-
-
-def _pair_compiled(steps: Steps, blurred: NDArray[np.float32], lengths: Lengths) -> NDArray[np.int64]:
-    pairs = np.empty((steps.height.size // 2, 2), np.int64)
-    found = native.LIBRARY.edgewatch_pairs(
-        steps.height.size,
-        native.reference(steps.record()),
-        native.reference(records.picture(blurred)),
-        native.reference(lengths.record()),
-        native.reference(_PAIR_RULES),
-        native.place(pairs),
-    )
-    native.enough(found, len(pairs))
-    return pairs[:found]
 
 
 def _stay_lit(
@@ -195,14 +223,6 @@ def _line_levels(
     begin: NDArray[np.float64], end: NDArray[np.float64], blurred: NDArray[np.float32]
 ) -> NDArray[np.float64]:
     """Height along each line, the lower third of samples left out: what overlaps it counts little."""
-    if native.LIBRARY:
-        levels = np.empty(len(begin))
-        picture = records.picture(blurred)
-        places = [native.place(ends) for ends in (begin, end)]
-        native.LIBRARY.edgewatch_levels(
-            len(begin), *places, native.reference(picture), LEVEL_SAMPLES, native.place(levels)
-        )
-        return levels
     share = (np.arange(LEVEL_SAMPLES) + 0.5) / LEVEL_SAMPLES
     x = begin[:, :1] + share * (end - begin)[:, :1]
     y = begin[:, 1:] + share * (end - begin)[:, 1:]

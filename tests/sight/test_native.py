@@ -31,14 +31,10 @@ from edgewatch.sight.bursts import (
     read_patches,
 )
 from edgewatch.sight.glow import Sorted, sort_lines
-from edgewatch.sight.lengths import Lengths, _find_typical
-from edgewatch.sight.lone import find_lone
 from edgewatch.sight.optics import Optics
-from edgewatch.sight.ridges import NOISE_GAIN, Ridges, find_ridges
+from edgewatch.sight.ridges import Ridges, find_ridges
 from edgewatch.sight.segments import Segments, find_segments
 from edgewatch.sight.sight import Sight
-from edgewatch.sight.steps import find_steps
-from edgewatch.sight.streaks import _line_levels, pair_steps
 from tests.scenes import Look, Scene, Stream, crossing_lines
 from tests.sight.test_sight import make_optics
 
@@ -141,50 +137,6 @@ def test_candidates_and_what_is_read_about_them_are_the_same(look: Look) -> None
         mine, own = both(lambda r=ridges, a=at: read_patches(a, r.blurred, r.threshold_noise, optics.contact_px))
         # remap may place a point to 1/32 px only, in some versions of OpenCV
         assert np.abs(mine - own).mean() < 0.01
-
-
-@pytest.mark.parametrize("look", LOOKS)
-def test_steps_pairs_and_lines_are_the_same(look: Look) -> None:
-    """Step for step and streak for streak, before lengths are known and after."""
-    optics = make_optics()
-    lengths, seen = Lengths(optics.contact_px), [0, 0]
-    for excess, noise in pictures(optics, look, SEED + 3):
-        ridges, pieces = trace(excess, noise)
-        ground = noise * NOISE_GAIN
-        plain, own = both(lambda r=ridges, p=pieces, n=ground: find_steps(p, r.blurred, n, optics.axis))
-        assert plain.height.size > 30
-        for name in ("at", "inward", "height", "size", "begins", "share"):
-            assert np.allclose(getattr(plain, name), getattr(own, name), atol=1e-3), name
-        pairs, same = both(lambda s=plain, r=ridges: pair_steps(s, r.blurred, lengths))
-        assert np.array_equal(pairs, same)
-        lone, found = both(lambda s=plain, p=pairs, r=ridges, n=ground: find_lone(s, p, r.blurred, n, lengths))
-        assert _apart(lone, found) <= 1, "a line may share with a longer one just as much as is allowed"
-        levels, same = both(
-            lambda b=own.at[pairs[:, 0]], e=own.at[pairs[:, 1]], r=ridges: _line_levels(b, e, r.blurred)
-        )
-        assert np.allclose(levels, same, atol=1e-2)
-        seen[0] += len(pairs)
-        seen[1] += len(lone[0])
-        lengths.learn(plain.at[pairs[:, 0]], plain.at[pairs[:, 1]])
-    assert lengths.known
-    assert min(seen) > 30, "some of which one end is seen, some whole"
-
-
-def _apart(one: tuple[NDArray[np.float64], ...], other: tuple[NDArray[np.float64], ...]) -> int:
-    """How many lines are in one list and not in the other."""
-    rounded = [{tuple(line) for line in np.rint(4.0 * np.concatenate(ends, axis=1)).tolist()} for ends in (one, other)]
-    return len(rounded[0] ^ rounded[1])
-
-
-@given(st.integers(8, 400), st.integers(1, 8), st.integers(0, 2**32 - 1))
-def test_typical_lengths_are_the_same(count: int, parts: int, seed: int) -> None:
-    """Of few and of many streaks, some of one length or at one distance."""
-    rng = np.random.default_rng(seed)
-    away, log = rng.integers(0, 300, count).astype(np.float64), np.round(rng.normal(3.5, 0.4, count), 1)
-    (places, typical, off), (own_places, own_typical, own_off) = both(lambda: _find_typical(away, log, parts))
-    assert np.array_equal(places, own_places)
-    assert np.allclose(typical, own_typical)
-    assert off == pytest.approx(own_off)
 
 
 def test_the_net_says_the_same() -> None:
