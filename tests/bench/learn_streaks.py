@@ -21,9 +21,9 @@ from numpy.typing import NDArray
 from edgewatch.rehearsal.camera import CameraModel
 from edgewatch.rehearsal.scene import Stream as RehearsalStream
 from edgewatch.rehearsal.steel import find_steel
-from edgewatch.sight import Sight
+from edgewatch.sight import Sight, native
+from edgewatch.sight import lone as lone_module
 from edgewatch.sight import sight as sight_module
-from edgewatch.sight import streaks as streaks_module
 from edgewatch.sight.glow import Sorted, sort_lines
 from edgewatch.sight.lone import Lone
 from edgewatch.sight.optics import Optics
@@ -121,7 +121,8 @@ def collect(kind: str, seeds: range) -> tuple[Floats, NDArray[np.bool_]]:
             sight = sight or Sight(optics)
             heard = _Listener()
             with (
-                mock.patch.object(streaks_module, "pick_lines", heard.pick),
+                mock.patch.object(native, "LIBRARY", None),  # the compiled form hands nothing over on its way
+                mock.patch.object(lone_module, "pick_lines", heard.pick),
                 mock.patch.object(sight_module, "sort_lines", heard.sort),
             ):
                 sight.look(picture)
