@@ -392,11 +392,11 @@ _NEAR = 4
 
 def _modes(weights: NDArray[np.float64]) -> NDArray[np.float64]:
     """Length (mm) at the mode of histograms (N, bins) of its logarithm: the centre of the heaviest stretch."""
-    padded = np.pad(weights, ((0, 0), (_NEAR, _NEAR)))
-    reach = len(_SMOOTH) // 2
-    smooth = sum(
-        share * padded[:, _NEAR - reach + k : _NEAR - reach + k + weights.shape[1]] for k, share in enumerate(_SMOOTH)
-    )
+    rows, bins = weights.shape
+    padded = np.zeros((rows, bins + 2 * _NEAR))
+    padded[:, _NEAR:-_NEAR] = weights
+    first = _NEAR - len(_SMOOTH) // 2
+    smooth = sum(share * padded[:, first + k : first + k + bins] for k, share in enumerate(_SMOOTH))
     at = np.argmax(smooth, axis=1)
     place = np.arange(2 * _NEAR + 1)
     part = np.take_along_axis(padded, at[:, None] + place, axis=1)
