@@ -38,6 +38,34 @@ IDLE_S = 0.5
 """Time over which that is averaged (s)."""
 
 
+class _Span:
+    """Frames of the last while, with the sum of their streaks: counts are whole numbers, so the sum never drifts."""
+
+    def __init__(self) -> None:
+        self.frames: deque[tuple[float, int]] = deque()
+        self.total = 0
+
+    def add(self, t_s: float, streaks: int) -> None:
+        self.frames.append((t_s, streaks))
+        self.total += streaks
+
+    def keep_from(self, t_s: float) -> None:
+        """Let go of frames before this time."""
+        frames = self.frames
+        while frames and frames[0][0] < t_s:
+            self.total -= frames.popleft()[1]
+
+    def keep_after(self, t_s: float) -> None:
+        """Let go of frames up to this time."""
+        frames = self.frames
+        while frames and frames[0][0] <= t_s:
+            self.total -= frames.popleft()[1]
+
+    def clear(self) -> None:
+        self.frames.clear()
+        self.total = 0
+
+
 class ContactFinder:
     """Finds contacts; one call a frame, in order of time.
 
@@ -53,7 +81,8 @@ class ContactFinder:
             raise ValueError(f"fps = {fps!r}: a positive number is needed")
         self._settings = settings
         self._period_s = 1.0 / fps
-        self._recent: deque[tuple[float, int]] = deque()
+        self._recent = _Span()  # over which the mean is taken
+        self._last = _Span()  # those of them within ``begin_s``
         self._begin_s: float | None = None
         self._last_spark_s = math.nan
         self._last_s = -math.inf
@@ -95,13 +124,14 @@ class ContactFinder:
         if not math.isfinite(t_s) or streaks < 0:
             raise ValueError(f"t_s = {t_s!r}, streaks = {streaks!r}: a finite time and a count are needed")
         if t_s <= self._last_s:  # a source that starts again from 0: what was before does not count
-            self._recent.clear()
+            self._clear()
             self._ended_s = -math.inf
-        if not self._recent:
+        if not self._recent.frames:
             self._watching_s = t_s
         step_s = min(max(t_s - self._last_s, 0.0), IDLE_S)
         self._last_s = t_s
-        self._recent.append((t_s, streaks))
+        self._recent.add(t_s, streaks)
+        self._last.add(t_s, streaks)
         if self._begin_s is not None:
             return self._look_for_end(t_s, streaks)
         found = self._look_for_begin(t_s)
@@ -111,20 +141,27 @@ class ContactFinder:
 
     def _mean_over(self, span_s: float, t_s: float) -> float:
         """Mean streaks a frame over the last ``span_s``; older frames are let go of."""
-        recent = self._recent
-        while recent and recent[0][0] < t_s - span_s + 0.5 * self._period_s:
-            recent.popleft()
-        return sum(count for _, count in recent) / len(recent)
+        begin_s = t_s - span_s + 0.5 * self._period_s
+        self._recent.keep_from(begin_s)
+        self._last.keep_from(begin_s)
+        return self._recent.total / len(self._recent.frames)
+
+    def _clear(self) -> None:
+        self._recent.clear()
+        self._last.clear()
 
     def _look_for_begin(self, t_s: float) -> Begin | None:
         span = max(self._settings.begin_s, self._period_s)
         mean = self._mean_over(span, t_s)
-        sparks = [at for at, count in self._recent if count > 0]
         covered = t_s - self._watching_s + 1.01 * self._period_s >= span  # frames may be skipped: time counts
-        if mean < self._least() or not covered or 2 * len(sparks) <= len(self._recent):
+        if mean < self._least() or not covered:
             return None
-        self._begin_s = next((at for at, count in self._recent if self.is_spark(count)), sparks[0])
-        self._level, self._frames = mean, len(self._recent)
+        frames = self._recent.frames
+        sparks = [at for at, count in frames if count > 0]
+        if 2 * len(sparks) <= len(frames):
+            return None
+        self._begin_s = next((at for at, count in frames if self.is_spark(count)), sparks[0])
+        self._level, self._frames = mean, len(frames)
         self._last_spark_s = t_s
         return Begin(t_s=self._begin_s)
 
@@ -134,8 +171,9 @@ class ContactFinder:
             self._frames += 1
             self._level += (streaks - self._level) / self._frames
             # a single frame is a stray; sparks last, or follow sparks
-            last = [count for at, count in self._recent if at > t_s - self._settings.begin_s]
-            if sum(last) >= self._least() * len(last) or t_s - self._last_spark_s < 2.5 * self._period_s:
+            last = self._last
+            last.keep_after(t_s - self._settings.begin_s)
+            if last.total >= self._least() * len(last.frames) or t_s - self._last_spark_s < 2.5 * self._period_s:
                 self._last_spark_s = t_s
         if t_s - self._begin_s > self._settings.longest_s:
             return self._end("longest")
@@ -151,7 +189,7 @@ class ContactFinder:
         self._ended_s = end.t_s
         self._idle = idle
         self._last_spark_s = math.nan
-        self._recent.clear()
+        self._clear()
         return end
 
     def close(self, t_s: float) -> End | None:

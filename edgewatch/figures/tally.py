@@ -29,6 +29,8 @@ BLOCK_S = 0.025
 """One block of time (s): short against the shortest window, a few frames at usual rates."""
 MOST_BLOCKS = 512
 """With more blocks, neighbours are joined: memory and cost of a long contact stay bounded."""
+MOST_WAITING = 32
+"""Frames are worked up so many at a time: numpy's calls cost as much as the work on one frame's streaks."""
 LIFE_S = 0.15
 """Hardly a particle glows longer than this (s): figures further apart are independent."""
 SPEED_BINS = 24
@@ -40,6 +42,11 @@ LENGTH_BINS = 256
 """Streak lengths from 0.5 mm to 1 m."""
 LEAST_SPEED_STREAKS = 12
 """Streaks that a bin of the speed profile needs for its median."""
+
+
+_CUT_END = np.uint8(StreakFlag.CUT_END)
+_IN_PART = np.uint8(StreakFlag.CUT_BEGIN | StreakFlag.CUT_END | StreakFlag.CROWDED)
+"""As numbers: an ``IntFlag`` costs numpy more than the comparison."""
 
 
 @dataclass(slots=True)
@@ -64,8 +71,8 @@ class _Sums:
 class Tally:
     """Running sums of one stretch of time.
 
-    ``add`` costs a few microseconds a frame; frames are worked up a block at a time. Raises ``ValueError`` when
-    tallies of different optics are added.
+    ``add`` costs a few microseconds a frame; frames are worked up ``MOST_WAITING`` at a time. Raises ``ValueError``
+    when tallies of different optics are added.
     """
 
     def __init__(self, optics: Optics) -> None:
@@ -86,8 +93,8 @@ class Tally:
         self._block_s = BLOCK_S
         self._blocks: dict[int, NDArray[np.float64]] = {}
         self._lengths: NDArray[np.int64] = np.zeros((SPEED_BINS, LENGTH_BINS), dtype=np.int64)
-        self._waiting: list[Detections] = []
-        self._waiting_block = 0
+        self._waiting: list[tuple[int, Detections]] = []
+        """Frames that are not yet worked up, each with its block."""
 
     @property
     def refused(self) -> int:
@@ -109,11 +116,9 @@ class Tally:
         """Add one frame taken at ``t_s`` (s); ``skipped`` frames before it were not looked at."""
         if not math.isfinite(t_s) or skipped < 0:
             raise ValueError(f"t_s = {t_s!r}, skipped = {skipped!r}: a finite time and a count are needed")
-        block = math.floor(t_s / self._block_s + 1e-9)
-        if self._waiting and block != self._waiting_block:
+        if len(self._waiting) >= MOST_WAITING:
             self._work_up()
-        self._waiting_block = block
-        self._waiting.append(detections)
+        self._waiting.append((math.floor(t_s / self._block_s + 1e-9), detections))
         sums = self._sums
         sums.frames_seen += 1
         sums.frames_skipped += skipped
@@ -174,35 +179,45 @@ class Tally:
         """Turn the waiting frames into sums and the profile of their block."""
         if not self._waiting:
             return
-        waiting, self._waiting = self._waiting, []
-        profile = self._blocks.get(self._waiting_block)
-        if profile is None:
-            if len(self._blocks) >= MOST_BLOCKS:
-                self._join_blocks()
-                self._waiting_block //= 2
-            profile = self._blocks.setdefault(self._waiting_block, np.zeros(AXIS_BINS))
+        blocks = [block for block, _ in self._waiting]
+        waiting = [detections for _, detections in self._waiting]
+        self._waiting = []
+        while len(self._blocks.keys() | blocks) > MOST_BLOCKS:
+            self._join_blocks()
+            blocks = [block // 2 for block in blocks]
+        for block in blocks:
+            if block not in self._blocks:
+                self._blocks[block] = np.zeros(AXIS_BINS)
         streaks = np.concatenate([one.streaks for one in waiting]).astype(np.float64)
         flags = np.concatenate([one.streak_flags for one in waiting])
+        own = sorted(set(blocks))  # each streak's is told by its place among these
+        row = np.repeat([own.index(block) for block in blocks], [len(one.streaks) for one in waiting])
         good = np.isfinite(streaks).all(axis=1)
         if not good.all():
             bad = int(good.size - good.sum())
             self._sums.refused += bad
             self._sums.streaks -= bad
-            streaks, flags = streaks[good], flags[good]
+            streaks, flags, row = streaks[good], flags[good], row[good]
         if not len(streaks):
             return
         ends = self.optics.along_mm(streaks.reshape(-1, 2, 2))
         length = np.hypot(streaks[:, 2] - streaks[:, 0], streaks[:, 3] - streaks[:, 1]) * self.optics.mm_per_px
-        near, far = ends.min(axis=1), ends.max(axis=1)
-        profile += self._spread(near, far, length)
+        near, far = np.minimum(ends[:, 0], ends[:, 1]), np.maximum(ends[:, 0], ends[:, 1])
+        for block, profile in zip(own, self._spread(near, far, length, row, len(own)), strict=True):
+            self._blocks[block] += profile
         self._sums.track_mm += float(length.sum())
-        self._sums.cut_streaks += int(np.count_nonzero(flags & StreakFlag.CUT_END))
+        self._sums.cut_streaks += int(np.count_nonzero(flags & _CUT_END))
         self._note_lengths(near, far, length, flags)
 
     def _spread(
-        self, near: NDArray[np.float64], far: NDArray[np.float64], length: NDArray[np.float64]
+        self,
+        near: NDArray[np.float64],
+        far: NDArray[np.float64],
+        length: NDArray[np.float64],
+        row: NDArray[np.integer],
+        rows: int,
     ) -> NDArray[np.float64]:
-        """Track per bin (mm) with each length spread evenly from ``near`` to ``far``.
+        """Track per row and bin (mm) with each length spread evenly from ``near`` to ``far``.
 
         The running total of one streak is a ramp, the difference of two half-lines; a half-line that starts within
         a bin is two entries of the second difference. So four ``bincount`` do all streaks, exactly.
@@ -211,14 +226,16 @@ class Tally:
         far = np.clip((far - self._low_mm) / self._step_mm, 0.0, AXIS_BINS - 1.0)
         far = np.maximum(far, near + 1e-3)  # a streak across the axis: all of it at one place
         slope = length / (far - near)
-        second = np.zeros(AXIS_BINS + 3)
-        for start, sign in ((near, 1.0), (far, -1.0)):
+        size, first = AXIS_BINS + 3, row * (AXIS_BINS + 3) + 1
+        second = np.zeros(rows * size)
+        for start, rise in ((near, slope), (far, -slope)):
             at = start.astype(np.intp)
-            past = start - at
-            second += np.bincount(at + 1, sign * slope * (1.0 - past), AXIS_BINS + 3)
-            second += np.bincount(at + 2, sign * slope * past, AXIS_BINS + 3)
+            later = rise * (start - at)
+            at += first
+            second += np.bincount(at, rise - later, second.size)
+            second += np.bincount(at + 1, later, second.size)
         # first running sum: track within each bin
-        return np.maximum(np.cumsum(second)[1 : AXIS_BINS + 1], 0.0)
+        return np.maximum(np.cumsum(second.reshape(rows, size), axis=1)[:, 1 : AXIS_BINS + 1], 0.0)
 
     def _note_lengths(
         self,
@@ -228,9 +245,7 @@ class Tally:
         flags: NDArray[np.uint8],
     ) -> None:
         """Keep lengths of streaks that show a whole exposure: uncut, uncrowded, not born during the exposure."""
-        whole = ((flags & (StreakFlag.CUT_BEGIN | StreakFlag.CUT_END | StreakFlag.CROWDED)) == 0) & (
-            near > 0.25 * length
-        )
+        whole = ((flags & _IN_PART) == 0) & (near > 0.25 * length)
         if not whole.any():
             return
         middle = 0.5 * (near + far)[whole]
@@ -349,7 +364,7 @@ class Tally:
         if not used.size:
             return math.nan
         weights = self._lengths[used] * np.exp(np.arange(LENGTH_BINS) * LENGTH_STEP)
-        usual = np.array([_mode(row) for row in weights])
+        usual = _modes(weights)
         middle = (used + 0.5) / SPEED_BINS * (self._low_mm + self._step_mm * AXIS_BINS)
         whole = middle >= 0.75 * usual.max()
         if whole.any():
@@ -357,21 +372,33 @@ class Tally:
         # near the wheel: drag has not yet sorted the particles by size
         near = slice(0, max(3, SPEED_BINS // 4))
         used, usual, middle = used[near], usual[near], middle[near]
+        share = counts[used] / counts[used].sum()
+        length = float(share @ usual)
         if len(used) >= 3:
-            slope, contact = np.polyfit(middle, np.log(usual), 1, w=np.sqrt(counts[used]))
-            length = math.exp(contact) if slope < 0.0 else float(np.average(usual, weights=counts[used]))
-        else:
-            length = float(np.average(usual, weights=counts[used]))
+            log, centre = np.log(usual), float(share @ middle)
+            weight = share * (middle - centre)  # least squares, weighted by the number of streaks
+            slope = float(weight @ log) / float(weight @ middle)
+            if slope < 0.0:
+                length = math.exp(float(share @ log) - slope * centre)
         return length / self.optics.exposure_ms
 
 
 _SMOOTH = np.array([1.0, 2.0, 3.0, 4.0, 3.0, 2.0, 1.0]) / 16.0
 
 
-def _mode(weights: NDArray[np.float64]) -> float:
-    """Length (mm) at the mode of a histogram of its logarithm: the centre of the heaviest stretch."""
-    at = int(np.convolve(weights, _SMOOTH, "same").argmax())
-    low = max(0, at - 4)
-    part = weights[low : at + 5]
-    centre = low + float(np.arange(len(part)) @ part) / float(part.sum()) + 0.5
-    return LENGTH_LOW_MM * math.exp(centre * LENGTH_STEP)
+_NEAR = 4
+"""Bins to either side of the heaviest that its centre is taken over."""
+
+
+def _modes(weights: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Length (mm) at the mode of histograms (N, bins) of its logarithm: the centre of the heaviest stretch."""
+    rows, bins = weights.shape
+    padded = np.zeros((rows, bins + 2 * _NEAR))
+    padded[:, _NEAR:-_NEAR] = weights
+    first = _NEAR - len(_SMOOTH) // 2
+    smooth = sum(share * padded[:, first + k : first + k + bins] for k, share in enumerate(_SMOOTH))
+    at = np.argmax(smooth, axis=1)
+    place = np.arange(2 * _NEAR + 1)
+    part = np.take_along_axis(padded, at[:, None] + place, axis=1)
+    centre = at - _NEAR + (part @ place) / part.sum(axis=1) + 0.5
+    return np.asarray(LENGTH_LOW_MM * np.exp(centre * LENGTH_STEP))

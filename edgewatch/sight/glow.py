@@ -81,44 +81,64 @@ class Glow:
         self.optics = optics
         # A burst at the end of one exposure glows in the next n for which n periods less one exposure are shorter.
         self._pictures = max(0, int(np.ceil((longest_glow_s + optics.exposure_s) / optics.period_s)) - 1)
-        self.recent: list[NDArray[np.float64]] = []
+        self.memory = np.zeros((0, 4))
+        """Bursts of earlier pictures that may still glow, (M, 4): x, y px, probability, how many pictures ago."""
         listed_s = max(optics.exposure_s - arm_draw_s + late_listed_s, LEAST_LISTED * optics.exposure_s)
         limited_s = (listed_s**-LIMIT_POWER + optics.period_s**-LIMIT_POWER) ** (-1.0 / LIMIT_POWER)
         self.gain = float(limited_s / optics.exposure_s)
 
-    def remembered(self) -> NDArray[np.float64]:
-        """Bursts (M, 2) px of earlier pictures that may still glow."""
-        return np.concatenate(self.recent) if self.recent else np.zeros((0, 2))
-
-    def _drift(self, lengths: Lengths) -> NDArray[np.float64]:
+    def _drift(self, old: NDArray[np.float64], lengths: Lengths) -> NDArray[np.float64]:
         """How far (px) the arms of each remembered burst may have drifted along the flight."""
-        old = self.remembered()
         if not lengths.known:
             return np.zeros(len(old))
-        speed = lengths.typical_px(old) / self.optics.exposure_s
-        number = [len(at) for at in self.recent]
-        age = np.repeat(np.arange(len(number), 0, -1), number) * self.optics.period_s
-        return np.asarray(DRIFT_SHARE * speed * np.minimum(age, DRIFT_S))
+        speed = lengths.typical_px(old[:, :2]) / self.optics.exposure_s
+        return np.asarray(DRIFT_SHARE * speed * np.minimum(old[:, 3] * self.optics.period_s, DRIFT_S))
 
-    def take(self, apexes: Apexes, lengths: Lengths) -> NDArray[np.int64]:
-        """Indices of the bursts that are new; remembers all of them.
+    def news(self, apexes: Apexes, lengths: Lengths, least_sure: float = 0.0) -> NDArray[np.int64]:
+        """Indices of the bursts that are new; ``least_sure``: bursts that are less probable are no matter, neither of
+        this picture nor of earlier ones.
 
         What went off during this exposure is new even where an earlier burst may still glow: sparks of one kind burst
         again and again, and follow each other. So is what the net, which sees the picture before, takes for new.
         """
-        old, drift = self.remembered(), self._drift(lengths)
+        old = self.memory[self.memory[:, 2] >= least_sure]
         gx = apexes.at[:, None, 0] - old[None, :, 0]
         gy = apexes.at[:, None, 1] - old[None, :, 1]
-        away = old - np.asarray(self.optics.contact_px)
+        away = old[:, :2] - np.asarray(self.optics.contact_px)
         away /= np.maximum(np.hypot(away[:, 0], away[:, 1]), 1e-6)[:, None]
         # The cloud of arms drifts on along the flight: the nearest point of the way it may have come counts.
-        on = np.clip(gx * away[:, 0] + gy * away[:, 1], 0.0, drift)
+        on = np.clip(gx * away[:, 0] + gy * away[:, 1], 0.0, self._drift(old, lengths))
         gap = np.hypot(gx - on * away[:, 0], gy - on * away[:, 1])
         near = (gap < SAME_PX).any(axis=1) & (apexes.late > LATE_SURE)
         seen_before = apexes.fresh < np.where(near, FRESH_NEAR, FRESH_LEAST)
-        fresh = np.flatnonzero(~seen_before)
-        self.recent = [*self.recent, apexes.at][-self._pictures :] if self._pictures else []
+        return np.flatnonzero(~seen_before & (apexes.sure >= least_sure))
+
+    def remember(self, apexes: Apexes) -> None:
+        """Keep the bursts of this picture, and those of earlier ones for as long as arms may glow."""
+        new = np.column_stack([apexes.at, apexes.sure, np.zeros(len(apexes.at))])
+        bursts = np.concatenate([self.memory, new])
+        bursts[:, 3] += 1.0
+        self.memory = bursts[bursts[:, 3] <= self._pictures]
+
+    def take(self, apexes: Apexes, lengths: Lengths) -> NDArray[np.int64]:
+        """Indices of the bursts that are new; remembers all of them."""
+        fresh = self.news(apexes, lengths)
+        self.remember(apexes)
         return fresh
+
+    def news_rules(self) -> records.NewsRules:
+        """The same for the compiled steps."""
+        return records.NewsRules(
+            same_px=SAME_PX,
+            fresh_least=FRESH_LEAST,
+            fresh_near=FRESH_NEAR,
+            late_sure=LATE_SURE,
+            drift_share=DRIFT_SHARE,
+            drift_s=DRIFT_S,
+            period_s=self.optics.period_s,
+            exposure_s=self.optics.exposure_s,
+            pictures=self._pictures,
+        )
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -187,7 +207,7 @@ def sort_lines(
         end[cut] = begin[cut] + unit[cut] * along[cut, which][:, None]
 
     # Of earlier bursts: short lines that point back to one within reach of its arms.
-    old = glow.remembered()
+    old = glow.memory
     if len(old) and len(begin):
         ox, oy = old[None, :, 0] - begin[:, None, 0], old[None, :, 1] - begin[:, None, 1]
         beside = np.abs(ox * unit[:, None, 1] - oy * unit[:, None, 0]) < ARM_SIDE_PX
@@ -205,18 +225,9 @@ def sort_lines(
     )
 
 
-def _sort_compiled(
-    begin: NDArray[np.float64],
-    end: NDArray[np.float64],
-    whole: NDArray[np.bool_],
-    apexes: Apexes,
-    glow: Glow,
-    lengths: Lengths,
-) -> Sorted:
-    end, old = end.copy(), np.ascontiguousarray(glow.remembered())
-    at, late = np.ascontiguousarray(apexes.at), np.ascontiguousarray(apexes.late)
-    streak, arms = np.empty(len(begin), np.bool_), np.empty(len(at), np.int64)
-    rules = records.ArmRules(
+def arm_rules(from_contact: bool = False) -> records.ArmRules:
+    """What makes a line an arm, for the compiled steps; ``from_contact``: see ``Lengths``."""
+    return records.ArmRules(
         late_sure=LATE_SURE,
         arm_side_px=ARM_SIDE_PX,
         arm_gap_px=ARM_GAP_PX,
@@ -227,9 +238,22 @@ def _sort_compiled(
         across_share=ACROSS_SHARE,
         stem_least_px=STEM_LEAST_PX,
         old_reach=OLD_REACH,
-        from_contact=lengths.from_contact,
+        from_contact=from_contact,
         least_arms=LEAST_ARMS,
     )
+
+
+def _sort_compiled(
+    begin: NDArray[np.float64],
+    end: NDArray[np.float64],
+    whole: NDArray[np.bool_],
+    apexes: Apexes,
+    glow: Glow,
+    lengths: Lengths,
+) -> Sorted:
+    end, old = end.copy(), np.ascontiguousarray(glow.memory)
+    at, late = np.ascontiguousarray(apexes.at), np.ascontiguousarray(apexes.late)
+    streak, arms = np.empty(len(begin), np.bool_), np.empty(len(at), np.int64)
     done = native.LIBRARY.edgewatch_sort(
         len(begin),
         native.place(begin),
@@ -241,7 +265,7 @@ def _sort_compiled(
         len(old),
         native.place(old),
         native.reference(lengths.record()),
-        native.reference(rules),
+        native.reference(arm_rules(lengths.from_contact)),
         native.place(streak),
         native.place(arms),
     )

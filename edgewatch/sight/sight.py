@@ -9,15 +9,15 @@ from numpy.typing import NDArray
 
 from edgewatch.sight.background import Background
 from edgewatch.sight.bursts import find_apexes
-from edgewatch.sight.detections import BurstFlag, Detections, StreakFlag
-from edgewatch.sight.glow import LATE_SURE, Glow, sort_lines
+from edgewatch.sight.detections import Detections
+from edgewatch.sight.glow import Glow
 from edgewatch.sight.lengths import Lengths
 from edgewatch.sight.light import LightMeter
+from edgewatch.sight.listing import Listing
 from edgewatch.sight.optics import Optics
-from edgewatch.sight.ridges import MARGIN_PX, NOISE_GAIN, Ridges, find_ridges
+from edgewatch.sight.ridges import NOISE_GAIN, Ridges, find_ridges
 from edgewatch.sight.segments import find_segments
 from edgewatch.sight.share import BurstShare
-from edgewatch.sight.steadiness import read_origin
 from edgewatch.sight.streaks import find_streaks
 
 
@@ -69,9 +69,13 @@ class Sight:
         self._meter = LightMeter()
         self._before: Ridges | None = None
         self._share = BurstShare(period_s=o.period_s)
-        self._glow, self._rate_glow = (
-            Glow(o, longest_glow_s=s.longest_glow_s, arm_draw_s=s.arm_draw_s, late_listed_s=s.late_listed_s)
-            for _ in range(2)
+        self._glow = Glow(o, longest_glow_s=s.longest_glow_s, arm_draw_s=s.arm_draw_s, late_listed_s=s.late_listed_s)
+        self._listing = Listing(
+            o,
+            self._glow,
+            least_snr=s.least_snr,
+            least_length_px=s.least_length_px,
+            rate_sure=s.rate_sure,
         )
 
     @property
@@ -99,51 +103,19 @@ class Sight:
         self._meter.measure_width(found.begin, found.end, ridges)
         apexes = find_apexes(pieces, ridges, o, s.least_sure, self._before, self._share)
         self._before = ridges
-        sorted_ = sort_lines(found.begin, found.end, found.whole, apexes, self._glow, self._lengths)
-        begin, end = sorted_.begin, sorted_.end
-        length = np.hypot(end[:, 0] - begin[:, 0], end[:, 1] - begin[:, 1])
-        snr = found.level / self._background.noise_dn * self._meter.line_gain
-        keep = sorted_.streak & (snr >= s.least_snr) & (length > s.least_length_px)
-        lines = np.concatenate([begin, end], axis=1)[keep]
-        fresh = self._glow.take(apexes, self._lengths)
-        at, late = apexes.at[fresh], apexes.late[fresh] > LATE_SURE
-        track_px = float(length[keep].sum())
-        snr = snr[keep]
-        origin_offset_px, origin_error_px = read_origin(lines, o)
+        snr_per_dn = self._meter.line_gain / self._background.noise_dn
+        seen = self._listing.take(found, snr_per_dn, apexes, self._lengths)
+        light = self._meter.read(picture, self._background, streaks=len(seen.streaks), middle_snr=seen.middle_snr)
         return Detections(
-            streaks=lines.astype(np.float32),
-            streak_snr=snr.astype(np.float32),
-            streak_flags=self._cut_flags(lines),
-            bursts=at.astype(np.float32),
-            burst_arms=sorted_.arms[fresh].astype(np.int16),
-            burst_flags=np.where(late, BurstFlag.LATE, 0).astype(np.uint8) | self._edge_flags(at),
-            light=self._meter.read(picture, self._background, lines, snr),
-            rate_bursts=int(self._rate_glow.take(apexes.take(apexes.sure >= s.rate_sure), self._lengths).size),
-            rate_exposure_px=track_px * self._glow.gain,
-            origin_offset_px=origin_offset_px,
-            origin_error_px=origin_error_px,
+            streaks=seen.streaks,
+            streak_snr=seen.streak_snr,
+            streak_flags=seen.streak_flags,
+            bursts=seen.bursts,
+            burst_arms=seen.burst_arms,
+            burst_flags=seen.burst_flags,
+            light=light,
+            rate_bursts=seen.rate_bursts,
+            rate_exposure_px=seen.track_px * self._glow.gain,
+            origin_offset_px=seen.origin_offset_px,
+            origin_error_px=seen.origin_error_px,
         )
-
-    def _near_edge(self, x: NDArray[np.float64], y: NDArray[np.float64], margin_px: float) -> NDArray[np.bool_]:
-        o = self.optics
-        return np.asarray(
-            (x < margin_px) | (y < margin_px) | (x > o.width_px - 1 - margin_px) | (y > o.height_px - 1 - margin_px)
-        )
-
-    def _cut_flags(self, lines: NDArray[np.float64]) -> NDArray[np.uint8]:
-        flags = np.zeros(len(lines), np.uint8)
-        flags[self._near_edge(lines[:, 0], lines[:, 1], CUT_PX)] |= np.uint8(StreakFlag.CUT_BEGIN)
-        flags[self._near_edge(lines[:, 2], lines[:, 3], CUT_PX)] |= np.uint8(StreakFlag.CUT_END)
-        return flags
-
-    def _edge_flags(self, at: NDArray[np.float64]) -> NDArray[np.uint8]:
-        near = self._near_edge(at[:, 0], at[:, 1], EDGE_PX)
-        flags: NDArray[np.uint8] = np.where(near, BurstFlag.EDGE, 0).astype(np.uint8)
-        return flags
-
-
-CUT_PX = MARGIN_PX + 2.0
-"""A streak that comes this near to the picture's edge leaves it: ridge points end at the margin (px)."""
-
-EDGE_PX = 10.0
-"""A burst this near to the edge may have arms outside (px)."""

@@ -13,6 +13,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
+from edgewatch.sight.native import records
 from edgewatch.sight.optics import Optics
 from edgewatch.sight.ranks import middle
 
@@ -53,3 +54,19 @@ def read_origin(lines: NDArray[np.float64], optics: Optics) -> tuple[float, floa
     centre = middle(offset)
     spread = MAD_TO_SIGMA * middle(np.abs(offset - centre))
     return centre, MEDIAN_ERROR * spread / math.sqrt(offset.size)
+
+
+def origin_rules(optics: Optics) -> records.OriginRules:
+    """The same for the compiled step."""
+    (x, y), (ax, ay) = optics.contact_px, optics.axis
+    return records.OriginRules(
+        contact_x=x,
+        contact_y=y,
+        axis_x=ax,
+        axis_y=ay,
+        least_cosine=LEAST_COSINE,
+        mad_to_sigma=MAD_TO_SIGMA,
+        median_error=MEDIAN_ERROR,
+        nearest_lines=NEAREST_LINES,
+        least_lines=LEAST_LINES,
+    )

@@ -130,7 +130,7 @@ def _find_compiled(
     lengths: Lengths,
     axis: tuple[float, float],
 ) -> Lines:
-    columns = [records.start(one) for one in (pieces.begin, pieces.end, pieces.axis, pieces.length, pieces.points)]
+    columns = [native.start(one) for one in (pieces.begin, pieces.end, pieces.axis, pieces.length, pieces.points)]
     room = 4 * pieces.length.size + 16
     while True:
         (begin, end), level, whole = np.empty((2, room, 2)), np.empty(room), np.empty(room, np.bool_)
@@ -144,7 +144,7 @@ def _find_compiled(
             native.reference(lengths.memory),
             _RULES,
             room,
-            *map(records.start, (begin, end, level, whole)),
+            *map(native.start, (begin, end, level, whole)),
         )
         if native.enough(found, room):
             return Lines(begin=begin[:found], end=end[:found], level=level[:found], whole=whole[:found])

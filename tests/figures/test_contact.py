@@ -2,12 +2,13 @@
 
 import math
 
+import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import settings as examples
 from hypothesis import strategies as st
 
-from edgewatch.figures.contact import Begin, ContactFinder, End
+from edgewatch.figures.contact import Begin, ContactFinder, End, _Span
 from edgewatch.settings import FigureSettings
 
 FPS = 200.0
@@ -121,3 +122,49 @@ def test_a_weaker_bar_after_a_strong_one_is_found() -> None:
     said = [one for index, count in enumerate(counts) if (one := finder.update(index / 200, count)) is not None]
     assert [type(one) for one in said] == [Begin, End, Begin]
     assert said[2].t_s == pytest.approx(2.0)
+
+
+@given(st.integers(0, 2**32 - 1), st.sampled_from([0.02, 0.05, 0.4]), st.floats(0.05, 0.9))
+@examples(max_examples=80)
+def test_running_sums_are_those_of_the_frames(seed: int, begin_s: float, dark: float) -> None:
+    """Sparks that come and go, frames skipped, clocks set back: begins and ends are those told by counting anew."""
+    anew, finder = Anew(FigureSettings(begin_s=begin_s), FPS), ContactFinder(FigureSettings(begin_s=begin_s), FPS)
+    rng, number = np.random.default_rng(seed), 0
+    for _ in range(500):
+        strong = rng.uniform() < 0.3
+        count = 0 if rng.uniform() < dark else int(rng.choice([40, 60] if strong else [1, 2, 3, 5]))
+        number += int(rng.choice([1, 2, 9, 40, -300], p=[0.9, 0.07, 0.02, 0.006, 0.004]))
+        assert finder.update(number / FPS, count) == anew.update(number / FPS, count)
+        assert (finder.begin_s, finder.last_spark_s) == pytest.approx((anew.begin_s, anew.last_spark_s), nan_ok=True)
+
+
+class Anew(ContactFinder):
+    """Counts the streaks of every span anew from all frames."""
+
+    def update(self, t_s: float, streaks: int) -> Begin | End | None:
+        """As the finder, whose frames are all kept beside its own."""
+        self.seen = [] if t_s <= self._last_s or not self._recent.frames else self.seen
+        self.seen.append((t_s, streaks))
+        self._last = Counted(self, t_s - self._settings.begin_s)
+        return super().update(t_s, streaks)
+
+    def _mean_over(self, span_s: float, t_s: float) -> float:
+        super()._mean_over(span_s, t_s)
+        self.seen = [one for one in self.seen if one[0] >= t_s - span_s + 0.5 / FPS]
+        return sum(count for _, count in self.seen) / len(self.seen)
+
+
+class Counted(_Span):
+    """Those of a finder's frames that are later than a time; what it is told to let go of it never had."""
+
+    def __init__(self, finder: Anew, after_s: float) -> None:
+        super().__init__()
+        for at, count in finder.seen:
+            if at > after_s:
+                super().add(at, count)
+
+    def add(self, t_s: float, streaks: int) -> None:
+        """It has that frame already."""
+
+    def clear(self) -> None:
+        """And is made anew with every frame."""

@@ -8,7 +8,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from edgewatch.figures.tally import MOST_BLOCKS, Tally
+from edgewatch.figures import tally as tally_module
+from edgewatch.figures.tally import LENGTH_BINS, LENGTH_LOW_MM, LENGTH_STEP, MOST_BLOCKS, Tally, _modes
 from edgewatch.sight.detections import StreakFlag
 from tests.bench.bench_judge import reach_coverage
 from tests.figures.seen import OPTICS, busy, seen
@@ -223,3 +224,39 @@ def test_looks_of_streaks_are_means_by_their_number() -> None:
         assert found.streak_peak_dn == pytest.approx(80.0**0.25 * 20.0**0.75)
         assert found.streak_width_px == pytest.approx(2.0**0.25 * 4.0**0.75)
     assert math.isnan(Tally(OPTICS).figures().streak_peak_dn)
+
+
+@pytest.mark.parametrize("most_blocks", [6, MOST_BLOCKS])
+@pytest.mark.parametrize("fps", [60.0, 1000.0])
+def test_figures_do_not_depend_on_when_frames_are_worked_up(
+    fps: float, most_blocks: int, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """One at a time or many, with a gap, a streak that is none, and blocks that are joined on the way."""
+    monkeypatch.setattr(tally_module, "MOST_BLOCKS", most_blocks)
+    optics = dataclasses.replace(OPTICS, fps=fps, exposure_ms=0.9)
+    found = []
+    for most in (1, 7, 32, 10_000):
+        monkeypatch.setattr(tally_module, "MOST_WAITING", most)
+        rng, tally = np.random.default_rng(4), Tally(optics)
+        for frame in range(150):
+            one = busy(rng)
+            if frame == 77:
+                one.streaks[0] = math.nan
+            tally.add(one, t_s=(frame + (30 if frame > 50 else 0)) / fps)
+        found.append(dataclasses.astuple(tally.figures()))
+        assert len(tally._blocks) <= most_blocks
+    assert math.isfinite(sum(found[0][7:17]))
+    for other in found[1:]:
+        assert other == pytest.approx(found[0], rel=1e-9)
+
+
+def test_modes_are_the_centres_of_the_heaviest_stretch() -> None:
+    """Against a convolution of each row, at the ends of the histogram too."""
+    rng = np.random.default_rng(5)
+    weights = rng.poisson(0.3, (40, LENGTH_BINS)) * np.exp(rng.normal(0.0, 0.3, (40, LENGTH_BINS)))
+    weights[:4, 0] = weights[4:8, -1] = 50.0
+    for row, mode in zip(weights, _modes(weights), strict=True):
+        at = int(np.convolve(row, np.array([1.0, 2.0, 3.0, 4.0, 3.0, 2.0, 1.0]), "same").argmax())
+        near = np.arange(max(0, at - 4), min(LENGTH_BINS, at + 5))
+        centre = float(near @ row[near]) / float(row[near].sum()) + 0.5
+        assert mode == pytest.approx(LENGTH_LOW_MM * math.exp(centre * LENGTH_STEP))

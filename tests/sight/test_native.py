@@ -8,6 +8,7 @@ import subprocess
 import sys
 from collections.abc import Callable, Iterator
 from pathlib import Path
+from types import SimpleNamespace
 from typing import Any, TypeVar
 
 import cv2
@@ -178,9 +179,11 @@ def test_arms_are_told_from_streaks_the_same(monkeypatch: pytest.MonkeyPatch) ->
         seen["streaks"] += int(own.streak.sum())
         return own
 
-    monkeypatch.setattr("edgewatch.sight.sight.sort_lines", compared)
+    monkeypatch.setattr("edgewatch.sight.listing.sort_lines", compared)
     optics = make_optics()
     sight = Sight(optics)
+    plain_only = SimpleNamespace(LIBRARY=None)
+    monkeypatch.setattr("edgewatch.sight.listing.native", plain_only)  # the compiled form does not ask ``sort_lines``
     for picture, _ in Scene(optics, Stream(hazard_per_m=3.0), Look(), SEED + 4, 20.5 / optics.fps):
         sight.look(picture)
     assert min(seen.values()) > 3, f"every kind of line has been there: {seen}"

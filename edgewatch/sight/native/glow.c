@@ -1,11 +1,5 @@
-/* Which lines are arms of bursts: see glow.py. */
-#include "lengths.h"
-
-typedef struct {
-    double late_sure, arm_side_px, arm_gap_px, late_gap_px, short_share, radial_cos, across_cos, across_share;
-    double stem_least_px, old_reach;
-    int32_t from_contact, least_arms;
-} ArmRules;
+/* Which lines are arms of bursts, and which bursts are news: see glow.py. */
+#include "glow.h"
 
 /* A line as the tests below read it. */
 typedef struct {
@@ -62,9 +56,9 @@ static int relation(const Line *line, Position p, double gap, const ArmRules *ru
 }
 
 /* Whether a short line points back to a burst of an earlier picture, within reach of its arms. */
-static int of_old(const Line *line, const double *at, const ArmRules *rules)
+static int of_old(const Line *line, const Burst *burst, const ArmRules *rules)
 {
-    Position p = position(line, at);
+    Position p = position(line, (const double[2]){burst->x, burst->y});
     double reach = isfinite(line->typical) ? line->typical * rules->old_reach : 0.0;
     if (!line->is_short || !(p.side < rules->arm_side_px))
         return 0;
@@ -74,9 +68,8 @@ static int of_old(const Line *line, const double *at, const ArmRules *rules)
 
 /* Tells n lines that are streaks from arms, given m bursts of this picture and `olds` of earlier ones. Lines that run on
  * from their burst into an arm are cut there (end is changed). Out: streak (n), arms (m). Returns -1 without memory. */
-EXPORT int edgewatch_sort(int n, const double *begin, double *end, const uint8_t *whole, int m, const double *at,
-                          const double *late, int olds, const double *old, const Lengths *lengths,
-                          const ArmRules *rules, uint8_t *streak, int64_t *arms)
+int sort_lines(int n, const double *begin, double *end, const uint8_t *whole, int m, const double *at, const double *late,
+               int olds, const Burst *old, const Lengths *lengths, const ArmRules *rules, uint8_t *streak, int64_t *arms)
 {
     Line *lines = malloc(sizeof(Line) * ((size_t)n + 1));
     double *cut = malloc(sizeof(double) * ((size_t)n + 1));
@@ -115,7 +108,7 @@ EXPORT int edgewatch_sort(int n, const double *begin, double *end, const uint8_t
     }
     for (int i = 0; i < n; i++) {
         for (int k = 0; k < olds && streak[i]; k++)
-            if (of_old(lines + i, old + 2 * k, rules))
+            if (of_old(lines + i, old + k, rules))
                 streak[i] = 0;
         if (!isnan(cut[i])) {
             end[2 * i] = lines[i].x + cut[i] * lines[i].ux;
@@ -125,4 +118,59 @@ EXPORT int edgewatch_sort(int n, const double *begin, double *end, const uint8_t
     free(lines);
     free(cut);
     return 0;
+}
+
+EXPORT int edgewatch_sort(int n, const double *begin, double *end, const uint8_t *whole, int m, const double *at,
+                          const double *late, int olds, const Burst *old, const Lengths *lengths, const ArmRules *rules,
+                          uint8_t *streak, int64_t *arms)
+{
+    return sort_lines(n, begin, end, whole, m, at, late, olds, old, lengths, rules, streak, arms);
+}
+
+/* Whether a burst is the same as a remembered one, whose cloud of arms has drifted on along the flight. */
+static int is_near(const double *at, const Burst *old, const Lengths *lengths, const NewsRules *rules)
+{
+    double ax = old->x - lengths->contact_x, ay = old->y - lengths->contact_y, away = sqrt(ax * ax + ay * ay), drift = 0.0;
+    away = away > 1e-6 ? away : 1e-6;
+    ax /= away;
+    ay /= away;
+    if (lengths->number) {
+        double age = old->age * rules->period_s;
+        age = age < rules->drift_s ? age : rules->drift_s;
+        drift = rules->drift_share * exp(expected(lengths, old->x, old->y)) / rules->exposure_s * age;
+    }
+    double gx = at[0] - old->x, gy = at[1] - old->y, on = gx * ax + gy * ay;
+    on = on < 0.0 ? 0.0 : on > drift ? drift : on; /* the nearest point of the way it may have come */
+    gx -= on * ax;
+    gy -= on * ay;
+    return gx * gx + gy * gy < rules->same_px * rules->same_px;
+}
+
+void find_news(const Apexes *apexes, int olds, const Burst *old, double sure, const Lengths *lengths,
+               const NewsRules *rules, uint8_t *news)
+{
+    for (int j = 0; j < apexes->number; j++) {
+        int near = 0;
+        if (apexes->late[j] > rules->late_sure)
+            for (int k = 0; k < olds; k++)
+                if (is_near(apexes->at + 2 * j, old + k, lengths, rules))
+                    near |= 1 | (old[k].sure >= sure) << 1;
+        news[j] = 0;
+        for (int bit = 1; bit <= 2; bit <<= 1)
+            if (apexes->fresh[j] >= (near & bit ? rules->fresh_near : rules->fresh_least))
+                news[j] |= (uint8_t)bit;
+    }
+}
+
+int remember(const Apexes *apexes, int olds, const Burst *old, const NewsRules *rules, Burst *kept)
+{
+    int number = 0;
+    for (int k = 0; k < olds; k++)
+        if (old[k].age + 1.0 <= rules->pictures) {
+            kept[number] = old[k];
+            kept[number++].age += 1.0;
+        }
+    for (int j = 0; j < apexes->number && rules->pictures >= 1; j++)
+        kept[number++] = (Burst){apexes->at[2 * j], apexes->at[2 * j + 1], apexes->sure[j], 1.0};
+    return number;
 }

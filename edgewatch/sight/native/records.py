@@ -3,8 +3,7 @@
 from __future__ import annotations
 
 import ctypes
-from ctypes import c_char, c_double, c_float, c_int32, c_void_p
-from typing import Any
+from ctypes import c_double, c_float, c_int32, c_uint8, c_void_p
 
 import numpy as np
 from numpy.typing import NDArray
@@ -160,11 +159,51 @@ def picture(blurred: NDArray[np.float32]) -> Picture:
     return Picture(native.place(blurred), *blurred.shape)
 
 
-_START = c_char * 0
+class NewsRules(ctypes.Structure):
+    """Which bursts are news, and how long others are remembered."""
+
+    _fields_ = (
+        *((name, c_double) for name in ("same_px", "fresh_least", "fresh_near", "late_sure")),
+        *((name, c_double) for name in ("drift_share", "drift_s", "period_s", "exposure_s")),
+        ("pictures", c_int32),
+    )
 
 
-def start(array: NDArray[Any]) -> ctypes.Array[c_char]:
-    """Where a contiguous array that may be written to begins, as a call takes it: in a third of the time that
-    ``native.place`` takes. Raises ``TypeError`` for any other array.
-    """
-    return _START.from_buffer(array.data)
+class OriginRules(ctypes.Structure):
+    """From which lines their origin is told."""
+
+    _fields_ = (
+        *((name, c_double) for name in ("contact_x", "contact_y", "axis_x", "axis_y")),
+        *((name, c_double) for name in ("least_cosine", "mad_to_sigma", "median_error")),
+        *((name, c_int32) for name in ("nearest_lines", "least_lines")),
+    )
+
+
+class ListRules(ctypes.Structure):
+    """What is listed of a picture, and its flags."""
+
+    _fields_ = (
+        *((name, c_double) for name in ("least_snr", "least_length_px", "rate_sure", "cut_px", "edge_px")),
+        *((name, c_int32) for name in ("width", "height")),
+        *((name, c_uint8) for name in ("cut_begin", "cut_end", "late", "edge")),
+    )
+
+
+class Listed(ctypes.Structure):
+    """Where room for the list is, and what else is told of the picture."""
+
+    _fields_ = (
+        *((name, c_void_p) for name in ("streaks", "snr", "bursts", "streak_flags", "burst_flags", "arms")),
+        *((name, c_double) for name in ("track_px", "middle_snr", "origin_offset_px", "origin_error_px")),
+        *((name, c_int32) for name in ("streak_count", "burst_count", "rate_bursts", "remembered")),
+    )
+
+
+class WidthRules(ctypes.Structure):
+    """At which points across lines their width is read."""
+
+    _fields_ = (
+        *((name, c_double) for name in ("least_length_px", "profile_px", "step_px", "least_top")),
+        ("parts", c_void_p),
+        *((name, c_int32) for name in ("part_count", "samples", "most_lines")),
+    )
