@@ -109,3 +109,12 @@ class ArmRules(ctypes.Structure):
 def picture(blurred: NDArray[np.float32]) -> Picture:
     """The record of a picture, float32 (H, W)."""
     return Picture(native.place(blurred), *blurred.shape)
+
+
+class RidgeRules(ctypes.Structure):
+    """What makes a ridge point, and the blur's taps."""
+
+    _fields_ = (
+        *((name, c_float) for name in ("threshold", "crest_px", "least_bend")),
+        *((name, c_int32) for name in ("margin", "inner", "outer")),
+    )
