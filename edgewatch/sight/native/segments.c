@@ -10,18 +10,73 @@ static int32_t root_of(int32_t *parent, int32_t point)
     return point;
 }
 
-static void link_pair(const float *x, const float *y, const float *cosine, const float *sine, float least_cos,
-                      float most_off, int32_t *parent, int32_t i, int32_t j)
+static void join_roots(int32_t *parent, int32_t i, int32_t j)
 {
-    float gx = x[j] - x[i], gy = y[j] - y[i];
-    if (fabsf(cosine[i] * cosine[j] + sine[i] * sine[j]) < least_cos ||
-        fabsf(gx * sine[i] - gy * cosine[i]) > most_off || fabsf(gx * sine[j] - gy * cosine[j]) > most_off)
-        return;
     int32_t a = root_of(parent, i), b = root_of(parent, j);
     if (a < b)
         parent[a] = b;
     else
         parent[b] = a;
+}
+
+enum { ROWS = 3 }; /* a point is linked to others of its row and of the two below */
+
+/* Which points are linked: of each, a later one or itself. A point is looked at with those that are up to along[k] columns from
+ * it in the k-th row below, as far as direction and position agree. Returns -1 without memory, otherwise 0. */
+static int link_points(int count, const int32_t *index, const float *x, const float *y, const float *cosine,
+                       const float *sine, int width, const int32_t *along, float least_cos, float most_off,
+                       int32_t *parent)
+{
+    int reach = along[0];
+    for (int k = 1; k < ROWS; k++)
+        reach = along[k] > reach ? along[k] : reach;
+    size_t across = (size_t)width + 2 * (size_t)reach, most = (size_t)width * ROWS * (2 * (size_t)reach + 1) + 1;
+    int32_t *numbers = malloc(sizeof(int32_t) * (ROWS * across + 2 * most));
+    if (!numbers)
+        return -1;
+    int32_t *one = numbers + ROWS * across, *other = one + most;
+    memset(numbers, -1, sizeof(int32_t) * ROWS * across); /* of the points in these rows, -1 where there is none */
+    for (int i = 0, ahead = 0, row = count ? index[0] / width : 0; i < count; row++) {
+        for (; ahead < count && index[ahead] < (row + ROWS) * width; ahead++) {
+            int32_t line = index[ahead] / width;
+            numbers[(size_t)(line % ROWS) * across + reach + index[ahead] - line * width] = ahead;
+        }
+        int32_t *own = numbers + (row % ROWS) * across + reach - row * width;
+        const int32_t *next = numbers + ((row + 1) % ROWS) * across + reach - row * width;
+        const int32_t *after = numbers + ((row + 2) % ROWS) * across + reach - row * width;
+        int begin = i, pairs = 0, good = 0;
+        for (; i < count && index[i] < (row + 1) * width; i++) {
+            int32_t at = index[i];
+            /* each is written, and the next one over it where there is no point */
+            for (int k = 1; k <= along[0]; k++) {
+                one[pairs] = i;
+                pairs += (other[pairs] = own[at + k]) >= 0;
+            }
+            for (int k = -along[1]; k <= along[1]; k++) {
+                one[pairs] = i;
+                pairs += (other[pairs] = next[at + k]) >= 0;
+            }
+            for (int k = -along[2]; k <= along[2]; k++) {
+                one[pairs] = i;
+                pairs += (other[pairs] = after[at + k]) >= 0;
+            }
+        }
+        for (int k = begin; k < i; k++)
+            own[index[k]] = -1;
+        for (int k = 0; k < pairs; k++) {
+            int32_t a = one[k], b = other[k];
+            float gx = x[b] - x[a], gy = y[b] - y[a];
+            one[good] = a;
+            other[good] = b;
+            good += (fabsf(cosine[a] * cosine[b] + sine[a] * sine[b]) >= least_cos) &
+                    (fabsf(gx * sine[a] - gy * cosine[a]) <= most_off) &
+                    (fabsf(gx * sine[b] - gy * cosine[b]) <= most_off);
+        }
+        for (int k = 0; k < good; k++)
+            join_roots(parent, one[k], other[k]);
+    }
+    free(numbers);
+    return 0;
 }
 
 /* Straight pieces of `count` ridge points, whose pixels rise; columns as edgewatch_ridges left them, `stride` apart. A point
@@ -41,21 +96,10 @@ EXPORT int edgewatch_segments(int count, const int32_t *index, const float *colu
         parent[i] = i;
         size[i] = 0;
     }
-    for (int i = 0, below = 0, second = 0; i < count; i++) {
-        int32_t here = index[i], next = here + width, after = here + 2 * width;
-        for (int j = i + 1; j < count && index[j] <= here + along[0]; j++)
-            link_pair(x, y, cosine, sine, least_cos, most_off, parent, i, j);
-        while (below < count && index[below] < next - along[1])
-            below++;
-        for (int j = below; j < count && index[j] <= next + along[1]; j++)
-            link_pair(x, y, cosine, sine, least_cos, most_off, parent, i, j);
-        while (second < count && index[second] < after - along[2])
-            second++;
-        for (int j = second; j < count && index[j] <= after + along[2]; j++)
-            link_pair(x, y, cosine, sine, least_cos, most_off, parent, i, j);
-    }
-    for (int i = 0; i < count; i++)
-        size[root_of(parent, i)]++;
+    if (link_points(count, index, x, y, cosine, sine, width, along, least_cos, most_off, parent) < 0)
+        return -1;
+    for (int i = count - 1; i >= 0; i--) /* a parent comes later, so it has its root already */
+        size[parent[i] = parent[parent[i]]]++;
     int n = 0; /* pieces are numbered in the order of their last point */
     for (int i = 0; i < count; i++)
         piece[i] = parent[i] == i && size[i] >= least_points ? n++ : -1;
@@ -63,7 +107,7 @@ EXPORT int edgewatch_segments(int count, const int32_t *index, const float *colu
     if (!sum)
         return -1;
     for (int i = 0; i < count; i++) {
-        int own = piece[i] = piece[root_of(parent, i)];
+        int own = piece[i] = piece[parent[i]];
         if (own < 0)
             continue;
         double px = x[i], py = y[i], *s = sum + 7 * (size_t)own;
@@ -82,10 +126,13 @@ EXPORT int edgewatch_segments(int count, const int32_t *index, const float *colu
         double *s = sum + 7 * (size_t)k, share = 1.0 / (double)points[k];
         double mx = s[0] * share, my = s[1] * share;
         double sxx = s[2] * share - mx * mx, syy = s[3] * share - my * my, sxy = s[4] * share - mx * my;
-        double angle = 0.5 * atan2(2.0 * sxy, sxx - syy);
-        double off = 0.5 * (sxx + syy) - hypot(0.5 * (sxx - syy), sxy);
-        axis[2 * k] = cos(angle);
-        axis[2 * k + 1] = sin(angle);
+        /* the direction from the cosine and sine of twice its angle */
+        double p = sxx - syy, q = 2.0 * sxy, r = sqrt(p * p + q * q);
+        double c2 = r > 0.0 ? p / r : 1.0, s2 = r > 0.0 ? q / r : 0.0;
+        double large = sqrt(0.5 * (1.0 + fabs(c2))), small = 0.5 * fabs(s2) / large;
+        double off = 0.5 * (sxx + syy) - 0.5 * r;
+        axis[2 * k] = c2 >= 0.0 ? large : small;
+        axis[2 * k + 1] = copysign(c2 >= 0.0 ? small : large, q);
         height[k] = s[5] * share;
         curve[k] = s[6] * share;
         spread[k] = off > 0.0 ? sqrt(off) : 0.0;
