@@ -10,82 +10,83 @@ static int32_t root_of(int32_t *parent, int32_t point)
     return point;
 }
 
-static void join_roots(int32_t *parent, int32_t i, int32_t j)
+/* A point is linked to those of its neighbours (columns, rows away) that are points. */
+enum { ROWS = 3, REACH = 2, NEIGHBOURS = 10, BATCH = 512 };
+static const int NEIGHBOUR[NEIGHBOURS][2] = {{1, 0}, {2, 0}, {-2, 1}, {-1, 1}, {0, 1},
+                                             {1, 1}, {2, 1}, {-1, 2}, {0, 2},  {1, 2}};
+
+/* Links those of some pairs of points whose direction and position agree; the pairs are used up. */
+static void link_pairs(const float *x, const float *y, const float *cosine, const float *sine, float least_cos,
+                       float most_off, int32_t *one, int32_t *other, int pairs, int32_t *parent)
 {
-    int32_t a = root_of(parent, i), b = root_of(parent, j);
-    if (a < b)
-        parent[a] = b;
-    else
-        parent[b] = a;
+    int good = 0;
+    for (int k = 0; k < pairs; k++) {
+        int32_t i = one[k], j = other[k];
+        float gx = x[j] - x[i], gy = y[j] - y[i];
+        one[good] = i;
+        other[good] = j;
+        good += (fabsf(cosine[i] * cosine[j] + sine[i] * sine[j]) >= least_cos) &
+                (fabsf(gx * sine[i] - gy * cosine[i]) <= most_off) &
+                (fabsf(gx * sine[j] - gy * cosine[j]) <= most_off);
+    }
+    for (int k = 0; k < good; k++) {
+        int32_t a = root_of(parent, one[k]), b = root_of(parent, other[k]);
+        if (a < b)
+            parent[a] = b;
+        else
+            parent[b] = a;
+    }
 }
 
-enum { ROWS = 3 }; /* a point is linked to others of its row and of the two below */
-
-/* Which points are linked: of each, a later one or itself. A point is looked at with those that are up to along[k] columns from
- * it in the k-th row below, as far as direction and position agree. Returns -1 without memory, otherwise 0. */
+/* Links `count` points, whose pixels rise: each has a later one as parent, or itself. Returns -1 without memory, otherwise
+ * 0. */
 static int link_points(int count, const int32_t *index, const float *x, const float *y, const float *cosine,
-                       const float *sine, int width, const int32_t *along, float least_cos, float most_off,
-                       int32_t *parent)
+                       const float *sine, int width, float least_cos, float most_off, int32_t *parent)
 {
-    int reach = along[0];
-    for (int k = 1; k < ROWS; k++)
-        reach = along[k] > reach ? along[k] : reach;
-    size_t across = (size_t)width + 2 * (size_t)reach, most = (size_t)width * ROWS * (2 * (size_t)reach + 1) + 1;
+    size_t across = (size_t)width + 2 * REACH, most = BATCH + NEIGHBOURS;
     int32_t *numbers = malloc(sizeof(int32_t) * (ROWS * across + 2 * most));
     if (!numbers)
         return -1;
     int32_t *one = numbers + ROWS * across, *other = one + most;
+    int row = count ? index[0] / width : 0, read = row, pairs = 0;
     memset(numbers, -1, sizeof(int32_t) * ROWS * across); /* of the points in these rows, -1 where there is none */
-    for (int i = 0, ahead = 0, row = count ? index[0] / width : 0; i < count; row++) {
-        for (; ahead < count && index[ahead] < (row + ROWS) * width; ahead++) {
-            int32_t line = index[ahead] / width;
-            numbers[(size_t)(line % ROWS) * across + reach + index[ahead] - line * width] = ahead;
+    for (int i = 0, ahead = 0; i < count; row++) {
+        for (; read < row + ROWS; read++) {
+            int32_t *line = numbers + (size_t)(read % ROWS) * across + REACH, first = read * width;
+            for (; ahead < count && index[ahead] < first + width; ahead++)
+                line[index[ahead] - first] = ahead;
         }
-        int32_t *own = numbers + (row % ROWS) * across + reach - row * width;
-        const int32_t *next = numbers + ((row + 1) % ROWS) * across + reach - row * width;
-        const int32_t *after = numbers + ((row + 2) % ROWS) * across + reach - row * width;
-        int begin = i, pairs = 0, good = 0;
-        for (; i < count && index[i] < (row + 1) * width; i++) {
-            int32_t at = index[i];
-            /* each is written, and the next one over it where there is no point */
-            for (int k = 1; k <= along[0]; k++) {
+        int32_t *own = numbers + (size_t)(row % ROWS) * across + REACH, first = row * width, begin = i;
+        const int32_t *neighbour[NEIGHBOURS];
+        for (int k = 0; k < NEIGHBOURS; k++)
+            neighbour[k] = numbers + (size_t)((row + NEIGHBOUR[k][1]) % ROWS) * across + REACH + NEIGHBOUR[k][0];
+        for (; i < count && index[i] < first + width; i++) {
+            int32_t column = index[i] - first;
+            for (int k = 0; k < NEIGHBOURS; k++) { /* each is written, and the next one over it where there is no point */
+                int32_t number = neighbour[k][column];
                 one[pairs] = i;
-                pairs += (other[pairs] = own[at + k]) >= 0;
+                other[pairs] = number;
+                pairs += number >= 0;
             }
-            for (int k = -along[1]; k <= along[1]; k++) {
-                one[pairs] = i;
-                pairs += (other[pairs] = next[at + k]) >= 0;
-            }
-            for (int k = -along[2]; k <= along[2]; k++) {
-                one[pairs] = i;
-                pairs += (other[pairs] = after[at + k]) >= 0;
+            if (pairs >= BATCH) {
+                link_pairs(x, y, cosine, sine, least_cos, most_off, one, other, pairs, parent);
+                pairs = 0;
             }
         }
-        for (int k = begin; k < i; k++)
-            own[index[k]] = -1;
-        for (int k = 0; k < pairs; k++) {
-            int32_t a = one[k], b = other[k];
-            float gx = x[b] - x[a], gy = y[b] - y[a];
-            one[good] = a;
-            other[good] = b;
-            good += (fabsf(cosine[a] * cosine[b] + sine[a] * sine[b]) >= least_cos) &
-                    (fabsf(gx * sine[a] - gy * cosine[a]) <= most_off) &
-                    (fabsf(gx * sine[b] - gy * cosine[b]) <= most_off);
-        }
-        for (int k = 0; k < good; k++)
-            join_roots(parent, one[k], other[k]);
+        for (; begin < i; begin++)
+            own[index[begin] - first] = -1;
     }
+    link_pairs(x, y, cosine, sine, least_cos, most_off, one, other, pairs, parent);
     free(numbers);
     return 0;
 }
 
-/* Straight pieces of `count` ridge points, whose pixels rise; columns as edgewatch_ridges left them, `stride` apart. A point
- * is linked to those up to along[k] columns from it in the k-th row below. work: 3 * count. Out, with room for
- * count / least_points: ends (3, room, 2), begin, end and axis; values (4, room), length, height, bend and spread. Returns
- * how many, or -1 without memory. */
+/* Straight pieces of `count` ridge points, whose pixels rise; columns as edgewatch_ridges left them, `stride` apart. work:
+ * 3 * count. Out, with room for count / least_points + 1: ends (3, room, 2), begin, end and axis; values (4, room), length,
+ * height, bend and spread. Returns how many, or -1 without memory. */
 EXPORT int edgewatch_segments(int count, const int32_t *index, const float *columns, int stride, int width,
-                              const int32_t *along, float least_cos, float most_off, int least_points, int32_t *work,
-                              double *ends, double *values, int64_t *points, int room)
+                              float least_cos, float most_off, int least_points, int32_t *work, double *ends,
+                              double *values, int64_t *points, int room)
 {
     const float *x = columns, *y = x + stride, *cosine = y + stride, *sine = cosine + stride, *level = sine + stride;
     const float *bend = level + stride;
@@ -96,21 +97,28 @@ EXPORT int edgewatch_segments(int count, const int32_t *index, const float *colu
         parent[i] = i;
         size[i] = 0;
     }
-    if (link_points(count, index, x, y, cosine, sine, width, along, least_cos, most_off, parent) < 0)
+    if (link_points(count, index, x, y, cosine, sine, width, least_cos, most_off, parent) < 0)
         return -1;
     for (int i = count - 1; i >= 0; i--) /* a parent comes later, so it has its root already */
         size[parent[i] = parent[parent[i]]]++;
-    int n = 0; /* pieces are numbered in the order of their last point */
-    for (int i = 0; i < count; i++)
-        piece[i] = parent[i] == i && size[i] >= least_points ? n++ : -1;
-    double *sum = calloc(7 * (size_t)(n ? n : 1), sizeof(double));
+    int n = 0; /* pieces are numbered in the order of their last point; each is written, and the next one over it if it is
+                * none */
+    for (int i = 0; i < count; i++) {
+        int own = (parent[i] == i) & (size[i] >= least_points);
+        piece[i] = own ? n : -1;
+        points[n] = size[i];
+        n += own;
+    }
+    double *sum = calloc(7 * ((size_t)n + 1), sizeof(double)); /* after the last piece, of all that is in none */
     if (!sum)
         return -1;
+    axis[2 * n] = axis[2 * n + 1] = 0.0;
+    for (int i = count - 1; i >= 0; i--) { /* a piece is asked for by its last point first */
+        int own = piece[parent[i]];
+        piece[i] = own < 0 ? n : own;
+    }
     for (int i = 0; i < count; i++) {
-        int own = piece[i] = piece[parent[i]];
-        if (own < 0)
-            continue;
-        double px = x[i], py = y[i], *s = sum + 7 * (size_t)own;
+        double px = x[i], py = y[i], *s = sum + 7 * (size_t)piece[i];
         s[0] += px;
         s[1] += py;
         s[2] += px * px;
@@ -119,9 +127,6 @@ EXPORT int edgewatch_segments(int count, const int32_t *index, const float *colu
         s[5] += level[i];
         s[6] += bend[i];
     }
-    for (int i = 0; i < count; i++) /* a root's piece is overwritten with itself above, so sizes can move over now */
-        if (parent[i] == i && piece[i] >= 0)
-            points[piece[i]] = size[i];
     for (int k = 0; k < n; k++) {
         double *s = sum + 7 * (size_t)k, share = 1.0 / (double)points[k];
         double mx = s[0] * share, my = s[1] * share;
@@ -143,8 +148,6 @@ EXPORT int edgewatch_segments(int count, const int32_t *index, const float *colu
     }
     for (int i = 0; i < count; i++) {
         int own = piece[i];
-        if (own < 0)
-            continue;
         double *s = sum + 7 * (size_t)own;
         double along = (double)x[i] * axis[2 * own] + (double)y[i] * axis[2 * own + 1];
         s[2] = along < s[2] ? along : s[2];
