@@ -153,13 +153,13 @@ class Background:
         due = self._noise_is_due
         over, state = np.empty(picture.shape, np.uint8), self._state
         other_scene = native.LIBRARY.edgewatch_excess(
-            native.place(picture),
-            native.place(self._pattern),
-            native.place(self._pattern_cells),
-            native.place(self._cells),
+            native.start(picture),
+            native.start(self._pattern),
+            native.start(self._pattern_cells),
+            native.start(self._cells),
             *picture.shape,
             _RULES_DUE if due else _RULES,
-            native.place(over),
+            native.start(over),
             native.reference(state),
         )
         native.enough(other_scene, 1)
@@ -224,11 +224,11 @@ class Background:
         assert self._pattern is not None
         assert self._pattern_cells is not None
         done = native.LIBRARY.edgewatch_follow(
-            native.place(picture),
-            native.place(self._pattern),
+            native.start(picture),
+            native.start(self._pattern),
             *picture.shape,
             self._steps % UP_EVERY == 0,
-            native.place(self._pattern_cells),
+            native.start(self._pattern_cells),
         )
         native.enough(done, 0)
 
@@ -254,7 +254,7 @@ def _cells(picture: NDArray[np.uint8], small: tuple[int, int]) -> NDArray[np.flo
     """Means in cells (DN, whole), float32 in (columns, rows) as ``small`` has them."""
     if native.LIBRARY and _divides(picture.shape):
         picture, cells = np.ascontiguousarray(picture), np.empty(small[::-1], np.float32)
-        native.enough(native.LIBRARY.edgewatch_cells(native.place(picture), *picture.shape, native.place(cells)), 0)
+        native.enough(native.LIBRARY.edgewatch_cells(native.start(picture), *picture.shape, native.start(cells)), 0)
         return cells
     return np.asarray(_cv.resize(picture, small, interpolation=_cv.INTER_AREA).astype(np.float32))
 

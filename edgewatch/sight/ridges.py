@@ -137,13 +137,13 @@ def _find_compiled(excess: NDArray[np.uint8], noise_dn: float) -> Ridges:
     while True:
         index, columns = np.empty(room + 1, np.int32), np.empty((7, room + 1), np.float32)
         count = native.LIBRARY.edgewatch_ridges(
-            native.place(excess),
+            native.start(excess),
             height,
             width,
             native.reference(rules),
-            native.place(blurred),
-            native.place(index),
-            native.place(columns),
+            native.start(blurred),
+            native.start(index),
+            native.start(columns),
             room,
         )
         if native.enough(count, room):

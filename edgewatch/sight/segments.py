@@ -59,17 +59,17 @@ def _find_compiled(ridges: Ridges, columns: NDArray[np.float32]) -> Segments:
     ends, values = np.empty((3, room, 2)), np.empty((4, room))
     found = native.LIBRARY.edgewatch_segments(
         count,
-        native.place(ridges.index),
-        native.place(columns),
+        native.start(ridges.index),
+        native.start(columns),
         columns.shape[1],
         ridges.blurred.shape[1],
         native.single(LINK_COS),
         native.single(LINK_OFFSET_PX),
         LEAST_POINTS,
-        native.place(work),
-        native.place(ends),
-        native.place(values),
-        native.place(numbers),
+        native.start(work),
+        native.start(ends),
+        native.start(values),
+        native.start(numbers),
         room,
     )
     native.enough(found, room)

@@ -51,9 +51,22 @@ reference = ctypes.byref
 """A record as they take it."""
 
 
+_NO_BYTES = ctypes.c_char * 0
+
+
 def place(array: NDArray[Any], skipped: int = 0) -> ctypes.c_void_p:
     """Where a contiguous array begins in memory, or the value after so many of it. The caller keeps the array alive."""
     return ctypes.c_void_p(array.__array_interface__["data"][0] + skipped * array.itemsize)
+
+
+def start(array: NDArray[Any]) -> Any:
+    """Where a contiguous array begins, as an argument of a compiled step: a fifth of what ``place`` costs, but no value of
+    a record. It keeps the array alive.
+    """
+    try:
+        return _NO_BYTES.from_buffer(array)
+    except (TypeError, ValueError):  # read-only, as a picture may be
+        return place(array)
 
 
 def enough(found: int, room: int) -> bool:
