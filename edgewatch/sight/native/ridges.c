@@ -1,7 +1,7 @@
 /* Ridge points of a picture: see ridges.py. */
 #include "kernels.h"
 
-enum { BATCH = 256, BLOCK = 32, REACH = 2 }; /* REACH: of the blur */
+enum { BATCH = 256, BLOCK = 32, REACH = 2, TAPS = 2 * REACH + 1 }; /* the last two: of the blur */
 
 typedef struct {
     float threshold, crest_px, least_bend;
@@ -28,11 +28,18 @@ static int mirrored(int at, int size)
     return size > 1 ? at : 0;
 }
 
-/* Weighted sum over five rows, in 1/256. */
-WIDE static void blur_down(const uint8_t *const *rows, float *restrict sum, int width, int inner, int outer)
+WIDE static void widen_row(const uint8_t *restrict row, uint16_t *restrict wide, int width)
 {
-    const uint8_t *a = rows[0], *b = rows[1], *c = rows[2], *d = rows[3], *e = rows[4];
-    uint16_t beside = (uint16_t)inner, beyond = (uint16_t)outer, own = (uint16_t)(256 - 2 * inner - 2 * outer);
+    for (int x = 0; x < width; x++)
+        wide[x] = row[x];
+}
+
+/* Weighted sum over five rows, in 1/256, which fits in 16 bits. */
+WIDE static void blur_down(const uint16_t *const *rows, float *restrict sum, int width, const RidgeRules *rules)
+{
+    const uint16_t *a = rows[0], *b = rows[1], *c = rows[2], *d = rows[3], *e = rows[4];
+    uint16_t beside = (uint16_t)rules->inner, beyond = (uint16_t)rules->outer;
+    uint16_t own = (uint16_t)(256 - 2 * rules->inner - 2 * rules->outer);
     for (int x = 0; x < width; x++) {
         uint16_t two = (uint16_t)(a[x] + e[x]), near = (uint16_t)(b[x] + d[x]);
         sum[x] = (float)(uint16_t)(own * c[x] + beside * near + beyond * two);
@@ -66,21 +73,18 @@ WIDE static void blur_along(const float *restrict sum, float *restrict blurred, 
         *lit = (uint8_t)blur_block(sum + from, blurred + from, width - from, own, beside, beyond, threshold);
 }
 
+#define EIGHT_BITS(k) 1u << (k), 2u << (k), 4u << (k), 8u << (k), 16u << (k), 32u << (k), 64u << (k), 128u << (k)
+static const uint32_t BITS[BLOCK] = {EIGHT_BITS(0), EIGHT_BITS(8), EIGHT_BITS(16), EIGHT_BITS(24)};
+
 /* A bit for each of the first `size` pixels of a block that is above the threshold and a local maximum along its row or
  * its column. */
 static inline uint32_t tops_of_block(const float *at, int width, int size, float threshold)
 {
-    uint8_t top[BLOCK] = {0};
     uint32_t bits = 0;
     for (int k = 0; k < size; k++) {
         float own = at[k];
         int along = (own >= at[k - 1]) & (own > at[k + 1]), down = (own >= at[k - width]) & (own > at[k + width]);
-        top[k] = (uint8_t)((own > threshold) & (along | down));
-    }
-    for (int k = 0; k < BLOCK; k += 8) { /* eight bytes of 0 or 1 to eight bits: the product puts them side by side */
-        uint64_t eight;
-        memcpy(&eight, top + k, sizeof eight);
-        bits |= (uint32_t)(eight * 0x0102040810204080 >> 56) << k;
+        bits |= (own > threshold) & (along | down) ? BITS[k] : 0;
     }
     return bits;
 }
@@ -178,17 +182,20 @@ EXPORT int edgewatch_ridges(const uint8_t *excess, int height, int width, const 
     size_t blocks = (size_t)(width + BLOCK - 1) / BLOCK, room = (size_t)width + BATCH;
     float *line = malloc(sizeof(float) * ((size_t)width + 2 * REACH));
     int32_t *work = malloc(sizeof(int32_t) * 2 * room);
+    uint16_t *wide = malloc(sizeof(uint16_t) * TAPS * (size_t)width); /* the rows that the blur takes in */
     uint8_t *lit = malloc(2 * blocks);
     int answer = -1;
-    if (!line || !work || !lit)
+    if (!line || !work || !wide || !lit)
         goto done;
     Tops tops = {work, work + room, 0};
     float *sum = line + REACH;
-    for (int row = 0; row < height; row++) {
-        const uint8_t *rows[2 * REACH + 1];
-        for (int k = -REACH; k <= REACH; k++)
-            rows[k + REACH] = excess + (size_t)mirrored(row + k, height) * width;
-        blur_down(rows, sum, width, rules->inner, rules->outer);
+    for (int row = 0, read = 0; row < height; row++) {
+        const uint16_t *rows[TAPS];
+        for (; read <= row + REACH && read < height; read++)
+            widen_row(excess + (size_t)read * width, wide + (size_t)(read % TAPS) * width, width);
+        for (int k = 0; k < TAPS; k++)
+            rows[k] = wide + (size_t)(mirrored(row + k - REACH, height) % TAPS) * width;
+        blur_down(rows, sum, width, rules);
         for (int k = 1; k <= REACH; k++) {
             sum[-k] = sum[mirrored(-k, width)];
             sum[width - 1 + k] = sum[mirrored(width - 1 + k, width)];
@@ -209,6 +216,7 @@ EXPORT int edgewatch_ridges(const uint8_t *excess, int height, int width, const 
 done:
     free(line);
     free(work);
+    free(wide);
     free(lit);
     return answer;
 }
