@@ -30,11 +30,13 @@ static void link_pairs(const float *x, const float *y, const float *cosine, cons
                 (fabsf(gx * sine[j] - gy * cosine[j]) <= most_off);
     }
     for (int k = 0; k < good; k++) {
-        int32_t a = root_of(parent, one[k]), b = root_of(parent, other[k]);
-        if (a < b)
-            parent[a] = b;
-        else
-            parent[b] = a;
+        int32_t a = parent[one[k]], b = parent[other[k]];
+        if (a == b)
+            continue;
+        a = root_of(parent, a);
+        b = root_of(parent, b);
+        int32_t low = a < b ? a : b, high = a < b ? b : a;
+        parent[low] = parent[one[k]] = parent[other[k]] = high;
     }
 }
 
