@@ -30,8 +30,8 @@ _PARTS = 256
 _GAUSS = np.exp(-0.5 * (np.arange(3) / BLUR_PX) ** 2)
 _OUTER, _INNER = (round(float(_PARTS * _GAUSS[k] / (2.0 * _GAUSS.sum() - 1.0))) for k in (2, 1))
 _TAPS = np.asarray([_OUTER, _INNER, _PARTS - 2 * (_OUTER + _INNER), _INNER, _OUTER], np.float32) / np.float32(_PARTS)
-"""The Gaussian in whole 1/256 that sum to one: every value of the blurred picture is then a whole number of 1/65536 below
-2^24 of them, which single precision holds exactly, in whatever order it is added up."""
+"""The Gaussian rounded to whole 1/256 that sum to one: a value of the blurred picture is then a whole number of
+1/65536, below 2^24 of them, which single precision holds exactly, in whatever order it is added up."""
 
 NOISE_GAIN = float((_TAPS**2).sum())
 """Noise of the blurred picture per noise of the picture (white noise, separable kernel)."""
