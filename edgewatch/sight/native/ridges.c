@@ -59,18 +59,24 @@ static inline int blur_block(const float *restrict sum, float *restrict blurred,
     return lit;
 }
 
-/* Blurs a row along, in 1/65536: whole numbers below 2^24 of them, exact in whatever order they are added. Says which of
- * its blocks have something above the threshold. sum has REACH more at either end. */
-WIDE static void blur_along(const float *restrict sum, float *restrict blurred, uint8_t *restrict lit, int width,
-                            const RidgeRules *rules)
+/* Blurs a row along, in 1/65536: whole numbers below 2^24 of them, exact in whatever order they are added. Where a
+ * block begins that has something above the threshold goes into lit; returns how many. sum has REACH more at either end.
+ * lit: as many as there are blocks, and one. */
+WIDE static int blur_along(const float *restrict sum, float *restrict blurred, int32_t *restrict lit, int width,
+                           const RidgeRules *rules)
 {
     const float part = 1.0f / 65536.0f, beside = part * (float)rules->inner, beyond = part * (float)rules->outer;
     const float own = part * (float)(256 - 2 * rules->inner - 2 * rules->outer), threshold = rules->threshold;
-    int from = 0;
-    for (; from + BLOCK <= width; from += BLOCK)
-        *lit++ = (uint8_t)blur_block(sum + from, blurred + from, BLOCK, own, beside, beyond, threshold);
-    if (from < width)
-        *lit = (uint8_t)blur_block(sum + from, blurred + from, width - from, own, beside, beyond, threshold);
+    int from = 0, found = 0;
+    for (; from + BLOCK <= width; from += BLOCK) { /* each is written, and the next one over it unless it is lit */
+        lit[found] = from;
+        found += blur_block(sum + from, blurred + from, BLOCK, own, beside, beyond, threshold);
+    }
+    if (from < width) {
+        lit[found] = from;
+        found += blur_block(sum + from, blurred + from, width - from, own, beside, beyond, threshold);
+    }
+    return found;
 }
 
 #define EIGHT_BITS(k) 1u << (k), 2u << (k), 4u << (k), 8u << (k), 16u << (k), 32u << (k), 64u << (k), 128u << (k)
@@ -89,15 +95,15 @@ static inline uint32_t tops_of_block(const float *at, int width, int size, float
     return bits;
 }
 
-/* Pixels of a row that may be ridge points, nowhere nearer to its ends than the margin. The row has neighbours. */
-WIDE static void find_tops(const float *blurred, const uint8_t *lit, int row, int width, const RidgeRules *rules,
-                           Tops *tops)
+/* Pixels of a row that may be ridge points, nowhere nearer to its ends than the margin; in `blocks` of it, which begin at
+ * lit. The row has neighbours. */
+WIDE static void find_tops(const float *blurred, const int32_t *lit, int blocks, int row, int width,
+                           const RidgeRules *rules, Tops *tops)
 {
     int32_t *pixel = tops->pixel, *rows = tops->row, first = row * width;
     int found = tops->number, margin = rules->margin;
-    for (int from = 0; from < width; from += BLOCK) {
-        if (!lit[from / BLOCK])
-            continue;
+    for (int k = 0; k < blocks; k++) {
+        int from = lit[k];
         const float *at = blurred + first + from;
         uint32_t bits = width - from >= BLOCK ? tops_of_block(at, width, BLOCK, rules->threshold)
                                               : tops_of_block(at, width, width - from, rules->threshold);
@@ -179,12 +185,12 @@ EXPORT int edgewatch_ridges(const uint8_t *excess, int height, int width, const 
     for (int k = 0; k < 7; k++)
         column[k] = columns + (size_t)k * ((size_t)most + 1);
     Points points = {index, column[0], column[1], column[2], column[3], column[4], column[5], column[6], 0, most};
-    size_t blocks = (size_t)(width + BLOCK - 1) / BLOCK, room = (size_t)width + BATCH;
+    size_t room = (size_t)width + BATCH, blocks = (size_t)width / BLOCK + 2;
     float *line = malloc(sizeof(float) * ((size_t)width + 2 * REACH));
     int32_t *work = malloc(sizeof(int32_t) * 2 * room);
     uint16_t *wide = malloc(sizeof(uint16_t) * TAPS * (size_t)width); /* the rows that the blur takes in */
-    uint8_t *lit = malloc(2 * blocks);
-    int answer = -1;
+    int32_t *lit = malloc(sizeof(int32_t) * 2 * blocks); /* of this row and the one before */
+    int answer = -1, number[2];
     if (!line || !work || !wide || !lit)
         goto done;
     Tops tops = {work, work + room, 0};
@@ -200,10 +206,10 @@ EXPORT int edgewatch_ridges(const uint8_t *excess, int height, int width, const 
             sum[-k] = sum[mirrored(-k, width)];
             sum[width - 1 + k] = sum[mirrored(width - 1 + k, width)];
         }
-        blur_along(sum, blurred + (size_t)row * width, lit + (row & 1) * blocks, width, rules);
+        number[row & 1] = blur_along(sum, blurred + (size_t)row * width, lit + (row & 1) * blocks, width, rules);
         if (row <= rules->margin || row > height - rules->margin)
             continue;
-        find_tops(blurred, lit + (~row & 1) * blocks, row - 1, width, rules, &tops);
+        find_tops(blurred, lit + (~row & 1) * blocks, number[~row & 1], row - 1, width, rules, &tops);
         int done = 0;
         for (; tops.number - done >= BATCH; done += BATCH)
             add_crests(blurred, width, tops.pixel + done, tops.row + done, BATCH, rules, &points);

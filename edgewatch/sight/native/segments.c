@@ -58,14 +58,13 @@ static int link_points(int count, const int32_t *index, const float *x, const fl
             for (; ahead < count && index[ahead] < first + width; ahead++)
                 line[index[ahead] - first] = ahead;
         }
-        int32_t *own = numbers + (size_t)(row % ROWS) * across + REACH, first = row * width, begin = i;
-        const int32_t *neighbour[NEIGHBOURS];
-        for (int k = 0; k < NEIGHBOURS; k++)
-            neighbour[k] = numbers + (size_t)((row + NEIGHBOUR[k][1]) % ROWS) * across + REACH + NEIGHBOUR[k][0];
+        int32_t *line[ROWS], first = row * width, begin = i;
+        for (int k = 0; k < ROWS; k++)
+            line[k] = numbers + (size_t)((row + k) % ROWS) * across + REACH;
         for (; i < count && index[i] < first + width; i++) {
             int32_t column = index[i] - first;
             for (int k = 0; k < NEIGHBOURS; k++) { /* each is written, and the next one over it where there is no point */
-                int32_t number = neighbour[k][column];
+                int32_t number = line[NEIGHBOUR[k][1]][column + NEIGHBOUR[k][0]];
                 one[pairs] = i;
                 other[pairs] = number;
                 pairs += number >= 0;
@@ -76,7 +75,7 @@ static int link_points(int count, const int32_t *index, const float *x, const fl
             }
         }
         for (; begin < i; begin++)
-            own[index[begin] - first] = -1;
+            line[0][index[begin] - first] = -1;
     }
     link_pairs(x, y, cosine, sine, least_cos, most_off, one, other, pairs, parent);
     free(numbers);
