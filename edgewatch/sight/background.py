@@ -81,6 +81,7 @@ class Background:
     def __init__(self, *, period_s: float) -> None:
         """``period_s``: time between pictures (s)."""
         self._every = max(1, round(1.0 / (PATTERN_RATE_HZ * period_s)))
+        self._state = records.GroundState()
         self.reset()
 
     def reset(self) -> None:
@@ -150,24 +151,15 @@ class Background:
         assert self._pattern_cells is not None
         assert self._cells is not None
         due = self._noise_is_due
-        rules = records.GroundRules(
-            deepest_dn=DEEPEST_HOLE_DN,
-            other_scene_dn=OTHER_SCENE_DN,
-            noise_clip=NOISE_CLIP,
-            least_noise_dn=LEAST_NOISE_DN,
-            row_stride=NOISE_STRIDE[0],
-            column_stride=NOISE_STRIDE[1],
-            measure_noise=due,
-        )
-        over, state = np.empty(picture.shape, np.uint8), records.GroundState()
+        over, state = np.empty(picture.shape, np.uint8), self._state
         other_scene = native.LIBRARY.edgewatch_excess(
-            native.place(picture),
-            native.place(self._pattern),
-            native.place(self._pattern_cells),
-            native.place(self._cells),
+            native.start(picture),
+            native.start(self._pattern),
+            native.start(self._pattern_cells),
+            native.start(self._cells),
             *picture.shape,
-            native.reference(rules),
-            native.place(over),
+            _RULES_DUE if due else _RULES,
+            native.start(over),
             native.reference(state),
         )
         native.enough(other_scene, 1)
@@ -215,6 +207,9 @@ class Background:
             self._pattern = _cv.max(self._first, self._lowest)
         elif self._seen % self._every == 0:
             self._steps += 1
+            if native.LIBRARY and _divides(picture.shape):
+                self._follow_compiled(np.ascontiguousarray(picture))
+                return
             down = _cv.min(_cv.compare(picture, self._pattern, _cv.CMP_LT), 1)
             self._pattern = _cv.subtract(self._pattern, down)
             if self._steps % UP_EVERY == 0:
@@ -224,19 +219,50 @@ class Background:
             return
         self._pattern_cells = _cells(self._pattern, small)
 
+    def _follow_compiled(self, picture: NDArray[np.uint8]) -> None:
+        """Both in place: nobody else holds them."""
+        assert self._pattern is not None
+        assert self._pattern_cells is not None
+        done = native.LIBRARY.edgewatch_follow(
+            native.start(picture),
+            native.start(self._pattern),
+            *picture.shape,
+            self._steps % UP_EVERY == 0,
+            native.start(self._pattern_cells),
+        )
+        native.enough(done, 0)
+
+
+def _rules(*, measure_noise: bool) -> Any:
+    return native.reference(
+        records.GroundRules(
+            deepest_dn=DEEPEST_HOLE_DN,
+            other_scene_dn=OTHER_SCENE_DN,
+            noise_clip=NOISE_CLIP,
+            least_noise_dn=LEAST_NOISE_DN,
+            row_stride=NOISE_STRIDE[0],
+            column_stride=NOISE_STRIDE[1],
+            measure_noise=measure_noise,
+        )
+    )
+
+
+_RULES, _RULES_DUE = _rules(measure_noise=False), _rules(measure_noise=True)
+
 
 def _cells(picture: NDArray[np.uint8], small: tuple[int, int]) -> NDArray[np.float32]:
     """Means in cells (DN, whole), float32 in (columns, rows) as ``small`` has them."""
     if native.LIBRARY and _divides(picture.shape):
         picture, cells = np.ascontiguousarray(picture), np.empty(small[::-1], np.float32)
-        native.enough(native.LIBRARY.edgewatch_cells(native.place(picture), *picture.shape, native.place(cells)), 0)
+        native.enough(native.LIBRARY.edgewatch_cells(native.start(picture), *picture.shape, native.start(cells)), 0)
         return cells
     return np.asarray(_cv.resize(picture, small, interpolation=_cv.INTER_AREA).astype(np.float32))
 
 
 def _divides(shape: tuple[int, ...]) -> bool:
     """Whether a picture consists of whole cells, and of some, which the compiled steps ask for."""
-    return all(size >= 4 * CELL_PX and size % CELL_PX == 0 for size in shape)
+    height, width = shape
+    return min(height, width) >= 4 * CELL_PX and height % CELL_PX == 0 == width % CELL_PX
 
 
 def _add_drift(pattern: NDArray[np.uint8], drift: NDArray[np.float32]) -> NDArray[np.uint8]:

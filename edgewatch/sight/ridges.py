@@ -18,6 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from edgewatch.sight import native
+from edgewatch.sight.native import records
 
 _cv: Any = cv2  # its own type hints differ between versions and forbid what it takes
 
@@ -25,7 +26,13 @@ BLUR_PX = 0.6
 """Standard deviation of the blur (px). Steger asks for width / sqrt(3), about one pixel; less keeps streaks two pixels
 apart from running into each other, which matters more here, and noise is dealt with by the length of what is linked."""
 
-_TAPS = np.asarray(cv2.getGaussianKernel(5, BLUR_PX), dtype=np.float32)
+_PARTS = 256
+_GAUSS = np.exp(-0.5 * (np.arange(3) / BLUR_PX) ** 2)
+_OUTER, _INNER = (round(float(_PARTS * _GAUSS[k] / (2.0 * _GAUSS.sum() - 1.0))) for k in (2, 1))
+_TAPS = np.asarray([_OUTER, _INNER, _PARTS - 2 * (_OUTER + _INNER), _INNER, _OUTER], np.float32) / np.float32(_PARTS)
+"""The Gaussian rounded to whole 1/256 that sum to one: a value of the blurred picture is then a whole number of
+1/65536, below 2^24 of them, which single precision holds exactly, in whatever order it is added up."""
+
 NOISE_GAIN = float((_TAPS**2).sum())
 """Noise of the blurred picture per noise of the picture (white noise, separable kernel)."""
 
@@ -74,9 +81,9 @@ class Ridges:
 
 def find_ridges(excess: NDArray[np.uint8], noise_dn: float) -> Ridges:
     """Ridge points of a picture less its background, uint8 (H, W); ``noise_dn``: its noise (DN)."""
-    blurred: NDArray[np.float32] = _cv.sepFilter2D(excess, cv2.CV_32F, _TAPS, _TAPS)
     if native.LIBRARY:
-        return _find_compiled(excess, blurred, noise_dn)
+        return _find_compiled(np.ascontiguousarray(excess), noise_dn)
+    blurred: NDArray[np.float32] = _cv.sepFilter2D(excess, cv2.CV_32F, _TAPS, _TAPS)
     width = excess.shape[1]
     index = _candidates(blurred, THRESHOLD_NOISE * NOISE_GAIN * noise_dn)
     flat = blurred.ravel()
@@ -116,21 +123,27 @@ def find_ridges(excess: NDArray[np.uint8], noise_dn: float) -> Ridges:
     )
 
 
-def _find_compiled(excess: NDArray[np.uint8], blurred: NDArray[np.float32], noise_dn: float) -> Ridges:
-    height, width = blurred.shape
-    room = ROOM
+def _find_compiled(excess: NDArray[np.uint8], noise_dn: float) -> Ridges:
+    height, width = excess.shape
+    blurred, room = np.empty(excess.shape, np.float32), ROOM
+    rules = records.RidgeRules(
+        threshold=THRESHOLD_NOISE * NOISE_GAIN * noise_dn,
+        crest_px=CREST_PX,
+        least_bend=LEAST_BEND,
+        margin=MARGIN_PX,
+        inner=_INNER,
+        outer=_OUTER,
+    )
     while True:
-        index, columns = np.empty(room, np.int32), np.empty((7, room), np.float32)
+        index, columns = np.empty(room + 1, np.int32), np.empty((7, room + 1), np.float32)
         count = native.LIBRARY.edgewatch_ridges(
-            native.place(blurred),
+            native.start(excess),
             height,
             width,
-            native.single(THRESHOLD_NOISE * NOISE_GAIN * noise_dn),
-            native.single(CREST_PX),
-            native.single(LEAST_BEND),
-            MARGIN_PX,
-            native.place(index),
-            native.place(columns),
+            native.reference(rules),
+            native.start(blurred),
+            native.start(index),
+            native.start(columns),
             room,
         )
         if native.enough(count, room):

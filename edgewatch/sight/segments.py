@@ -16,7 +16,7 @@ from edgewatch.sight.ridges import Ridges
 
 LINK_OFFSETS = ((1, 0), (-1, 1), (0, 1), (1, 1), (2, 0), (-2, 1), (2, 1), (-1, 2), (0, 2), (1, 2))
 """Neighbours (dx, dy) that a ridge point may be linked to: half of the 5 x 5 pixels about it,
-but for the corners, which add nothing."""
+but for the corners, which add nothing. The compiled form has them as constants."""
 
 LINK_COS = 0.92
 """Least cosine between the directions of linked points: 23 degrees, the direction noise at the threshold."""
@@ -52,12 +52,6 @@ def find_segments(ridges: Ridges, scratch: NDArray[np.int32]) -> Segments:
     return fit_segments(ridges, link_ridges(ridges, scratch))
 
 
-_ALONG = np.asarray([max(dx for dx, dy in LINK_OFFSETS if dy == row) for row in (0, 1, 2)], np.int32)
-
-
-_ALONG_PLACE = native.place(_ALONG)
-
-
 def _find_compiled(ridges: Ridges, columns: NDArray[np.float32]) -> Segments:
     count = ridges.index.size
     room = count // LEAST_POINTS + 1
@@ -65,18 +59,17 @@ def _find_compiled(ridges: Ridges, columns: NDArray[np.float32]) -> Segments:
     ends, values = np.empty((3, room, 2)), np.empty((4, room))
     found = native.LIBRARY.edgewatch_segments(
         count,
-        native.place(ridges.index),
-        native.place(columns),
+        native.start(ridges.index),
+        native.start(columns),
         columns.shape[1],
         ridges.blurred.shape[1],
-        _ALONG_PLACE,
         native.single(LINK_COS),
         native.single(LINK_OFFSET_PX),
         LEAST_POINTS,
-        native.place(work),
-        native.place(ends),
-        native.place(values),
-        native.place(numbers),
+        native.start(work),
+        native.start(ends),
+        native.start(values),
+        native.start(numbers),
         room,
     )
     native.enough(found, room)

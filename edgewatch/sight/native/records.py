@@ -207,3 +207,12 @@ class WidthRules(ctypes.Structure):
         ("parts", c_void_p),
         *((name, c_int32) for name in ("part_count", "samples", "most_lines")),
     )
+
+
+class RidgeRules(ctypes.Structure):
+    """What makes a ridge point, and the blur's taps."""
+
+    _fields_ = (
+        *((name, c_float) for name in ("threshold", "crest_px", "least_bend")),
+        *((name, c_int32) for name in ("margin", "inner", "outer")),
+    )
