@@ -3,8 +3,9 @@
 All sparks of one stream fly at nearly the same speed at one distance, so one end says where the other must be. But most
 steps left alone are no streak's end: a streak's own unevenness, a crossing, the flank of a neighbour. A small
 perceptron weighs what speaks for each: its height, whether it leads from darkness, whether it points to the contact
-point, whether the line beyond stays lit for the typical length, and whether a streak seen whole explains it already.
-Its weights were learnt from both simulations with varied rendering by ``tests/bench/learn_streaks.py``.
+point, whether the line beyond stays lit for the typical length, whether a streak seen whole explains it already, and
+how many steps and streaks the picture has. Its weights were learnt from both simulations with varied rendering by
+``tests/bench/learn_streaks.py``.
 """
 
 from __future__ import annotations
@@ -71,10 +72,10 @@ END_FAR_PX = 12.0
 MOST = 4.0
 """Ratios of brightness and of lengths count no further than this."""
 
-ODDS_LEAST = -0.9
+ODDS_LEAST = -0.6
 """Logarithm of the odds from which a line is listed: where F1 is largest on tuning scenes. Theory says half of the F1
-that is reached (Lipton, Elkan & Naryanaswamy, ECML 2014), -0.3; but of the lines that claim one streak the learning
-takes one for right, and those that share with a likelier one are dropped here."""
+that is reached (Lipton, Elkan & Naryanaswamy, ECML 2014), -0.3; but lines that share with a likelier one are dropped
+here besides."""
 
 SAME_WEIGHT = 1.0
 """What a line has in common with a likelier one, as a share of both, counts so much against it."""
@@ -162,6 +163,7 @@ def follow_steps(
     and ends (M, 2) px and heights (M,) DN of the streaks of which both ends are seen; ``lengths`` must be known.
     """
     at, inward = steps.at[alone], steps.inward[alone]
+    crowded = math.log1p(alone.size), math.log1p(len(whole[0]))
     angle = np.full(alone.size, TURN_UNKNOWN)
     if lengths.from_contact:
         sine = lengths.turn(at, inward)
@@ -198,6 +200,9 @@ def follow_steps(
         np.clip(side_most / height, -1.0, MOST),
         np.clip(side_least / height, -1.0, MOST),
         begins,
+        np.log(size),
+        np.minimum(steps.size[alone[good]] / size, MOST),
+        *(np.full(good.size, number) for number in crowded),
     )
     return Lone(begin=begin, end=end, begins=begins, marks=np.stack(marks, axis=1).astype(np.float32))
 

@@ -22,8 +22,8 @@ from edgewatch.rehearsal.camera import CameraModel
 from edgewatch.rehearsal.scene import Stream as RehearsalStream
 from edgewatch.rehearsal.steel import find_steel
 from edgewatch.sight import Sight, native
+from edgewatch.sight import listing as listing_module
 from edgewatch.sight import lone as lone_module
-from edgewatch.sight import sight as sight_module
 from edgewatch.sight.glow import Sorted, sort_lines
 from edgewatch.sight.lone import Lone
 from edgewatch.sight.optics import Optics
@@ -32,9 +32,7 @@ from tests.scenes import Look, Scene, Stream
 from tests.scoring import LEAST_LENGTH_PX, LEAST_SNR, far, match_streaks, middles
 
 FRAMES = 8
-UNITS = 12
-END_PX, END_SHARE, SIDE_PX = 6.0, 0.08, 3.5
-"""A step is a streak's end when it lies this near along it, or this share of its length, and this near beside it."""
+UNITS = 24
 
 Array = NDArray[np.float64]
 
@@ -112,7 +110,7 @@ class _Listener:
 
 def collect(kind: str, seeds: range) -> tuple[Floats, NDArray[np.bool_]]:
     """Marks (N, F) of lines with one end seen that no burst claims, and whether each is a streak that is not yet found:
-    one line a streak, that whose step lies nearest to its end.
+    of all ways to give every streak one line at most that by which most are found.
     """
     marks, rights = [], []
     for seed in seeds:
@@ -123,7 +121,7 @@ def collect(kind: str, seeds: range) -> tuple[Floats, NDArray[np.bool_]]:
             with (
                 mock.patch.object(native, "LIBRARY", None),  # the compiled form hands nothing over on its way
                 mock.patch.object(lone_module, "pick_lines", heard.pick),
-                mock.patch.object(sight_module, "sort_lines", heard.sort),
+                mock.patch.object(listing_module, "sort_lines", heard.sort),
             ):
                 sight.look(picture)
             if not heard.lone:
@@ -134,28 +132,12 @@ def collect(kind: str, seeds: range) -> tuple[Floats, NDArray[np.bool_]]:
             found = {k for k, _ in match_streaks(truth, lines[:count][made.streak[:count]])}
             rest = truth[[k for k in range(len(truth)) if k not in found]]
             own, live = lines[count:last], made.streak[count:last]
-            right = _owners(rest, own, lone, live)
+            right, listed = np.zeros(len(own), np.bool_), np.flatnonzero(live)
+            right[[listed[k] for _, k in match_streaks(rest, own[listed])]] = True
             kept = live & far(middles(own), optics.contact_px)
             marks.append(lone.marks[kept])
             rights.append(right[kept])
     return np.concatenate(marks), np.concatenate(rights)
-
-
-def _owners(truth: Array, lines: Array, lone: Lone, live: NDArray[np.bool_]) -> NDArray[np.bool_]:
-    right = np.zeros(len(lines), np.bool_)
-    begins = lone.begins
-    step = np.where(begins[:, None], lone.begin, lone.end)
-    for streak in truth:
-        way = streak[2:] - streak[:2]
-        length = float(np.hypot(*way))
-        gap = step - np.where(begins[:, None], streak[:2], streak[2:])
-        along = np.abs(gap @ way) / length
-        side = np.abs(gap[:, 0] * way[1] - gap[:, 1] * way[0]) / length
-        near = np.flatnonzero(live & (along < max(END_PX, END_SHARE * length)) & (side < SIDE_PX))
-        near = near[[bool(match_streaks(streak[None], lines[k][None])) for k in near]]
-        if near.size:
-            right[near[np.argmin(along[near] + 2.0 * side[near])]] = True
-    return right
 
 
 def learn(marks: Floats, right: NDArray[np.bool_], rounds: int, seed: int = 3) -> list[Floats]:
@@ -203,8 +185,8 @@ def write(weights: list[Floats], path: Path) -> None:
 def main() -> None:
     """Collect, learn, report, write."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0] if __doc__ else None)
-    parser.add_argument("--scenes", type=int, default=400, help="scenes of each simulation to learn from")
-    parser.add_argument("--rounds", type=int, default=30, help="rounds through all lines")
+    parser.add_argument("--scenes", type=int, default=300, help="scenes of each simulation to learn from")
+    parser.add_argument("--rounds", type=int, default=40, help="rounds through all lines")
     parser.add_argument("--out", type=Path, default=Path("edgewatch/sight/lone_weights.py"))
     args = parser.parse_args()
     cv2.setNumThreads(1)

@@ -2,7 +2,7 @@
 #include "lone.h"
 #include "order.h"
 
-enum { MARKS = 15 };
+enum { MARKS = 19 };
 
 /* A line from a step: where it ends, how long lines typically are there, and what was read along it; of one that may be
  * listed, its unit vector and length. */
@@ -20,6 +20,7 @@ typedef struct {
     const LoneNet *net;
     double noise;
     int radial, wholes;
+    float alone, seen_whole; /* logarithms of one and their numbers */
     const float *whole[5];
     int32_t *is, *touch;
     float *level, *sums;
@@ -235,6 +236,10 @@ static double follow(const Search *search, const Step *step, double sine, Line *
     mark[12] = (float)clip(sides[0] / height, -1.0, rules->most);
     mark[13] = (float)clip(sides[1] / height, -1.0, rules->most);
     mark[14] = (float)begins;
+    mark[15] = (float)log(size);
+    mark[16] = (float)clip(step->size / size, 0.0, rules->most);
+    mark[17] = search->alone;
+    mark[18] = search->seen_whole;
     return judge(search, mark);
 }
 
@@ -294,8 +299,8 @@ EXPORT int edgewatch_lone(int n, const Step *steps, int pairs, const int32_t *pa
     float *begin_x = whole, *begin_y = begin_x + pairs, *end_x = begin_y + pairs, *end_y = end_x + pairs;
     float *height = end_y + pairs, *level = height + pairs, *sums = level + points;
     int32_t *is = (int32_t *)(sums + net->units), *touch = is + room;
-    const Search search = {picture, lengths, rules, net, noise, radial, pairs, {begin_x, begin_y, end_x, end_y, height},
-                           is, touch, level, sums};
+    const Search search = {picture, lengths, rules, net, noise, radial, pairs, (float)log1p(n - 2 * pairs),
+                           (float)log1p(pairs), {begin_x, begin_y, end_x, end_y, height}, is, touch, level, sums};
     Key *odds = (Key *)(lines + room), *runs = odds + room, *spare = runs + room; /* negative, so the greatest come first */
     uint8_t *used = (uint8_t *)(spare + room);
     memset(used, 0, room);
