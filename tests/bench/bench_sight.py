@@ -184,7 +184,7 @@ def accuracy(scale: float) -> None:
         for case in cases():
             fast = case.optics.fps / 200.0
             count = max(8, round(40 * scale * min(4.0, max(0.5, fast)) / (4 if case.optics.width_px > 640 else 1)))
-            s, b = score(case, judge, count, 14)
+            s, b = score(case, judge, count, 15)
             print(
                 f"{judge} {case.name:22s} {s.precision:.3f} {s.recall:.3f} {s.f1:.3f}   "
                 f"{b.precision:.3f} {b.recall:.3f} {b.f1:.3f}  {b.found + b.missed:4d}",
@@ -196,7 +196,7 @@ def crossing(scale: float) -> None:
     """Two and three crossing lines: false bursts per crossing."""
     print("\ncrossing lines (false bursts per crossing)")
     optics, look = make_optics(), Look()
-    rng = np.random.default_rng([JUDGE_SEED, 4])
+    rng = np.random.default_rng([JUDGE_SEED, 5])
     for angle in (5.0, 10.0, 20.0, 30.0, 45.0, 60.0, 90.0):
         false = total = 0
         for _ in range(max(5, round(25 * scale))):
@@ -250,7 +250,7 @@ def hazard(scale: float) -> None:
         rates, real = [], []
         for h in true:
             count = round((240 if h < 0.5 else 80) * scale)
-            rate, bursts, struck = measured_rate(Case(name="", optics=make_optics(), hazard_per_m=h), judge, count, 27)
+            rate, bursts, struck = measured_rate(Case(name="", optics=make_optics(), hazard_per_m=h), judge, count, 29)
             rates.append(rate)
             real.append(struck)
             print(f"{judge} hazard {h:4.1f}  rate {rate:.3f}  ({bursts})  went off {struck:.3f}", flush=True)
@@ -274,7 +274,7 @@ def hazard(scale: float) -> None:
         ]
         seen = []
         for name, case, count in rows:
-            rate, bursts, _ = measured_rate(case, judge, max(8, round(count * scale)), 28)
+            rate, bursts, _ = measured_rate(case, judge, max(8, round(count * scale)), 30)
             seen.append(rate)
             print(f"{judge} {name:18s} rate {rate:.3f}  ({bursts})", flush=True)
         print(f"{judge} spread at hazard 0.9: {min(seen):.3f} to {max(seen):.3f}, mean {np.mean(seen):.3f}", flush=True)
