@@ -15,6 +15,7 @@ import zlib
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, fields, replace
 from pathlib import Path
+from typing import Any
 
 import cv2
 import numpy as np
@@ -24,31 +25,39 @@ from edgewatch.rehearsal.camera import CameraModel
 from edgewatch.rehearsal.scene import Stream as RehearsalStream
 from edgewatch.rehearsal.steel import find_steel
 from edgewatch.sight.background import Background
-from edgewatch.sight.bursts import (
-    CONTEXT_SIZE,
+from edgewatch.sight.burst_net import (
+    FIRST_PLACES,
     FIRST_REACH,
-    RING_DIRECTIONS,
+    FIRST_STEP,
+    SECOND_PLACES,
     SECOND_REACH,
     SECOND_STEP,
     SIFT_LEAST,
-    find_candidates,
+    windows,
+)
+from edgewatch.sight.bursts import CONTACT_PX
+from edgewatch.sight.candidates import find_candidates
+from edgewatch.sight.optics import Optics
+from edgewatch.sight.ridges import find_ridges
+from edgewatch.sight.rings import (
+    CONTEXT_SIZE,
+    RING_DIRECTIONS,
+    SIFT_RINGS,
+    SIFT_STEP,
     read_before,
     read_context,
     read_patches,
-    windows,
 )
-from edgewatch.sight.optics import Optics
-from edgewatch.sight.ridges import find_ridges
 from edgewatch.sight.segments import find_segments
 from tests.scenes import Look, Scene, Stream, crossing_lines, loose_dashes
-from tests.scoring import far
 
 FRAMES, FAST_FRAMES = 6, 10
 """Pictures of a scene; of more than 400 a second, which show much the same, so many."""
-SIFT_UNITS = 16
-FIRST_UNITS, SECOND_UNITS, HIDDEN_UNITS, OUTPUTS = 24, 24, 48, 5
+SIFT_UNITS = 24
+FIRST_UNITS, SECOND_UNITS, HIDDEN_UNITS, OUTPUTS = 24, 32, 64, 5
 RIGHT_PX, DOUBTFUL_PX = 10.0, 14.0
-"""A candidate this near to a burst is one, and shall be moved there; up to the second distance it is left out."""
+"""A candidate this near to a burst, to the light that its arms give, or to the way from one to the other is one, and
+shall be moved to where it burst; up to the second distance it is left out."""
 DRAWN_S, HARDLY_DRAWN_S = 0.35e-3, 0.3e-3
 SHIFT_WEIGHT, LATE_WEIGHT = 0.02, 0.1
 """Weights of the two lesser tasks beside the cross entropy of the main one."""
@@ -59,7 +68,7 @@ STEPS = np.float32(48.0)
 CHUNK = {"r": 100, "m": 100, "x": 12, "d": 12}
 """Scenes of each kind whose candidates are kept in one file."""
 SIFT_SCENES = {"r": 300, "m": 300, "x": 40, "d": 40}
-SIFT_ROUNDS = 10
+SIFT_ROUNDS = 30
 """Scenes from which the sieve is learnt, and rounds; the net then learns from what passes."""
 SHARE_SCENES = (("r", 60), ("m", 60))
 """Scenes that tell the share of bursts among the candidates, doubtful ones included, as the station meets them."""
@@ -98,12 +107,14 @@ def _optics(rng: np.random.Generator) -> Optics:
 
 @dataclass(frozen=True, kw_only=True)
 class Shot:
-    """A picture and its glowing bursts: ``at`` (K, 2) px, ``drew_s`` (K,) for how long the third arm drew, ``late``
-    whether it went off before, ``fresh`` whether no picture before showed it so long.
+    """A picture and its glowing bursts: ``at`` (K, 2) px, ``light`` (K, 2) px the middle of what the arms drew,
+    ``drew_s`` (K,) for how long the third arm drew, ``late`` whether it went off before, ``fresh`` whether no picture
+    before showed it so long.
     """
 
     picture: NDArray[np.uint8]
     at: Array
+    light: Array
     drew_s: Array
     late: Bools
     fresh: Bools
@@ -136,6 +147,7 @@ def _scene(kind: str, seed: int) -> Iterator[Shot]:
             yield Shot(
                 picture=picture,
                 at=truth.bursts.astype(np.float64).reshape(-1, 2),
+                light=truth.burst_light.astype(np.float64).reshape(-1, 2),
                 drew_s=truth.drew_ms.astype(np.float64) * 1e-3,
                 late=truth.late,
                 fresh=fresh,
@@ -159,8 +171,10 @@ def _scene(kind: str, seed: int) -> Iterator[Shot]:
             else:  # at random; all turned by one angle; three at 60 degrees make a star of six even arms, the hardest
                 angle = (math.nan, float(rng.uniform(5, 90)), float(rng.normal(60, 6)))[int(rng.integers(3))]
                 picture = crossing_lines(optics, look, rng, angle_deg=angle)
-            none = np.zeros(0, np.bool_)
-            yield Shot(picture=picture, at=np.zeros((0, 2)), drew_s=np.zeros(0), late=none, fresh=none, optics=optics)
+            none, nowhere = np.zeros(0, np.bool_), np.zeros((0, 2))
+            yield Shot(
+                picture=picture, at=nowhere, light=nowhere, drew_s=np.zeros(0), late=none, fresh=none, optics=optics
+            )
         return
     stream = Stream(
         hazard_per_m=hazard,
@@ -180,6 +194,7 @@ def _scene(kind: str, seed: int) -> Iterator[Shot]:
         yield Shot(
             picture=picture,
             at=own.glowing,
+            light=own.light,
             drew_s=own.drew_s,
             late=own.glowing_late,
             fresh=first | (own.drew_s < DRAWN_S),
@@ -243,12 +258,12 @@ def _collect_scene(kind: str, seed: int, sieve: list[Floats] | None, *, every: b
         ridges = find_ridges(excess, background.noise_dn)
         pieces = find_segments(ridges, scratch)
         at = find_candidates(pieces, ridges)
-        at = at[far(at, optics.contact_px)]
+        at = at[np.hypot(*(at - optics.contact_px).T) > CONTACT_PX]
         right, doubtful, nearest, gap = _compare(at, shot)
         patches = read_patches(at, ridges.blurred, ridges.threshold_noise, optics.contact_px)
         kept = ~doubtful | every
         if sieve is not None:
-            kept &= _sifted(sieve, patches) >= SIFT_LEAST
+            kept &= _sifted(sieve, rough(patches)) >= SIFT_LEAST
         at, right, nearest, gap = at[kept], right[kept], nearest[kept], gap[kept]
         away = at - np.asarray(optics.contact_px)
         away /= np.hypot(away[:, 0], away[:, 1])[:, None]
@@ -273,8 +288,10 @@ def _compare(at: Array, shot: Shot) -> tuple[Bools, Bools, NDArray[np.int64], Ar
     none = np.zeros(len(at), np.bool_)
     if not len(at) or not len(shot.at):
         return none, none, np.zeros(len(at), np.int64), np.zeros((len(at), 2))
-    way = shot.at[None] - at[:, None]
-    distance = np.hypot(way[..., 0], way[..., 1])
+    way, flown = shot.at[None] - at[:, None], shot.light - shot.at
+    back = np.einsum("mkc,kc->mk", -way, flown) / np.maximum((flown**2).sum(axis=1), 1e-9)
+    aside = way + np.clip(back, 0.0, 1.0)[..., None] * flown[None]
+    distance = np.hypot(aside[..., 0], aside[..., 1])
     drawn = np.where(shot.drew_s[None] >= DRAWN_S, distance, np.inf)
     nearest = np.argmin(drawn, axis=1)
     rows = np.arange(len(at))
@@ -288,10 +305,23 @@ def joined(lessons: list[Lessons]) -> Lessons:
     return Lessons(**{f.name: np.concatenate([getattr(one, f.name) for one in lessons]) for f in fields(Lessons)})
 
 
+def gathered(paths: list[Path]) -> Lessons:
+    """All that is kept in files, column by column, so that little is in memory twice."""
+    kept = [np.load(path) for path in paths]
+    return Lessons(**{f.name: np.concatenate([one[f.name] for one in kept]) for f in fields(Lessons)})
+
+
 def mirrored(patches: NDArray[np.uint8]) -> NDArray[np.uint8]:
     """The same descriptions, of any number of rings, seen in a mirror along the stream."""
     rings = patches.reshape(len(patches), -1, RING_DIRECTIONS)
     return np.roll(rings[:, :, ::-1], 1, axis=2).reshape(patches.shape)
+
+
+def rough(patches: NDArray[Any]) -> NDArray[Any]:
+    """What the sieve sees of descriptions (N, F)."""
+    rings = patches.reshape(len(patches), patches.shape[1] // RING_DIRECTIONS, RING_DIRECTIONS)
+    seen = rings[:, list(SIFT_RINGS), ::SIFT_STEP]
+    return seen.reshape(len(patches), seen.shape[1] * seen.shape[2])
 
 
 def levels(packed: NDArray[np.uint8]) -> Floats:
@@ -350,13 +380,13 @@ def probability(logit: NDArray[np.floating]) -> Floats:
 def learn_sieve(lessons: Lessons, rounds: int, seed: int = 1) -> list[Floats]:
     """The small perceptron; its input is standardised while learning, and that is folded into its weights."""
     rng = np.random.default_rng(seed)
-    some = levels(lessons.patches[:: max(1, len(lessons.right) // 50_000)])
+    some = levels(rough(lessons.patches[:: max(1, len(lessons.right) // 50_000)]))
     mean, scale = some.mean(axis=0), some.std(axis=0) + np.float32(0.1)
-    p = start(rng, (lessons.patches.shape[1], SIFT_UNITS), (SIFT_UNITS, 1))
+    p = start(rng, (len(mean), SIFT_UNITS), (SIFT_UNITS, 1))
     adam = Adam(p, decay=0.01)
     for rows, rate in batches(len(lessons.right), rounds, rng):
         packed = lessons.patches[rows]
-        x = (levels(mirrored(packed) if rng.uniform() < 0.5 else packed) - mean) / scale
+        x = (levels(rough(mirrored(packed) if rng.uniform() < 0.5 else packed)) - mean) / scale
         z = x @ p[0] + p[1]
         hidden = np.maximum(z, 0)
         d = (probability(hidden @ p[2] + p[3]) - lessons.right[rows, None]) / len(rows)
@@ -378,8 +408,7 @@ def learn_net(lessons: Lessons, rounds: int, seed: int = 2) -> list[Floats]:
     mean, scale = _standard(_rings(lessons.patches[some], lessons.before[some]), axis=(0, 1))
     context_mean, context_scale = _standard(lessons.context[some], axis=0)
     taps_1, taps_2, channels = 2 * FIRST_REACH + 1, 2 * SECOND_REACH + 1, len(mean)
-    places = RING_DIRECTIONS // SECOND_STEP
-    flat = places * SECOND_UNITS
+    flat = SECOND_PLACES * SECOND_UNITS
     p = start(
         rng,
         (taps_1 * channels, FIRST_UNITS),
@@ -393,9 +422,9 @@ def learn_net(lessons: Lessons, rounds: int, seed: int = 2) -> list[Floats]:
         patches, before, shift = lessons.patches[rows], lessons.before[rows], lessons.shift[rows]
         if rng.uniform() < 0.5:
             patches, before, shift = mirrored(patches), mirrored(before), shift * np.array([1.0, -1.0], np.float32)
-        w1 = windows((_rings(patches, before) - mean) / scale, FIRST_REACH, 1)
+        w1 = windows((_rings(patches, before) - mean) / scale, FIRST_REACH, FIRST_STEP)
         z1 = w1 @ p[0] + p[1]
-        w2 = windows(np.maximum(z1, 0).reshape(count, RING_DIRECTIONS, -1), SECOND_REACH, SECOND_STEP)
+        w2 = windows(np.maximum(z1, 0).reshape(count, FIRST_PLACES, -1), SECOND_REACH, SECOND_STEP)
         z2 = w2 @ p[2] + p[3]
         context = (lessons.context[rows] - context_mean) / context_scale
         a2 = np.concatenate([np.maximum(z2, 0).reshape(count, -1), context], axis=1)
@@ -405,7 +434,7 @@ def learn_net(lessons: Lessons, rounds: int, seed: int = 2) -> list[Floats]:
         d4 = _slopes(a3 @ p[6] + p[7], lessons, rows, shift)
         d3 = (d4 @ p[6].T) * kept * (z3 > 0)
         d2 = (d3 @ p[4][:flat].T).reshape(z2.shape) * (z2 > 0)
-        d1 = unwindowed((d2 @ p[2].T).reshape(count, places, taps_2, -1)).reshape(z1.shape) * (z1 > 0)
+        d1 = unwindowed((d2 @ p[2].T).reshape(count, SECOND_PLACES, taps_2, -1)).reshape(z1.shape) * (z1 > 0)
         adam.step(
             [
                 *(w1.T @ d1, d1.sum(axis=0)),
@@ -515,10 +544,10 @@ def judge(weights: list[Floats], lessons: Lessons) -> tuple[Floats, Floats]:
     sieve, net = [], []
     for k in range(0, len(lessons.right), 4096):
         rows = slice(k, k + 4096)
-        sieve.append(_sifted(weights[:4], levels(lessons.patches[rows])))
+        sieve.append(_sifted(weights[:4], levels(rough(lessons.patches[rows]))))
         rings = _rings(lessons.patches[rows], lessons.before[rows])
-        first = np.maximum(windows(rings, FIRST_REACH, 1) @ weights[4] + weights[5], 0)
-        first = first.reshape(len(rings), RING_DIRECTIONS, -1)
+        first = np.maximum(windows(rings, FIRST_REACH, FIRST_STEP) @ weights[4] + weights[5], 0)
+        first = first.reshape(len(rings), FIRST_PLACES, -1)
         second = np.maximum(windows(first, SECOND_REACH, SECOND_STEP) @ weights[6] + weights[7], 0)
         joint = np.concatenate([second.reshape(len(rings), -1), lessons.context[rows]], axis=1)
         hidden = np.maximum(joint @ weights[8] + weights[9], 0)
@@ -529,8 +558,8 @@ def judge(weights: list[Floats], lessons: Lessons) -> tuple[Floats, Floats]:
 def main() -> None:
     """Collect, learn, report, write."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0] if __doc__ else None)
-    parser.add_argument("--chunks", type=int, default=31, help="hundreds of scenes of each simulation to learn from")
-    parser.add_argument("--rounds", type=int, default=12, help="rounds through all candidates")
+    parser.add_argument("--chunks", type=int, default=80, help="hundreds of scenes of each simulation to learn from")
+    parser.add_argument("--rounds", type=int, default=8, help="rounds through all candidates")
     parser.add_argument("--out", type=Path, default=Path("edgewatch/sight/burst_weights.py"))
     parser.add_argument("--cache", type=Path, help="keep candidates in this directory, and take those that are there")
     args = parser.parse_args()
@@ -544,9 +573,10 @@ def learn(cache: Path, chunks: int, rounds: int, out: Path) -> None:
     first = load(cache / "sift.npz", lambda: joined([collect(kind, range(n)) for kind, n in SIFT_SCENES.items()]))
     sieve = learn_sieve(first, SIFT_ROUNDS)
     del first
-    own = joined(
-        [load(cache / f"chunk_{k:03d}.npz", functools.partial(collect_chunk, k, sieve)) for k in range(chunks)]
-    )
+    paths = [cache / f"chunk_{k:03d}.npz" for k in range(chunks)]
+    for k, path in enumerate(paths):
+        load(path, functools.partial(collect_chunk, k, sieve))
+    own = gathered(paths)
     print(f"{len(own.right)} candidates pass the sieve, {int(own.right.sum())} bursts", flush=True)
     weights = sieve + learn_net(own, rounds)
     del own

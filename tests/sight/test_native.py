@@ -21,19 +21,13 @@ from numpy.typing import NDArray
 
 from edgewatch.sight import native
 from edgewatch.sight.background import Background
-from edgewatch.sight.bursts import (
-    BEFORE_RINGS,
-    CONTEXT_SIZE,
-    RING_DIRECTIONS,
-    RING_RADII_PX,
-    _likeliest,
-    find_candidates,
-    judge_patches,
-    read_patches,
-)
+from edgewatch.sight.burst_net import judge_patches
+from edgewatch.sight.bursts import _likeliest
+from edgewatch.sight.candidates import find_candidates
 from edgewatch.sight.glow import Sorted, sort_lines
 from edgewatch.sight.optics import Optics
 from edgewatch.sight.ridges import Ridges, find_ridges
+from edgewatch.sight.rings import BEFORE_RINGS, CONTEXT_SIZE, RING_DIRECTIONS, RING_RADII_PX, read_patches
 from edgewatch.sight.segments import Segments, find_segments
 from edgewatch.sight.sight import Sight
 from tests.scenes import Look, Scene, Stream, crossing_lines

@@ -12,27 +12,26 @@ from numpy.typing import NDArray
 from scipy.sparse import coo_matrix
 from scipy.sparse.csgraph import connected_components
 
+from edgewatch.sight import burst_weights as learnt
 from edgewatch.sight.background import LEARN_AT, LEAST_NOISE_DN, Background
-from edgewatch.sight.bursts import (
-    BEFORE_RINGS,
-    CONTEXT_SIZE,
-    RING_DIRECTIONS,
-    RING_RADII_PX,
-    Apexes,
-    find_apexes,
-    find_candidates,
-    judge_patches,
-    read_before,
-    read_context,
-    read_patches,
-    sift_patches,
-    windows,
-)
+from edgewatch.sight.burst_net import judge_patches, sift_patches, windows
+from edgewatch.sight.bursts import SIFT_BLOCK, Apexes, find_apexes
+from edgewatch.sight.candidates import find_candidates
 from edgewatch.sight.glow import Glow
 from edgewatch.sight.lengths import LEAST_KEPT, Lengths
 from edgewatch.sight.optics import Optics
 from edgewatch.sight.reading import read_levels
 from edgewatch.sight.ridges import NOISE_GAIN, Ridges, find_ridges
+from edgewatch.sight.rings import (
+    BEFORE_RINGS,
+    CONTEXT_SIZE,
+    RING_DIRECTIONS,
+    RING_RADII_PX,
+    RINGS_SIFT,
+    read_before,
+    read_context,
+    read_patches,
+)
 from edgewatch.sight.segments import Segments, fit_segments, label_components, link_ridges
 from tests.sight.test_sight import SEED, draw, make_optics, star
 
@@ -232,6 +231,18 @@ def test_the_picture_before_is_read_at_the_same_place() -> None:
     assert read_before(at, None, contact_px).shape == (2, whole[0].size)
 
 
+@pytest.mark.parametrize("compiled", [True, False])
+def test_a_star_that_the_edge_cuts_is_a_candidate(*, compiled: bool, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Where much light is gathered a closer look is taken, at the very edge too, and nowhere twice."""
+    if not compiled:
+        monkeypatch.setattr("edgewatch.sight.native.LIBRARY", None)
+    ridges, pieces = trace(draw([(250.0, 100.0, 317.0, 100.0, 60.0), *star(317.0, 100.0, 6, 14.0)]))  # type: ignore[list-item]
+    found = find_candidates(pieces, ridges)
+    assert np.hypot(*(found - (317.0, 100.0)).T).min() < 5.0
+    dark, none = trace(draw([]))
+    assert len(find_candidates(none, dark)) == 0
+
+
 def test_context_tells_camera_and_crowd() -> None:
     """Each of the camera's numbers moves its own entry, and a candidate among more ends has more of a crowd."""
     _, pieces = trace(draw([(100.0, 100.0, 160.0, 100.0, 60.0), *star(160.0, 100.0, 5, 16.0)]))  # type: ignore[list-item]
@@ -255,12 +266,14 @@ def test_weights_fit_the_descriptions() -> None:
     nothing = np.zeros((2, size), np.float32)
     before = np.zeros((2, len(BEFORE_RINGS) * RING_DIRECTIONS), np.float32)
     context = np.zeros((2, CONTEXT_SIZE), np.float32)
-    assert ((sift_patches(nothing) >= 0.0) & (sift_patches(nothing) <= 1.0)).all()
+    seen = np.zeros((2, RINGS_SIFT.shape[1]), np.float32)
+    assert learnt.SIFT.shape[1] % SIFT_BLOCK == 0
+    assert ((sift_patches(seen) >= 0.0) & (sift_patches(seen) <= 1.0)).all()
     answers = judge_patches(nothing, before, context)
     assert answers.shape == (2, 5)
     assert np.isfinite(answers).all()
     assert judge_patches(nothing[:0], before[:0], context[:0]).shape == (0, 5)
-    assert sift_patches(nothing[:0]).shape == (0,)
+    assert sift_patches(seen[:0]).shape == (0,)
 
 
 def test_the_net_sees_the_ring_as_closed() -> None:

@@ -60,7 +60,7 @@ def place(array: NDArray[Any], skipped: int = 0) -> ctypes.c_void_p:
 
 
 def start(array: NDArray[Any]) -> Any:
-    """Where a contiguous array begins, for a call: in a quarter of the time that ``place`` takes, and it keeps the array
+    """Where a contiguous array begins, for a call: a quarter of the time that ``place`` takes, and it keeps the array
     alive; a record does not take it. Raises ``TypeError`` or ``ValueError`` for an array with gaps.
     """
     try:

@@ -1,373 +1,28 @@
-/* Candidates for bursts, and the picture about them: see bursts.py. */
+/* Which candidates are bursts: see bursts.py and burst_net.py. The net's matrix products are taken by others; here is what
+ * lies between them. */
+#include "candidates.h"
 #include "kernels.h"
+#include "rings.h"
 
-/* Votes for meeting points, counted in square cells. */
 typedef struct {
-    int wide, high;
-    float *number, *half, *dense; /* wide * high: votes of a cell; blurred along the row; blurred both ways */
-    uint8_t *voted;               /* high: whether any cell of the row has votes */
-    int32_t *slot;                /* wide * high: where the sums of a cell's votes are, from 1 on; 0: it has none */
-    double *sum;                  /* x and y of the votes of each slot */
-    int slots, room;
-} Votes;
+    Places now, before, sift;
+    const float *sift_weights, *sift_bias, *sifted_weights; /* (sift.number, units), units, units */
+    const int32_t *shared; /* rings_before: which ring of this picture each of the one before is */
+    double contact_px, crowd_px;
+    float sifted_bias, sift_least; /* log odds from which a candidate is looked at again */
+    float level_noise;
+    int32_t sift_units, directions, rings, rings_before, reach, step, context;
+} LookRules;
 
-static int add_vote(Votes *votes, double cell_px, double x, double y)
-{
-    int row = (int)(y / cell_px), cell = row * votes->wide + (int)(x / cell_px);
-    if (!votes->slot[cell]) {
-        if (votes->slots == votes->room) {
-            double *more = realloc(votes->sum, sizeof(double) * 4 * (size_t)votes->room);
-            if (!more)
-                return -1;
-            votes->sum = more;
-            votes->room *= 2;
-        }
-        votes->sum[2 * votes->slots] = votes->sum[2 * votes->slots + 1] = 0.0;
-        votes->slot[cell] = ++votes->slots;
-    }
-    double *sum = votes->sum + 2 * (votes->slot[cell] - 1);
-    sum[0] += x;
-    sum[1] += y;
-    votes->number[cell] += 1.0f;
-    votes->voted[row] = 1;
-    return 0;
-}
-
-/* Neighbours of a place 0 <= k < n: k - 1 and k + 1, mirrored beyond the ends. */
-static inline int before(int k, int n) { return k > 0 ? k - 1 : n > 1 ? 1 : 0; }
-static inline int after(int k, int n) { return k + 1 < n ? k + 1 : n > 1 ? n - 2 : 0; }
-
-static void blur_votes(Votes *votes, float near)
-{
-    int wide = votes->wide, high = votes->high;
-    float middle = 1.0f - 2.0f * near;
-    for (int y = 0; y < high; y++) {
-        const float *row = votes->number + (size_t)y * wide;
-        float *half = votes->half + (size_t)y * wide;
-        if (!votes->voted[y]) {
-            memset(half, 0, sizeof(float) * (size_t)wide);
-            continue;
-        }
-        for (int x = 1; x < wide - 1; x++)
-            half[x] = middle * row[x] + near * (row[x - 1] + row[x + 1]);
-        half[0] = middle * row[0] + near * 2.0f * row[after(0, wide)];
-        half[wide - 1] = middle * row[wide - 1] + near * 2.0f * row[before(wide - 1, wide)];
-    }
-    for (int y = 0; y < high; y++) {
-        const float *own = votes->half + (size_t)y * wide;
-        const float *up = votes->half + (size_t)before(y, high) * wide;
-        const float *low = votes->half + (size_t)after(y, high) * wide;
-        float *dense = votes->dense + (size_t)y * wide;
-        for (int x = 0; x < wide; x++)
-            dense[x] = middle * own[x] + near * (up[x] + low[x]);
-    }
-}
-
-/* Mean place of the votes about a cell, weighted as the blur does. */
-static void middle_of(const Votes *votes, float near, int x, int y, double *at)
-{
-    double total[2] = {0.0, 0.0};
-    int columns[3] = {before(x, votes->wide), x, after(x, votes->wide)};
-    int rows[3] = {before(y, votes->high), y, after(y, votes->high)};
-    for (int v = 0; v < 3; v++) {
-        for (int u = 0; u < 3; u++) {
-            int slot = votes->slot[rows[v] * votes->wide + columns[u]];
-            double weight = (v == 1 ? 1.0 - 2.0 * near : near) * (u == 1 ? 1.0 - 2.0 * near : near);
-            if (slot) {
-                total[0] += weight * votes->sum[2 * slot - 2];
-                total[1] += weight * votes->sum[2 * slot - 1];
-            }
-        }
-    }
-    float dense = votes->dense[(size_t)y * votes->wide + x];
-    at[0] = total[0] / dense;
-    at[1] = total[1] / dense;
-}
-
-static int densest(const Votes *votes, float near, float least_votes, double *at, int most)
-{
-    int wide = votes->wide, high = votes->high, found = 0;
-    for (int y = 0; y < high; y++) {
-        if (!votes->voted[before(y, high)] && !votes->voted[y] && !votes->voted[after(y, high)])
-            continue;
-        for (int x = 0; x < wide; x++) {
-            float own = votes->dense[(size_t)y * wide + x];
-            if (own <= least_votes)
-                continue;
-            int top = 1;
-            for (int v = y > 0 ? y - 1 : 0; v <= y + 1 && v < high; v++)
-                for (int u = x > 0 ? x - 1 : 0; u <= x + 1 && u < wide; u++)
-                    top &= own >= votes->dense[(size_t)v * wide + u];
-            if (!top)
-                continue;
-            if (found < most)
-                middle_of(votes, near, x, y, at + 2 * found);
-            found++;
-        }
-    }
-    return found;
-}
-
-/* The ends of pieces, the begins first, sorted into boxes as wide as the gap that may lie between two of them. */
 typedef struct {
-    int across, down;
-    int32_t *start, *order, *box; /* boxes + 2: a box's first place in the order; ends in the order; box of each end */
-} Boxes;
+    const float *first_bias, *second_bias, *hidden_bias, *output, *output_bias, *share, *share_bias;
+    int32_t first_units, second_units, hidden_units, outputs, context, places, reach, step;
+} Net;
 
-static void sort_ends(Boxes *boxes, int n, const double *begin, const double *end, double gap_px)
-{
-    int number = boxes->across * boxes->down;
-    for (int i = 0; i < 2 * n; i++) {
-        const double *p = i < n ? begin + 2 * i : end + 2 * (i - n);
-        int column = (int)(p[0] / gap_px), row = (int)(p[1] / gap_px);
-        column = column < 0 ? 0 : column >= boxes->across ? boxes->across - 1 : column;
-        row = row < 0 ? 0 : row >= boxes->down ? boxes->down - 1 : row;
-        boxes->box[i] = row * boxes->across + column;
-        boxes->start[boxes->box[i]]++;
-    }
-    for (int k = 1; k <= number; k++)
-        boxes->start[k] += boxes->start[k - 1];
-    for (int i = 2 * n - 1; i >= 0; i--)
-        boxes->order[--boxes->start[boxes->box[i]]] = i;
-}
-
-/* Where lines of pieces meet beyond their ends: the middle of the votes wherever they are dense, in the order of their
- * cells. axis: unit vectors from begin to end, all (n, 2); near: outer tap of the blur, whose middle tap is 1 - 2 near.
- * Room in `at` for `most` points (x, y). Returns their number, which may be more, or -1 without memory. */
-EXPORT int edgewatch_meetings(int n, const double *begin, const double *end, const double *axis, const double *length,
-                              int height, int width, double gap_px, double inner_px, double gap_lengths,
-                              double least_sin, double cell_px, double near, double least_votes, double *at, int most)
-{
-    Votes votes = {.wide = (int)(width / cell_px) + 1, .high = (int)(height / cell_px) + 1, .room = 256};
-    Boxes boxes = {.across = (int)(width / gap_px) + 1, .down = (int)(height / gap_px) + 1};
-    size_t cells = (size_t)votes.wide * votes.high;
-    char *zero = calloc(cells * 8 + (size_t)votes.high, 1);
-    votes.half = malloc(sizeof(float) * 2 * cells);
-    votes.sum = malloc(sizeof(double) * 2 * (size_t)votes.room);
-    boxes.start = calloc((size_t)boxes.across * boxes.down + 2, sizeof(int32_t));
-    boxes.order = malloc(sizeof(int32_t) * (4 * (size_t)n + 1));
-    int found = -1;
-    if (!zero || !votes.half || !votes.sum || !boxes.start || !boxes.order)
-        goto done;
-    votes.number = (float *)zero;
-    votes.slot = (int32_t *)(zero + 4 * cells);
-    votes.voted = (uint8_t *)(zero + 8 * cells);
-    votes.dense = votes.half + cells;
-    boxes.box = boxes.order + 2 * n;
-    sort_ends(&boxes, n, begin, end, gap_px);
-    for (int i = 0; i < 2 * n; i++) {
-        int a = i < n ? i : i - n;
-        const double *p = i < n ? begin + 2 * a : end + 2 * a;
-        double ux = i < n ? axis[2 * a] : -axis[2 * a], uy = i < n ? axis[2 * a + 1] : -axis[2 * a + 1];
-        double reach_a = fmin(gap_px, gap_lengths * length[a] + 2.0);
-        int column = boxes.box[i] % boxes.across, row = boxes.box[i] / boxes.across;
-        for (int y = row > 0 ? row - 1 : 0; y <= row + 1 && y < boxes.down; y++) {
-            const int32_t *first = boxes.start + y * boxes.across + (column > 0 ? column - 1 : 0);
-            const int32_t *last = boxes.start + y * boxes.across + (column + 1 < boxes.across ? column + 1 : column);
-            for (int k = first[0]; k < last[1]; k++) {
-                int j = boxes.order[k], b = j < n ? j : j - n;
-                if (j <= i || a == b)
-                    continue;
-                const double *q = j < n ? begin + 2 * b : end + 2 * b;
-                double gx = q[0] - p[0], gy = q[1] - p[1];
-                if (gx * gx + gy * gy > gap_px * gap_px)
-                    continue;
-                double vx = j < n ? axis[2 * b] : -axis[2 * b], vy = j < n ? axis[2 * b + 1] : -axis[2 * b + 1];
-                double cross = ux * vy - uy * vx;
-                if (fabs(cross) <= least_sin)
-                    continue;
-                double s = -(gx * vy - gy * vx) / cross, t = -(gx * uy - gy * ux) / cross;
-                double reach_b = fmin(gap_px, gap_lengths * length[b] + 2.0);
-                if (s <= -inner_px || s >= reach_a || t <= -inner_px || t >= reach_b)
-                    continue;
-                double mx = p[0] - s * ux, my = p[1] - s * uy;
-                if (mx > 0.0 && my > 0.0 && mx < width - 1 && my < height - 1 && add_vote(&votes, cell_px, mx, my))
-                    goto done;
-            }
-        }
-    }
-    blur_votes(&votes, (float)near);
-    found = densest(&votes, (float)near, (float)least_votes, at, most);
-done:
-    free(zero);
-    free(votes.half);
-    free(votes.sum);
-    free(boxes.start);
-    free(boxes.order);
-    return found;
-}
-
-WIDE static void halve(const uint8_t *upper, const uint8_t *lower, uint8_t *out, int width)
-{
-    for (int x = 0; x < width; x++)
-        out[x] = (uint8_t)((upper[2 * x] + upper[2 * x + 1] + lower[2 * x] + lower[2 * x + 1] + 2) >> 2);
-}
-
-WIDE static void soften(const uint8_t *a, const uint8_t *b, const uint8_t *c, uint16_t *sum, uint8_t *out, int width)
-{
-    for (int x = 0; x < width; x++)
-        sum[x] = (uint16_t)(a[x] + 2 * b[x] + c[x]);
-    for (int x = 1; x < width - 1; x++)
-        out[x] = (uint8_t)((sum[x - 1] + 2 * sum[x] + sum[x + 1] + 8) >> 4);
-    out[0] = (uint8_t)((2 * sum[0] + 2 * sum[1] + 8) >> 4);
-    out[width - 1] = (uint8_t)((2 * sum[width - 1] + 2 * sum[width - 2] + 8) >> 4);
-}
-
-WIDE static int any_above(const uint8_t *values, int number, uint8_t least)
-{
-    uint8_t any = 0;
-    for (int k = 0; k < number; k++)
-        any |= values[k] > least;
-    return any;
-}
-
-/* Spots from which brightness falls off in every direction, in excess (height x width) at half its size. They are above
- * `least`, nowhere nearer to the edge than margin; at `steps` places (dx, dy) either way it has fallen by the share `fall`.
- * Out: at (most, 2), px of the whole picture. Returns their number, which may be more, or -1 without memory. */
-EXPORT int edgewatch_blobs(const uint8_t *excess, int height, int width, uint8_t least, int margin, int steps,
-                           const int32_t *step, double fall, double *at, int most)
-{
-    int high = height / 2, wide = width / 2;
-    size_t size = (size_t)high * wide;
-    uint8_t *half = malloc(2 * size);
-    uint16_t *sum = malloc(sizeof(uint16_t) * (size_t)wide);
-    if (!half || !sum) {
-        free(half);
-        free(sum);
-        return -1;
-    }
-    uint8_t *soft = half + size;
-    for (int y = 0; y < high; y++)
-        halve(excess + 2 * (size_t)y * width, excess + (2 * (size_t)y + 1) * width, half + (size_t)y * wide, wide);
-    for (int y = 0; y < high; y++) {
-        int up = y > 0 ? y - 1 : 1, low = y + 1 < high ? y + 1 : high - 2;
-        soften(half + (size_t)up * wide, half + (size_t)y * wide, half + (size_t)low * wide, sum,
-               soft + (size_t)y * wide, wide);
-    }
-    int found = 0;
-    for (int y = margin; y < high - margin; y++) {
-        for (int from = margin; from < wide - margin; from += 32) {
-            int stop = from + 32 < wide - margin ? from + 32 : wide - margin;
-            if (!any_above(soft + (size_t)y * wide + from, stop - from, least))
-                continue;
-            for (int x = from; x < stop; x++) {
-                const uint8_t *own = soft + (size_t)y * wide + x;
-                if (*own <= least || own[-1] > *own || own[1] > *own)
-                    continue;
-                int top = 1;
-                for (int k = -1; k <= 1; k++)
-                    top &= own[k - wide] <= *own && own[k + wide] <= *own;
-                double limit = 2.0 * (1.0 - fall) * *own;
-                for (int k = 0; k < steps && top; k++) {
-                    int away = step[2 * k + 1] * wide + step[2 * k];
-                    top = own[away] + own[-away] < limit;
-                }
-                if (!top)
-                    continue;
-                if (found < most) {
-                    at[2 * found] = 2.0 * x + 0.5;
-                    at[2 * found + 1] = 2.0 * y + 0.5;
-                }
-                found++;
-            }
-        }
-    }
-    free(half);
-    free(sum);
-    return found;
-}
-
-/* log(1 + value * scale) of values, what is below 0 taken as 0; relative error below 1e-6 (Cephes' polynomial). */
-WIDE static void compress(const float *value, float scale, float *out, int number)
-{
-    for (int k = 0; k < number; k++) {
-        float x = 1.0f + (value[k] > 0.0f ? value[k] * scale : 0.0f);
-        uint32_t bits;
-        memcpy(&bits, &x, 4);
-        int exponent = (int)(bits >> 23) - 127;
-        bits = (bits & 0x007fffffu) | 0x3f800000u;
-        float m;
-        memcpy(&m, &bits, 4);
-        int high = m > 1.41421356f;
-        m = high ? 0.5f * m : m;
-        float e = (float)(exponent + high);
-        float f = m - 1.0f, z = f * f;
-        float y = 7.0376836292e-2f;
-        y = y * f - 1.1514610310e-1f;
-        y = y * f + 1.1676998740e-1f;
-        y = y * f - 1.2420140846e-1f;
-        y = y * f + 1.4249322787e-1f;
-        y = y * f - 1.6668057665e-1f;
-        y = y * f + 2.0000714765e-1f;
-        y = y * f - 2.4999993993e-1f;
-        y = y * f + 3.3333331174e-1f;
-        y = y * f * z - 2.12194440e-4f * e - 0.5f * z;
-        out[k] = f + y + 0.693359375f * e;
-    }
-}
-
-WIDE static void place(float x, float y, float c, float s, const float *along, const float *aside, float *px, float *py,
-                       int number)
-{
-    for (int k = 0; k < number; k++) {
-        px[k] = x + c * along[k] - s * aside[k];
-        py[k] = y + s * along[k] + c * aside[k];
-    }
-}
-
-WIDE static void split(const float *px, const float *py, int width, int32_t *pixel, float *right, float *down, int number)
-{
-    for (int k = 0; k < number; k++) {
-        int column = (int)px[k], row = (int)py[k];
-        pixel[k] = row * width + column;
-        right[k] = px[k] - (float)column;
-        down[k] = py[k] - (float)row;
-    }
-}
-
-WIDE static void blend(float *level, const float *a, const float *b, const float *c, const float *d, const float *right,
-                       const float *down, int number)
-{
-    for (int k = 0; k < number; k++) {
-        float upper = a[k] + right[k] * (b[k] - a[k]), lower = c[k] + right[k] * (d[k] - c[k]);
-        level[k] = upper + down[k] * (lower - upper);
-    }
-}
-
-/* The picture about each of n points (x, y) on `number` places along and aside the unit vector `ahead`, farthest px away
- * at most: log(1 + level * scale), out (n, number). Returns -1 without memory. */
-EXPORT int edgewatch_patches(const float *blurred, int height, int width, int n, const float *at, const float *ahead,
-                             int number, const float *along, const float *aside, float farthest, float scale,
-                             float *out)
-{
-    float *work = malloc(sizeof(float) * 10 * (size_t)number);
-    if (!work)
-        return -1;
-    float *px = work, *py = px + number, *right = py + number, *down = right + number, *level = down + number;
-    float *a = level + number, *b = a + number, *c = b + number, *d = c + number;
-    int32_t *pixel = (int32_t *)(d + number);
-    for (int i = 0; i < n; i++) {
-        float x = at[2 * i], y = at[2 * i + 1];
-        place(x, y, ahead[2 * i], ahead[2 * i + 1], along, aside, px, py, number);
-        if (x > farthest && y > farthest && x < (float)(width - 2) - farthest && y < (float)(height - 2) - farthest) {
-            split(px, py, width, pixel, right, down, number);
-            for (int k = 0; k < number; k++) {
-                const float *p = blurred + pixel[k];
-                a[k] = p[0];
-                b[k] = p[1];
-                c[k] = p[width];
-                d[k] = p[width + 1];
-            }
-            blend(level, a, b, c, d, right, down, number);
-        } else {
-            for (int k = 0; k < number; k++)
-                level[k] = read_level(blurred, height, width, px[k], py[k]);
-        }
-        compress(level, scale, out + (size_t)i * number, number);
-    }
-    free(work);
-    return 0;
-}
+typedef struct {
+    double shift, least_sure, farthest_px, unmoved_least, unmoved_most, merge_px, ends_px;
+    int32_t least_ends;
+} ChoiceRules;
 
 /* Which of m bursts stay: within radius of each lie at least `least_ends` ends of the n pieces, and none nearer than
  * merge_px is likelier, or as likely and before it. */
@@ -376,30 +31,12 @@ EXPORT void edgewatch_merge(int m, const double *at, const double *sure, int n, 
 {
     for (int i = 0; i < m; i++) {
         double x = at[2 * i], y = at[2 * i + 1];
-        int ends = 0, better = 0;
-        for (int k = 0; k < 2 * n && ends < least_ends; k++) {
-            const double *p = k < n ? begin + 2 * k : end + 2 * (k - n);
-            ends += (p[0] - x) * (p[0] - x) + (p[1] - y) * (p[1] - y) < radius * radius;
-        }
+        int better = 0;
         for (int j = 0; j < m && !better; j++) {
             double dx = at[2 * j] - x, dy = at[2 * j + 1] - y;
             better = dx * dx + dy * dy < merge_px * merge_px && (sure[j] > sure[i] || (sure[j] == sure[i] && j < i));
         }
-        keep[i] = ends >= least_ends && !better;
-    }
-}
-
-/* How many ends of the n pieces lie within radius of each of m points. */
-EXPORT void edgewatch_crowd(int m, const double *at, int n, const double *begin, const double *end, double radius,
-                            int32_t *crowd)
-{
-    for (int i = 0; i < m; i++) {
-        double x = at[2 * i], y = at[2 * i + 1];
-        crowd[i] = 0;
-        for (int k = 0; k < 2 * n; k++) {
-            const double *p = k < n ? begin + 2 * k : end + 2 * (k - n);
-            crowd[i] += (p[0] - x) * (p[0] - x) + (p[1] - y) * (p[1] - y) < radius * radius;
-        }
+        keep[i] = !better && count_ends(x, y, n, begin, end, radius, least_ends) >= least_ends;
     }
 }
 
@@ -407,11 +44,15 @@ EXPORT void edgewatch_crowd(int m, const double *at, int n, const double *begin,
  * (n * directions / step, (2 reach + 1) channels). The values go round a ring: in (n, directions, channels). */
 EXPORT void edgewatch_windows(int n, const float *in, int directions, int channels, int reach, int step, float *out)
 {
-    size_t ring = (size_t)directions * channels;
+    size_t ring = (size_t)directions * channels, window = (size_t)(2 * reach + 1) * channels;
     for (int i = 0; i < n; i++, in += ring) {
-        for (int d = 0; d < directions; d += step) {
-            for (int k = d - reach; k <= d + reach; k++, out += channels)
-                memcpy(out, in + (size_t)((k + directions) % directions) * channels, sizeof(float) * (size_t)channels);
+        for (int d = 0; d < directions; d += step, out += window) {
+            int before = d < reach ? reach - d : 0; /* places that lie at the ring's other end */
+            int after = d + reach >= directions ? d + reach + 1 - directions : 0;
+            size_t from = (size_t)(d - reach + before) * channels, number = window - (size_t)(before + after) * channels;
+            memcpy(out, in + ring - (size_t)before * channels, sizeof(float) * (size_t)before * channels);
+            memcpy(out + (size_t)before * channels, in + from, sizeof(float) * number);
+            memcpy(out + window - (size_t)after * channels, in, sizeof(float) * (size_t)after * channels);
         }
     }
 }
@@ -430,4 +71,184 @@ EXPORT void edgewatch_channels(int n, const float *rings, int first, const float
                 out[d * channels + c] = in[d];
         }
     }
+}
+
+enum { UNITS = 24 }; /* as many sums fit into registers */
+
+/* Log odds of the small perceptron that sees `seen`; its units are taken UNITS at a time. */
+WIDE static float sift(const LookRules *rules, const float *seen)
+{
+    int units = rules->sift_units;
+    float odds = rules->sifted_bias;
+    for (int from = 0; from < units; from += UNITS) {
+        float sum[UNITS];
+        memcpy(sum, rules->sift_bias + from, sizeof sum);
+        for (int k = 0; k < rules->sift.number; k++) {
+            const float *weight = rules->sift_weights + (size_t)k * units + from;
+            for (int u = 0; u < UNITS; u++)
+                sum[u] += seen[k] * weight[u];
+        }
+        for (int u = 0; u < UNITS; u++)
+            odds += (sum[u] > 0.0f ? sum[u] : 0.0f) * rules->sifted_weights[from + u];
+    }
+    return odds;
+}
+
+/* Cosine between what is seen on the rings of both pictures. */
+static double likeness(const LookRules *rules, const float *now, const float *before)
+{
+    double both = 0.0, first = 0.0, second = 0.0;
+    for (int r = 0; r < rules->rings_before; r++) {
+        const float *a = now + (size_t)rules->shared[r] * rules->directions, *b = before + (size_t)r * rules->directions;
+        float ab = 0.0f, aa = 0.0f, bb = 0.0f;
+        for (int d = 0; d < rules->directions; d++) {
+            ab += a[d] * b[d];
+            aa += a[d] * a[d];
+            bb += b[d] * b[d];
+        }
+        both += ab;
+        first += aa;
+        second += bb;
+    }
+    double norm = sqrt(first * second);
+    return both / (norm > 1e-6 ? norm : 1e-6);
+}
+
+/* Candidates of a picture that pass the sieve, and what the net is to see of each. before: the picture before, blurred,
+ * NULL without one. camera: context that is the same for all candidates; the crowd goes to place 4. Room for `most` in
+ * at (x, y), context, alike, windows (most, directions / step, (2 reach + 1) (rings + rings_before)). Returns their number; or,
+ * above `most`, the room that was needed; or -1 without memory. */
+EXPORT int edgewatch_look(const Traced *traced, const float *before, double noise_before,
+                          const CandidateRules *candidates, const LookRules *rules, const float *camera, double *at,
+                          float *context, double *alike, float *windows, int most)
+{
+    enum { CROWD = 4 };
+    int found = edgewatch_candidates(traced, candidates, at, most);
+    if (found < 0 || found > most)
+        return found;
+    int directions = rules->directions, channels = rules->rings + rules->rings_before;
+    size_t window = (size_t)(2 * rules->reach + 1) * channels * (directions / rules->step), ring = (size_t)channels * directions;
+    float *work = malloc(sizeof(float) * (RINGS_WORK * (size_t)rules->now.number + 2 * ring + rules->sift.number));
+    if (!work)
+        return -1;
+    float *now = work + RINGS_WORK * (size_t)rules->now.number, *earlier = now + rules->now.number, *mixed = now + ring;
+    float *seen = mixed + ring;
+    Blurred own = {traced->blurred, traced->height, traced->width}, past = {before, traced->height, traced->width};
+    float scale = (float)(1.0 / (rules->level_noise * traced->noise));
+    float scale_before = before ? (float)(1.0 / (rules->level_noise * noise_before)) : 0.0f;
+    int passed = 0;
+    for (int i = 0; i < found; i++) {
+        double dx = at[2 * i] - traced->contact_x, dy = at[2 * i + 1] - traced->contact_y, far = sqrt(dx * dx + dy * dy);
+        if (far <= rules->contact_px)
+            continue;
+        float x = (float)at[2 * i], y = (float)at[2 * i + 1], c = (float)(dx / far), s = (float)(dy / far);
+        read_rings(&own, x, y, c, s, &rules->sift, scale, seen, work);
+        if (sift(rules, seen) < rules->sift_least)
+            continue;
+        read_rings(&own, x, y, c, s, &rules->now, scale, now, work);
+        if (before)
+            read_rings(&past, x, y, c, s, &rules->before, scale_before, earlier, work);
+        else
+            memset(earlier, 0, sizeof(float) * (size_t)rules->before.number);
+        edgewatch_channels(1, now, rules->rings, earlier, rules->rings_before, directions, mixed);
+        edgewatch_windows(1, mixed, directions, channels, rules->reach, rules->step, windows + passed * window);
+        alike[passed] = likeness(rules, now, earlier);
+        float *told = context + (size_t)passed * rules->context;
+        memcpy(told, camera, sizeof(float) * (size_t)rules->context);
+        told[CROWD] += log1pf((float)count_ends(at[2 * i], at[2 * i + 1], traced->pieces, traced->begin, traced->end,
+                                                rules->crowd_px, INT32_MAX));
+        at[2 * passed] = at[2 * i];
+        at[2 * passed + 1] = at[2 * i + 1];
+        passed++;
+    }
+    free(work);
+    return passed;
+}
+
+WIDE static void rectify(float *values, const float *bias, int rows, int units)
+{
+    for (int i = 0; i < rows; i++, values += units)
+        for (int u = 0; u < units; u++)
+            values[u] = values[u] + bias[u] > 0.0f ? values[u] + bias[u] : 0.0f;
+}
+
+/* The second layer's windows of n candidates from the first layer's products (n, directions, first_units). */
+EXPORT void edgewatch_second(int n, const Net *net, float *first, float *windows)
+{
+    int directions = net->places * net->step;
+    rectify(first, net->first_bias, n * directions, net->first_units);
+    edgewatch_windows(n, first, directions, net->first_units, net->reach, net->step, windows);
+}
+
+/* What the hidden layer sees: the second layer's products (n, places, second_units), then the context. */
+EXPORT void edgewatch_joint(int n, const Net *net, float *second, const float *context, float *joint)
+{
+    size_t flat = (size_t)net->places * net->second_units, own = (size_t)net->context;
+    rectify(second, net->second_bias, n * net->places, net->second_units);
+    for (int i = 0; i < n; i++) {
+        float *row = joint + i * (flat + own);
+        memcpy(row, second + i * flat, sizeof(float) * flat);
+        memcpy(row + flat, context + i * own, sizeof(float) * own);
+    }
+}
+
+static double probability(double odds)
+{
+    return 1.0 / (1.0 + exp(odds < -30.0 ? 30.0 : odds > 30.0 ? -30.0 : -odds));
+}
+
+static double clip(double value, double most) { return value < -most ? -most : value > most ? most : value; }
+
+/* Which of n candidates are bursts, from the hidden layer's products (n, hidden_units). sure, expected (n): probability
+ * of each, and what was to be expected of it before a look; found (4, n): at first x and y, then `sure`, `late`, `fresh`
+ * of those that are. Returns their number, or -1 without memory. */
+EXPORT int edgewatch_choose(int n, const Net *net, const ChoiceRules *rules, const Traced *traced, const double *at,
+                            const float *context, const double *alike, float *hidden, double *sure, double *expected,
+                            double *found_at, double *found)
+{
+    uint8_t *keep = malloc((size_t)n + 1);
+    if (!keep)
+        return -1;
+    rectify(hidden, net->hidden_bias, n, net->hidden_units);
+    double *own = found, *late = found + n, *fresh = late + n;
+    int likely = 0, kept = 0;
+    for (int i = 0; i < n; i++) {
+        const float *unit = hidden + (size_t)i * net->hidden_units, *told = context + (size_t)i * net->context;
+        float out[8];
+        for (int k = 0; k < net->outputs; k++)
+            out[k] = net->output_bias[k];
+        for (int u = 0; u < net->hidden_units; u++)
+            for (int k = 0; k < net->outputs; k++)
+                out[k] += unit[u] * net->output[u * net->outputs + k];
+        float odds = net->share_bias[0];
+        for (int k = 0; k < net->context; k++)
+            odds += told[k] * net->share[k];
+        expected[i] = probability(odds);
+        sure[i] = probability(out[0] + rules->shift);
+        if (sure[i] < rules->least_sure)
+            continue;
+        double dx = at[2 * i] - traced->contact_x, dy = at[2 * i + 1] - traced->contact_y, far = sqrt(dx * dx + dy * dy);
+        double ahead = clip(out[1], rules->farthest_px) / far, aside = clip(out[2], rules->farthest_px) / far;
+        found_at[2 * likely] = at[2 * i] + ahead * dx - aside * dy;
+        found_at[2 * likely + 1] = at[2 * i + 1] + ahead * dy + aside * dx;
+        own[likely] = sure[i];
+        late[likely] = probability(out[3]);
+        fresh[likely] = probability(out[4]);
+        if (alike[i] > rules->unmoved_least && fresh[likely] > rules->unmoved_most)
+            fresh[likely] = rules->unmoved_most;
+        likely++;
+    }
+    edgewatch_merge(likely, found_at, own, traced->pieces, traced->begin, traced->end, rules->ends_px, rules->least_ends,
+                    rules->merge_px, keep);
+    for (int i = 0; i < likely; i++) {
+        if (!keep[i])
+            continue;
+        found_at[2 * kept] = found_at[2 * i];
+        found_at[2 * kept + 1] = found_at[2 * i + 1];
+        own[kept] = own[i];
+        late[kept] = late[i];
+        fresh[kept++] = fresh[i];
+    }
+    free(keep);
+    return kept;
 }

@@ -144,6 +144,67 @@ class StreakRules(ctypes.Structure):
     )
 
 
+class Traced(ctypes.Structure):
+    """A picture and the pieces of ridge in it."""
+
+    _fields_ = (
+        *((name, c_void_p) for name in ("excess", "blurred", "begin", "end", "axis", "length")),
+        *((name, c_double) for name in ("contact_x", "contact_y", "noise")),
+        *((name, c_int32) for name in ("height", "width", "pieces")),
+    )
+
+
+class CandidateRules(ctypes.Structure):
+    """What makes a point a candidate for a burst."""
+
+    _fields_ = (
+        *((name, c_double) for name in ("gap_px", "inner_px", "gap_lengths", "least_sin", "cell_px", "near")),
+        *((name, c_double) for name in ("least_votes", "blob_noise", "blob_fall", "light_noise", "light_apart_px")),
+        ("blob_step", c_void_p),
+        *((name, c_int32) for name in ("blob_steps", "blob_margin")),
+    )
+
+
+class Places(ctypes.Structure):
+    """Where the picture about a point is read."""
+
+    _fields_ = (("along", c_void_p), ("aside", c_void_p), ("farthest", c_float), ("number", c_int32))
+
+
+class LookRules(ctypes.Structure):
+    """How candidates are sifted, and what the net is to see of them."""
+
+    _fields_ = (
+        *((name, Places) for name in ("now", "before", "sift")),
+        *((name, c_void_p) for name in ("sift_weights", "sift_bias", "sifted_weights", "shared")),
+        *((name, c_double) for name in ("contact_px", "crowd_px")),
+        *((name, c_float) for name in ("sifted_bias", "sift_least", "level_noise")),
+        *((name, c_int32) for name in ("sift_units", "directions", "rings", "rings_before", "reach", "step")),
+        ("context", c_int32),
+    )
+
+
+class Net(ctypes.Structure):
+    """Biases and sizes of the net, and its last layer."""
+
+    _fields_ = (
+        *((name, c_void_p) for name in ("first_bias", "second_bias", "hidden_bias", "output", "output_bias")),
+        *((name, c_void_p) for name in ("share", "share_bias")),
+        *((name, c_int32) for name in ("first_units", "second_units", "hidden_units", "outputs", "context")),
+        *((name, c_int32) for name in ("places", "reach", "step")),
+    )
+
+
+class ChoiceRules(ctypes.Structure):
+    """Which candidates are bursts."""
+
+    _fields_ = (
+        *((name, c_double) for name in ("shift", "least_sure", "farthest_px", "unmoved_least", "unmoved_most")),
+        *((name, c_double) for name in ("merge_px", "ends_px")),
+        ("least_ends", c_int32),
+    )
+
+
 class ArmRules(ctypes.Structure):
     """What makes a line an arm."""
 

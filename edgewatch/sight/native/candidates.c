@@ -1,0 +1,368 @@
+/* Candidates for bursts: see candidates.py. */
+#include "candidates.h"
+#include "kernels.h"
+
+/* Votes for meeting points, counted in square cells. */
+typedef struct {
+    int wide, high;
+    float *number, *half, *dense; /* wide * high: votes of a cell; blurred along the row; blurred both ways */
+    uint8_t *voted;               /* high: whether any cell of the row has votes */
+    int32_t *slot;                /* wide * high: where the sums of a cell's votes are, from 1 on; 0: it has none */
+    double *sum;                  /* x and y of the votes of each slot */
+    int slots, room;
+} Votes;
+
+static int add_vote(Votes *votes, double cell_px, double x, double y)
+{
+    int row = (int)(y / cell_px), cell = row * votes->wide + (int)(x / cell_px);
+    if (!votes->slot[cell]) {
+        if (votes->slots == votes->room) {
+            double *more = realloc(votes->sum, sizeof(double) * 4 * (size_t)votes->room);
+            if (!more)
+                return -1;
+            votes->sum = more;
+            votes->room *= 2;
+        }
+        votes->sum[2 * votes->slots] = votes->sum[2 * votes->slots + 1] = 0.0;
+        votes->slot[cell] = ++votes->slots;
+    }
+    double *sum = votes->sum + 2 * (votes->slot[cell] - 1);
+    sum[0] += x;
+    sum[1] += y;
+    votes->number[cell] += 1.0f;
+    votes->voted[row] = 1;
+    return 0;
+}
+
+/* Neighbours of a place 0 <= k < n: k - 1 and k + 1, mirrored beyond the ends. */
+static inline int before(int k, int n) { return k > 0 ? k - 1 : n > 1 ? 1 : 0; }
+static inline int after(int k, int n) { return k + 1 < n ? k + 1 : n > 1 ? n - 2 : 0; }
+
+static void blur_votes(Votes *votes, float near)
+{
+    int wide = votes->wide, high = votes->high;
+    float middle = 1.0f - 2.0f * near;
+    for (int y = 0; y < high; y++) {
+        const float *row = votes->number + (size_t)y * wide;
+        float *half = votes->half + (size_t)y * wide;
+        if (!votes->voted[y]) {
+            memset(half, 0, sizeof(float) * (size_t)wide);
+            continue;
+        }
+        for (int x = 1; x < wide - 1; x++)
+            half[x] = middle * row[x] + near * (row[x - 1] + row[x + 1]);
+        half[0] = middle * row[0] + near * 2.0f * row[after(0, wide)];
+        half[wide - 1] = middle * row[wide - 1] + near * 2.0f * row[before(wide - 1, wide)];
+    }
+    for (int y = 0; y < high; y++) {
+        const float *own = votes->half + (size_t)y * wide;
+        const float *up = votes->half + (size_t)before(y, high) * wide;
+        const float *low = votes->half + (size_t)after(y, high) * wide;
+        float *dense = votes->dense + (size_t)y * wide;
+        for (int x = 0; x < wide; x++)
+            dense[x] = middle * own[x] + near * (up[x] + low[x]);
+    }
+}
+
+/* Mean place of the votes about a cell, weighted as the blur does. */
+static void middle_of(const Votes *votes, float near, int x, int y, double *at)
+{
+    double total[2] = {0.0, 0.0};
+    int columns[3] = {before(x, votes->wide), x, after(x, votes->wide)};
+    int rows[3] = {before(y, votes->high), y, after(y, votes->high)};
+    for (int v = 0; v < 3; v++) {
+        for (int u = 0; u < 3; u++) {
+            int slot = votes->slot[rows[v] * votes->wide + columns[u]];
+            double weight = (v == 1 ? 1.0 - 2.0 * near : near) * (u == 1 ? 1.0 - 2.0 * near : near);
+            if (slot) {
+                total[0] += weight * votes->sum[2 * slot - 2];
+                total[1] += weight * votes->sum[2 * slot - 1];
+            }
+        }
+    }
+    float dense = votes->dense[(size_t)y * votes->wide + x];
+    at[0] = total[0] / dense;
+    at[1] = total[1] / dense;
+}
+
+static int densest(const Votes *votes, float near, float least_votes, double *at, int most)
+{
+    int wide = votes->wide, high = votes->high, found = 0;
+    for (int y = 0; y < high; y++) {
+        if (!votes->voted[before(y, high)] && !votes->voted[y] && !votes->voted[after(y, high)])
+            continue;
+        for (int x = 0; x < wide; x++) {
+            float own = votes->dense[(size_t)y * wide + x];
+            if (own <= least_votes)
+                continue;
+            int top = 1;
+            for (int v = y > 0 ? y - 1 : 0; v <= y + 1 && v < high; v++)
+                for (int u = x > 0 ? x - 1 : 0; u <= x + 1 && u < wide; u++)
+                    top &= own >= votes->dense[(size_t)v * wide + u];
+            if (!top)
+                continue;
+            if (found < most)
+                middle_of(votes, near, x, y, at + 2 * found);
+            found++;
+        }
+    }
+    return found;
+}
+
+/* The ends of pieces, the begins first, sorted into boxes as wide as the gap that may lie between two of them. */
+typedef struct {
+    int across, down;
+    int32_t *start, *order, *box; /* boxes + 2: a box's first place in the order; ends in the order; box of each end */
+} Boxes;
+
+static void sort_ends(Boxes *boxes, int n, const double *begin, const double *end, double gap_px)
+{
+    int number = boxes->across * boxes->down;
+    for (int i = 0; i < 2 * n; i++) {
+        const double *p = i < n ? begin + 2 * i : end + 2 * (i - n);
+        int column = (int)(p[0] / gap_px), row = (int)(p[1] / gap_px);
+        column = column < 0 ? 0 : column >= boxes->across ? boxes->across - 1 : column;
+        row = row < 0 ? 0 : row >= boxes->down ? boxes->down - 1 : row;
+        boxes->box[i] = row * boxes->across + column;
+        boxes->start[boxes->box[i]]++;
+    }
+    for (int k = 1; k <= number; k++)
+        boxes->start[k] += boxes->start[k - 1];
+    for (int i = 2 * n - 1; i >= 0; i--)
+        boxes->order[--boxes->start[boxes->box[i]]] = i;
+}
+
+/* Where lines of pieces meet beyond their ends: the middle of the votes wherever they are dense, in the order of their
+ * cells. Room in `at` for `most` points (x, y). Returns their number, which may be more, or -1 without memory. */
+static int find_meetings(const Traced *traced, const CandidateRules *rules, double *at, int most)
+{
+    int n = traced->pieces, height = traced->height, width = traced->width;
+    const double *begin = traced->begin, *end = traced->end, *axis = traced->axis, *length = traced->length;
+    double gap_px = rules->gap_px, inner_px = rules->inner_px, gap_lengths = rules->gap_lengths;
+    double least_sin = rules->least_sin, cell_px = rules->cell_px;
+    if (n < 2)
+        return 0;
+    Votes votes = {.wide = (int)(width / cell_px) + 1, .high = (int)(height / cell_px) + 1, .room = 256};
+    Boxes boxes = {.across = (int)(width / gap_px) + 1, .down = (int)(height / gap_px) + 1};
+    size_t cells = (size_t)votes.wide * votes.high;
+    char *zero = calloc(cells * 8 + (size_t)votes.high, 1);
+    votes.half = malloc(sizeof(float) * 2 * cells);
+    votes.sum = malloc(sizeof(double) * 2 * (size_t)votes.room);
+    boxes.start = calloc((size_t)boxes.across * boxes.down + 2, sizeof(int32_t));
+    boxes.order = malloc(sizeof(int32_t) * (4 * (size_t)n + 1));
+    int found = -1;
+    if (!zero || !votes.half || !votes.sum || !boxes.start || !boxes.order)
+        goto done;
+    votes.number = (float *)zero;
+    votes.slot = (int32_t *)(zero + 4 * cells);
+    votes.voted = (uint8_t *)(zero + 8 * cells);
+    votes.dense = votes.half + cells;
+    boxes.box = boxes.order + 2 * n;
+    sort_ends(&boxes, n, begin, end, gap_px);
+    for (int i = 0; i < 2 * n; i++) {
+        int a = i < n ? i : i - n;
+        const double *p = i < n ? begin + 2 * a : end + 2 * a;
+        double ux = i < n ? axis[2 * a] : -axis[2 * a], uy = i < n ? axis[2 * a + 1] : -axis[2 * a + 1];
+        double reach_a = fmin(gap_px, gap_lengths * length[a] + 2.0);
+        int column = boxes.box[i] % boxes.across, row = boxes.box[i] / boxes.across;
+        for (int y = row > 0 ? row - 1 : 0; y <= row + 1 && y < boxes.down; y++) {
+            const int32_t *first = boxes.start + y * boxes.across + (column > 0 ? column - 1 : 0);
+            const int32_t *last = boxes.start + y * boxes.across + (column + 1 < boxes.across ? column + 1 : column);
+            for (int k = first[0]; k < last[1]; k++) {
+                int j = boxes.order[k], b = j < n ? j : j - n;
+                if (j <= i || a == b)
+                    continue;
+                const double *q = j < n ? begin + 2 * b : end + 2 * b;
+                double gx = q[0] - p[0], gy = q[1] - p[1];
+                if (gx * gx + gy * gy > gap_px * gap_px)
+                    continue;
+                double vx = j < n ? axis[2 * b] : -axis[2 * b], vy = j < n ? axis[2 * b + 1] : -axis[2 * b + 1];
+                double cross = ux * vy - uy * vx;
+                if (fabs(cross) <= least_sin)
+                    continue;
+                double s = -(gx * vy - gy * vx) / cross, t = -(gx * uy - gy * ux) / cross;
+                double reach_b = fmin(gap_px, gap_lengths * length[b] + 2.0);
+                if (s <= -inner_px || s >= reach_a || t <= -inner_px || t >= reach_b)
+                    continue;
+                double mx = p[0] - s * ux, my = p[1] - s * uy;
+                if (mx > 0.0 && my > 0.0 && mx < width - 1 && my < height - 1 && add_vote(&votes, cell_px, mx, my))
+                    goto done;
+            }
+        }
+    }
+    blur_votes(&votes, (float)rules->near);
+    found = densest(&votes, (float)rules->near, (float)rules->least_votes, at, most);
+done:
+    free(zero);
+    free(votes.half);
+    free(votes.sum);
+    free(boxes.start);
+    free(boxes.order);
+    return found;
+}
+
+WIDE static void halve(const uint8_t *upper, const uint8_t *lower, uint8_t *out, int width)
+{
+    for (int x = 0; x < width; x++)
+        out[x] = (uint8_t)((upper[2 * x] + upper[2 * x + 1] + lower[2 * x] + lower[2 * x + 1] + 2) >> 2);
+}
+
+WIDE static void soften(const uint8_t *a, const uint8_t *b, const uint8_t *c, uint16_t *sum, uint8_t *out, int width)
+{
+    for (int x = 0; x < width; x++)
+        sum[x] = (uint16_t)(a[x] + 2 * b[x] + c[x]);
+    for (int x = 1; x < width - 1; x++)
+        out[x] = (uint8_t)((sum[x - 1] + 2 * sum[x] + sum[x + 1] + 8) >> 4);
+    out[0] = (uint8_t)((2 * sum[0] + 2 * sum[1] + 8) >> 4);
+    out[width - 1] = (uint8_t)((2 * sum[width - 1] + 2 * sum[width - 2] + 8) >> 4);
+}
+
+WIDE static int any_above(const uint8_t *values, int number, uint8_t least)
+{
+    uint8_t any = 0;
+    for (int k = 0; k < number; k++)
+        any |= values[k] > least;
+    return any;
+}
+
+/* Spots from which brightness falls off in every direction, in the excess at half its size. */
+static int find_blobs(const Traced *traced, const CandidateRules *rules, double *at, int most)
+{
+    int height = traced->height, width = traced->width, margin = rules->blob_margin, steps = rules->blob_steps;
+    const uint8_t *excess = traced->excess;
+    const int32_t *step = rules->blob_step;
+    double fall = rules->blob_fall, level = rules->blob_noise * traced->noise;
+    uint8_t least = (uint8_t)(level < 2.0 ? 2.0 : level > 255.0 ? 255.0 : level);
+    int high = height / 2, wide = width / 2;
+    size_t size = (size_t)high * wide;
+    uint8_t *half = malloc(2 * size);
+    uint16_t *sum = malloc(sizeof(uint16_t) * (size_t)wide);
+    if (!half || !sum) {
+        free(half);
+        free(sum);
+        return -1;
+    }
+    uint8_t *soft = half + size;
+    for (int y = 0; y < high; y++)
+        halve(excess + 2 * (size_t)y * width, excess + (2 * (size_t)y + 1) * width, half + (size_t)y * wide, wide);
+    for (int y = 0; y < high; y++) {
+        int up = y > 0 ? y - 1 : 1, low = y + 1 < high ? y + 1 : high - 2;
+        soften(half + (size_t)up * wide, half + (size_t)y * wide, half + (size_t)low * wide, sum,
+               soft + (size_t)y * wide, wide);
+    }
+    int found = 0;
+    for (int y = margin; y < high - margin; y++) {
+        for (int from = margin; from < wide - margin; from += 32) {
+            int stop = from + 32 < wide - margin ? from + 32 : wide - margin;
+            if (!any_above(soft + (size_t)y * wide + from, stop - from, least))
+                continue;
+            for (int x = from; x < stop; x++) {
+                const uint8_t *own = soft + (size_t)y * wide + x;
+                if (*own <= least || own[-1] > *own || own[1] > *own)
+                    continue;
+                int top = 1;
+                for (int k = -1; k <= 1; k++)
+                    top &= own[k - wide] <= *own && own[k + wide] <= *own;
+                double limit = 2.0 * (1.0 - fall) * *own;
+                for (int k = 0; k < steps && top; k++) {
+                    int away = step[2 * k + 1] * wide + step[2 * k];
+                    top = own[away] + own[-away] < limit;
+                }
+                if (!top)
+                    continue;
+                if (found < most) {
+                    at[2 * found] = 2.0 * x + 0.5;
+                    at[2 * found + 1] = 2.0 * y + 0.5;
+                }
+                found++;
+            }
+        }
+    }
+    free(half);
+    free(sum);
+    return found;
+}
+
+enum { SIDE = 4, SPREAD = 16 }; /* side of a cell of light; sum of the weights 1 4 6 4 1 */
+
+WIDE static void gather(const uint8_t *rows, int width, uint16_t *sum)
+{
+    for (int x = 0; x < width; x++)
+        sum[x] = (uint16_t)(rows[x] + rows[x + width] + rows[x + 2 * width] + rows[x + 3 * width]);
+}
+
+/* Weighted sums of n values with their neighbours two to either side and `apart` from each other. */
+WIDE static void spread(const uint32_t *in, int apart, uint32_t *out, int n)
+{
+    for (int k = 0; k < n; k++)
+        out[k] = in[k - 2 * apart] + in[k + 2 * apart] + 4 * (in[k - apart] + in[k + apart]) + 6 * in[k];
+}
+
+/* Places where much light is gathered and none of `others` points is near. */
+static int find_lights(const Traced *traced, const CandidateRules *rules, const double *other, int others, double *at,
+                       int most)
+{
+    int high = traced->height / SIDE, wide = traced->width / SIDE, frame = wide + 4;
+    if (!high || !wide)
+        return 0;
+    size_t framed = (size_t)frame * (high + 4);
+    uint32_t *cells = calloc(framed, sizeof(uint32_t));
+    uint32_t *half = malloc(sizeof(uint32_t) * 2 * framed);
+    uint16_t *sum = malloc(sizeof(uint16_t) * (size_t)traced->width);
+    int found = -1;
+    if (!cells || !half || !sum)
+        goto done;
+    uint32_t *soft = half + framed;
+    for (int y = 0; y < high; y++) {
+        gather(traced->excess + (size_t)y * SIDE * traced->width, traced->width, sum);
+        uint32_t *row = cells + (size_t)(y + 2) * frame + 2;
+        for (int x = 0; x < wide; x++)
+            row[x] = (uint32_t)(sum[4 * x] + sum[4 * x + 1] + sum[4 * x + 2] + sum[4 * x + 3]);
+    }
+    for (int y = 2; y < high + 2; y++) {
+        spread(cells + (size_t)y * frame, frame, half, frame);
+        spread(half + 2, 1, soft + (size_t)y * frame + 2, wide);
+    }
+    found = 0;
+    float least = (float)(rules->light_noise * traced->noise * (SIDE * SPREAD) * (SIDE * SPREAD));
+    double apart = rules->light_apart_px * rules->light_apart_px;
+    for (int y = 2; y < high + 2; y++) {
+        for (int x = 2; x < wide + 2; x++) {
+            const uint32_t *own = soft + (size_t)y * frame + x;
+            int top = (float)*own > least;
+            for (int v = y > 2 ? -1 : 0; top && v <= (y < high + 1); v++)
+                for (int u = x > 2 ? -1 : 0; u <= (x < wide + 1); u++)
+                    top &= own[v * frame + u] <= *own;
+            float px = (float)(SIDE * (x - 2)) + 0.5f * (SIDE - 1), py = (float)(SIDE * (y - 2)) + 0.5f * (SIDE - 1);
+            for (int k = 0; top && k < others; k++) {
+                float dx = px - (float)other[2 * k], dy = py - (float)other[2 * k + 1];
+                top = !(dx * dx + dy * dy < apart);
+            }
+            if (!top)
+                continue;
+            if (found < most) {
+                at[2 * found] = px;
+                at[2 * found + 1] = py;
+            }
+            found++;
+        }
+    }
+done:
+    free(cells);
+    free(half);
+    free(sum);
+    return found;
+}
+
+EXPORT int edgewatch_candidates(const Traced *traced, const CandidateRules *rules, double *at, int most)
+{
+    int found = find_blobs(traced, rules, at, most);
+    if (found < 0 || found > most)
+        return found;
+    int meetings = find_meetings(traced, rules, at + 2 * found, most - found);
+    if (meetings < 0 || found + meetings > most)
+        return meetings < 0 ? -1 : found + meetings;
+    found += meetings;
+    int lights = find_lights(traced, rules, at, found, at + 2 * found, most - found);
+    return lights < 0 ? -1 : found + lights;
+}
