@@ -292,7 +292,7 @@ def _third(group: Array, values: Array) -> tuple[Array, Array]:
 def _middle(group: NDArray[np.int64], weight: Array, values: Array, count: int) -> Array:
     """Weighted mean of the values of each of ``count`` groups."""
     whole = np.maximum(np.bincount(group, weight, count), np.finfo(np.float64).tiny)
-    return np.bincount(group, weight * values, count) / whole
+    return np.asarray(np.bincount(group, weight * values, count) / whole)
 
 
 class Stream(Scene):
