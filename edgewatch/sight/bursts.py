@@ -117,7 +117,8 @@ def find_apexes(
         sure = probability(answers[:, 0])
     else:
         sure = probability(answers[:, 0] + share.shift)
-        share.learn(sure, probability((context @ learnt.SHARE + learnt.SHARE_BIAS)[:, 0]))
+        expected = probability((context @ learnt.SHARE + learnt.SHARE_BIAS)[:, 0])
+        share.learn(float(sure.sum()), float(expected.sum()), len(sure))
     likely = np.flatnonzero(sure >= least_sure)
     at, sure, answers, unmoved = at[likely], sure[likely], answers[likely], unmoved[likely]
     ahead, shift = directions(at, contact_px), np.clip(answers[:, 1:3], -FARTHEST_PX, FARTHEST_PX)
@@ -132,6 +133,15 @@ class _Work(threading.local):
     """Arrays in which one thread works, kept from picture to picture and made larger when they have to be."""
 
     room = 0
+    camera_of: tuple[float, Optics, bool] | None = None
+
+    def camera(self, noise: float, optics: Optics, *, has_before: bool) -> NDArray[np.float32]:
+        """As ``read_camera`` has it; noise is measured in one of some pictures, so most are as the last."""
+        last = self.camera_of
+        if last is None or last[0] != noise or last[1] is not optics or last[2] != has_before:
+            self.camera_of = noise, optics, has_before
+            self.last_camera = read_camera(noise, optics, has_before=has_before)
+        return self.last_camera
 
     def make(self, room: int) -> None:
         """Make room for so many candidates."""
@@ -202,17 +212,17 @@ def _find_compiled(
 ) -> Apexes:
     """As ``find_apexes`` has it; only the net's matrix products are numpy's."""
     traced, work = record(pieces, ridges, optics.contact_px), _WORK
-    camera = read_camera(ridges.threshold_noise, optics, has_before=before is not None)
+    camera = work.camera(ridges.threshold_noise, optics, has_before=before is not None)
     if not work.room:
         work.make(FIRST_ROOM)
     while True:
         count = native.LIBRARY.edgewatch_look(
             native.reference(traced),
-            None if before is None else native.place(before.blurred),
+            None if before is None else native.start(before.blurred),
             native.double(0.0 if before is None else before.threshold_noise),
             native.reference(RULES),
             native.reference(_LOOK),
-            native.place(camera),
+            native.start(camera),
             *(work.place[name] for name in ("at", "context", "alike", "first_windows")),
             work.room,
         )
@@ -227,7 +237,7 @@ def _find_compiled(
     np.matmul(work.second_windows[:rows], learnt.SECOND, out=work.second[:rows])
     native.LIBRARY.edgewatch_joint(count, net, place["second"], place["context"], place["joint"])
     np.matmul(work.joint[:count], learnt.HIDDEN, out=work.hidden[:count])
-    at, values, told = np.empty((count, 2)), np.empty((3, count)), np.empty((2, count))
+    at, values, told = np.empty((count, 2)), np.empty((3, count)), records.Told()
     rules = records.ChoiceRules(
         shift=share.shift if share else 0.0,
         least_sure=least_sure,
@@ -244,14 +254,13 @@ def _find_compiled(
         native.reference(rules),
         native.reference(traced),
         *(place[name] for name in ("at", "context", "alike", "hidden")),
-        native.place(told),
-        native.place(told, count),
-        native.place(at),
-        native.place(values),
+        native.reference(told),
+        native.start(at),
+        native.start(values),
     )
     native.enough(found, count)
     if share:
-        share.learn(told[0], told[1])
+        share.learn(told.found, told.expected, count)
     sure, late, fresh = values[:, :found]
     return Apexes(at=at[:found], sure=sure, late=late, fresh=fresh)
 

@@ -156,8 +156,8 @@ def _blobs(ridges: Ridges) -> NDArray[np.float64]:
 
     Looked for in a picture of half the size, which is soft enough and costs a quarter.
     """
-    height, width = (size // 2 for size in ridges.excess.shape)
-    half = _cv.resize(ridges.excess[: 2 * height, : 2 * width], (width, height), interpolation=_cv.INTER_AREA)
+    half = _halved(ridges.excess)
+    width = half.shape[1]
     soft = _cv.GaussianBlur(half, (3, 3), 0)
     found = soft >= _cv.dilate(soft, np.ones((3, 3), np.uint8))
     found &= soft > max(2, int(BLOB_NOISE * ridges.threshold_noise))
@@ -174,6 +174,11 @@ def _blobs(ridges: Ridges) -> NDArray[np.float64]:
     return np.stack([2.0 * column + 0.5, 2.0 * row + 0.5], axis=1)
 
 
+def _halved(excess: NDArray[np.uint8]) -> NDArray[np.uint8]:
+    height, width = (size // 2 for size in excess.shape)
+    return np.asarray(_cv.resize(excess[: 2 * height, : 2 * width], (width, height), interpolation=_cv.INTER_AREA))
+
+
 _SPREAD = np.array([1.0, 4.0, 6.0, 4.0, 1.0], np.float32)
 
 
@@ -185,11 +190,11 @@ def _lights(ridges: Ridges, others: NDArray[np.float64]) -> NDArray[np.float64]:
     high, wide = (size // LIGHT_CELL_PX for size in ridges.excess.shape)
     if not high or not wide:
         return np.zeros((0, 2))
-    cells = ridges.excess[: LIGHT_CELL_PX * high, : LIGHT_CELL_PX * wide]
-    cells = cells.reshape(high, LIGHT_CELL_PX, wide, LIGHT_CELL_PX).sum(axis=(1, 3), dtype=np.float32)
+    half, side = _halved(ridges.excess), LIGHT_CELL_PX // 2
+    cells = half[: side * high, : side * wide].reshape(high, side, wide, side).sum(axis=(1, 3), dtype=np.float32)
     soft = _cv.sepFilter2D(cells, cv2.CV_32F, _SPREAD, _SPREAD, borderType=cv2.BORDER_CONSTANT)
-    least = LIGHT_NOISE * ridges.threshold_noise * (LIGHT_CELL_PX * float(_SPREAD.sum())) ** 2
-    row, column = np.nonzero((soft >= _cv.dilate(soft, np.ones((3, 3), np.uint8))) & (soft > np.float32(least)))
+    least = int(LIGHT_NOISE * ridges.threshold_noise * (side * float(_SPREAD.sum())) ** 2)
+    row, column = np.nonzero((soft >= _cv.dilate(soft, np.ones((3, 3), np.uint8))) & (soft > least))
     middle = 0.5 * (LIGHT_CELL_PX - 1)
     at = np.stack([LIGHT_CELL_PX * column + middle, LIGHT_CELL_PX * row + middle], axis=1)
     return at[~(squared_gaps(at, others) < LIGHT_APART_PX**2).any(axis=1)]

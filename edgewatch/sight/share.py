@@ -11,9 +11,6 @@ from __future__ import annotations
 
 import math
 
-import numpy as np
-from numpy.typing import NDArray
-
 MEMORY_S = 0.5
 """Candidates are forgotten with this time constant (s)."""
 
@@ -42,11 +39,13 @@ class BurstShare:
         found = (self._found + DOUBT * usual) / (self._count + DOUBT)
         return min(0.0, max(-MOST_SHIFT, _log_odds(found) - _log_odds(usual)))
 
-    def learn(self, sure: NDArray[np.float64], expected: NDArray[np.float64]) -> None:
-        """Candidates of a picture (M,): their probabilities, shift included, and those expected without a look."""
-        self._found = self._keep * self._found + float(sure.sum())
-        self._expected = self._keep * self._expected + float(expected.sum())
-        self._count = self._keep * self._count + len(sure)
+    def learn(self, found: float, expected: float, count: int) -> None:
+        """From ``count`` candidates of a picture: the sums of their probabilities, shift included, and of those that
+        were to be expected without a look.
+        """
+        self._found = self._keep * self._found + found
+        self._expected = self._keep * self._expected + expected
+        self._count = self._keep * self._count + count
 
 
 def _log_odds(share: float) -> float:

@@ -272,12 +272,14 @@ def hazard(scale: float) -> None:
                 ("at 37 degrees", make_optics(degrees=37.0), 80),
             )
         ]
-        seen = []
+        seen, shares = [], []
         for name, case, count in rows:
-            rate, bursts, _ = measured_rate(case, judge, max(8, round(count * scale)), 30)
+            rate, bursts, struck = measured_rate(case, judge, max(8, round(count * scale)), 30)
             seen.append(rate)
-            print(f"{judge} {name:18s} rate {rate:.3f}  ({bursts})", flush=True)
-        print(f"{judge} spread at hazard 0.9: {min(seen):.3f} to {max(seen):.3f}, mean {np.mean(seen):.3f}", flush=True)
+            shares.append(rate / struck)
+            print(f"{judge} {name:18s} rate {rate:.3f}  ({bursts})  went off {struck:.3f}", flush=True)
+        for what, values in (("spread at hazard 0.9", seen), ("as a share of what went off", shares)):
+            print(f"{judge} {what}: {min(values):.3f} to {max(values):.3f}, mean {np.mean(values):.3f}", flush=True)
 
 
 def speed(scale: float) -> None:

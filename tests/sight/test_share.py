@@ -15,7 +15,7 @@ def _look(share: BurstShare, odds: np.ndarray, pictures: int) -> None:
     """Pictures with candidates of these log odds, corrected as the sight does."""
     for _ in range(pictures):
         sure = 1.0 / (1.0 + np.exp(-odds - share.shift))
-        share.learn(sure, np.full(len(odds), USUAL))
+        share.learn(float(sure.sum()), USUAL * len(odds), len(odds))
 
 
 def _odds(truth: float, rng: np.random.Generator, count: int = 4000) -> np.ndarray:
@@ -49,7 +49,7 @@ def test_shift_is_limited_and_never_upwards() -> None:
 def test_a_few_candidates_say_little_and_another_bar_is_followed() -> None:
     """Ten dull candidates do not move the odds by a tenth; after a quiet bar a lively one is itself within a memory."""
     share = BurstShare(period_s=PERIOD_S)
-    share.learn(np.full(10, 0.01), np.full(10, USUAL))
+    share.learn(0.1, 10 * USUAL, 10)
     assert -0.1 < share.shift < 0.0
     rng = np.random.default_rng(63)
     _look(share, _odds(0.001, rng, 100), 400)
@@ -62,5 +62,5 @@ def test_pictures_without_candidates_are_harmless() -> None:
     """Nothing seen, nothing learnt, however long."""
     share = BurstShare(period_s=PERIOD_S)
     for _ in range(3):
-        share.learn(np.zeros(0), np.zeros(0))
+        share.learn(0.0, 0.0, 0)
     assert share.shift == 0.0

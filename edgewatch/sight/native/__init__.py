@@ -56,11 +56,15 @@ _bytes: Any = ctypes.c_char * 0  # its type hints know no buffer before Python 3
 
 def place(array: NDArray[Any], skipped: int = 0) -> ctypes.c_void_p:
     """Where a contiguous array begins in memory, or the value after so many of it. The caller keeps the array alive."""
-    return ctypes.c_void_p(array.__array_interface__["data"][0] + skipped * array.itemsize)
+    try:
+        begin = ctypes.addressof(_bytes.from_buffer(array))  # half the time of the way below
+    except (TypeError, ValueError):  # read-only
+        begin = array.__array_interface__["data"][0]
+    return ctypes.c_void_p(begin + skipped * array.itemsize if skipped else begin)
 
 
 def start(array: NDArray[Any]) -> Any:
-    """Where a contiguous array begins, for a call: a quarter of the time that ``place`` takes, and it keeps the array
+    """Where a contiguous array begins, for a call: half the time that ``place`` takes, and it keeps the array
     alive; a record does not take it. Raises ``TypeError`` or ``ValueError`` for an array with gaps.
     """
     try:

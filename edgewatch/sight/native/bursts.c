@@ -24,6 +24,10 @@ typedef struct {
     int32_t least_ends;
 } ChoiceRules;
 
+typedef struct {
+    double found, expected; /* sums over the candidates */
+} Told;
+
 /* Which of m bursts stay: within radius of each lie at least `least_ends` ends of the n pieces, and none nearer than
  * merge_px is likelier, or as likely and before it. */
 EXPORT void edgewatch_merge(int m, const double *at, const double *sure, int n, const double *begin, const double *end,
@@ -199,12 +203,12 @@ static double probability(double odds)
 
 static double clip(double value, double most) { return value < -most ? -most : value > most ? most : value; }
 
-/* Which of n candidates are bursts, from the hidden layer's products (n, hidden_units). sure, expected (n): probability
- * of each, and what was to be expected of it before a look; found (4, n): at first x and y, then `sure`, `late`, `fresh`
- * of those that are. Returns their number, or -1 without memory. */
+/* Which of n candidates are bursts, from the hidden layer's products (n, hidden_units). told: sums of the probabilities of
+ * all, and of what was to be expected of them before a look. Of those that are: found_at (n, 2) px, and found (3, n):
+ * `sure`, `late`, `fresh`. Returns their number, or -1 without memory. */
 EXPORT int edgewatch_choose(int n, const Net *net, const ChoiceRules *rules, const Traced *traced, const double *at,
-                            const float *context, const double *alike, float *hidden, double *sure, double *expected,
-                            double *found_at, double *found)
+                            const float *context, const double *alike, float *hidden, Told *told, double *found_at,
+                            double *found)
 {
     uint8_t *keep = malloc((size_t)n + 1);
     if (!keep)
@@ -212,8 +216,9 @@ EXPORT int edgewatch_choose(int n, const Net *net, const ChoiceRules *rules, con
     rectify(hidden, net->hidden_bias, n, net->hidden_units);
     double *own = found, *late = found + n, *fresh = late + n;
     int likely = 0, kept = 0;
+    *told = (Told){0.0, 0.0};
     for (int i = 0; i < n; i++) {
-        const float *unit = hidden + (size_t)i * net->hidden_units, *told = context + (size_t)i * net->context;
+        const float *unit = hidden + (size_t)i * net->hidden_units, *own_context = context + (size_t)i * net->context;
         float out[8];
         for (int k = 0; k < net->outputs; k++)
             out[k] = net->output_bias[k];
@@ -222,16 +227,17 @@ EXPORT int edgewatch_choose(int n, const Net *net, const ChoiceRules *rules, con
                 out[k] += unit[u] * net->output[u * net->outputs + k];
         float odds = net->share_bias[0];
         for (int k = 0; k < net->context; k++)
-            odds += told[k] * net->share[k];
-        expected[i] = probability(odds);
-        sure[i] = probability(out[0] + rules->shift);
-        if (sure[i] < rules->least_sure)
+            odds += own_context[k] * net->share[k];
+        double sure = probability(out[0] + rules->shift);
+        told->expected += probability(odds);
+        told->found += sure;
+        if (sure < rules->least_sure)
             continue;
         double dx = at[2 * i] - traced->contact_x, dy = at[2 * i + 1] - traced->contact_y, far = sqrt(dx * dx + dy * dy);
         double ahead = clip(out[1], rules->farthest_px) / far, aside = clip(out[2], rules->farthest_px) / far;
         found_at[2 * likely] = at[2 * i] + ahead * dx - aside * dy;
         found_at[2 * likely + 1] = at[2 * i + 1] + ahead * dy + aside * dx;
-        own[likely] = sure[i];
+        own[likely] = sure;
         late[likely] = probability(out[3]);
         fresh[likely] = probability(out[4]);
         if (alike[i] > rules->unmoved_least && fresh[likely] > rules->unmoved_most)

@@ -217,128 +217,120 @@ WIDE static void soften(const uint8_t *a, const uint8_t *b, const uint8_t *c, ui
     out[width - 1] = (uint8_t)((2 * sum[width - 1] + 2 * sum[width - 2] + 8) >> 4);
 }
 
-WIDE static int any_above(const uint8_t *values, int number, uint8_t least)
+/* Marks values between the columns `from` and `to` of a row that are above `least` and not below any of their eight
+ * neighbours. */
+WIDE static void mark_tops(const uint8_t *restrict row, int wide, int from, int to, uint8_t least, uint8_t *restrict top)
 {
-    uint8_t any = 0;
-    for (int k = 0; k < number; k++)
-        any |= values[k] > least;
-    return any;
+    const uint8_t *up = row - wide, *low = row + wide;
+    for (int x = from; x < to; x++) {
+        uint8_t own = row[x];
+        top[x] = (own > least) & (own >= row[x - 1]) & (own >= row[x + 1]) & (own >= up[x - 1]) & (own >= up[x]) &
+                 (own >= up[x + 1]) & (own >= low[x - 1]) & (own >= low[x]) & (own >= low[x + 1]);
+    }
 }
 
-/* Spots from which brightness falls off in every direction, in the excess at half its size. */
-static int find_blobs(const Traced *traced, const CandidateRules *rules, double *at, int most)
+/* Spots from which brightness falls off in every direction, in the excess at half its size. Room for that, softened, and
+ * for two rows of it. */
+static int find_blobs(const Traced *traced, const CandidateRules *rules, const uint8_t *half, uint8_t *soft, uint16_t *sum,
+                      uint8_t *top, double *at, int most)
 {
-    int height = traced->height, width = traced->width, margin = rules->blob_margin, steps = rules->blob_steps;
-    const uint8_t *excess = traced->excess;
+    int margin = rules->blob_margin, steps = rules->blob_steps, high = traced->height / 2, wide = traced->width / 2;
     const int32_t *step = rules->blob_step;
     double fall = rules->blob_fall, level = rules->blob_noise * traced->noise;
     uint8_t least = (uint8_t)(level < 2.0 ? 2.0 : level > 255.0 ? 255.0 : level);
-    int high = height / 2, wide = width / 2;
-    size_t size = (size_t)high * wide;
-    uint8_t *half = malloc(2 * size);
-    uint16_t *sum = malloc(sizeof(uint16_t) * (size_t)wide);
-    if (!half || !sum) {
-        free(half);
-        free(sum);
-        return -1;
-    }
-    uint8_t *soft = half + size;
-    for (int y = 0; y < high; y++)
-        halve(excess + 2 * (size_t)y * width, excess + (2 * (size_t)y + 1) * width, half + (size_t)y * wide, wide);
+    int found = 0;
     for (int y = 0; y < high; y++) {
         int up = y > 0 ? y - 1 : 1, low = y + 1 < high ? y + 1 : high - 2;
         soften(half + (size_t)up * wide, half + (size_t)y * wide, half + (size_t)low * wide, sum,
                soft + (size_t)y * wide, wide);
     }
-    int found = 0;
     for (int y = margin; y < high - margin; y++) {
-        for (int from = margin; from < wide - margin; from += 32) {
-            int stop = from + 32 < wide - margin ? from + 32 : wide - margin;
-            if (!any_above(soft + (size_t)y * wide + from, stop - from, least))
+        const uint8_t *row = soft + (size_t)y * wide;
+        mark_tops(row, wide, margin, wide - margin, least, top);
+        for (int x = margin; x < wide - margin; x++) {
+            uint64_t eight;
+            while (x + 8 < wide - margin && (memcpy(&eight, top + x, 8), !eight))
+                x += 8;
+            if (!top[x])
                 continue;
-            for (int x = from; x < stop; x++) {
-                const uint8_t *own = soft + (size_t)y * wide + x;
-                if (*own <= least || own[-1] > *own || own[1] > *own)
-                    continue;
-                int top = 1;
-                for (int k = -1; k <= 1; k++)
-                    top &= own[k - wide] <= *own && own[k + wide] <= *own;
-                double limit = 2.0 * (1.0 - fall) * *own;
-                for (int k = 0; k < steps && top; k++) {
-                    int away = step[2 * k + 1] * wide + step[2 * k];
-                    top = own[away] + own[-away] < limit;
-                }
-                if (!top)
-                    continue;
-                if (found < most) {
-                    at[2 * found] = 2.0 * x + 0.5;
-                    at[2 * found + 1] = 2.0 * y + 0.5;
-                }
-                found++;
+            double limit = 2.0 * (1.0 - fall) * row[x];
+            int falls = 1;
+            for (int k = 0; k < steps && falls; k++) {
+                int away = step[2 * k + 1] * wide + step[2 * k];
+                falls = row[x + away] + row[x - away] < limit;
             }
+            if (!falls)
+                continue;
+            if (found < most) {
+                at[2 * found] = 2.0 * x + 0.5;
+                at[2 * found + 1] = 2.0 * y + 0.5;
+            }
+            found++;
         }
     }
-    free(half);
-    free(sum);
     return found;
 }
 
-enum { SIDE = 4, SPREAD = 16 }; /* side of a cell of light; sum of the weights 1 4 6 4 1 */
+enum { SIDE = 4, SPREAD = 16, FRAME = 2 }; /* side of a cell of light; sum of the weights 1 4 6 4 1, and their reach */
 
-WIDE static void gather(const uint8_t *rows, int width, uint16_t *sum)
+/* Sums of four values each, of two rows of the picture at half its size. */
+WIDE static void gather(const uint8_t *restrict upper, const uint8_t *restrict lower, uint32_t *restrict cells, int wide)
 {
-    for (int x = 0; x < width; x++)
-        sum[x] = (uint16_t)(rows[x] + rows[x + width] + rows[x + 2 * width] + rows[x + 3 * width]);
+    for (int x = 0; x < wide; x++)
+        cells[x] = (uint32_t)(upper[2 * x] + upper[2 * x + 1] + lower[2 * x] + lower[2 * x + 1]);
 }
 
 /* Weighted sums of n values with their neighbours two to either side and `apart` from each other. */
-WIDE static void spread(const uint32_t *in, int apart, uint32_t *out, int n)
+WIDE static void spread(const uint32_t *restrict in, int apart, uint32_t *restrict out, int n)
 {
     for (int k = 0; k < n; k++)
         out[k] = in[k - 2 * apart] + in[k + 2 * apart] + 4 * (in[k - apart] + in[k + apart]) + 6 * in[k];
 }
 
-/* Places where much light is gathered and none of `others` points is near. */
-static int find_lights(const Traced *traced, const CandidateRules *rules, const double *other, int others, double *at,
-                       int most)
+WIDE static void mark_lights(const uint32_t *restrict row, int frame, int wide, uint32_t least, uint8_t *restrict top)
 {
-    int high = traced->height / SIDE, wide = traced->width / SIDE, frame = wide + 4;
+    const uint32_t *up = row - frame, *low = row + frame;
+    for (int x = 0; x < wide; x++) {
+        uint32_t own = row[x];
+        top[x] = (own > least) & (own >= row[x - 1]) & (own >= row[x + 1]) & (own >= up[x - 1]) & (own >= up[x]) &
+                 (own >= up[x + 1]) & (own >= low[x - 1]) & (own >= low[x]) & (own >= low[x + 1]);
+    }
+}
+
+/* Places where much light is gathered and none of `others` points is near. half: the picture at half its size; top: room
+ * for a row of it. */
+static int find_lights(const Traced *traced, const CandidateRules *rules, const uint8_t *half, uint8_t *top,
+                       const double *other, int others, double *at, int most)
+{
+    int high = traced->height / SIDE, wide = traced->width / SIDE, frame = wide + 2 * FRAME, half_wide = traced->width / 2;
     if (!high || !wide)
         return 0;
-    size_t framed = (size_t)frame * (high + 4);
-    uint32_t *cells = calloc(framed, sizeof(uint32_t));
-    uint32_t *half = malloc(sizeof(uint32_t) * 2 * framed);
-    uint16_t *sum = malloc(sizeof(uint16_t) * (size_t)traced->width);
-    int found = -1;
-    if (!cells || !half || !sum)
-        goto done;
-    uint32_t *soft = half + framed;
-    for (int y = 0; y < high; y++) {
-        gather(traced->excess + (size_t)y * SIDE * traced->width, traced->width, sum);
-        uint32_t *row = cells + (size_t)(y + 2) * frame + 2;
-        for (int x = 0; x < wide; x++)
-            row[x] = (uint32_t)(sum[4 * x] + sum[4 * x + 1] + sum[4 * x + 2] + sum[4 * x + 3]);
+    size_t framed = (size_t)frame * (high + 2 * FRAME);
+    uint32_t *cells = calloc(2 * framed + (size_t)frame, sizeof(uint32_t));
+    if (!cells)
+        return -1;
+    uint32_t *soft = cells + framed, *down = soft + framed;
+    for (int y = 0; y < high; y++)
+        gather(half + (size_t)2 * y * half_wide, half + ((size_t)2 * y + 1) * half_wide,
+               cells + (size_t)(y + FRAME) * frame + FRAME, wide);
+    for (int y = FRAME; y < high + FRAME; y++) {
+        spread(cells + (size_t)y * frame, frame, down, frame);
+        spread(down + FRAME, 1, soft + (size_t)y * frame + FRAME, wide);
     }
-    for (int y = 2; y < high + 2; y++) {
-        spread(cells + (size_t)y * frame, frame, half, frame);
-        spread(half + 2, 1, soft + (size_t)y * frame + 2, wide);
-    }
-    found = 0;
-    float least = (float)(rules->light_noise * traced->noise * (SIDE * SPREAD) * (SIDE * SPREAD));
+    double level = rules->light_noise * traced->noise * (SIDE / 2 * SPREAD) * (SIDE / 2 * SPREAD);
     double apart = rules->light_apart_px * rules->light_apart_px;
-    for (int y = 2; y < high + 2; y++) {
-        for (int x = 2; x < wide + 2; x++) {
-            const uint32_t *own = soft + (size_t)y * frame + x;
-            int top = (float)*own > least;
-            for (int v = y > 2 ? -1 : 0; top && v <= (y < high + 1); v++)
-                for (int u = x > 2 ? -1 : 0; u <= (x < wide + 1); u++)
-                    top &= own[v * frame + u] <= *own;
-            float px = (float)(SIDE * (x - 2)) + 0.5f * (SIDE - 1), py = (float)(SIDE * (y - 2)) + 0.5f * (SIDE - 1);
-            for (int k = 0; top && k < others; k++) {
+    uint32_t least = level < 1e9 ? (uint32_t)level : 1000000000u;
+    int found = 0;
+    for (int y = 0; y < high; y++) { /* outside it is dark */
+        mark_lights(soft + (size_t)(y + FRAME) * frame + FRAME, frame, wide, least, top);
+        for (int x = 0; x < wide; x++) {
+            int near = !top[x];
+            float px = (float)(SIDE * x) + 0.5f * (SIDE - 1), py = (float)(SIDE * y) + 0.5f * (SIDE - 1);
+            for (int k = 0; !near && k < others; k++) {
                 float dx = px - (float)other[2 * k], dy = py - (float)other[2 * k + 1];
-                top = !(dx * dx + dy * dy < apart);
+                near = dx * dx + dy * dy < apart;
             }
-            if (!top)
+            if (near)
                 continue;
             if (found < most) {
                 at[2 * found] = px;
@@ -347,22 +339,30 @@ static int find_lights(const Traced *traced, const CandidateRules *rules, const 
             found++;
         }
     }
-done:
     free(cells);
-    free(half);
-    free(sum);
     return found;
 }
 
 EXPORT int edgewatch_candidates(const Traced *traced, const CandidateRules *rules, double *at, int most)
 {
-    int found = find_blobs(traced, rules, at, most);
-    if (found < 0 || found > most)
-        return found;
-    int meetings = find_meetings(traced, rules, at + 2 * found, most - found);
-    if (meetings < 0 || found + meetings > most)
-        return meetings < 0 ? -1 : found + meetings;
-    found += meetings;
-    int lights = find_lights(traced, rules, at, found, at + 2 * found, most - found);
-    return lights < 0 ? -1 : found + lights;
+    int high = traced->height / 2, wide = traced->width / 2, found, meetings, lights;
+    size_t size = (size_t)high * wide;
+    uint16_t *sum = malloc(sizeof(uint16_t) * (size_t)wide + 2 * size + (size_t)wide + 1);
+    if (!sum)
+        return -1;
+    uint8_t *half = (uint8_t *)(sum + wide), *soft = half + size, *top = soft + size;
+    for (int y = 0; y < high; y++)
+        halve(traced->excess + 2 * (size_t)y * traced->width, traced->excess + (2 * (size_t)y + 1) * traced->width,
+              half + (size_t)y * wide, wide);
+    found = find_blobs(traced, rules, half, soft, sum, top, at, most);
+    if (found <= most) {
+        meetings = find_meetings(traced, rules, at + 2 * found, most - found);
+        found = meetings < 0 ? -1 : found + meetings;
+    }
+    if (found >= 0 && found <= most) {
+        lights = find_lights(traced, rules, half, top, at, found, at + 2 * found, most - found);
+        found = lights < 0 ? -1 : found + lights;
+    }
+    free(sum);
+    return found;
 }

@@ -205,6 +205,12 @@ class ChoiceRules(ctypes.Structure):
     )
 
 
+class Told(ctypes.Structure):
+    """Sums over the candidates of a picture: how likely they are bursts, and how likely before a look."""
+
+    _fields_ = (("found", c_double), ("expected", c_double))
+
+
 class ArmRules(ctypes.Structure):
     """What makes a line an arm."""
 
