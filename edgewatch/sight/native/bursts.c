@@ -8,7 +8,7 @@ typedef struct {
     Places now, before, sift;
     const float *sift_weights, *sift_bias, *sifted_weights; /* (sift.number, units), units, units */
     const int32_t *shared; /* rings_before: which ring of this picture each of the one before is */
-    double contact_px, crowd_px;
+    double contact_px, crowd_px, apart_px; /* of candidates nearer to each other than the last the likeliest is looked at */
     float sifted_bias, sift_least; /* log odds from which a candidate is looked at again */
     float level_noise;
     int32_t sift_units, directions, rings, rings_before, reach, step, context;
@@ -40,7 +40,7 @@ EXPORT void edgewatch_merge(int m, const double *at, const double *sure, int n, 
             double dx = at[2 * j] - x, dy = at[2 * j + 1] - y;
             better = dx * dx + dy * dy < merge_px * merge_px && (sure[j] > sure[i] || (sure[j] == sure[i] && j < i));
         }
-        keep[i] = !better && count_ends(x, y, n, begin, end, radius, least_ends) >= least_ends;
+        keep[i] = !better && count_ends(x, y, n, begin, end, radius) >= least_ends;
     }
 }
 
@@ -98,6 +98,17 @@ WIDE static float sift(const LookRules *rules, const float *seen)
     return odds;
 }
 
+/* Whether one of n points is nearer to point i than apart_px and likelier, or as likely and before it. */
+static int better_near(int i, int n, const double *at, const float *odds, double apart_px)
+{
+    for (int k = 0; k < n; k++) {
+        double dx = at[2 * k] - at[2 * i], dy = at[2 * k + 1] - at[2 * i + 1];
+        if (dx * dx + dy * dy < apart_px * apart_px && (odds[k] > odds[i] || (odds[k] == odds[i] && k < i)))
+            return 1;
+    }
+    return 0;
+}
+
 /* Cosine between what is seen on the rings of both pictures. */
 static double likeness(const LookRules *rules, const float *now, const float *before)
 {
@@ -132,23 +143,35 @@ EXPORT int edgewatch_look(const Traced *traced, const float *before, double nois
         return found;
     int directions = rules->directions, channels = rules->rings + rules->rings_before;
     size_t window = (size_t)(2 * rules->reach + 1) * channels * (directions / rules->step), ring = (size_t)channels * directions;
-    float *work = malloc(sizeof(float) * (RINGS_WORK * (size_t)rules->now.number + 2 * ring + rules->sift.number));
+    float *work = malloc(sizeof(float) * (RINGS_WORK * (size_t)rules->now.number + 2 * ring + rules->sift.number) +
+                         (sizeof(float) + 1) * ((size_t)found + 1));
     if (!work)
         return -1;
     float *now = work + RINGS_WORK * (size_t)rules->now.number, *earlier = now + rules->now.number, *mixed = now + ring;
-    float *seen = mixed + ring;
+    float *seen = mixed + ring, *odds = seen + rules->sift.number;
+    uint8_t *dropped = (uint8_t *)(odds + found + 1);
     Blurred own = {traced->blurred, traced->height, traced->width}, past = {before, traced->height, traced->width};
     float scale = (float)(1.0 / (rules->level_noise * traced->noise));
     float scale_before = before ? (float)(1.0 / (rules->level_noise * noise_before)) : 0.0f;
-    int passed = 0;
+    int likely = 0, passed = 0;
     for (int i = 0; i < found; i++) {
         double dx = at[2 * i] - traced->contact_x, dy = at[2 * i + 1] - traced->contact_y, far = sqrt(dx * dx + dy * dy);
         if (far <= rules->contact_px)
             continue;
-        float x = (float)at[2 * i], y = (float)at[2 * i + 1], c = (float)(dx / far), s = (float)(dy / far);
-        read_rings(&own, x, y, c, s, &rules->sift, scale, seen, work);
-        if (sift(rules, seen) < rules->sift_least)
+        read_rings(&own, (float)at[2 * i], (float)at[2 * i + 1], (float)(dx / far), (float)(dy / far), &rules->sift, scale,
+                   seen, work);
+        odds[likely] = sift(rules, seen);
+        at[2 * likely] = at[2 * i];
+        at[2 * likely + 1] = at[2 * i + 1];
+        likely += odds[likely] >= rules->sift_least;
+    }
+    for (int i = 0; i < likely; i++)
+        dropped[i] = better_near(i, likely, at, odds, rules->apart_px);
+    for (int i = 0; i < likely; i++) {
+        if (dropped[i])
             continue;
+        double dx = at[2 * i] - traced->contact_x, dy = at[2 * i + 1] - traced->contact_y, far = sqrt(dx * dx + dy * dy);
+        float x = (float)at[2 * i], y = (float)at[2 * i + 1], c = (float)(dx / far), s = (float)(dy / far);
         read_rings(&own, x, y, c, s, &rules->now, scale, now, work);
         if (before)
             read_rings(&past, x, y, c, s, &rules->before, scale_before, earlier, work);
@@ -160,7 +183,7 @@ EXPORT int edgewatch_look(const Traced *traced, const float *before, double nois
         float *told = context + (size_t)passed * rules->context;
         memcpy(told, camera, sizeof(float) * (size_t)rules->context);
         told[CROWD] += log1pf((float)count_ends(at[2 * i], at[2 * i + 1], traced->pieces, traced->begin, traced->end,
-                                                rules->crowd_px, INT32_MAX));
+                                                rules->crowd_px));
         at[2 * passed] = at[2 * i];
         at[2 * passed + 1] = at[2 * i + 1];
         passed++;

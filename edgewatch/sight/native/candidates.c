@@ -109,84 +109,113 @@ static int densest(const Votes *votes, float near, float least_votes, double *at
     return found;
 }
 
-/* The ends of pieces, the begins first, sorted into boxes as wide as the gap that may lie between two of them. */
+/* The ends of pieces, the begins first, sorted into boxes as wide as the gap that may lie between two of them: number, place,
+ * unit vector into the piece, and how far its line is followed beyond the end. */
 typedef struct {
     int across, down;
-    int32_t *start, *order, *box; /* boxes + 2: a box's first place in the order; ends in the order; box of each end */
-} Boxes;
+    int32_t *start, *box; /* boxes + 2: a box's first place in the order; box of each end */
+    int32_t *number;
+    double *x, *y, *ux, *uy, *reach;
+} Ends;
 
-static void sort_ends(Boxes *boxes, int n, const double *begin, const double *end, double gap_px)
+static void sort_ends(Ends *ends, const Traced *traced, const CandidateRules *rules)
 {
-    int number = boxes->across * boxes->down;
+    int n = traced->pieces, boxes = ends->across * ends->down;
     for (int i = 0; i < 2 * n; i++) {
-        const double *p = i < n ? begin + 2 * i : end + 2 * (i - n);
-        int column = (int)(p[0] / gap_px), row = (int)(p[1] / gap_px);
-        column = column < 0 ? 0 : column >= boxes->across ? boxes->across - 1 : column;
-        row = row < 0 ? 0 : row >= boxes->down ? boxes->down - 1 : row;
-        boxes->box[i] = row * boxes->across + column;
-        boxes->start[boxes->box[i]]++;
+        const double *p = i < n ? traced->begin + 2 * i : traced->end + 2 * (i - n);
+        int column = (int)(p[0] / rules->gap_px), row = (int)(p[1] / rules->gap_px);
+        column = column < 0 ? 0 : column >= ends->across ? ends->across - 1 : column;
+        row = row < 0 ? 0 : row >= ends->down ? ends->down - 1 : row;
+        ends->box[i] = row * ends->across + column;
+        ends->start[ends->box[i]]++;
     }
-    for (int k = 1; k <= number; k++)
-        boxes->start[k] += boxes->start[k - 1];
-    for (int i = 2 * n - 1; i >= 0; i--)
-        boxes->order[--boxes->start[boxes->box[i]]] = i;
+    for (int k = 1; k <= boxes; k++)
+        ends->start[k] += ends->start[k - 1];
+    for (int i = 2 * n - 1; i >= 0; i--) {
+        int k = --ends->start[ends->box[i]], a = i < n ? i : i - n;
+        const double *p = i < n ? traced->begin + 2 * a : traced->end + 2 * a, *axis = traced->axis + 2 * a;
+        ends->number[k] = i;
+        ends->x[k] = p[0];
+        ends->y[k] = p[1];
+        ends->ux[k] = i < n ? axis[0] : -axis[0];
+        ends->uy[k] = i < n ? axis[1] : -axis[1];
+        ends->reach[k] = fmin(rules->gap_px, rules->gap_lengths * traced->length[a] + 2.0);
+    }
+}
+
+/* With which of the ends between `from` and `to` in the order end `own` meets; of every two ends the one with the lower
+ * number looks for the other, and the two ends of one piece do not meet. along: how far beyond the own end; is, along and
+ * hit: as many as there are ends. Returns their number. */
+WIDE static int meet(const Ends *ends, int own, int from, int to, int pieces, const CandidateRules *rules,
+                     int32_t *restrict is, double *restrict along, int32_t *restrict hit)
+{
+    const double *restrict x = ends->x, *restrict y = ends->y, *restrict vx = ends->ux, *restrict vy = ends->uy;
+    const double *restrict reach = ends->reach;
+    const int32_t *restrict number = ends->number;
+    double px = x[own], py = y[own], ux = vx[own], uy = vy[own], most = reach[own], gap = rules->gap_px * rules->gap_px;
+    double least_sin = rules->least_sin, inner = -rules->inner_px;
+    int32_t first = number[own], other = first < pieces ? first + pieces : first - pieces;
+    for (int k = from; k < to; k++) {
+        double gx = x[k] - px, gy = y[k] - py, cross = ux * vy[k] - uy * vx[k];
+        double s = -(gx * vy[k] - gy * vx[k]) / cross, t = -(gx * uy - gy * ux) / cross;
+        along[k] = s;
+        is[k] = (gx * gx + gy * gy <= gap) & (fabs(cross) > least_sin) & (s > inner) & (s < most) & (t > inner) &
+                (t < reach[k]) & (number[k] > first) & (number[k] != other);
+    }
+    int found = 0;
+    for (int k = from; k < to; k++) {
+        hit[found] = k;
+        found += is[k];
+    }
+    return found;
 }
 
 /* Where lines of pieces meet beyond their ends: the middle of the votes wherever they are dense, in the order of their
  * cells. Room in `at` for `most` points (x, y). Returns their number, which may be more, or -1 without memory. */
 static int find_meetings(const Traced *traced, const CandidateRules *rules, double *at, int most)
 {
-    int n = traced->pieces, height = traced->height, width = traced->width;
-    const double *begin = traced->begin, *end = traced->end, *axis = traced->axis, *length = traced->length;
-    double gap_px = rules->gap_px, inner_px = rules->inner_px, gap_lengths = rules->gap_lengths;
-    double least_sin = rules->least_sin, cell_px = rules->cell_px;
+    int n = traced->pieces, height = traced->height, width = traced->width, found = -1;
+    double cell_px = rules->cell_px;
     if (n < 2)
         return 0;
     Votes votes = {.wide = (int)(width / cell_px) + 1, .high = (int)(height / cell_px) + 1, .room = 256};
-    Boxes boxes = {.across = (int)(width / gap_px) + 1, .down = (int)(height / gap_px) + 1};
-    size_t cells = (size_t)votes.wide * votes.high;
+    Ends ends = {.across = (int)(width / rules->gap_px) + 1, .down = (int)(height / rules->gap_px) + 1};
+    size_t cells = (size_t)votes.wide * votes.high, count = 2 * (size_t)n;
     char *zero = calloc(cells * 8 + (size_t)votes.high, 1);
     votes.half = malloc(sizeof(float) * 2 * cells);
     votes.sum = malloc(sizeof(double) * 2 * (size_t)votes.room);
-    boxes.start = calloc((size_t)boxes.across * boxes.down + 2, sizeof(int32_t));
-    boxes.order = malloc(sizeof(int32_t) * (4 * (size_t)n + 1));
-    int found = -1;
-    if (!zero || !votes.half || !votes.sum || !boxes.start || !boxes.order)
+    ends.start = calloc((size_t)ends.across * ends.down + 2, sizeof(int32_t));
+    ends.x = malloc((6 * sizeof(double) + 4 * sizeof(int32_t)) * count + sizeof(int32_t));
+    if (!zero || !votes.half || !votes.sum || !ends.start || !ends.x)
         goto done;
     votes.number = (float *)zero;
     votes.slot = (int32_t *)(zero + 4 * cells);
     votes.voted = (uint8_t *)(zero + 8 * cells);
     votes.dense = votes.half + cells;
-    boxes.box = boxes.order + 2 * n;
-    sort_ends(&boxes, n, begin, end, gap_px);
-    for (int i = 0; i < 2 * n; i++) {
-        int a = i < n ? i : i - n;
-        const double *p = i < n ? begin + 2 * a : end + 2 * a;
-        double ux = i < n ? axis[2 * a] : -axis[2 * a], uy = i < n ? axis[2 * a + 1] : -axis[2 * a + 1];
-        double reach_a = fmin(gap_px, gap_lengths * length[a] + 2.0);
-        int column = boxes.box[i] % boxes.across, row = boxes.box[i] / boxes.across;
-        for (int y = row > 0 ? row - 1 : 0; y <= row + 1 && y < boxes.down; y++) {
-            const int32_t *first = boxes.start + y * boxes.across + (column > 0 ? column - 1 : 0);
-            const int32_t *last = boxes.start + y * boxes.across + (column + 1 < boxes.across ? column + 1 : column);
-            for (int k = first[0]; k < last[1]; k++) {
-                int j = boxes.order[k], b = j < n ? j : j - n;
-                if (j <= i || a == b)
-                    continue;
-                const double *q = j < n ? begin + 2 * b : end + 2 * b;
-                double gx = q[0] - p[0], gy = q[1] - p[1];
-                if (gx * gx + gy * gy > gap_px * gap_px)
-                    continue;
-                double vx = j < n ? axis[2 * b] : -axis[2 * b], vy = j < n ? axis[2 * b + 1] : -axis[2 * b + 1];
-                double cross = ux * vy - uy * vx;
-                if (fabs(cross) <= least_sin)
-                    continue;
-                double s = -(gx * vy - gy * vx) / cross, t = -(gx * uy - gy * ux) / cross;
-                double reach_b = fmin(gap_px, gap_lengths * length[b] + 2.0);
-                if (s <= -inner_px || s >= reach_a || t <= -inner_px || t >= reach_b)
-                    continue;
-                double mx = p[0] - s * ux, my = p[1] - s * uy;
-                if (mx > 0.0 && my > 0.0 && mx < width - 1 && my < height - 1 && add_vote(&votes, cell_px, mx, my))
-                    goto done;
+    ends.y = ends.x + count;
+    ends.ux = ends.y + count;
+    ends.uy = ends.ux + count;
+    ends.reach = ends.uy + count;
+    double *along = ends.reach + count;
+    ends.number = (int32_t *)(along + count);
+    ends.box = ends.number + count;
+    int32_t *is = ends.box + count, *hit = is + count;
+    sort_ends(&ends, traced, rules);
+    for (int row = 0; row < ends.down; row++) {
+        for (int column = 0; column < ends.across; column++) {
+            const int32_t *box = ends.start + row * ends.across + column;
+            int left = column > 0 ? -1 : 0, right = column + 1 < ends.across ? 2 : 1;
+            for (int own = box[0]; own < box[1]; own++) {
+                for (int up = row > 0 ? -1 : 0; up <= 1 && row + up < ends.down; up++) {
+                    int meetings = meet(&ends, own, box[up * ends.across + left], box[up * ends.across + right], n, rules,
+                                        is, along, hit);
+                    for (int k = 0; k < meetings; k++) {
+                        double mx = ends.x[own] - along[hit[k]] * ends.ux[own];
+                        double my = ends.y[own] - along[hit[k]] * ends.uy[own];
+                        if (mx > 0.0 && my > 0.0 && mx < width - 1 && my < height - 1 && add_vote(&votes, cell_px, mx, my))
+                            goto done;
+                    }
+                }
             }
         }
     }
@@ -196,8 +225,8 @@ done:
     free(zero);
     free(votes.half);
     free(votes.sum);
-    free(boxes.start);
-    free(boxes.order);
+    free(ends.start);
+    free(ends.x);
     return found;
 }
 

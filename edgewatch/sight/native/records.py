@@ -177,7 +177,7 @@ class LookRules(ctypes.Structure):
     _fields_ = (
         *((name, Places) for name in ("now", "before", "sift")),
         *((name, c_void_p) for name in ("sift_weights", "sift_bias", "sifted_weights", "shared")),
-        *((name, c_double) for name in ("contact_px", "crowd_px")),
+        *((name, c_double) for name in ("contact_px", "crowd_px", "apart_px")),
         *((name, c_float) for name in ("sifted_bias", "sift_least", "level_noise")),
         *((name, c_int32) for name in ("sift_units", "directions", "rings", "rings_before", "reach", "step")),
         ("context", c_int32),

@@ -45,12 +45,14 @@ WIDE static void split(const float *px, const float *py, int width, int32_t *pix
     }
 }
 
-WIDE static void blend(float *level, const float *a, const float *b, const float *c, const float *d, const float *right,
-                       const float *down, int number)
+/* Values between pairs of pixels, of an upper row and the row below it. */
+WIDE static void blend(float *restrict level, const float *restrict upper, const float *restrict lower,
+                       const float *restrict right, const float *restrict down, int number)
 {
     for (int k = 0; k < number; k++) {
-        float upper = a[k] + right[k] * (b[k] - a[k]), lower = c[k] + right[k] * (d[k] - c[k]);
-        level[k] = upper + down[k] * (lower - upper);
+        float high = upper[2 * k] + right[k] * (upper[2 * k + 1] - upper[2 * k]);
+        float low = lower[2 * k] + right[k] * (lower[2 * k + 1] - lower[2 * k]);
+        level[k] = high + down[k] * (low - high);
     }
 }
 
@@ -59,20 +61,17 @@ void read_rings(const Blurred *picture, float x, float y, float c, float s, cons
 {
     int number = places->number, width = picture->width, height = picture->height;
     float *px = work, *py = px + number, *right = py + number, *down = right + number, *level = down + number;
-    float *upper = level + number, *upper_right = upper + number, *lower = upper_right + number;
-    float *lower_right = lower + number, farthest = places->farthest;
-    int32_t *pixel = (int32_t *)(lower_right + number);
+    float *upper = level + number, *lower = upper + 2 * number, farthest = places->farthest;
+    int32_t *pixel = (int32_t *)(lower + 2 * number);
     place(x, y, c, s, places->along, places->aside, px, py, number);
     if (x > farthest && y > farthest && x < (float)(width - 2) - farthest && y < (float)(height - 2) - farthest) {
         split(px, py, width, pixel, right, down, number);
         for (int k = 0; k < number; k++) {
             const float *p = picture->blurred + pixel[k];
-            upper[k] = p[0];
-            upper_right[k] = p[1];
-            lower[k] = p[width];
-            lower_right[k] = p[width + 1];
+            memcpy(upper + 2 * k, p, 2 * sizeof(float));
+            memcpy(lower + 2 * k, p + width, 2 * sizeof(float));
         }
-        blend(level, upper, upper_right, lower, lower_right, right, down, number);
+        blend(level, upper, lower, right, down, number);
     } else {
         for (int k = 0; k < number; k++)
             level[k] = read_level(picture->blurred, height, width, px[k], py[k]);
@@ -95,14 +94,19 @@ EXPORT int edgewatch_patches(const Blurred *picture, int n, const float *at, con
     return 0;
 }
 
-int count_ends(double x, double y, int n, const double *begin, const double *end, double radius, int enough)
+WIDE static int count_near(double x, double y, int n, const double *points, double square)
 {
-    int ends = 0;
-    for (int k = 0; k < 2 * n && ends < enough; k++) {
-        const double *p = k < n ? begin + 2 * k : end + 2 * (k - n);
-        ends += (p[0] - x) * (p[0] - x) + (p[1] - y) * (p[1] - y) < radius * radius;
+    int near = 0;
+    for (int k = 0; k < n; k++) {
+        double dx = points[2 * k] - x, dy = points[2 * k + 1] - y;
+        near += dx * dx + dy * dy < square;
     }
-    return ends;
+    return near;
+}
+
+int count_ends(double x, double y, int n, const double *begin, const double *end, double radius)
+{
+    return count_near(x, y, n, begin, radius * radius) + count_near(x, y, n, end, radius * radius);
 }
 
 /* How many ends of the n pieces lie within radius of each of m points. */
@@ -110,5 +114,5 @@ EXPORT void edgewatch_crowd(int m, const double *at, int n, const double *begin,
                             int32_t *crowd)
 {
     for (int i = 0; i < m; i++)
-        crowd[i] = count_ends(at[2 * i], at[2 * i + 1], n, begin, end, radius, INT32_MAX);
+        crowd[i] = count_ends(at[2 * i], at[2 * i + 1], n, begin, end, radius);
 }

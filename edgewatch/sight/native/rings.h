@@ -21,7 +21,7 @@ enum { RINGS_WORK = 10 }; /* values of work for each place */
 void read_rings(const Blurred *picture, float x, float y, float c, float s, const Places *places, float scale, float *out,
                 float *work);
 
-/* How many ends of n pieces lie within radius of (x, y); no more than `enough` are counted. */
-int count_ends(double x, double y, int n, const double *begin, const double *end, double radius, int enough);
+/* How many ends of n pieces lie within radius of (x, y). */
+int count_ends(double x, double y, int n, const double *begin, const double *end, double radius);
 
 #endif
