@@ -8,7 +8,6 @@ before the exposure, and whether an earlier picture showed it. Of candidates nea
 from __future__ import annotations
 
 import math
-import threading
 from dataclasses import dataclass
 
 import numpy as np
@@ -99,12 +98,14 @@ def find_apexes(
     least_sure: float,
     before: Ridges | None = None,
     share: BurstShare | None = None,
+    work: Workroom | None = None,
 ) -> Apexes:
     """Bursts of one picture: candidates of at least the probability ``least_sure``. ``before``: ridges of the picture
-    before; ``share``: of bursts among the candidates of this stream, which learns from this picture.
+    before; ``share``: of bursts among the candidates of this stream, which learns from this picture; ``work``: kept by
+    who looks at one picture after the other, and by one thread only.
     """
     if native.LIBRARY:
-        return _find_compiled(pieces, ridges, optics, least_sure, before, share)
+        return _find_compiled(pieces, ridges, optics, least_sure, before, share, work or Workroom())
     contact_px, noise = optics.contact_px, ridges.threshold_noise
     at = find_candidates(pieces, ridges)
     at = at[np.hypot(at[:, 0] - contact_px[0], at[:, 1] - contact_px[1]) > CONTACT_PX]  # its own glow is no burst
@@ -129,11 +130,13 @@ def find_apexes(
     return Apexes(at=at, sure=sure, late=probability(answers[:, 3]), fresh=fresh).take(keep)
 
 
-class _Work(threading.local):
-    """Arrays in which one thread works, kept from picture to picture and made larger when they have to be."""
+class Workroom:
+    """Arrays in which the compiled form works, kept from picture to picture and made larger when they have to be."""
 
-    room = 0
-    camera_of: tuple[float, Optics, bool] | None = None
+    def __init__(self) -> None:
+        """Room is made with the first picture."""
+        self.room = 0
+        self.camera_of: tuple[float, Optics, bool] | None = None
 
     def camera(self, noise: float, optics: Optics, *, has_before: bool) -> NDArray[np.float32]:
         """As ``read_camera`` has it; noise is measured in one of some pictures, so most are as the last."""
@@ -160,7 +163,6 @@ class _Work(threading.local):
         self.room = room
 
 
-_WORK = _Work()
 _SHARED = np.asarray(BEFORE_RINGS, np.int32)
 _LOOK = records.LookRules(
     now=rings.record(RINGS),
@@ -209,9 +211,10 @@ def _find_compiled(
     least_sure: float,
     before: Ridges | None,
     share: BurstShare | None,
+    work: Workroom,
 ) -> Apexes:
     """As ``find_apexes`` has it; only the net's matrix products are numpy's."""
-    traced, work = record(pieces, ridges, optics.contact_px), _WORK
+    traced = record(pieces, ridges, optics.contact_px)
     camera = work.camera(ridges.threshold_noise, optics, has_before=before is not None)
     if not work.room:
         work.make(FIRST_ROOM)

@@ -45,11 +45,11 @@ BLOB_FALL = 0.13
 """At these steps either way (dx, dy in a picture of half the size, three to four pixels long) brightness has fallen by
 this share; along a streak it has not."""
 
-BLOB_NOISE = 8.0
+BLOB_NOISE = 11.0
 """A blob stands this many deviations of the blurred picture's noise above the background."""
 
 LIGHT_CELL_PX = 4
-LIGHT_NOISE = 3.0
+LIGHT_NOISE = 5.0
 LIGHT_APART_PX = 5.0
 """Candidates, too, are places where much light is gathered: maxima of the excess in cells of this side (px), softened
 over five of them, which stand so many noise deviations above the ground and are this far from candidates of the other

@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from edgewatch.sight.background import Background
-from edgewatch.sight.bursts import find_apexes
+from edgewatch.sight.bursts import Workroom, find_apexes
 from edgewatch.sight.detections import Detections
 from edgewatch.sight.glow import Glow
 from edgewatch.sight.lengths import Lengths
@@ -69,6 +69,7 @@ class Sight:
         self._meter = LightMeter()
         self._before: Ridges | None = None
         self._share = BurstShare(period_s=o.period_s)
+        self._work = Workroom()
         self._glow = Glow(o, longest_glow_s=s.longest_glow_s, arm_draw_s=s.arm_draw_s, late_listed_s=s.late_listed_s)
         self._listing = Listing(
             o,
@@ -101,7 +102,7 @@ class Sight:
         pieces = find_segments(ridges, self._scratch)
         found = find_streaks(pieces, ridges.blurred, noise, self._lengths, o.axis)
         self._meter.measure_width(found.begin, found.end, ridges)
-        apexes = find_apexes(pieces, ridges, o, s.least_sure, self._before, self._share)
+        apexes = find_apexes(pieces, ridges, o, s.least_sure, self._before, self._share, self._work)
         self._before = ridges
         snr_per_dn = self._meter.line_gain / self._background.noise_dn
         seen = self._listing.take(found, snr_per_dn, apexes, self._lengths)

@@ -95,7 +95,7 @@ FAULTS: dict[str, tuple[str, Fault]] = {
     "pictures left out": ("dropping", drop),
     "other size": ("wrong_size", each(lambda picture: picture[:, :300], FAULT_FROM)),
     "frame edge": ("reach_truncated", each(shift)),
-    "thin stream": ("too_few_streaks", camera(sparks_per_s=40.0)),
+    "thin stream": ("too_few_streaks", camera(sparks_per_s=55.0)),
     "bar not seen": ("no_contact", miss),
 }
 """Every cause that can be put into pictures or delivery. ``wrong_exposure`` comes from the camera's driver:

@@ -109,24 +109,36 @@ static int better_near(int i, int n, const double *at, const float *odds, double
     return 0;
 }
 
+enum { LANES = 8 }; /* sums at a time */
+
 /* Cosine between what is seen on the rings of both pictures. */
-static double likeness(const LookRules *rules, const float *now, const float *before)
+WIDE static double likeness(const LookRules *rules, const float *now, const float *before)
 {
-    double both = 0.0, first = 0.0, second = 0.0;
+    float both[LANES] = {0.0f}, first[LANES] = {0.0f}, second[LANES] = {0.0f}, sum[3] = {0.0f};
+    int directions = rules->directions;
     for (int r = 0; r < rules->rings_before; r++) {
-        const float *a = now + (size_t)rules->shared[r] * rules->directions, *b = before + (size_t)r * rules->directions;
-        float ab = 0.0f, aa = 0.0f, bb = 0.0f;
-        for (int d = 0; d < rules->directions; d++) {
-            ab += a[d] * b[d];
-            aa += a[d] * a[d];
-            bb += b[d] * b[d];
+        const float *a = now + (size_t)rules->shared[r] * directions, *b = before + (size_t)r * directions;
+        int d = 0;
+        for (; d + LANES <= directions; d += LANES) {
+            for (int k = 0; k < LANES; k++) {
+                both[k] += a[d + k] * b[d + k];
+                first[k] += a[d + k] * a[d + k];
+                second[k] += b[d + k] * b[d + k];
+            }
         }
-        both += ab;
-        first += aa;
-        second += bb;
+        for (; d < directions; d++) {
+            sum[0] += a[d] * b[d];
+            sum[1] += a[d] * a[d];
+            sum[2] += b[d] * b[d];
+        }
     }
-    double norm = sqrt(first * second);
-    return both / (norm > 1e-6 ? norm : 1e-6);
+    for (int k = 0; k < LANES; k++) {
+        sum[0] += both[k];
+        sum[1] += first[k];
+        sum[2] += second[k];
+    }
+    double norm = sqrt((double)sum[1] * sum[2]);
+    return sum[0] / (norm > 1e-6 ? norm : 1e-6);
 }
 
 /* Candidates of a picture that pass the sieve, and what the net is to see of each. before: the picture before, blurred,
