@@ -14,7 +14,7 @@ from edgewatch.sight import burst_weights as learnt
 from edgewatch.sight import native
 from edgewatch.sight.rings import RING_DIRECTIONS
 
-SIFT_LEAST = 0.015
+SIFT_LEAST = 0.025
 """Candidates to which the small perceptron gives less than this are not looked at again: see ``learn_bursts`` for the
 share of bursts that this costs."""
 

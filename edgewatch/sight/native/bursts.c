@@ -155,11 +155,11 @@ EXPORT int edgewatch_look(const Traced *traced, const float *before, double nois
         return found;
     int directions = rules->directions, channels = rules->rings + rules->rings_before;
     size_t window = (size_t)(2 * rules->reach + 1) * channels * (directions / rules->step), ring = (size_t)channels * directions;
-    float *work = malloc(sizeof(float) * (RINGS_WORK * (size_t)rules->now.number + 2 * ring + rules->sift.number) +
+    float *work = malloc(sizeof(float) * (2 * ring + rules->sift.number) +
                          (sizeof(float) + 1) * ((size_t)found + 1));
     if (!work)
         return -1;
-    float *now = work + RINGS_WORK * (size_t)rules->now.number, *earlier = now + rules->now.number, *mixed = now + ring;
+    float *now = work, *earlier = now + rules->now.number, *mixed = now + ring;
     float *seen = mixed + ring, *odds = seen + rules->sift.number;
     uint8_t *dropped = (uint8_t *)(odds + found + 1);
     Blurred own = {traced->blurred, traced->height, traced->width}, past = {before, traced->height, traced->width};
@@ -171,7 +171,7 @@ EXPORT int edgewatch_look(const Traced *traced, const float *before, double nois
         if (far <= rules->contact_px)
             continue;
         read_rings(&own, (float)at[2 * i], (float)at[2 * i + 1], (float)(dx / far), (float)(dy / far), &rules->sift, scale,
-                   seen, work);
+                   seen);
         odds[likely] = sift(rules, seen);
         at[2 * likely] = at[2 * i];
         at[2 * likely + 1] = at[2 * i + 1];
@@ -184,9 +184,9 @@ EXPORT int edgewatch_look(const Traced *traced, const float *before, double nois
             continue;
         double dx = at[2 * i] - traced->contact_x, dy = at[2 * i + 1] - traced->contact_y, far = sqrt(dx * dx + dy * dy);
         float x = (float)at[2 * i], y = (float)at[2 * i + 1], c = (float)(dx / far), s = (float)(dy / far);
-        read_rings(&own, x, y, c, s, &rules->now, scale, now, work);
+        read_rings(&own, x, y, c, s, &rules->now, scale, now);
         if (before)
-            read_rings(&past, x, y, c, s, &rules->before, scale_before, earlier, work);
+            read_rings(&past, x, y, c, s, &rules->before, scale_before, earlier);
         else
             memset(earlier, 0, sizeof(float) * (size_t)rules->before.number);
         edgewatch_channels(1, now, rules->rings, earlier, rules->rings_before, directions, mixed);

@@ -15,11 +15,8 @@ typedef struct {
     int32_t number;
 } Places;
 
-enum { RINGS_WORK = 10 }; /* values of work for each place */
-
 /* The picture about (x, y) at places turned to the unit vector (c, s): out (number) gets log(1 + level * scale). */
-void read_rings(const Blurred *picture, float x, float y, float c, float s, const Places *places, float scale, float *out,
-                float *work);
+void read_rings(const Blurred *picture, float x, float y, float c, float s, const Places *places, float scale, float *out);
 
 /* How many ends of n pieces lie within radius of (x, y). */
 int count_ends(double x, double y, int n, const double *begin, const double *end, double radius);
