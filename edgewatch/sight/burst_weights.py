@@ -999,7 +999,7 @@ _PACKED = (
     "v%;2xH}-5a1&cpPE!jM88+rn8JL@DyBNc+6EHf@l8176rRW{_ecv_Scmqin}jj>2!bT6?-ZV2jI*t+<NeU$G+bjSE)@dIAPJ%M@Yxqz9uIKr!+"
     "oA?QN78O}6hf=5{%VVagIG;O&ZPLADD!HGj^UVWyHHBso&-FjILT!V;2+fS<grmlQV?0&gThEsy{Y9KKeGy}wTWB|2=ImNJL|zE(U<3HG-4hGb"
     "e114nW_4Lbqhp#nHet^k<em)UJ@;;*Z{9BjbsU_pFsgoWT|=_-NAioDe=Sw&@NzYBGR~lcb+*u!=%u8a`$x?Zs%`llYbo^P3aBIb^@6FPT5v7m"
-    "I65@BkF*>O6dtra)jpR055<i1Qv"
+    "IQk&D0T3d32y-Y^dmZ{8#QF2Y"
 )
 _FLAT: NDArray[np.float32] = np.frombuffer(zlib.decompress(base64.b85decode("".join(_PACKED))), dtype="<f2").astype(
     np.float32

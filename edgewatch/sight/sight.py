@@ -38,7 +38,7 @@ class SightTuning:
     rate_sure: float = 0.65
     longest_glow_s: float = 0.0035
     arm_draw_s: float = 0.00035
-    late_listed_s: float = 0.0008
+    late_listed_s: float = 0.00105
 
     def __post_init__(self) -> None:
         """Check ranges once."""
@@ -81,7 +81,7 @@ class Sight:
 
     @property
     def burst_exposure_gain(self) -> float:
-        """Time a picture in which a burst would get listed, per exposure."""
+        """Time a picture in which a burst would get listed, times the share of bursts that do, per exposure."""
         return self._glow.gain
 
     def look(self, picture: NDArray[np.uint8]) -> Detections:

@@ -67,6 +67,8 @@ STEPS = np.float32(48.0)
 """Levels are kept in steps of a 48th, far below their noise of a fifth and more; none is above 5.2."""
 CHUNK = {"r": 100, "m": 100, "x": 12, "d": 12}
 """Scenes of each kind whose candidates are kept in one file."""
+TAUGHT_LEAST = 0.01
+"""Candidates to which the sieve gives at least this are learnt from: more than are looked at later."""
 SIFT_SCENES = {"r": 300, "m": 300, "x": 40, "d": 40}
 SIFT_ROUNDS = 30
 """Scenes from which the sieve is learnt, and rounds; the net then learns from what passes."""
@@ -263,7 +265,7 @@ def _collect_scene(kind: str, seed: int, sieve: list[Floats] | None, *, every: b
         patches = read_patches(at, ridges.blurred, ridges.threshold_noise, optics.contact_px)
         kept = ~doubtful | every
         if sieve is not None:
-            kept &= _sifted(sieve, rough(patches)) >= SIFT_LEAST
+            kept &= _sifted(sieve, rough(patches)) >= (SIFT_LEAST if every else TAUGHT_LEAST)
         at, right, nearest, gap = at[kept], right[kept], nearest[kept], gap[kept]
         away = at - np.asarray(optics.contact_px)
         away /= np.hypot(away[:, 0], away[:, 1])[:, None]

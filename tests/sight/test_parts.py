@@ -17,7 +17,7 @@ from edgewatch.sight.background import LEARN_AT, LEAST_NOISE_DN, Background
 from edgewatch.sight.burst_net import judge_patches, sift_patches, windows
 from edgewatch.sight.bursts import SIFT_BLOCK, Apexes, find_apexes
 from edgewatch.sight.candidates import find_candidates
-from edgewatch.sight.glow import Glow
+from edgewatch.sight.glow import SEEN_SHARE, Glow
 from edgewatch.sight.lengths import LEAST_KEPT, Lengths
 from edgewatch.sight.optics import Optics
 from edgewatch.sight.reading import read_levels
@@ -309,7 +309,7 @@ def test_gain_is_the_time_in_which_bursts_get_listed(fps: float, exposure_ms: fl
     gain = _glow(fps=fps, exposure_ms=exposure_ms).gain
     period_ms = 1000.0 / fps
     assert gain < min(listed_ms, period_ms) / exposure_ms
-    assert gain == pytest.approx((listed_ms**-4 + period_ms**-4) ** -0.25 / exposure_ms)
+    assert gain == pytest.approx(SEEN_SHARE * (listed_ms**-4 + period_ms**-4) ** -0.25 / exposure_ms)
 
 
 def _apexes(*points: tuple[float, float], late: float = 1.0, fresh: float = 0.7) -> Apexes:
