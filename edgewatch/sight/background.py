@@ -59,8 +59,8 @@ PATTERN_RATE_HZ = 25.0
 """Grey levels per second that the pattern may follow: a lamp warming up, not a spark stream."""
 
 LEAST_NOISE_DN = 1.3
-"""Noise is never taken to be lower (DN): quantisation hides it, and compression smooths it away and leaves ripples of its
-own. On tuning scenes compressed to quality 70 this finds more and lists less that is none than 1.0 or 1.6."""
+"""Noise is never taken to be lower (DN): quantisation hides it, and compression smooths it away and leaves ripples of
+its own. On tuning scenes compressed to quality 70 this finds more and lists less that is none than 1.0 or 1.6."""
 
 NOISE_STRIDE = (5, 7)
 """Rows and columns between the pixels that noise is estimated from; coprime with compression blocks of 8 and 16."""
