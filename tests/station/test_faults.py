@@ -128,7 +128,7 @@ def test_a_broker_that_is_away_gets_everything_afterwards(tmp_path: Path) -> Non
             tmp_path,
             broker,
             {"uri": "rehearsal:"},
-            rehearsal={"bars": 100, "foreign": 0, "contact_s": 0.3, "pause_s": 0.3, "grade": "C45"},
+            rehearsal={"bars": 400, "foreign": 0, "contact_s": 0.3, "pause_s": 0.3, "grade": "C45"},
         )
         reader = Reader(broker, session="reader").ready(broker)
         station = watching(tmp_path)  # the line waits for the judging: at its own pace a busy machine misses bars
